@@ -1,0 +1,64 @@
+//! The command line.
+//!
+//! Exit codes: 0, done, whatever the verdict; 1, the plant file or a batch has
+//! faults; 2, the command line itself (from `clap`); 3, anything else, such as
+//! a file that cannot be read.
+
+mod check;
+mod demo;
+mod input;
+mod reconcile;
+mod summary;
+mod table;
+mod text;
+
+pub use check::{Check, check};
+pub use demo::{Demo, demo};
+pub use reconcile::{Reconcile, reconcile};
+
+use crate::config::Config;
+use clap::{Parser, Subcommand};
+use std::process::ExitCode;
+
+/// Exit code where the plant file or a batch has faults.
+pub const EXIT_FAULTS: u8 = 1;
+
+/// Exit code of anything else that went wrong.
+pub const EXIT_TROUBLE: u8 = 3;
+
+/// The last line of everything that a person may act on.
+pub const CAUTION: &str = "Advisory only, not for protection or safety functions.";
+
+/// Reconciles the measurements of steam and power plants.
+#[derive(Debug, Parser)]
+#[command(name = "counterpoise", version, about, after_help = "Exit codes: 0 done, whatever the verdict; 1 the plant file or a batch has faults; 2 wrong command line; 3 anything else.\n\nAdvisory only, not for protection or safety functions.")]
+pub struct Cli {
+    /// What to do.
+    #[command(subcommand)]
+    pub command: Command,
+}
+
+/// What to do.
+#[derive(Debug, Subcommand)]
+pub enum Command {
+    /// Run the service.
+    Serve(Config),
+    /// Look at a plant file: every fault, or what its tags can determine.
+    Check(Check),
+    /// Reconcile batches from a file, without a service.
+    Reconcile(Reconcile),
+    /// Serve the demo plant and post its day of batches.
+    Demo(Demo),
+    /// Print the OpenAPI document of the service.
+    Openapi,
+}
+
+/// Prints the OpenAPI document.
+///
+/// # Errors
+///
+/// Where it cannot be written.
+pub fn openapi() -> anyhow::Result<ExitCode> {
+    println!("{}", crate::server::openapi()?);
+    Ok(ExitCode::SUCCESS)
+}

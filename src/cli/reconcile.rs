@@ -1,0 +1,134 @@
+//! `reconcile`: batches from a file, reports to standard output.
+
+use super::input::{self, Read as PlantRead, Show};
+use super::text;
+use crate::ingest::{self, Refusal};
+use crate::pipeline::{self, Compiled};
+use crate::plant;
+use crate::report::Report;
+use anyhow::Context;
+use clap::{Args, ValueEnum};
+use std::fs::File;
+use std::io::{self, BufRead, BufReader, Read, Write};
+use std::path::{Path, PathBuf};
+use std::process::ExitCode;
+use time::OffsetDateTime;
+use time::macros::datetime;
+
+/// A file may hold any time: without a service there is no "now" that a batch
+/// could be ahead of, and the same files give the same answer on every day.
+const END_OF_TIME: OffsetDateTime = datetime!(2200-01-01 0:00 UTC);
+
+/// Reconcile batches from a file.
+#[derive(Args, Debug)]
+pub struct Reconcile {
+    /// The plant file, .toml or .json.
+    plant_file: PathBuf,
+
+    /// The batch: JSON, or one per line where it is called .ndjson or .jsonl or
+    /// `--format ndjson` is given; `-` reads standard input.
+    batch_file: PathBuf,
+
+    /// Form of the reports.
+    #[arg(long, default_value = "text")]
+    format: ReconcileFormat,
+}
+
+#[derive(Clone, Copy, Debug, PartialEq, Eq, ValueEnum)]
+enum ReconcileFormat {
+    /// For people.
+    Text,
+    /// The report, exactly.
+    Json,
+    /// Batches one per line in, reports one per line out.
+    Ndjson,
+}
+
+/// Reconciles batches and prints their reports.
+///
+/// # Errors
+///
+/// Where a file cannot be read or the reports cannot be written.
+pub fn reconcile(arguments: &Reconcile) -> anyhow::Result<ExitCode> {
+    // The warnings of a plant file are for `check`; here they would stand
+    // before every report.
+    let PlantRead::Plant(file) = input::plant_file(&arguments.plant_file, Show::Refusals)? else {
+        return Ok(input::faulty());
+    };
+    let plant = Compiled::new(file.plant, 1);
+    let name = arguments.batch_file.display().to_string();
+    let mut source = open(&arguments.batch_file)?;
+    let many = arguments.format == ReconcileFormat::Ndjson || is_stream(&arguments.batch_file);
+    let mut output = io::stdout().lock();
+    if many {
+        lines(&plant, source, &name, arguments.format, &mut output)
+    } else {
+        let mut body = Vec::new();
+        source.read_to_end(&mut body).with_context(|| name.clone())?;
+        match one(&plant, &body) {
+            Ok(report) => {
+                match arguments.format {
+                    ReconcileFormat::Text => output.write_all(text::describe(&report).as_bytes())?,
+                    _ => writeln!(output, "{}", serde_json::to_string_pretty(&report)?)?,
+                }
+                Ok(ExitCode::SUCCESS)
+            }
+            Err(refusal) => {
+                show(&refusal, &String::from_utf8_lossy(&body), &name);
+                Ok(input::faulty())
+            }
+        }
+    }
+}
+
+fn open(path: &Path) -> anyhow::Result<Box<dyn BufRead>> {
+    if path.as_os_str() == "-" {
+        return Ok(Box::new(io::stdin().lock()));
+    }
+    let file = File::open(path).with_context(|| path.display().to_string())?;
+    Ok(Box::new(BufReader::new(file)))
+}
+
+fn is_stream(path: &Path) -> bool {
+    let extension = path.extension().and_then(|extension| extension.to_str());
+    matches!(extension, Some("ndjson" | "jsonl"))
+}
+
+fn one(plant: &Compiled, body: &[u8]) -> Result<Report, Refusal> {
+    ingest::parse(body, END_OF_TIME).map(|parsed| pipeline::reconcile(plant, &parsed.batch))
+}
+
+fn lines(
+    plant: &Compiled,
+    source: Box<dyn BufRead>,
+    name: &str,
+    format: ReconcileFormat,
+    output: &mut impl Write,
+) -> anyhow::Result<ExitCode> {
+    let mut all_read = true;
+    for (index, line) in source.split(b'\n').enumerate() {
+        let line = line.with_context(|| name.to_owned())?;
+        if line.trim_ascii().is_empty() {
+            continue;
+        }
+        match one(plant, &line) {
+            Ok(report) if format == ReconcileFormat::Text => {
+                writeln!(output, "{}", text::describe(&report))?;
+            }
+            Ok(report) => writeln!(output, "{}", serde_json::to_string(&report)?)?,
+            Err(refusal) => {
+                all_read = false;
+                let name = format!("{name} (line {})", index + 1);
+                show(&refusal, &String::from_utf8_lossy(&line), &name);
+            }
+        }
+        output.flush()?;
+    }
+    Ok(if all_read { ExitCode::SUCCESS } else { input::faulty() })
+}
+
+fn show(refusal: &Refusal, source: &str, name: &str) {
+    for fault in &refusal.faults {
+        eprintln!("{}", plant::render(fault, source, name));
+    }
+}

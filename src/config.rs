@@ -1,0 +1,114 @@
+//! Settings of the service, from the command line and the environment.
+
+use crate::server::{Limits, Options};
+use crate::store::SqliteOptions;
+use crate::telemetry::LogFormat;
+use clap::Args;
+use std::net::SocketAddr;
+use std::path::PathBuf;
+use std::time::Duration;
+
+/// Settings of a running service.
+#[derive(Args, Clone, Debug)]
+pub struct Config {
+    /// Address to listen on; port 0 takes a free one.
+    #[arg(long, env = "COUNTERPOISE_LISTEN", default_value = "127.0.0.1:8080")]
+    pub listen: SocketAddr,
+
+    /// Database file; made where it is missing.
+    #[arg(long, env = "COUNTERPOISE_DATABASE", default_value = "counterpoise.sqlite")]
+    pub database: PathBuf,
+
+    /// What a service can be held to.
+    #[command(flatten)]
+    pub bounds: Bounds,
+
+    /// How it logs.
+    #[command(flatten)]
+    pub log: Log,
+}
+
+/// How a service logs.
+#[derive(Args, Clone, Debug)]
+pub struct Log {
+    /// Form of the log.
+    #[arg(long, env = "COUNTERPOISE_LOG_FORMAT", default_value = "text")]
+    pub log_format: LogFormat,
+
+    /// What is logged: error, warn, info, debug, or a list as
+    /// `counterpoise=debug,warn`.
+    #[arg(long, env = "COUNTERPOISE_LOG", default_value = "info")]
+    pub log: String,
+}
+
+/// What a service can be held to.
+#[derive(Args, Clone, Debug)]
+pub struct Bounds {
+    /// Requests with a body that are worked on at once; more get 429.
+    #[arg(long, env = "COUNTERPOISE_MAX_IN_FLIGHT", default_value_t = Limits::default().in_flight, value_parser = at_least_one)]
+    pub max_in_flight: usize,
+
+    /// Connections at once; more wait.
+    #[arg(long, env = "COUNTERPOISE_MAX_CONNECTIONS", default_value_t = Limits::default().connections, value_parser = at_least_one)]
+    pub max_connections: usize,
+
+    /// Batches that are reconciled at once; as many as there are processors
+    /// unless set.
+    #[arg(long, env = "COUNTERPOISE_WORKERS", value_parser = at_least_one)]
+    pub workers: Option<usize>,
+
+    /// Bytes of one document, as sent and after decompression.
+    #[arg(long, env = "COUNTERPOISE_MAX_DOCUMENT", default_value_t = Limits::default().document, value_parser = at_least_one)]
+    pub max_document: usize,
+
+    /// Bytes of a stream of batches, as sent and after decompression.
+    #[arg(long, env = "COUNTERPOISE_MAX_STREAM", default_value_t = Limits::default().stream, value_parser = at_least_one)]
+    pub max_stream: usize,
+
+    /// Seconds a client may take for its headers, and again for its body.
+    #[arg(long, env = "COUNTERPOISE_READ_TIMEOUT", default_value = "10", value_parser = seconds)]
+    pub read_timeout: Duration,
+
+    /// Seconds that an orderly end may take.
+    #[arg(long, env = "COUNTERPOISE_GRACE", default_value = "30", value_parser = seconds)]
+    pub grace: Duration,
+}
+
+impl Config {
+    /// Settings of the server.
+    pub fn server(&self) -> Options {
+        let defaults = Limits::default();
+        Options {
+            listen: self.listen,
+            grace: self.bounds.grace,
+            limits: Limits {
+                in_flight: self.bounds.max_in_flight,
+                connections: self.bounds.max_connections,
+                workers: self.bounds.workers.unwrap_or(defaults.workers),
+                document: self.bounds.max_document,
+                stream: self.bounds.max_stream,
+                read_timeout: self.bounds.read_timeout,
+            },
+        }
+    }
+
+    /// Settings of the store.
+    pub fn store(&self) -> SqliteOptions {
+        SqliteOptions::new(&self.database)
+    }
+}
+
+fn at_least_one(text: &str) -> Result<usize, String> {
+    match text.parse() {
+        Ok(number) if number >= 1 => Ok(number),
+        _ => Err("a whole number from 1 is needed".to_owned()),
+    }
+}
+
+fn seconds(text: &str) -> Result<Duration, String> {
+    let number: f64 = text.parse().map_err(|_| "a number of seconds is needed".to_owned())?;
+    match Duration::try_from_secs_f64(number) {
+        Ok(duration) if !duration.is_zero() => Ok(duration),
+        _ => Err("a positive number of seconds is needed".to_owned()),
+    }
+}

@@ -1,0 +1,272 @@
+//! A plant as equations, and one batch of it as a problem for the solver.
+//!
+//! [`System`] is compiled once per revision: states, relations, measurement
+//! functions and their sparsity. [`Case`] adds what one batch brings: readings
+//! with their sigma, and scales.
+
+use super::kinds;
+use super::layout::{Layout, StateKind};
+use super::observation::Observation;
+use super::relation::{Floors, Law, Relation, Role, Side};
+use crate::fluid::{self, State};
+use crate::plant::{Plant, Sigma, StreamId};
+use crate::solver::{Evaluation, Outside, Problem, Rows, Structure};
+
+/// Pressures a state may take: those at which water can be liquid, MPa.
+const LOWEST_PRESSURE: f64 = fluid::MIN_SATURATION_PRESSURE;
+const HIGHEST_PRESSURE: f64 = fluid::MAX_PRESSURE;
+/// Largest change of pressure in one step, as a factor.
+const PRESSURE_STEP: f64 = 2.0;
+/// Largest change of enthalpy in one step, kJ/kg.
+const ENTHALPY_STEP: f64 = 600.0;
+
+/// A plant's states, relations and measurement functions.
+#[derive(Clone, Debug)]
+pub struct System {
+    /// Where each state stands.
+    pub layout: Layout,
+    /// Relations in use order, bounds last.
+    pub relations: Vec<Relation>,
+    /// Tags in file order, then assumptions.
+    pub observations: Vec<Observation>,
+    /// Streams that a relation holds on the saturation line.
+    pub on_saturation: Vec<Option<Side>>,
+    /// Sparsity, for the solver.
+    pub structure: Structure,
+}
+
+/// One observation's value in a batch, internal units.
+#[derive(Clone, Copy, Debug, PartialEq)]
+pub struct Measured {
+    /// Reading.
+    pub value: f64,
+    /// Its standard uncertainty.
+    pub sigma: Sigma,
+}
+
+/// One batch of a system, as a problem for the solver.
+#[derive(Clone, Debug)]
+pub struct Case<'a> {
+    system: &'a System,
+    measured: Vec<Option<Measured>>,
+    state_scale: Vec<f64>,
+    relation_scale: Vec<f64>,
+}
+
+impl System {
+    /// Compiles a plant.
+    pub fn new(plant: &Plant) -> Self {
+        let layout = Layout::new(plant);
+        let relations = kinds::relations(plant, &layout);
+        let mut on_saturation = vec![None; plant.streams.len()];
+        for relation in &relations {
+            if let (Role::Condition(_), Law::Saturated { stream, side, .. }) =
+                (&relation.role, &relation.law)
+            {
+                on_saturation[stream.0] = Some(*side);
+            }
+        }
+        let quantities = plant.tags.iter().map(|tag| tag.quantity);
+        let stated = plant.assumptions.iter().map(|a| a.quantity);
+        let observations: Vec<Observation> = quantities
+            .chain(stated)
+            .map(|q| {
+                Observation::new(q, &plant.equipment, plant.barometer, &on_saturation, &layout)
+            })
+            .collect();
+        let rows = |lists: Vec<&[usize]>| Rows::from_lists(&lists);
+        let structure = Structure {
+            states: layout.len(),
+            relations: rows(relations.iter().map(|r| &r.row[..]).collect()),
+            observations: rows(observations.iter().map(|o| &o.row[..]).collect()),
+            bounds: (0..relations.len())
+                .filter(|&k| matches!(relations[k].role, Role::Bound(_)))
+                .collect(),
+            pairs: (0..plant.streams.len())
+                .map(|s| (layout.p(StreamId(s)), layout.h(StreamId(s))))
+                .collect(),
+        };
+        System {
+            layout,
+            relations,
+            observations,
+            on_saturation,
+            structure,
+        }
+    }
+
+    /// Value of observation `i` at `x`, in internal units, with its gradient
+    /// beside `observations[i].row`; `None` where it has none.
+    pub fn predict(&self, i: usize, x: &[f64]) -> Option<(f64, Vec<f64>)> {
+        let observation = &self.observations[i];
+        let mut states = vec![None; self.layout.streams()];
+        for s in observation.needs().into_iter().flatten() {
+            states[s.0] = self.state(s, x).ok();
+        }
+        let mut gradient = vec![0.0; observation.row.len()];
+        let value = observation.evaluate(x, &states, &mut gradient).ok()?;
+        Some((value, gradient))
+    }
+
+    /// Saturated liquid's and vapour's enthalpy at a stream's pressure, kJ/kg;
+    /// `None` above the critical pressure.
+    pub fn saturated_enthalpies(&self, stream: StreamId, x: &[f64]) -> Option<(f64, f64)> {
+        let saturation = fluid::saturation(x[self.layout.p(stream)]).ok()?;
+        Some((saturation.liquid.h, saturation.vapour.h))
+    }
+
+    /// Saturation temperature at a stream's pressure, K, likewise.
+    pub fn saturation_temperature(&self, stream: StreamId, x: &[f64]) -> Option<f64> {
+        let saturation = fluid::saturation(x[self.layout.p(stream)]);
+        saturation.ok().map(|saturation| saturation.t)
+    }
+
+    /// Thermodynamic state of a stream at `x`.
+    ///
+    /// # Errors
+    /// Where pressure and enthalpy lie outside the range of the properties.
+    pub fn state(&self, stream: StreamId, x: &[f64]) -> Result<State, fluid::OutOfRange> {
+        fluid::from_ph(x[self.layout.p(stream)], x[self.layout.h(stream)])
+    }
+}
+
+impl<'a> Case<'a> {
+    /// A batch of `system`: one entry per observation, `None` where it is not
+    /// used. Scales are taken from `at`, a state of believable size.
+    pub fn new(system: &'a System, measured: Vec<Option<Measured>>, at: &[f64]) -> Self {
+        let layout = &system.layout;
+        let typical_flow = (0..layout.streams())
+            .map(|s| at[layout.m(StreamId(s))].abs())
+            .fold(1e-3, f64::max);
+        let floors = Floors {
+            flow: 0.05 * typical_flow,
+            pressure: 1e-3,
+            enthalpy: 1000.0,
+            energy: 50.0 * typical_flow,
+        };
+        let mut state_scale: Vec<f64> = (0..layout.len())
+            .map(|j| match layout.kind(j) {
+                StateKind::Pressure => 0.01 * at[j].abs().max(1e-3),
+                StateKind::Enthalpy => 5.0,
+                _ => 0.01 * at[j].abs().max(floors.of(layout, j)),
+            })
+            .collect();
+        for (observation, value) in system.observations.iter().zip(&measured) {
+            if let (&[j], Some(measured)) = (&observation.row[..], value) {
+                state_scale[j] = state_scale[j].min(measured.sigma.get());
+            }
+        }
+        let relations = system.relations.iter();
+        let relation_scale = relations.map(|r| r.size(layout, at, &floors)).collect();
+        Case {
+            system,
+            measured,
+            state_scale,
+            relation_scale,
+        }
+    }
+
+    /// The system.
+    pub fn system(&self) -> &'a System {
+        self.system
+    }
+
+    /// What each observation reads; `None` where it is not used.
+    pub fn measured(&self) -> &[Option<Measured>] {
+        &self.measured
+    }
+
+    /// Which observations are used.
+    pub fn used(&self) -> Vec<bool> {
+        self.measured.iter().map(Option::is_some).collect()
+    }
+
+    fn thermodynamic_states(&self, x: &[f64]) -> Result<Vec<Option<State>>, Outside> {
+        let mut states = vec![None; self.system.layout.streams()];
+        for (observation, measured) in self.system.observations.iter().zip(&self.measured) {
+            if measured.is_none() {
+                continue;
+            }
+            for s in observation.needs().into_iter().flatten() {
+                if states[s.0].is_none() {
+                    let state = self.system.state(s, x);
+                    states[s.0] = Some(state.map_err(|_| Outside {
+                        state: self.system.layout.h(s),
+                    })?);
+                }
+            }
+        }
+        Ok(states)
+    }
+}
+
+impl Problem for Case<'_> {
+    fn structure(&self) -> &Structure {
+        &self.system.structure
+    }
+
+    fn evaluate(&self, x: &[f64], into: &mut Evaluation) -> Result<(), Outside> {
+        let system = self.system;
+        let outside = |state| Outside { state };
+        let states = self.thermodynamic_states(x)?;
+        for (k, relation) in system.relations.iter().enumerate() {
+            let values = &mut into.f_values[system.structure.relations.range(k)];
+            let f = relation.evaluate(&system.layout, x, values);
+            into.f[k] = f.map_err(outside)?;
+        }
+        for (i, observation) in system.observations.iter().enumerate() {
+            let values = &mut into.g_values[system.structure.observations.range(i)];
+            into.r[i] = match self.measured[i] {
+                None => {
+                    values.fill(0.0);
+                    0.0
+                }
+                Some(Measured { value, sigma }) => {
+                    let g = observation.evaluate(x, &states, values).map_err(outside)?;
+                    values.iter_mut().for_each(|v| *v /= sigma.get());
+                    (value - g) / sigma.get()
+                }
+            };
+        }
+        Ok(())
+    }
+
+    fn state_scale(&self) -> &[f64] {
+        &self.state_scale
+    }
+
+    fn relation_scale(&self) -> &[f64] {
+        &self.relation_scale
+    }
+
+    /// Bends a step so that pressures stay positive and change by a factor of
+    /// two at most, and enthalpies stay where the properties are valid.
+    fn limit(&self, x: &[f64], step: &mut [f64]) {
+        let layout = &self.system.layout;
+        let pressure_range = |p: f64| (p / PRESSURE_STEP, p * PRESSURE_STEP);
+        for s in (0..layout.streams()).map(StreamId) {
+            let (p, h) = (layout.p(s), layout.h(s));
+            let (low, high) = pressure_range(x[p]);
+            bend(x[p], &mut step[p], low.max(LOWEST_PRESSURE), high.min(HIGHEST_PRESSURE));
+            bend(x[h], &mut step[h], x[h] - ENTHALPY_STEP, x[h] + ENTHALPY_STEP);
+            if let Ok((low, high)) = fluid::enthalpy_range(x[p] + step[p]) {
+                bend(x[h], &mut step[h], low, high);
+            }
+        }
+        if let Some(b) = layout.barometer {
+            let (low, high) = pressure_range(x[b]);
+            bend(x[b], &mut step[b], low, high);
+        }
+    }
+}
+
+/// Bends a step so that `from + step` stays within `low` and `high`; a step
+/// that stays there by itself is left as it is, to the last bit.
+fn bend(from: f64, step: &mut f64, low: f64, high: f64) {
+    let to = from + *step;
+    if to < low {
+        *step = low - from;
+    } else if to > high {
+        *step = high - from;
+    }
+}

@@ -1,0 +1,231 @@
+//! The way of a batch: read, made durable, reconciled, its result made durable.
+//!
+//! What has been accepted is finished whether or not the client still waits:
+//! the work runs in a task of its own, and everybody who asks for the same batch
+//! meanwhile waits for that one task. Reconciling is pure computation, so it
+//! runs on threads that may block, a bounded number at once and one at a time
+//! per plant.
+
+use super::error::{Kind, Problem};
+use super::revisions::{Revision, Revisions};
+use crate::ingest::{self, Parsed};
+use crate::pipeline;
+use crate::plant::Batch;
+use crate::report::{Assessment, Report};
+use crate::store::{Acceptance, Incoming, Store, StoreError, Stored, Ticket, Unfinished};
+use futures::future::{BoxFuture, Shared};
+use futures::{FutureExt, StreamExt};
+use std::collections::HashMap;
+use std::sync::{Arc, Mutex, MutexGuard, PoisonError};
+use time::OffsetDateTime;
+use tokio::sync::Semaphore;
+use tokio_util::task::TaskTracker;
+
+/// Bodies longer than this are read on a thread that may block.
+const LONG_BODY: usize = 64 << 10;
+
+/// Unfinished batches that are read and worked on together.
+const RESUMED_TOGETHER: usize = 64;
+
+type Outcome = Result<Arc<Report>, Problem>;
+type Running = Shared<BoxFuture<'static, Outcome>>;
+
+/// See the module.
+pub(super) struct Engine {
+    store: Arc<dyn Store>,
+    revisions: Revisions,
+    workers: Semaphore,
+    /// One lock per plant, so that its batches are reconciled one at a time.
+    lanes: Mutex<HashMap<String, Arc<tokio::sync::Mutex<()>>>>,
+    /// What is being worked on, by number of the ticket.
+    running: Mutex<HashMap<i64, Running>>,
+    tasks: TaskTracker,
+}
+
+/// A batch that is durable.
+pub(super) struct Accepted {
+    pub ticket: Ticket,
+    batch: Batch,
+    /// It was accepted before, so that there may be a result already.
+    known: bool,
+}
+
+impl Engine {
+    pub fn new(store: Arc<dyn Store>, workers: usize) -> Self {
+        Engine {
+            revisions: Revisions::new(Arc::clone(&store)),
+            store,
+            workers: Semaphore::new(workers.max(1)),
+            lanes: Mutex::default(),
+            running: Mutex::default(),
+            tasks: TaskTracker::new(),
+        }
+    }
+
+    /// Compiled revisions.
+    pub fn revisions(&self) -> &Revisions {
+        &self.revisions
+    }
+
+    /// Reads a batch and makes it durable.
+    pub async fn accept(
+        &self,
+        plant: &str,
+        body: Vec<u8>,
+        received: OffsetDateTime,
+    ) -> Result<Accepted, Problem> {
+        let (body, parsed) = parse(body, received).await?;
+        let Parsed { batch, digest } = parsed?;
+        let incoming = Incoming {
+            plant: plant.to_owned(),
+            batch: batch.name.clone(),
+            digest,
+            start: batch.start,
+            end: batch.end,
+            received,
+            body,
+        };
+        match self.store.accept(incoming).await? {
+            Acceptance::New(ticket) => Ok(Accepted { ticket, batch, known: false }),
+            Acceptance::Known(ticket) => Ok(Accepted { ticket, batch, known: true }),
+            Acceptance::NoPlant => Err(no_plant(plant)),
+            Acceptance::Conflict => Err(Problem::new(
+                Kind::Conflict,
+                format!("batch \"{}\" was accepted before with other content", batch.name),
+            )),
+        }
+    }
+
+    /// The report of an accepted batch, as soon as there is one.
+    pub async fn finish(self: &Arc<Self>, accepted: Accepted) -> Outcome {
+        let Accepted { ticket, batch, known } = accepted;
+        if known
+            && let Some(Stored::Done(report)) =
+                self.store.batch(&ticket.plant, &ticket.batch).await?
+        {
+            return Ok(Arc::new(*report));
+        }
+        self.start(ticket, batch).await
+    }
+
+    /// Has an accepted batch finished without waiting for it; what `until_then`
+    /// holds is dropped at the end.
+    pub fn finish_later(self: &Arc<Self>, accepted: Accepted, until_then: impl Send + 'static) {
+        let engine = Arc::clone(self);
+        self.tasks.spawn(async move {
+            // Whoever asks for the report will be told what went wrong.
+            let _ = engine.finish(accepted).await;
+            drop(until_then);
+        });
+    }
+
+    /// Finishes what was accepted and has no result, in order of acceptance.
+    pub async fn resume(self: &Arc<Self>) -> Result<(), StoreError> {
+        let mut after = 0;
+        loop {
+            let unfinished = self.store.unfinished(after, RESUMED_TOGETHER).await?;
+            let Some(last) = unfinished.last() else { return Ok(()) };
+            after = last.ticket.id;
+            tracing::info!(batches = unfinished.len(), "finishing what was accepted before");
+            let resumed = futures::stream::iter(unfinished).map(|one| self.resume_one(one));
+            resumed.buffered(RESUMED_TOGETHER).for_each(|()| async {}).await;
+        }
+    }
+
+    async fn resume_one(self: &Arc<Self>, unfinished: Unfinished) {
+        let Unfinished { ticket, received, body } = unfinished;
+        let id = ticket.id;
+        let outcome = match parse(body, received).await {
+            Ok((_, Ok(parsed))) => self.start(ticket, parsed.batch).await,
+            Ok((_, Err(refusal))) => Err(refusal.into()),
+            Err(problem) => Err(problem),
+        };
+        if let Err(problem) = outcome {
+            tracing::error!(id, ?problem, "an accepted batch could not be finished");
+        }
+    }
+
+    /// Waits until nothing is being worked on. Nothing new may be started.
+    pub async fn drain(&self) {
+        self.tasks.close();
+        self.tasks.wait().await;
+    }
+
+    /// The task that works on a batch: the one that runs already, or a new one.
+    fn start(self: &Arc<Self>, ticket: Ticket, batch: Batch) -> Running {
+        let id = ticket.id;
+        let mut running = lock(&self.running);
+        if let Some(same) = running.get(&id) {
+            return same.clone();
+        }
+        let engine = Arc::clone(self);
+        let work = async move {
+            let outcome = engine.work(ticket, batch).await;
+            lock(&engine.running).remove(&id);
+            outcome
+        };
+        let work = work.boxed().shared();
+        running.insert(id, work.clone());
+        self.tasks.spawn(work.clone());
+        work
+    }
+
+    async fn work(&self, ticket: Ticket, batch: Batch) -> Outcome {
+        let revision = self.revisions.get(&ticket.plant, Some(ticket.revision)).await?;
+        let report = {
+            let lane = Arc::clone(lock(&self.lanes).entry(ticket.plant.clone()).or_default());
+            let _turn = lane.lock().await;
+            let _worker = self.workers.acquire().await;
+            compute(move || pipeline::reconcile(&revision.compiled, &batch)).await?
+        };
+        let report = Arc::new(report);
+        self.store.finish(ticket, Arc::clone(&report)).await?;
+        Ok(report)
+    }
+
+    /// What the tags of a revision can and cannot determine.
+    pub async fn assess(&self, revision: Arc<Revision>) -> Result<Assessment, Problem> {
+        let _worker = self.workers.acquire().await;
+        compute(move || {
+            let mut assessment = pipeline::assess(&revision.compiled);
+            let warnings = revision.warnings.iter().map(ToString::to_string);
+            assessment.warnings.extend(warnings);
+            assessment
+        })
+        .await
+    }
+}
+
+/// Runs pure computation on a thread of the runtime's blocking pool.
+pub(super) async fn compute<T: Send + 'static>(
+    work: impl FnOnce() -> T + Send + 'static,
+) -> Result<T, Problem> {
+    let span = tracing::Span::current();
+    tokio::task::spawn_blocking(move || span.in_scope(work)).await.map_err(|error| {
+        tracing::error!(%error, "a computation broke off");
+        Problem::new(Kind::Internal, "a computation broke off; the log says more")
+    })
+}
+
+async fn parse(
+    body: Vec<u8>,
+    received: OffsetDateTime,
+) -> Result<(Vec<u8>, Result<Parsed, ingest::Refusal>), Problem> {
+    let long = body.len() > LONG_BODY;
+    let read = move || {
+        let parsed = ingest::parse(&body, received);
+        (body, parsed)
+    };
+    if long { compute(read).await } else { Ok(read()) }
+}
+
+/// The answer where a plant is not known.
+pub(super) fn no_plant(plant: &str) -> Problem {
+    Problem::new(Kind::NotFound, format!("there is no plant \"{plant}\""))
+}
+
+/// A lock whose content is whole whatever happened to a thread that held it:
+/// single insertions and removals.
+fn lock<T>(mutex: &Mutex<T>) -> MutexGuard<'_, T> {
+    mutex.lock().unwrap_or_else(PoisonError::into_inner)
+}

@@ -1,0 +1,275 @@
+//! Problem documents (RFC 9457), and the only place that knows which error has
+//! which status code.
+//!
+//! A handler answers with a [`Problem`]; the document is written by the
+//! outermost layer, which knows the request's id and turns the errors of every
+//! other layer into problems as well.
+
+use crate::ingest::Refusal;
+use crate::plant::Fault;
+use crate::store::StoreError;
+use axum::http::{HeaderMap, HeaderName, HeaderValue, StatusCode, header};
+use axum::response::{IntoResponse, Response};
+use serde::Serialize;
+use std::any::Any;
+use utoipa::ToSchema;
+
+/// The media type of problem documents.
+pub const PROBLEM_JSON: &str = "application/problem+json";
+
+/// What kind of problem.
+#[derive(Clone, Copy, Debug, PartialEq, Eq)]
+#[expect(missing_docs, reason = "the titles in `describe` say it")]
+pub enum Kind {
+    Malformed,
+    BadParameter,
+    NotFound,
+    MethodNotAllowed,
+    NotAcceptable,
+    Timeout,
+    Conflict,
+    PreconditionFailed,
+    TooLarge,
+    UnsupportedMediaType,
+    Unacceptable,
+    Overloaded,
+    Internal,
+    Unavailable,
+    Other(StatusCode),
+}
+
+impl Kind {
+    fn describe(self) -> (StatusCode, &'static str, &'static str) {
+        match self {
+            Kind::Malformed => (StatusCode::BAD_REQUEST, "malformed", "The body cannot be read"),
+            Kind::BadParameter => {
+                (StatusCode::BAD_REQUEST, "bad-parameter", "A parameter cannot be used")
+            }
+            Kind::NotFound => (StatusCode::NOT_FOUND, "not-found", "There is nothing here"),
+            Kind::MethodNotAllowed => (
+                StatusCode::METHOD_NOT_ALLOWED,
+                "method-not-allowed",
+                "This address does not take this method",
+            ),
+            Kind::NotAcceptable => (
+                StatusCode::NOT_ACCEPTABLE,
+                "not-acceptable",
+                "It does not exist in the form that was asked for",
+            ),
+            Kind::Timeout => {
+                (StatusCode::REQUEST_TIMEOUT, "timeout", "The request did not come in time")
+            }
+            Kind::Conflict => {
+                (StatusCode::CONFLICT, "conflict", "The name is taken by other content")
+            }
+            Kind::PreconditionFailed => (
+                StatusCode::PRECONDITION_FAILED,
+                "precondition-failed",
+                "The current revision is not the one that was expected",
+            ),
+            Kind::TooLarge => (StatusCode::PAYLOAD_TOO_LARGE, "too-large", "The body is too large"),
+            Kind::UnsupportedMediaType => (
+                StatusCode::UNSUPPORTED_MEDIA_TYPE,
+                "unsupported-media-type",
+                "The body is of a kind that is not taken here",
+            ),
+            Kind::Unacceptable => (
+                StatusCode::UNPROCESSABLE_ENTITY,
+                "unacceptable",
+                "The content has faults",
+            ),
+            Kind::Overloaded => {
+                (StatusCode::TOO_MANY_REQUESTS, "overloaded", "There is too much to do now")
+            }
+            Kind::Internal => {
+                (StatusCode::INTERNAL_SERVER_ERROR, "internal", "The service made a mistake")
+            }
+            Kind::Unavailable => {
+                (StatusCode::SERVICE_UNAVAILABLE, "unavailable", "The service cannot do this now")
+            }
+            Kind::Other(status) => {
+                (status, "http", status.canonical_reason().unwrap_or("An HTTP error"))
+            }
+        }
+    }
+
+    fn of(status: StatusCode) -> Self {
+        match status {
+            StatusCode::BAD_REQUEST => Kind::Malformed,
+            StatusCode::NOT_FOUND => Kind::NotFound,
+            StatusCode::METHOD_NOT_ALLOWED => Kind::MethodNotAllowed,
+            StatusCode::REQUEST_TIMEOUT => Kind::Timeout,
+            StatusCode::PAYLOAD_TOO_LARGE => Kind::TooLarge,
+            StatusCode::UNSUPPORTED_MEDIA_TYPE => Kind::UnsupportedMediaType,
+            StatusCode::INTERNAL_SERVER_ERROR => Kind::Internal,
+            other => Kind::Other(other),
+        }
+    }
+}
+
+/// A problem document (RFC 9457).
+#[derive(Clone, Debug, Serialize, ToSchema)]
+pub struct Problem {
+    /// Kind of problem: `urn:counterpoise:problem:` and a word.
+    #[serde(rename = "type")]
+    #[schema(example = "urn:counterpoise:problem:unacceptable")]
+    kind: String,
+    /// The same for people.
+    #[schema(example = "The content has faults")]
+    title: String,
+    /// HTTP status code.
+    #[schema(example = 422)]
+    status: u16,
+    /// What is wrong this time.
+    #[schema(example = "1 fault in the batch")]
+    detail: String,
+    /// Id of the request, as in its `x-request-id`.
+    #[schema(example = "0195f3a8-6c1e-7d0a-9f53-2b8c4e1f7a60")]
+    instance: String,
+    /// Every fault of the content.
+    #[serde(skip_serializing_if = "Vec::is_empty")]
+    #[schema(required = false)]
+    faults: Vec<Fault>,
+    #[serde(skip)]
+    headers: HeaderMap,
+}
+
+impl Problem {
+    /// A problem of a kind.
+    pub fn new(kind: Kind, detail: impl Into<String>) -> Self {
+        let (status, word, title) = kind.describe();
+        let mut headers = HeaderMap::new();
+        if matches!(kind, Kind::Overloaded | Kind::Unavailable) {
+            headers.insert(header::RETRY_AFTER, HeaderValue::from_static("1"));
+        }
+        Problem {
+            kind: format!("urn:counterpoise:problem:{word}"),
+            title: title.to_owned(),
+            status: status.as_u16(),
+            detail: detail.into(),
+            instance: String::new(),
+            faults: Vec::new(),
+            headers,
+        }
+    }
+
+    /// The same with faults.
+    pub fn with_faults(mut self, faults: Vec<Fault>) -> Self {
+        self.faults = faults;
+        self
+    }
+
+    /// The same with a header on its response.
+    pub fn with_header(mut self, name: HeaderName, value: &'static str) -> Self {
+        self.headers.insert(name, HeaderValue::from_static(value));
+        self
+    }
+
+    /// The same, said of a request.
+    pub fn at(mut self, request_id: &str) -> Self {
+        request_id.clone_into(&mut self.instance);
+        self
+    }
+
+    /// The same, said of a line of a stream: its faults have that line.
+    pub fn on_line(mut self, line: usize) -> Self {
+        self.detail = format!("line {line}: {}", self.detail);
+        for fault in &mut self.faults {
+            fault.line = Some(line);
+        }
+        self
+    }
+
+    /// Status code.
+    pub fn status(&self) -> StatusCode {
+        // Every kind's code is one.
+        StatusCode::from_u16(self.status).unwrap_or(StatusCode::INTERNAL_SERVER_ERROR)
+    }
+
+    /// The document.
+    pub fn document(&self) -> Vec<u8> {
+        serde_json::to_vec(self).unwrap_or_default()
+    }
+}
+
+impl From<StoreError> for Problem {
+    fn from(error: StoreError) -> Self {
+        match error {
+            StoreError::Overloaded => Problem::new(Kind::Overloaded, error.to_string()),
+            StoreError::Unavailable(reason) => Problem::new(Kind::Unavailable, reason),
+            StoreError::Unusable(_) | StoreError::Corrupt(_) => {
+                tracing::error!(%error, "the store");
+                Problem::new(Kind::Internal, "the store could not answer; the log says why")
+            }
+        }
+    }
+}
+
+impl From<Refusal> for Problem {
+    fn from(refusal: Refusal) -> Self {
+        let kind = if refusal.syntax { Kind::Malformed } else { Kind::Unacceptable };
+        Problem::new(kind, format!("{} in the batch", count(&refusal.faults)))
+            .with_faults(refusal.faults)
+    }
+}
+
+/// "1 fault", "3 faults".
+pub(super) fn count(faults: &[Fault]) -> String {
+    match faults.len() {
+        1 => "1 fault".to_owned(),
+        number => format!("{number} faults"),
+    }
+}
+
+impl IntoResponse for Problem {
+    fn into_response(self) -> Response {
+        let mut response = self.status().into_response();
+        response.extensions_mut().insert(self);
+        response
+    }
+}
+
+/// The response to a panic; the hook of the panic has logged it.
+pub(super) fn panicked(_: Box<dyn Any + Send + 'static>) -> Response {
+    Problem::new(Kind::Internal, "the log says more").into_response()
+}
+
+/// Turns every response with an error status into a problem document.
+pub(super) fn finish(mut response: Response, request_id: &str) -> Response {
+    let status = response.status();
+    if !status.is_client_error() && !status.is_server_error() {
+        return response;
+    }
+    let problem = response
+        .extensions_mut()
+        .remove::<Problem>()
+        .unwrap_or_else(|| {
+            Problem::new(Kind::of(status), status.canonical_reason().unwrap_or("an HTTP error"))
+        })
+        .at(request_id);
+    let mut headers = std::mem::take(response.headers_mut());
+    for name in [header::CONTENT_LENGTH, header::CONTENT_ENCODING, header::TRANSFER_ENCODING] {
+        headers.remove(name);
+    }
+    headers.insert(header::CONTENT_TYPE, HeaderValue::from_static(PROBLEM_JSON));
+    headers.extend(problem.headers.clone());
+    let mut finished = (status, problem.document()).into_response();
+    *finished.headers_mut() = headers;
+    finished
+}
+
+/// A response as bytes, for a connection that has no request to answer.
+pub(super) fn raw_response(problem: &Problem, request_id: &str) -> Vec<u8> {
+    let status = problem.status();
+    let document = problem.document();
+    let mut bytes = format!(
+        "HTTP/1.1 {} {}\r\ncontent-type: {PROBLEM_JSON}\r\ncontent-length: {}\r\n\
+         x-request-id: {request_id}\r\nconnection: close\r\n\r\n",
+        status.as_u16(),
+        status.canonical_reason().unwrap_or_default(),
+        document.len(),
+    )
+    .into_bytes();
+    bytes.extend(document);
+    bytes
+}

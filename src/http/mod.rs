@@ -1,0 +1,142 @@
+//! The service as HTTP: routes, shapes at the edge, problem documents.
+//!
+//! [`App`] holds what every request needs; [`router`] makes the routes from it.
+//! Handlers take apart, call and convert; the way of a batch is in `engine`,
+//! and `error` alone knows status codes.
+
+mod ambient;
+mod batches;
+mod body;
+mod engine;
+mod error;
+mod headers;
+mod observe;
+mod openapi;
+mod operation;
+mod params;
+mod plants;
+mod revisions;
+mod series;
+
+pub use ambient::{Clock, Entropy, SystemClock, SystemEntropy};
+pub use error::{Kind, Problem};
+pub use openapi::document;
+
+use crate::store::Store;
+use axum::http::header;
+use axum::middleware::from_fn_with_state;
+use engine::Engine;
+use std::sync::Arc;
+use std::time::Duration;
+use tokio::sync::Semaphore;
+use tower_http::catch_panic::CatchPanicLayer;
+use tower_http::compression::{CompressionLayer, DefaultPredicate, Predicate};
+
+/// What one request, and all of them together, may take.
+#[derive(Clone, Debug, PartialEq, Eq)]
+pub struct Limits {
+    /// Requests with a body that are worked on at once; more are refused.
+    pub in_flight: usize,
+    /// Connections at once; more wait.
+    pub connections: usize,
+    /// Batches that are reconciled at once.
+    pub workers: usize,
+    /// Bytes of one document (plant file or batch) after decompression.
+    pub document: usize,
+    /// Bytes of a stream of batches after decompression.
+    pub stream: usize,
+    /// How long a client may take for its headers, and again for its body.
+    pub read_timeout: Duration,
+}
+
+impl Default for Limits {
+    fn default() -> Self {
+        Limits {
+            in_flight: 64,
+            connections: 1024,
+            workers: std::thread::available_parallelism().map_or(1, usize::from),
+            document: 4 << 20,
+            stream: 32 << 20,
+            read_timeout: Duration::from_secs(10),
+        }
+    }
+}
+
+/// What every request needs.
+#[derive(Clone)]
+pub struct App {
+    store: Arc<dyn Store>,
+    engine: Arc<Engine>,
+    clock: Arc<dyn Clock>,
+    entropy: Arc<dyn Entropy>,
+    limits: Arc<Limits>,
+    permits: Arc<Semaphore>,
+}
+
+impl App {
+    /// Puts the service together.
+    pub fn new(
+        store: Arc<dyn Store>,
+        clock: Arc<dyn Clock>,
+        entropy: Arc<dyn Entropy>,
+        limits: Limits,
+    ) -> Self {
+        App {
+            engine: Arc::new(Engine::new(Arc::clone(&store), limits.workers)),
+            permits: Arc::new(Semaphore::new(limits.in_flight)),
+            limits: Arc::new(limits),
+            store,
+            clock,
+            entropy,
+        }
+    }
+
+    /// Where everything is kept.
+    pub fn store(&self) -> &Arc<dyn Store> {
+        &self.store
+    }
+
+    /// What requests may take.
+    pub fn limits(&self) -> &Limits {
+        &self.limits
+    }
+
+    /// Finishes every batch that was accepted and has no result.
+    ///
+    /// # Errors
+    ///
+    /// Where the store cannot be read; it can be called again.
+    pub async fn resume(&self) -> Result<(), crate::store::StoreError> {
+        self.engine.resume().await
+    }
+
+    /// Waits until everything that was accepted is finished.
+    pub async fn drain(&self) {
+        self.engine.drain().await;
+    }
+
+    /// An answer to a request whose headers did not come in time; such a
+    /// request never reaches a route.
+    pub fn headers_too_slow(&self) -> Vec<u8> {
+        let instance = ambient::request_id(&*self.clock, &*self.entropy);
+        let problem = Problem::new(Kind::Timeout, "the request's headers did not come in time");
+        error::raw_response(&problem.at(&instance), &instance)
+    }
+}
+
+/// All routes.
+pub fn router(app: App) -> axum::Router {
+    let (routes, document) = openapi::routes().split_for_parts();
+    let docs = utoipa_swagger_ui::SwaggerUi::new("/docs").url("/openapi.json", document);
+    // A strong entity tag names one exact sequence of bytes, so what carries
+    // one is sent as it is.
+    let untagged = |_, _, headers: &axum::http::HeaderMap, _: &axum::http::Extensions| {
+        !headers.contains_key(header::ETAG)
+    };
+    routes
+        .with_state(app.clone())
+        .merge(docs)
+        .layer(CompressionLayer::new().compress_when(DefaultPredicate::new().and(untagged)))
+        .layer(CatchPanicLayer::custom(error::panicked))
+        .layer(from_fn_with_state(app, observe::observe))
+}

@@ -1,0 +1,46 @@
+//! The routes with their OpenAPI 3.1 document: one table gives both.
+
+use super::{App, Problem, batches, operation, plants, series};
+use utoipa::OpenApi;
+use utoipa_axum::router::OpenApiRouter;
+use utoipa_axum::routes;
+
+#[derive(OpenApi)]
+#[openapi(
+    info(
+        title = "Counterpoise",
+        description = "Reconciles the measurements of steam and power plants: the nearest set of \
+            flows, pressures and temperatures that conserve mass and energy, each with its \
+            uncertainty, and whether a batch of readings is consistent.\n\nUncertainties are \
+            half-widths at 95 % coverage. Tags come in their own units; streams in kg/s, bar \
+            (absolute), Cel and kJ/kg; heat, work and power in kW. Times are RFC 3339: any offset \
+            in, UTC out. Every error is a problem document (RFC 9457).\n\nAdvisory only: never \
+            for protection or safety functions.",
+        license(name = "Apache-2.0", identifier = "Apache-2.0"),
+    ),
+    tags(
+        (name = "plants", description = "Plant files and what their tags can determine"),
+        (name = "batches", description = "Readings in, reports out"),
+        (name = "operation", description = "For whoever keeps the service running"),
+    ),
+    components(schemas(Problem)),
+)]
+struct Document;
+
+/// Every route with its description.
+pub(super) fn routes() -> OpenApiRouter<App> {
+    OpenApiRouter::with_openapi(Document::openapi())
+        .routes(routes!(plants::list))
+        .routes(routes!(plants::put, plants::get))
+        .routes(routes!(plants::assessment))
+        .routes(routes!(batches::post, batches::list))
+        .routes(routes!(batches::get))
+        .routes(routes!(series::get))
+        .routes(routes!(operation::live))
+        .routes(routes!(operation::ready))
+}
+
+/// The OpenAPI document.
+pub fn document() -> utoipa::openapi::OpenApi {
+    routes().into_openapi()
+}

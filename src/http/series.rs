@@ -1,0 +1,232 @@
+//! Numbers over time, as JSON or CSV.
+
+use super::error::{Kind, Problem};
+use super::headers::{accepted, next_link, value};
+use super::params::{Params, cursor_text, with_cursor};
+use super::revisions::JSON;
+use super::App;
+use crate::report::Verdict;
+use crate::store::{Column, Field, Selector, SeriesPage, SeriesQuery};
+use axum::Json;
+use axum::extract::{Path, State};
+use axum::http::{HeaderMap, Uri, header};
+use axum::response::{IntoResponse, Response};
+use serde::Serialize;
+use time::OffsetDateTime;
+use time::format_description::well_known::Rfc3339;
+use utoipa::ToSchema;
+
+const CSV: &str = "text/csv";
+
+/// Series that one request may ask for.
+const MOST_SERIES: usize = 200;
+
+/// Names of the fields, as in a query.
+const FIELDS: [(&str, Field); 7] = [
+    ("reconciled", Field::Reconciled),
+    ("measured", Field::Measured),
+    ("adjustment", Field::Adjustment),
+    ("uncertainty", Field::Uncertainty),
+    ("uncertainty-measured", Field::UncertaintyMeasured),
+    ("redundancy", Field::Redundancy),
+    ("standardised", Field::Standardised),
+];
+
+/// Numbers over time: as many values in each series as there are batches.
+#[derive(Serialize, ToSchema)]
+pub(super) struct SeriesDocument {
+    /// Plant.
+    plant: String,
+    /// Which number.
+    #[schema(example = "reconciled")]
+    field: &'static str,
+    /// The batches, the earliest period first.
+    batches: Vec<SeriesBatch>,
+    /// One for each thing asked for; one more where its unit changed.
+    series: Vec<Series>,
+}
+
+/// The batch that the values at one place belong to.
+#[derive(Serialize, ToSchema)]
+struct SeriesBatch {
+    /// The client's name for it.
+    batch: String,
+    /// Start of the period, UTC.
+    #[serde(with = "time::serde::rfc3339")]
+    start: OffsetDateTime,
+    /// End of the period, UTC.
+    #[serde(with = "time::serde::rfc3339")]
+    end: OffsetDateTime,
+    /// Verdict.
+    verdict: Verdict,
+}
+
+/// One number over time.
+#[derive(Serialize, ToSchema)]
+struct Series {
+    /// Name as asked for.
+    #[schema(example = "FT-201")]
+    name: String,
+    /// Unit.
+    #[schema(example = "t/h")]
+    unit: Option<String>,
+    /// Values; null where a report has none.
+    values: Vec<Option<f64>>,
+}
+
+/// Numbers over time.
+#[utoipa::path(
+    get, path = "/v1/plants/{plant}/series", tag = "batches",
+    params(
+        ("plant" = String, Path, description = "Name of the plant", example = "tarn-mill"),
+        ("tag" = Option<Vec<String>>, Query, description = "A tag or assumption; may be repeated", example = json!(["FT-201"])),
+        ("stream" = Option<Vec<String>>, Query, description = "A quantity of a stream: `.mass_flow`, `.pressure`, `.temperature` or `.enthalpy`; may be repeated", example = json!(["live-steam.mass_flow"])),
+        ("equipment" = Option<Vec<String>>, Query, description = "A quantity of a piece of equipment: `.heat`, `.work`, `.power`, `.loss`, `.holdup_change`, `.imbalance.energy`, `.imbalance.mass.SIDE`; may be repeated"),
+        ("field" = Option<String>, Query, description = "reconciled (unless set), measured, adjustment, uncertainty, uncertainty-measured, redundancy or standardised"),
+        ("from" = Option<String>, Query, description = "Periods that start at this time or later"),
+        ("to" = Option<String>, Query, description = "Periods that start before this time"),
+        ("format" = Option<String>, Query, description = "`csv` or `json`; otherwise `Accept` decides"),
+        ("limit" = Option<usize>, Query, description = "At most so many batches, 1 to 20000; 10000 unless set"),
+        ("cursor" = Option<String>, Query, description = "From the Link header of the answer before"),
+    ),
+    responses(
+        (status = 200, description = "The earliest period first", headers(("Link" = String, description = "rel=\"next\": where it goes on")), content(
+            (SeriesDocument = "application/json"),
+            (String = "text/csv", example = "batch,start,end,verdict,FT-201 [t/h]\n2031-04-02T10:05Z,2031-04-02T10:00:00Z,2031-04-02T10:05:00Z,consistent,371.2\n"),
+        )),
+        (status = 404, description = "There is no such plant, tag or quantity", body = Problem, content_type = "application/problem+json"),
+        (status = "default", description = "Any other problem", body = Problem, content_type = "application/problem+json"),
+    )
+)]
+pub(super) async fn get(
+    State(app): State<App>,
+    Path(plant): Path<String>,
+    uri: Uri,
+    headers: HeaderMap,
+) -> Result<Response, Problem> {
+    let (query, field, format) = read(&uri, plant)?;
+    let chosen = match format {
+        Some(format) => format,
+        None => accepted(&headers, &[JSON, CSV])
+            .ok_or_else(|| Problem::new(Kind::NotAcceptable, "it can be had as JSON or CSV"))?,
+    };
+    let revision = app.engine.revisions().get(&query.plant, None).await?;
+    let plant = query.plant.clone();
+    let page = app.store.series(query).await?;
+    unknown(&page.columns, revision.compiled.plant())?;
+    let next = page.next.map(|next| [next_link(&with_cursor(&uri, "cursor", &cursor_text(next)))]);
+    let mut response = match chosen {
+        CSV => ([(header::CONTENT_TYPE, "text/csv; charset=utf-8; header=present")], csv(&page)?)
+            .into_response(),
+        _ => Json(document(plant, field, page)).into_response(),
+    };
+    response.headers_mut().extend(next.into_iter().flatten());
+    response.headers_mut().insert(header::VARY, value("accept"));
+    Ok(response)
+}
+
+type Reading = (SeriesQuery, &'static str, Option<&'static str>);
+
+fn read(uri: &Uri, plant: String) -> Result<Reading, Problem> {
+    let mut params = Params::new(uri);
+    let mut selectors: Vec<Selector> = params.all("tag").into_iter().map(Selector::Tag).collect();
+    for name in ["stream", "equipment"] {
+        selectors.extend(params.all(name).into_iter().map(Selector::Quantity));
+    }
+    let names: Vec<&str> = FIELDS.iter().map(|(name, _)| *name).collect();
+    let mend = format!("one of {}", names.join(", "));
+    let field = params.choose("field", &mend, |text| {
+        FIELDS.into_iter().find(|(name, _)| *name == text)
+    });
+    let format = params.choose("format", "csv or json", |text| match text {
+        "csv" => Some(CSV),
+        "json" => Some(JSON),
+        _ => None,
+    });
+    let (name, field) = field.unwrap_or(FIELDS[0]);
+    let query = SeriesQuery {
+        plant,
+        field,
+        from: params.time("from"),
+        to: params.time("to"),
+        after: params.cursor(),
+        limit: params.limit(10_000, 20_000),
+        selectors,
+    };
+    params.finish()?;
+    let detail = match query.selectors.len() {
+        0 => "name at least one tag, stream or equipment".to_owned(),
+        number if number > MOST_SERIES => format!("{number} series; {MOST_SERIES} are the most"),
+        _ => return Ok((query, name, format)),
+    };
+    Err(Problem::new(Kind::BadParameter, detail))
+}
+
+/// Refuses names that no report and no plant file has.
+fn unknown(columns: &[Column], plant: &crate::plant::Plant) -> Result<(), Problem> {
+    let is_known = |column: &Column| {
+        column.unit.is_some()
+            || match &column.selector {
+                Selector::Tag(name) => {
+                    plant.tags.iter().any(|tag| tag.name == *name)
+                        || plant.assumptions.iter().any(|assumption| assumption.name == *name)
+                }
+                Selector::Quantity(name) => {
+                    let of = name.split('.').next().unwrap_or_default();
+                    plant.streams.iter().any(|stream| stream.name == of)
+                        || plant.equipment.iter().any(|equipment| equipment.name == of)
+                }
+            }
+    };
+    let unknown: Vec<&str> =
+        columns.iter().filter(|column| !is_known(column)).map(|c| name(&c.selector)).collect();
+    if unknown.is_empty() {
+        return Ok(());
+    }
+    Err(Problem::new(Kind::NotFound, format!("no report has {}", unknown.join(", "))))
+}
+
+fn name(selector: &Selector) -> &str {
+    match selector {
+        Selector::Tag(name) | Selector::Quantity(name) => name,
+    }
+}
+
+fn document(plant: String, field: &'static str, page: SeriesPage) -> SeriesDocument {
+    let batches = page.rows.into_iter().map(|row| SeriesBatch {
+        batch: row.batch,
+        start: row.start,
+        end: row.end,
+        verdict: row.verdict,
+    });
+    let series = page.columns.into_iter().map(|column| Series {
+        name: name(&column.selector).to_owned(),
+        unit: column.unit,
+        values: column.values,
+    });
+    SeriesDocument { plant, field, batches: batches.collect(), series: series.collect() }
+}
+
+fn csv(page: &SeriesPage) -> Result<Vec<u8>, Problem> {
+    let broken = |error: String| Problem::new(Kind::Internal, error);
+    let time = |time: OffsetDateTime| time.format(&Rfc3339).map_err(|e| broken(e.to_string()));
+    let mut writer = csv::Writer::from_writer(Vec::new());
+    let mut record: Vec<String> = ["batch", "start", "end", "verdict"].map(str::to_owned).into();
+    record.extend(page.columns.iter().map(|column| match &column.unit {
+        Some(unit) => format!("{} [{unit}]", name(&column.selector)),
+        None => name(&column.selector).to_owned(),
+    }));
+    writer.write_record(&record).map_err(|e| broken(e.to_string()))?;
+    for (place, row) in page.rows.iter().enumerate() {
+        let verdict = serde_json::to_value(row.verdict).map_err(|e| broken(e.to_string()))?;
+        record.clear();
+        record.push(row.batch.clone());
+        record.push(time(row.start)?);
+        record.push(time(row.end)?);
+        record.push(verdict.as_str().unwrap_or_default().to_owned());
+        let values = page.columns.iter().map(|column| column.values[place]);
+        record.extend(values.map(|value| value.map(|v| v.to_string()).unwrap_or_default()));
+        writer.write_record(&record).map_err(|e| broken(e.to_string()))?;
+    }
+    writer.into_inner().map_err(|e| broken(e.to_string()))
+}

@@ -1,0 +1,17 @@
+//! Counterpoise reconciles the measurements of steam and power plants.
+//!
+//! It takes what the instruments say, finds the nearest set of flows,
+//! pressures and temperatures that conserve mass and energy, and says how sure
+//! each value is and whether the whole is consistent. `DEVELOPERS.md` is the
+//! map of the modules; the middle of the program ([`plant`], [`equations`],
+//! [`solver`], [`diagnosis`], [`pipeline`]) is pure, and clock, database and
+//! sockets stay at the edges.
+#![forbid(unsafe_code)]
+
+pub mod diagnosis;
+pub mod equations;
+pub mod fluid;
+pub mod pipeline;
+pub mod plant;
+pub mod report;
+pub mod solver;

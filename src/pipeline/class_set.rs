@@ -1,0 +1,164 @@
+//! What holds for every batch with the same tags in use, phases, zero flows
+//! and active bounds: rank, degrees of freedom, classes, and the critical value
+//! of the single tests.
+
+use super::attempt::Found;
+use super::compiled::Compiled;
+use crate::diagnosis::{Critical, HARDLY_REDUNDANT, Method, Miss, critical_value};
+use crate::equations::Role;
+use crate::plant::StreamId;
+use crate::report::SingleTest;
+use crate::solver::{Classes, Covariance, Problem, classify};
+use nalgebra::DMatrix;
+use sha2::{Digest, Sha256};
+use std::sync::Arc;
+
+/// A flow below this part of the largest is zero: its stream's enthalpy drops
+/// out of every energy balance.
+const ZERO_FLOW: f64 = 1e-7;
+
+/// What tells one class set from another.
+#[derive(Clone, Debug, PartialEq, Eq, Hash)]
+pub struct ClassKey(Vec<u8>);
+
+impl ClassKey {
+    /// The key of a solution.
+    pub fn new(compiled: &Compiled, found: &Found) -> Self {
+        let system = compiled.system();
+        let x = &found.outcome.x;
+        let streams = || (0..system.layout.streams()).map(StreamId);
+        let largest = streams().map(|s| x[system.layout.m(s)].abs());
+        let zero = ZERO_FLOW * largest.fold(0.0, f64::max);
+        let mut key = Vec::new();
+        key.extend(found.case.measured().iter().map(|m| u8::from(m.is_some())));
+        key.extend(found.outcome.active_bounds.iter().map(|&a| u8::from(a)));
+        for s in streams() {
+            // On the saturation line both sides are the same state.
+            let phase = match system.state(s, x) {
+                Ok(_) if system.on_saturation[s.0].is_some() => 0,
+                Ok(state) => 1 + state.phase as u8,
+                Err(_) => 9,
+            };
+            key.push(phase);
+            key.push(u8::from(x[system.layout.m(s)].abs() <= zero));
+        }
+        ClassKey(key)
+    }
+
+    /// A short name of the key: the first 16 hexadecimal digits of its SHA-256.
+    pub fn name(&self) -> String {
+        let digest = Sha256::digest(&self.0);
+        digest.iter().take(8).map(|byte| format!("{byte:02x}")).collect()
+    }
+}
+
+/// Classes and critical value of one class set.
+pub struct ClassSet {
+    /// Rank, degrees of freedom, observability and redundancy.
+    pub classes: Classes,
+    /// Critical value; `None` where nothing is tested.
+    pub single_test: Option<SingleTest>,
+}
+
+/// The class set of a solution; worked out where it is met for the first time.
+pub fn of(compiled: &Compiled, found: &Found) -> Arc<ClassSet> {
+    let key = ClassKey::new(compiled, found);
+    let name = key.name();
+    compiled.class_set(key, || {
+        let classes = classes(found);
+        let covariance = covariance(compiled, found, &classes);
+        let single_test = single_test(compiled, found, &covariance, &classes, &name);
+        ClassSet {
+            classes,
+            single_test,
+        }
+    })
+}
+
+/// Variances at a solution.
+pub fn covariance<'a>(
+    compiled: &'a Compiled,
+    found: &'a Found,
+    classes: &'a Classes,
+) -> Covariance<'a> {
+    Covariance::new(
+        compiled.symbolic(),
+        found.case.structure(),
+        &found.outcome.evaluation,
+        found.case.state_scale(),
+        found.case.relation_scale(),
+        classes,
+    )
+}
+
+/// Classes at a solution, by rank.
+fn classes(found: &Found) -> Classes {
+    classify(
+        &found.case.system().structure,
+        &found.outcome.evaluation,
+        found.case.state_scale(),
+        found.case.relation_scale(),
+        &found.outcome.active_bounds,
+        &found.case.used(),
+    )
+}
+
+/// The critical value of the single tests at a solution, by simulation.
+fn single_test(
+    compiled: &Compiled,
+    found: &Found,
+    covariance: &Covariance,
+    classes: &Classes,
+    class_set: &str,
+) -> Option<SingleTest> {
+    if let Some(known) = compiled.recalled(class_set) {
+        return Some(known);
+    }
+    let structure = &found.case.system().structure;
+    let used: Vec<usize> = (0..structure.observations.len())
+        .filter(|&i| found.case.measured()[i].is_some() && classes.redundant[i])
+        .collect();
+    let tested: Vec<usize> = (0..used.len())
+        .filter(|&n| covariance.redundancy(used[n]) >= HARDLY_REDUNDANT)
+        .collect();
+    let balances: Vec<usize> = (0..structure.relations.len())
+        .filter(|&k| {
+            let role = &found.case.system().relations[k].role;
+            let variance = covariance.multiplier_variance(k);
+            let scale = found.case.relation_scale()[k];
+            matches!(role, Role::Mass { .. } | Role::Energy)
+                && Miss::new(0.0, variance, scale).is_some()
+        })
+        .collect();
+    let mut redundancy = DMatrix::zeros(used.len(), used.len());
+    let mut multipliers = DMatrix::zeros(balances.len(), used.len());
+    let (no_states, no_relations) = (vec![0.0; structure.states], vec![0.0; structure.relations.len()]);
+    let mut error = vec![0.0; structure.observations.len()];
+    for (column, &i) in used.iter().enumerate() {
+        error[i] = 1.0;
+        let response = covariance.column(&no_states, &no_relations, &error);
+        error[i] = 0.0;
+        for (row, &other) in used.iter().enumerate() {
+            redundancy[(row, column)] = response.residuals[other];
+        }
+        for (row, &k) in balances.iter().enumerate() {
+            multipliers[(row, column)] = response.multipliers[k];
+        }
+    }
+    let confidence = compiled.plant().confidence;
+    let critical = critical_value(&redundancy, &multipliers, &tested, confidence)?;
+    Some(in_report(critical, class_set))
+}
+
+fn in_report(critical: Critical, class_set: &str) -> SingleTest {
+    SingleTest {
+        critical_value: critical.value,
+        method: match critical.method {
+            Method::Simulated => "simulated",
+            Method::Sidak => "sidak",
+        }
+        .to_owned(),
+        statistics: critical.statistics,
+        class_set: class_set.to_owned(),
+    }
+}

@@ -1,0 +1,96 @@
+//! From a plant and a batch to a report: the one place that knows the order of
+//! the stages.
+//!
+//! readings -> start -> solve -> sides of saturation -> classes -> variances ->
+//! tests -> report. Pure: no clock, no I/O, one thread, a fixed order of
+//! operations. What depends on the plant alone is compiled once, and what
+//! depends on the set of phases, zero flows and active bounds is kept by that
+//! set ([`Compiled`]).
+
+mod assess;
+mod attempt;
+mod class_set;
+mod compiled;
+mod equipment;
+mod phases;
+mod readings;
+mod solution;
+mod streams;
+mod tags;
+
+pub use assess::assess;
+pub use compiled::Compiled;
+
+use crate::diagnosis::{chi_square_quantile, chi_square_tail};
+use crate::plant::Batch;
+use crate::report::{GlobalTest, Report, Verdict};
+use indexmap::IndexMap;
+use readings::Readings;
+use solution::Solution;
+
+/// Reconciles one batch.
+pub fn reconcile(compiled: &Compiled, batch: &Batch) -> Report {
+    let readings = Readings::new(compiled.plant(), batch);
+    let mut report = empty_report(compiled, batch, &readings);
+    let found = match attempt::attempt(compiled, &readings.measured) {
+        Ok(found) => found,
+        Err(reason) => {
+            report.reason = Some(reason);
+            report.tags = tags::tags(compiled, &readings, None);
+            report.assumptions = tags::assumptions(compiled, &readings, None);
+            return report;
+        }
+    };
+    let class_set = class_set::of(compiled, &found);
+    let solution = Solution::new(compiled, &found, &class_set);
+    let global = global_test(&solution, compiled.plant().confidence);
+    report.verdict = verdict(&global);
+    report.global_test = Some(global);
+    report.single_test = solution.single_test();
+    report.tags = tags::tags(compiled, &readings, Some(&solution));
+    report.assumptions = tags::assumptions(compiled, &readings, Some(&solution));
+    report.streams = streams::streams(compiled, &solution);
+    report.equipment = equipment::equipment(compiled, &solution);
+    report.remarks.extend(solution.remarks(compiled));
+    report
+}
+
+fn empty_report(compiled: &Compiled, batch: &Batch, readings: &Readings) -> Report {
+    Report {
+        plant: compiled.plant().name.clone(),
+        revision: compiled.revision(),
+        batch: batch.name.clone(),
+        start: batch.start,
+        end: batch.end,
+        verdict: Verdict::NotConverged,
+        reason: None,
+        global_test: None,
+        single_test: None,
+        tags: IndexMap::new(),
+        assumptions: IndexMap::new(),
+        streams: IndexMap::new(),
+        equipment: IndexMap::new(),
+        ignored_tags: readings.ignored.clone(),
+        remarks: readings.remarks.clone(),
+    }
+}
+
+fn global_test(solution: &Solution, confidence: f64) -> GlobalTest {
+    let statistic = solution.objective();
+    let degrees_of_freedom = solution.degrees_of_freedom();
+    GlobalTest {
+        statistic,
+        degrees_of_freedom,
+        critical_value: chi_square_quantile(confidence, degrees_of_freedom),
+        p_value: chi_square_tail(statistic, degrees_of_freedom),
+        confidence,
+    }
+}
+
+fn verdict(test: &GlobalTest) -> Verdict {
+    match test.critical_value {
+        None => Verdict::NotRedundant,
+        Some(critical) if test.statistic > critical => Verdict::Inconsistent,
+        Some(_) => Verdict::Consistent,
+    }
+}

@@ -1,0 +1,157 @@
+//! From a batch's readings to measured values with their sigma.
+
+use crate::equations::Measured;
+use crate::plant::{Batch, Grade, Plant, Quantity, Reading, Sigma};
+use std::collections::HashMap;
+
+/// What a batch says, tag by tag in the order of the plant file, assumptions
+/// behind them.
+pub struct Readings {
+    /// Value in internal units and its sigma; `None` where not used.
+    pub measured: Vec<Option<Measured>>,
+    /// Value as read, in the tag's unit.
+    pub values: Vec<Option<f64>>,
+    /// Sigma in the tag's unit, where there is a value that has one.
+    pub sigmas: Vec<Option<Sigma>>,
+    /// Why a tag is not used, or what was done to it.
+    pub reasons: Vec<Option<String>>,
+    /// Tags of the batch that the plant does not know.
+    pub ignored: Vec<String>,
+    /// What a person should see.
+    pub remarks: Vec<String>,
+}
+
+/// One tag's part.
+struct Resolved {
+    value: Option<f64>,
+    sigma: Option<Sigma>,
+    used: bool,
+    reason: Option<String>,
+}
+
+impl Readings {
+    /// Resolves the readings of a batch.
+    pub fn new(plant: &Plant, batch: &Batch) -> Self {
+        let by_tag: HashMap<&str, &Reading> =
+            batch.readings.iter().map(|r| (r.tag.as_str(), r)).collect();
+        let mut readings = Readings::empty();
+        for tag in &plant.tags {
+            let resolved = match by_tag.get(tag.name.as_str()) {
+                None => Resolved::unused(None, "no reading in the batch"),
+                Some(reading) => Resolved::new(reading, plant.uncertain_factor, |value| {
+                    tag.uncertainty.sigma(value)
+                }),
+            };
+            if let (true, Quantity::MassFlow(_), Some(value)) =
+                (resolved.used, tag.quantity, resolved.value)
+                && value < 0.0
+            {
+                readings
+                    .remarks
+                    .push(format!("{} reads a negative flow; it was used", tag.name));
+            }
+            readings.push(resolved, &tag.unit);
+        }
+        for assumption in &plant.assumptions {
+            let sigma = assumption.uncertainty.sigma(assumption.value);
+            let resolved = Resolved {
+                value: Some(assumption.value),
+                sigma,
+                used: sigma.is_some(),
+                reason: None,
+            };
+            readings.push(resolved, &assumption.unit);
+        }
+        let mut ignored: Vec<String> = by_tag
+            .keys()
+            .filter(|name| plant.tags.iter().all(|tag| tag.name != **name))
+            .map(|name| (*name).to_owned())
+            .collect();
+        ignored.sort();
+        readings.ignored = ignored;
+        readings
+    }
+
+    fn empty() -> Self {
+        Readings {
+            measured: Vec::new(),
+            values: Vec::new(),
+            sigmas: Vec::new(),
+            reasons: Vec::new(),
+            ignored: Vec::new(),
+            remarks: Vec::new(),
+        }
+    }
+
+    fn push(&mut self, resolved: Resolved, unit: &crate::plant::Unit) {
+        let Resolved {
+            value,
+            sigma,
+            used,
+            reason,
+        } = resolved;
+        let measured = match (used, value, sigma) {
+            (true, Some(value), Some(sigma)) => {
+                Sigma::new(unit.difference_to_internal(sigma.get())).map(|sigma| Measured {
+                    value: unit.to_internal(value),
+                    sigma,
+                })
+            }
+            _ => None,
+        };
+        self.measured.push(measured);
+        self.values.push(value);
+        self.sigmas.push(sigma);
+        self.reasons.push(reason);
+    }
+}
+
+impl Resolved {
+    fn unused(value: Option<f64>, reason: &str) -> Self {
+        Resolved {
+            value,
+            sigma: None,
+            used: false,
+            reason: Some(reason.to_owned()),
+        }
+    }
+
+    fn new(
+        reading: &Reading,
+        uncertain_factor: f64,
+        sigma_of: impl Fn(f64) -> Option<Sigma>,
+    ) -> Self {
+        let Some(value) = reading.value else {
+            return Resolved::unused(None, "the reading has no value");
+        };
+        let sigma = sigma_of(value);
+        if reading.quality.grade == Grade::Bad {
+            return Resolved {
+                sigma,
+                ..Resolved::unused(Some(value), "bad quality")
+            };
+        }
+        let Some(sigma) = sigma else {
+            return Resolved::unused(
+                Some(value),
+                "its uncertainty comes out zero or infinite at this reading",
+            );
+        };
+        if reading.quality.grade == Grade::Uncertain {
+            return Resolved {
+                value: Some(value),
+                sigma: Sigma::new(sigma.get() * uncertain_factor),
+                used: true,
+                reason: Some(format!(
+                    "uncertain quality: sigma widened by {uncertain_factor}"
+                )),
+            };
+        }
+        Resolved {
+            value: Some(value),
+            sigma: Some(sigma),
+            used: true,
+            reason: None,
+        }
+    }
+}

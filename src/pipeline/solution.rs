@@ -1,0 +1,161 @@
+//! A converged batch, with classes and variances: what the report is made of.
+
+use super::attempt::Found;
+use super::class_set::{self, ClassSet};
+use super::compiled::Compiled;
+use crate::diagnosis::Miss;
+use crate::equations::{Measured, Role, State, System};
+use crate::plant::StreamId;
+use crate::report::SingleTest;
+use crate::solver::{Classes, Covariance, Problem};
+
+/// A solution, ready to be asked.
+pub struct Solution<'a> {
+    found: &'a Found<'a>,
+    class_set: &'a ClassSet,
+    covariance: Covariance<'a>,
+    multipliers: Vec<f64>,
+}
+
+impl<'a> Solution<'a> {
+    /// What was found, with its class set ([`class_set::of`]).
+    pub fn new(compiled: &'a Compiled, found: &'a Found<'a>, class_set: &'a ClassSet) -> Self {
+        let covariance = class_set::covariance(compiled, found, &class_set.classes);
+        let multipliers = covariance.multipliers();
+        Solution {
+            found,
+            class_set,
+            covariance,
+            multipliers,
+        }
+    }
+
+    /// The states.
+    pub fn x(&self) -> &[f64] {
+        &self.found.outcome.x
+    }
+
+    /// Weighted sum of squared adjustments.
+    pub fn objective(&self) -> f64 {
+        self.found.outcome.objective
+    }
+
+    /// Rank and classes.
+    pub fn classes(&self) -> &Classes {
+        &self.class_set.classes
+    }
+
+    /// What observation `i` reads, internal units.
+    pub fn measured(&self, i: usize) -> Option<Measured> {
+        self.found.case.measured()[i]
+    }
+
+    /// Degrees of freedom.
+    pub fn degrees_of_freedom(&self) -> usize {
+        self.class_set.classes.degrees_of_freedom
+    }
+
+    /// Critical value of the single tests.
+    pub fn single_test(&self) -> Option<SingleTest> {
+        self.class_set.single_test.clone()
+    }
+
+    /// Reconciled minus measured of observation `i`, in sigma.
+    pub fn adjustment(&self, i: usize) -> f64 {
+        -self.found.outcome.evaluation.r[i]
+    }
+
+    /// Redundancy of observation `i`; zero where it is not redundant by rank.
+    pub fn redundancy(&self, i: usize) -> f64 {
+        if self.is_redundant(i) {
+            self.covariance.redundancy(i).clamp(0.0, 1.0)
+        } else {
+            0.0
+        }
+    }
+
+    /// Whether observation `i` is redundant by rank.
+    pub fn is_redundant(&self, i: usize) -> bool {
+        self.class_set.classes.redundant[i]
+    }
+
+    /// Whether a combination of states is determined.
+    pub fn is_observable(&self, gradient: &[(usize, f64)]) -> bool {
+        self.class_set.classes.combination_observable(gradient)
+    }
+
+    /// Sigma of a combination of states; `None` where it is unobservable.
+    pub fn uncertainty(&self, gradient: &[(usize, f64)]) -> Option<f64> {
+        let variance = self.covariance.combination_variance(gradient);
+        variance.is_finite().then(|| variance.max(0.0).sqrt())
+    }
+
+    /// What observation `i` should read and the sigma of that, in internal
+    /// units; `None` where it is unobservable.
+    pub fn predict(&self, i: usize) -> Option<(f64, f64)> {
+        let system = self.system();
+        let (value, slopes) = system.predict(i, self.x())?;
+        let row = system.observations[i].row.iter().copied();
+        let gradient: Vec<(usize, f64)> = row.zip(slopes).collect();
+        Some((value, self.uncertainty(&gradient)?))
+    }
+
+    /// Temperature of a stream, K, and its gradient.
+    pub fn temperature(&self, s: StreamId) -> (f64, Vec<(usize, f64)>) {
+        let layout = &self.system().layout;
+        if let Some(state) = self.state(s) {
+            let gradient = vec![(layout.p(s), state.t_p), (layout.h(s), state.t_h)];
+            (state.t, gradient)
+        } else {
+            (f64::NAN, vec![(layout.p(s), 1.0), (layout.h(s), 1.0)])
+        }
+    }
+
+    /// Thermodynamic state of a stream.
+    pub fn state(&self, s: StreamId) -> Option<State> {
+        self.system().state(s, self.x()).ok()
+    }
+
+    /// Whether the readings fit both sides of the saturation line.
+    pub fn is_phase_open(&self, s: StreamId) -> bool {
+        self.found.open.contains(&s)
+    }
+
+    /// What balance `k` would miss; `None` where nothing checks it.
+    pub fn miss(&self, k: usize) -> Option<Miss> {
+        Miss::new(
+            self.multipliers[k],
+            self.covariance.multiplier_variance(k),
+            self.found.case.relation_scale()[k],
+        )
+    }
+
+    /// What a person should see: bounds that are active, phases that are open.
+    pub fn remarks(&self, compiled: &Compiled) -> Vec<String> {
+        let system = self.system();
+        let stream_name = |s: StreamId| &compiled.plant().streams[s.0].name;
+        let mut remarks = Vec::new();
+        let bounds = system.structure.bounds.iter();
+        for (&k, _) in bounds
+            .zip(&self.found.outcome.active_bounds)
+            .filter(|(_, active)| **active)
+        {
+            let relation = &system.relations[k];
+            let stream = relation.row.iter().find_map(|&j| system.layout.stream_of(j));
+            if let (Some(s), Role::Bound(what)) = (stream, &relation.role) {
+                remarks.push(format!("{}: the bound \"{what}\" is active", stream_name(s)));
+            }
+        }
+        for &s in &self.found.open {
+            remarks.push(format!(
+                "{}: the readings fit both sides of the saturation line",
+                stream_name(s)
+            ));
+        }
+        remarks
+    }
+
+    fn system(&self) -> &'a System {
+        self.found.case.system()
+    }
+}

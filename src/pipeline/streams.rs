@@ -1,0 +1,95 @@
+//! Streams in the report: kg/s, bar (absolute), Cel, kJ/kg.
+
+use super::compiled::Compiled;
+use super::solution::Solution;
+use crate::equations;
+use crate::plant::{COVERAGE_FACTOR, StreamId};
+use crate::report::{Observability, Phase, QuantityReport, StreamReport};
+use indexmap::IndexMap;
+
+/// 0 Cel in K.
+const ZERO_CELSIUS: f64 = 273.15;
+/// bar in MPa.
+const BAR: f64 = 0.1;
+/// A quality this close to 0 or 1 is saturated liquid or vapour: the line
+/// itself, up to rounding.
+const ON_THE_LINE: f64 = 1e-6;
+
+/// A unit of the report: its symbol, what it is in internal units, and its zero.
+struct ReportUnit(&'static str, f64, f64);
+
+/// Every stream of the plant.
+pub fn streams(compiled: &Compiled, solution: &Solution) -> IndexMap<String, StreamReport> {
+    let streams = compiled.plant().streams.iter().enumerate();
+    streams
+        .map(|(s, stream)| (stream.name.clone(), entry(compiled, solution, StreamId(s))))
+        .collect()
+}
+
+fn entry(compiled: &Compiled, solution: &Solution, s: StreamId) -> StreamReport {
+    let layout = &compiled.system().layout;
+    let (m, p, h) = (layout.m(s), layout.p(s), layout.h(s));
+    let of_state = |j: usize, unit| quantity(solution, solution.x()[j], &[(j, 1.0)], unit);
+    let (temperature, gradient) = solution.temperature(s);
+    StreamReport {
+        mass_flow: of_state(m, ReportUnit("kg/s", 1.0, 0.0)),
+        pressure: of_state(p, ReportUnit("bar", BAR, 0.0)),
+        temperature: quantity(
+            solution,
+            temperature,
+            &gradient,
+            ReportUnit("Cel", 1.0, ZERO_CELSIUS),
+        ),
+        enthalpy: of_state(h, ReportUnit("kJ/kg", 1.0, 0.0)),
+        phase: phase(solution, s, p, h),
+    }
+}
+
+/// A quantity that depends on the states by `gradient`.
+fn quantity(
+    solution: &Solution,
+    value: f64,
+    gradient: &[(usize, f64)],
+    unit: ReportUnit,
+) -> QuantityReport {
+    let ReportUnit(symbol, factor, zero) = unit;
+    report(
+        symbol,
+        solution
+            .uncertainty(gradient)
+            .map(|sigma| ((value - zero) / factor, sigma / factor)),
+    )
+}
+
+/// A quantity from its value and sigma; `None` where it is unobservable.
+pub fn report(unit: &str, value_and_sigma: Option<(f64, f64)>) -> QuantityReport {
+    QuantityReport {
+        value: value_and_sigma.map(|(value, _)| value),
+        uncertainty: value_and_sigma.map(|(_, sigma)| COVERAGE_FACTOR * sigma),
+        unit: unit.to_owned(),
+        class: if value_and_sigma.is_some() {
+            Observability::Observable
+        } else {
+            Observability::Unobservable
+        },
+    }
+}
+
+fn phase(solution: &Solution, s: StreamId, p: usize, h: usize) -> Option<Phase> {
+    let known = [p, h].iter().all(|&j| solution.is_observable(&[(j, 1.0)]));
+    if !known {
+        return None;
+    }
+    if solution.is_phase_open(s) {
+        return Some(Phase::Open);
+    }
+    let state = solution.state(s)?;
+    Some(match (state.phase, state.x) {
+        (equations::Phase::Wet, Some(x)) if x < ON_THE_LINE => Phase::Liquid,
+        (equations::Phase::Wet, Some(x)) if x > 1.0 - ON_THE_LINE => Phase::Vapour,
+        (equations::Phase::Wet, _) => Phase::Wet,
+        (equations::Phase::Liquid, _) => Phase::Liquid,
+        (equations::Phase::Vapour, _) => Phase::Vapour,
+        (equations::Phase::Supercritical, _) => Phase::Supercritical,
+    })
+}

@@ -1,0 +1,15 @@
+//! The report of one batch and the assessment of a plant: the shapes that the
+//! service answers with and stores.
+//!
+//! Uncertainties are half-widths at 95 % coverage. Tags and assumptions come in
+//! their own units; streams in kg/s, bar (absolute), Cel and kJ/kg; heat, work,
+//! power and losses in kW.
+
+mod assessment;
+mod document;
+
+pub use assessment::{Assessment, AssessedQuantity, AssessedStream, AssessedTag};
+pub use document::{
+    Class, EquipmentReport, GlobalTest, Imbalance, Imbalances, Observability, Phase, QuantityReport,
+    Report, SingleTest, StreamReport, TagReport, Verdict,
+};

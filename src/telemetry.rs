@@ -1,0 +1,31 @@
+//! The log: one line per event on standard error, as text or JSON.
+
+use clap::ValueEnum;
+use std::io;
+use tracing_subscriber::EnvFilter;
+
+/// Form of the log.
+#[derive(Clone, Copy, Debug, Default, PartialEq, Eq, ValueEnum)]
+pub enum LogFormat {
+    /// For people.
+    #[default]
+    Text,
+    /// One JSON document per line.
+    Json,
+}
+
+/// Starts logging. `filter` is as `tracing-subscriber` reads it: `info`,
+/// `counterpoise=debug,info`.
+///
+/// # Errors
+///
+/// Where the filter cannot be read, or logging has been started before.
+pub fn start(format: LogFormat, filter: &str) -> anyhow::Result<()> {
+    let filter = EnvFilter::try_new(filter)?;
+    let builder = tracing_subscriber::fmt().with_env_filter(filter).with_writer(io::stderr);
+    let started = match format {
+        LogFormat::Text => builder.with_target(false).try_init(),
+        LogFormat::Json => builder.json().flatten_event(true).try_init(),
+    };
+    started.map_err(|error| anyhow::anyhow!(error))
+}

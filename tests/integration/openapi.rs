@@ -1,0 +1,87 @@
+//! The OpenAPI document: complete, and what the service does.
+
+use crate::harness::Service;
+use serde_json::Value;
+use std::collections::BTreeSet;
+
+fn document() -> Value {
+    let text = counterpoise::server::openapi().expect("JSON");
+    serde_json::from_str(&text).expect("JSON")
+}
+
+#[test]
+fn it_is_the_document_that_was_looked_at() {
+    insta::with_settings!({ prepend_module_to_snapshot => false, sort_maps => true }, {
+        insta::assert_json_snapshot!("openapi", document());
+    });
+}
+
+#[test]
+fn every_route_is_described() {
+    let document = document();
+    assert_eq!(document["openapi"], "3.1.0");
+    let mut operations = BTreeSet::new();
+    for (path, methods) in document["paths"].as_object().expect("paths") {
+        for (method, operation) in methods.as_object().expect("methods") {
+            operations.insert(format!("{method} {path}"));
+            assert!(operation["summary"].is_string(), "{method} {path}");
+            let default = &operation["responses"]["default"]["content"];
+            let has_problem = default["application/problem+json"]["schema"].is_object();
+            assert!(has_problem || path.ends_with('z'), "{method} {path}");
+        }
+    }
+    let expected = [
+        "get /livez",
+        "get /readyz",
+        "get /v1/plants",
+        "get /v1/plants/{plant}",
+        "get /v1/plants/{plant}/assessment",
+        "get /v1/plants/{plant}/batches",
+        "get /v1/plants/{plant}/batches/{batch}",
+        "get /v1/plants/{plant}/series",
+        "post /v1/plants/{plant}/batches",
+        "put /v1/plants/{plant}",
+    ];
+    assert_eq!(operations, expected.into_iter().map(str::to_owned).collect());
+}
+
+#[test]
+fn every_reference_leads_somewhere() {
+    let document = document();
+    let mut references = Vec::new();
+    collect(&document, &mut references);
+    assert!(references.len() > 20);
+    for reference in references {
+        let pointer = reference.strip_prefix('#').expect("a local reference");
+        assert!(document.pointer(pointer).is_some(), "{reference}");
+    }
+}
+
+fn collect(value: &Value, references: &mut Vec<String>) {
+    match value {
+        Value::Object(members) => {
+            if let Some(Value::String(reference)) = members.get("$ref") {
+                references.push(reference.clone());
+            }
+            members.values().for_each(|value| collect(value, references));
+        }
+        Value::Array(items) => items.iter().for_each(|item| collect(item, references)),
+        _ => {}
+    }
+}
+
+#[test]
+fn bad_status_codes_are_not_excluded() {
+    let document = document();
+    let code = &document["components"]["schemas"]["StatusCode"];
+    assert_eq!(code["type"], "integer");
+    assert_eq!(code["minimum"], 0);
+    assert_eq!(code["maximum"], u32::MAX);
+    assert_ne!(code["format"], "int32");
+}
+
+#[tokio::test]
+async fn the_service_serves_it() {
+    let service = Service::start();
+    assert_eq!(service.get_json("/openapi.json").await, document());
+}
