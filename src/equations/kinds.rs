@@ -341,26 +341,34 @@ fn signed(side: &Balanced, state: impl Fn(StreamId) -> usize) -> Vec<(usize, f64
     inlets.chain(outlets).collect()
 }
 
-/// Flows that may not turn negative, and quality within 0 and 1 where it is
-/// measured.
+/// Flows that may not turn negative, quality within 0 and 1 where it is
+/// measured, and the side of the saturation line of streams with a temperature.
 fn bounds(plant: &Plant, layout: &Layout) -> Vec<Relation> {
     let mut bounds = Vec::new();
     let bound = |role, law| Relation::new(None, Role::Bound(role), law, layout);
+    let observes = |wanted: &dyn Fn(&Quantity) -> bool| {
+        plant.tags.iter().any(|tag| wanted(&tag.quantity))
+            || plant.assumptions.iter().any(|a| wanted(&a.quantity))
+    };
     for (s, stream) in plant.streams.iter().enumerate() {
         let s = StreamId(s);
         if stream.non_negative {
             let law = Law::Linear(vec![(layout.m(s), 1.0)]);
             bounds.push(bound("flow not negative", law));
         }
-        let quality = |q: &Quantity| *q == Quantity::Quality(s);
-        let tagged = plant.tags.iter().any(|tag| quality(&tag.quantity));
-        if tagged || plant.assumptions.iter().any(|a| quality(&a.quantity)) {
+        if observes(&|q| *q == Quantity::Quality(s)) {
             for (role, side, sign) in [
                 ("quality not below 0", Side::Liquid, 1.0),
                 ("quality not above 1", Side::Vapour, -1.0),
             ] {
                 let stream = s;
                 bounds.push(bound(role, Law::Saturated { stream, side, sign }));
+            }
+        }
+        if observes(&|q| matches!(*q, Quantity::Temperature(t) | Quantity::Subcooling(t) if t == s)) {
+            for side in [Side::Liquid, Side::Vapour] {
+                let law = Law::Saturated { stream: s, side, sign: 1.0 };
+                bounds.push(Relation::new(None, Role::SideOfSaturation, law, layout));
             }
         }
     }

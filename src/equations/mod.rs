@@ -8,6 +8,7 @@
 
 mod kinds;
 mod layout;
+mod modes;
 mod observation;
 mod pressures;
 mod relation;
@@ -15,6 +16,7 @@ mod start;
 mod system;
 
 pub use layout::{Layout, OwnStates, StateKind};
+pub use modes::{Mode, Modes};
 pub use observation::Observation;
 pub use relation::{Carried, Law, Relation, Role, Side};
 pub use start::{Start, start};

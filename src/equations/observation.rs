@@ -125,6 +125,18 @@ impl Observation {
         }
     }
 
+    /// Inlet and outlet, where the function is the efficiency of a compression.
+    pub fn compression(&self) -> Option<(StreamId, StreamId)> {
+        match self.function {
+            Function::Efficiency {
+                inlet,
+                outlet,
+                compression: true,
+            } => Some((inlet, outlet)),
+            _ => None,
+        }
+    }
+
     /// g(x) in internal units; its gradient goes into `values`, beside
     /// [`Observation::row`].
     ///

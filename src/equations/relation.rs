@@ -32,6 +32,9 @@ pub enum Role {
     Condition(&'static str),
     /// A bound (residual >= 0).
     Bound(&'static str),
+    /// A bound at the saturation line, whose sign is that of the side that the
+    /// stream is taken to be on (see [`super::Mode`]).
+    SideOfSaturation,
 }
 
 /// Enthalpy that a product of an energy balance carries.

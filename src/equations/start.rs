@@ -146,24 +146,16 @@ impl<'a> Enthalpies<'a> {
     /// Enthalpies, and which of them readings or saturation give.
     fn guess(mut self) -> (Vec<f64>, Vec<bool>) {
         let n = self.h.len();
-        for s in 0..n {
-            if self.h[s].is_none() {
-                self.h[s] = self.saturated(s).or_else(|| self.from_temperature(s));
-            }
-        }
-        self.share();
-        let given = self.h.iter().map(Option::is_some).collect();
-        loop {
-            let before = self.h.clone();
-            for s in 0..n {
-                if self.h[s].is_none() {
-                    self.h[s] = self.from_equipment(s);
-                }
-            }
-            self.share();
-            if self.h == before {
-                break;
-            }
+        // A pump warms the water by less than a thermometer resolves, so what it
+        // delivers is worked out from what it draws, and read only failing that.
+        let pumped = self.pumped();
+        self.read(|s| !pumped[s]);
+        let mut given: Vec<bool> = self.h.iter().map(Option::is_some).collect();
+        self.carry_on();
+        self.read(|_| true);
+        self.carry_on();
+        for (s, given) in given.iter_mut().enumerate() {
+            *given |= pumped[s] && self.temperature[s].is_some();
         }
         let enthalpies = (0..n)
             .map(|s| {
@@ -173,6 +165,50 @@ impl<'a> Enthalpies<'a> {
             })
             .collect();
         (enthalpies, given)
+    }
+
+    /// Streams that leave a pump, and those of the same enthalpy.
+    fn pumped(&self) -> Vec<bool> {
+        let mut marks = Enthalpies {
+            temperature: Vec::new(),
+            hint: Vec::new(),
+            h: vec![None; self.h.len()],
+            ..*self
+        };
+        for equipment in &self.plant.equipment {
+            if let Kind::Pump { outlet, .. } = equipment.kind {
+                marks.h[outlet.0] = Some(0.0);
+            }
+        }
+        marks.share();
+        marks.h.iter().map(Option::is_some).collect()
+    }
+
+    /// Takes enthalpies from saturation and temperatures, for the streams that
+    /// `wanted` names and that have none yet.
+    fn read(&mut self, wanted: impl Fn(usize) -> bool) {
+        for s in 0..self.h.len() {
+            if self.h[s].is_none() && wanted(s) {
+                self.h[s] = self.saturated(s).or_else(|| self.from_temperature(s));
+            }
+        }
+        self.share();
+    }
+
+    /// Carries enthalpies on through the equipment until none is new.
+    fn carry_on(&mut self) {
+        loop {
+            let before = self.h.clone();
+            for s in 0..self.h.len() {
+                if self.h[s].is_none() {
+                    self.h[s] = self.from_equipment(s);
+                }
+            }
+            self.share();
+            if self.h == before {
+                return;
+            }
+        }
     }
 
     /// Enthalpy of a stream that a relation holds on the saturation line.
@@ -281,7 +317,18 @@ impl<'a> Enthalpies<'a> {
     /// Enthalpy rise of a pump, kJ/kg: v dp over the efficiency.
     fn pumping(&self, inlet: StreamId, outlet: usize) -> f64 {
         let rise = self.pressures.stream[outlet] - self.pressures.stream[inlet.0];
-        1.05 * rise.max(0.0) / PUMP_EFFICIENCY
+        1.05 * rise.max(0.0) / self.pump_efficiency(inlet)
+    }
+
+    /// The efficiency that the plant file states for the pump behind `inlet`.
+    fn pump_efficiency(&self, inlet: StreamId) -> f64 {
+        let stated = self.plant.assumptions.iter().find_map(|a| match a.quantity {
+            Quantity::IsentropicEfficiency { inlet: from, .. } if from == inlet => {
+                Some(a.unit.to_internal(a.value))
+            }
+            _ => None,
+        });
+        stated.unwrap_or(PUMP_EFFICIENCY).clamp(0.1, 1.0)
     }
 
     /// The last resort: liquid or steam near saturation, or water from outside.

@@ -6,6 +6,7 @@
 
 use super::kinds;
 use super::layout::{Layout, StateKind};
+use super::modes::Modes;
 use super::observation::Observation;
 use super::relation::{Floors, Law, Relation, Role, Side};
 use crate::fluid::{self, State};
@@ -17,6 +18,8 @@ const LOWEST_PRESSURE: f64 = fluid::MIN_SATURATION_PRESSURE;
 const HIGHEST_PRESSURE: f64 = fluid::MAX_PRESSURE;
 /// Largest change of pressure in one step, as a factor.
 const PRESSURE_STEP: f64 = 2.0;
+/// Largest change of a pump's rise of enthalpy in one step, as a factor.
+const RISE_STEP: f64 = 3.0;
 /// Largest change of enthalpy in one step, kJ/kg.
 const ENTHALPY_STEP: f64 = 600.0;
 
@@ -49,6 +52,7 @@ pub struct Measured {
 pub struct Case<'a> {
     system: &'a System,
     measured: Vec<Option<Measured>>,
+    modes: Modes,
     state_scale: Vec<f64>,
     relation_scale: Vec<f64>,
 }
@@ -80,7 +84,7 @@ impl System {
             relations: rows(relations.iter().map(|r| &r.row[..]).collect()),
             observations: rows(observations.iter().map(|o| &o.row[..]).collect()),
             bounds: (0..relations.len())
-                .filter(|&k| matches!(relations[k].role, Role::Bound(_)))
+                .filter(|&k| matches!(relations[k].role, Role::Bound(_) | Role::SideOfSaturation))
                 .collect(),
             pairs: (0..plant.streams.len())
                 .map(|s| (layout.p(StreamId(s)), layout.h(StreamId(s))))
@@ -133,7 +137,12 @@ impl System {
 impl<'a> Case<'a> {
     /// A batch of `system`: one entry per observation, `None` where it is not
     /// used. Scales are taken from `at`, a state of believable size.
-    pub fn new(system: &'a System, measured: Vec<Option<Measured>>, at: &[f64]) -> Self {
+    pub fn new(
+        system: &'a System,
+        measured: Vec<Option<Measured>>,
+        modes: Modes,
+        at: &[f64],
+    ) -> Self {
         let layout = &system.layout;
         let typical_flow = (0..layout.streams())
             .map(|s| at[layout.m(StreamId(s))].abs())
@@ -161,6 +170,7 @@ impl<'a> Case<'a> {
         Case {
             system,
             measured,
+            modes,
             state_scale,
             relation_scale,
         }
@@ -169,6 +179,19 @@ impl<'a> Case<'a> {
     /// The system.
     pub fn system(&self) -> &'a System {
         self.system
+    }
+
+    /// The sides of saturation that doubtful streams are taken to be on.
+    pub fn modes(&self) -> &Modes {
+        &self.modes
+    }
+
+    /// The same batch with other sides.
+    pub fn with_modes(&self, modes: Modes) -> Self {
+        Case {
+            modes,
+            ..self.clone()
+        }
     }
 
     /// What each observation reads; `None` where it is not used.
@@ -190,9 +213,10 @@ impl<'a> Case<'a> {
             for s in observation.needs().into_iter().flatten() {
                 if states[s.0].is_none() {
                     let state = self.system.state(s, x);
-                    states[s.0] = Some(state.map_err(|_| Outside {
+                    let state = state.map_err(|_| Outside {
                         state: self.system.layout.h(s),
-                    })?);
+                    })?;
+                    states[s.0] = Some(self.modes.continued(s, state));
                 }
             }
         }
@@ -211,8 +235,22 @@ impl Problem for Case<'_> {
         let states = self.thermodynamic_states(x)?;
         for (k, relation) in system.relations.iter().enumerate() {
             let values = &mut into.f_values[system.structure.relations.range(k)];
+            let sign = match (&relation.role, &relation.law) {
+                (Role::SideOfSaturation, Law::Saturated { stream, side, .. }) => {
+                    self.modes.sign(*stream, *side)
+                }
+                _ => 1.0,
+            };
+            if sign == 0.0 {
+                values.fill(0.0);
+                into.f[k] = 0.0;
+                continue;
+            }
             let f = relation.evaluate(&system.layout, x, values);
-            into.f[k] = f.map_err(outside)?;
+            into.f[k] = sign * f.map_err(outside)?;
+            if sign < 0.0 {
+                values.iter_mut().for_each(|value| *value = -*value);
+            }
         }
         for (i, observation) in system.observations.iter().enumerate() {
             let values = &mut into.g_values[system.structure.observations.range(i)];
@@ -256,6 +294,17 @@ impl Problem for Case<'_> {
         if let Some(b) = layout.barometer {
             let (low, high) = pressure_range(x[b]);
             bend(x[b], &mut step[b], low, high);
+        }
+        for (observation, measured) in self.system.observations.iter().zip(&self.measured) {
+            if let (Some((from, to)), Some(_)) = (observation.compression(), measured) {
+                // The efficiency of a pump has a pole at no rise of enthalpy,
+                // and a step across it leads to a false minimum.
+                let (from, to) = (layout.h(from), layout.h(to));
+                let rise = x[to] - x[from];
+                let new_from = x[from] + step[from];
+                let (least, most) = (new_from + rise / RISE_STEP, new_from + rise * RISE_STEP);
+                bend(x[to], &mut step[to], least.min(most), least.max(most));
+            }
         }
     }
 }

@@ -3,7 +3,7 @@
 
 use super::compiled::Compiled;
 use super::phases;
-use crate::equations::{Case, Measured, Relation, Role, Start, start};
+use crate::equations::{Case, Measured, Modes, Relation, Role, Start, start};
 use crate::plant::StreamId;
 use crate::solver::{Hold, Options, Outcome, Problem, Reason, Status, solve};
 
@@ -30,7 +30,11 @@ pub fn attempt<'a>(
 ) -> Result<Found<'a>, String> {
     let system = compiled.system();
     let start = start(compiled.plant(), system, measured);
-    let case = Case::new(system, measured.to_vec(), &start.x);
+    let plain = Modes::none(system.layout.streams());
+    let plain = Case::new(system, measured.to_vec(), plain, &start.x);
+    let mut modes = plain.modes().clone();
+    phases::doubtful(&plain, &start.x, &mut modes);
+    let case = plain.with_modes(modes);
     let mut reason = String::new();
     for held in HELD_STEPS {
         let outcome = solve(
@@ -40,14 +44,7 @@ pub fn attempt<'a>(
             &options(&case, &start, held),
         );
         match outcome.status {
-            Status::Converged => {
-                let (outcome, open) = phases::settle(compiled, &case, outcome);
-                return Ok(Found {
-                    case,
-                    outcome,
-                    open,
-                });
-            }
+            Status::Converged => return Ok(phases::settle(compiled, case, outcome)),
             Status::NotConverged(why) if reason.is_empty() => {
                 reason = in_words(compiled, &outcome, why);
             }
@@ -102,6 +99,7 @@ fn name(compiled: &Compiled, relation: &Relation) -> String {
         Role::Mass { side } => format!("the mass balance ({side})"),
         Role::Energy => "the energy balance".to_owned(),
         Role::Condition(what) | Role::Bound(what) => format!("the condition \"{what}\""),
+        Role::SideOfSaturation => "a side of the saturation line".to_owned(),
     };
     match relation.of {
         Some(e) => format!("{what} of {}", compiled.plant().equipment[e.0].name),

@@ -61,7 +61,7 @@ fn imbalances(compiled: &Compiled, solution: &Solution, id: EquipmentId) -> Imba
                 imbalances.mass.insert(side.clone(), imbalance);
             }
             Role::Energy => imbalances.energy = Some(imbalance(solution.miss(k), "kW")),
-            Role::Condition(_) | Role::Bound(_) => {}
+            Role::Condition(_) | Role::Bound(_) | Role::SideOfSaturation => {}
         }
     }
     imbalances

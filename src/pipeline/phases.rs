@@ -1,14 +1,16 @@
-//! Trying the other side of the saturation line.
+//! Choosing the side of the saturation line.
 //!
-//! T(p, h) of wet steam does not depend on h, so a stream that starts on the
-//! wrong side can converge to a false minimum with perfect residuals. Where a
-//! temperature lies within 4 sigma of saturation, or a wet stream's temperature
-//! disagrees, the batch is solved again from the other side, and the lower
-//! objective is kept. Where the two do not differ significantly (chi-square with
-//! one degree of freedom) the phase is open.
+//! T(p, h) of wet steam does not depend on h, so a stream on the wrong side can
+//! hold a false minimum with perfect residuals. A stream whose temperature lies
+//! within 4 sigma of saturation is therefore solved on one side at a time
+//! ([`Mode`]), beginning with the side that the readings show; where it is near
+//! at the solution, or wet with a temperature that disagrees, the other side is
+//! solved too and the lower objective kept. Where the two do not differ
+//! significantly (chi-square with one degree of freedom) the phase is open.
 
+use super::attempt::Found;
 use super::compiled::Compiled;
-use crate::equations::{Case, Law, Measured, Role, System};
+use crate::equations::{Case, Law, Mode, Modes, Role, System};
 use crate::plant::{Quantity, StreamId};
 use crate::solver::{Options, Outcome, Status, solve};
 
@@ -21,105 +23,167 @@ const SUSPICIOUS: f64 = 2.0;
 const SIGNIFICANT: f64 = 3.841_459;
 /// Improvement of the objective that is more than rounding.
 const LOWER: f64 = 1e-7;
+/// How far a stream starts on the other side, kJ/kg.
+const ACROSS: f64 = 5.0;
 
-/// The best of the solutions on either side, and the streams whose phase is open.
-pub fn settle(compiled: &Compiled, case: &Case, first: Outcome) -> (Outcome, Vec<StreamId>) {
-    let system = compiled.system();
-    let mut best = first;
-    let mut open = Vec::new();
+/// Gives a mode to every stream whose temperature does not tell its side at
+/// `x`: the side that `x` has it on.
+pub fn doubtful(case: &Case, x: &[f64], modes: &mut Modes) {
+    let system = case.system();
     for (i, observation) in system.observations.iter().enumerate() {
-        let (Quantity::Temperature(s), Some(measured)) =
+        if let (Quantity::Temperature(s), Some(measured)) =
             (observation.quantity, case.measured()[i])
-        else {
+            && system.on_saturation[s.0].is_none()
+            && modes.get(s).is_none()
+            && let Some((liquid, vapour)) = system.saturated_enthalpies(s, x)
+            && let Some(saturated) = system.saturation_temperature(s, x)
+        {
+            let h = x[system.layout.h(s)];
+            let wet = h > liquid && h < vapour;
+            if wet || (measured.value - saturated).abs() < NEAR * measured.sigma.get() {
+                modes.set(s, mode_at(h, liquid, vapour));
+            }
+        }
+    }
+}
+
+fn mode_at(h: f64, liquid: f64, vapour: f64) -> Mode {
+    if h <= liquid {
+        Mode::Liquid
+    } else if h >= vapour {
+        Mode::Vapour
+    } else {
+        Mode::Wet
+    }
+}
+
+/// The best of the solutions on either side.
+pub fn settle<'a>(compiled: &Compiled, mut case: Case<'a>, mut best: Outcome) -> Found<'a> {
+    let system = compiled.system();
+    let mut modes = case.modes().clone();
+    doubtful(&case, &best.x, &mut modes);
+    case = case.with_modes(modes);
+    let mut open = Vec::new();
+    let mut settled: Vec<StreamId> = Vec::new();
+    for (i, observation) in system.observations.iter().enumerate() {
+        let Quantity::Temperature(s) = observation.quantity else {
             continue;
         };
-        let Some(start) = other_side(system, s, measured, &best, i) else {
+        if settled.contains(&s) || !worth_trying(&case, s, i, &best) {
+            continue;
+        }
+        let together = equal_state(system, s);
+        let Some((other_case, start)) = other_side(&case, &together, s, &best) else {
             continue;
         };
-        let other = solve(case, compiled.symbolic(), &start, &Options::default());
-        if other.status != Status::Converged || !apart(system, s, &best.x, &other.x) {
+        settled.extend(together);
+        let other = solve(
+            &other_case,
+            compiled.symbolic(),
+            &start,
+            &Options::default(),
+        );
+        if other.status != Status::Converged {
             continue;
         }
         let difference = other.objective - best.objective;
-        if difference.abs() < SIGNIFICANT {
+        let apart = !on_the_line(system, s, &best) && !on_the_line(system, s, &other);
+        if difference.abs() < SIGNIFICANT && apart {
             open.push(s);
         }
         if difference < -LOWER {
             best = other;
+            case = other_case;
         }
     }
-    open.dedup();
-    (best, open)
+    Found {
+        case,
+        outcome: best,
+        open,
+    }
 }
 
-/// The solution moved to the other side of the saturation line for `s` and all
-/// streams of equal enthalpy; `None` where there is no need to try.
-fn other_side(
-    system: &System,
-    s: StreamId,
-    measured: Measured,
-    best: &Outcome,
-    observation: usize,
-) -> Option<Vec<f64>> {
-    if system.on_saturation[s.0].is_some() {
-        return None;
-    }
-    let state = system.state(s, &best.x).ok()?;
-    let (liquid, vapour) = system.saturated_enthalpies(s, &best.x)?;
-    let sigma = measured.sigma.get();
-    let saturation_temperature = system.saturation_temperature(s, &best.x)?;
-    let near = (measured.value - saturation_temperature).abs() < NEAR * sigma;
-    let wet = state.h > liquid && state.h < vapour;
-    let suspicious = wet && best.evaluation.r[observation].abs() > SUSPICIOUS;
-    if !(near || suspicious) {
-        return None;
-    }
-    let latent = vapour - liquid;
-    let beyond = (measured.value - saturation_temperature).abs().max(sigma);
-    let h = if !wet {
-        // Into the wet region from the side that it is on.
-        if state.h >= vapour { vapour - 0.02 * latent } else { liquid + 0.02 * latent }
-    } else if state.h > 0.5 * (liquid + vapour) {
-        vapour + 2.5 * beyond
-    } else {
-        liquid - 4.3 * beyond
+/// Whether the other side may fit better: the temperature is near saturation,
+/// the stream is held at the line, or it is wet and its temperature disagrees.
+fn worth_trying(case: &Case, s: StreamId, observation: usize, best: &Outcome) -> bool {
+    let system = case.system();
+    let (Some(mode), Some(measured), Some(saturated)) = (
+        case.modes().get(s),
+        case.measured()[observation],
+        system.saturation_temperature(s, &best.x),
+    ) else {
+        return false;
     };
+    let near = (measured.value - saturated).abs() < NEAR * measured.sigma.get();
+    let disagrees = best.evaluation.r[observation].abs() > SUSPICIOUS;
+    near || on_the_line(system, s, best) || (mode == Mode::Wet && disagrees)
+}
+
+/// The problem with `together` on the other side of the line that `s` is
+/// nearest to, and a start there.
+fn other_side<'a>(
+    case: &Case<'a>,
+    together: &[StreamId],
+    s: StreamId,
+    best: &Outcome,
+) -> Option<(Case<'a>, Vec<f64>)> {
+    let system = case.system();
+    let (liquid, vapour) = system.saturated_enthalpies(s, &best.x)?;
+    let h = best.x[system.layout.h(s)];
+    let nearer_vapour = h > 0.5 * (liquid + vapour);
+    let (mode, h) = match (case.modes().get(s)?, nearer_vapour) {
+        (Mode::Wet, true) => (Mode::Vapour, vapour + ACROSS),
+        (Mode::Wet, false) => (Mode::Liquid, liquid - ACROSS),
+        (Mode::Vapour, _) => (Mode::Wet, vapour - ACROSS),
+        (Mode::Liquid, _) => (Mode::Wet, liquid + ACROSS),
+    };
+    let mut modes = case.modes().clone();
     let mut start = best.x.clone();
-    for stream in equal_enthalpy(system, s) {
+    for &stream in together {
+        if modes.get(stream).is_some() {
+            modes.set(stream, mode);
+        }
         start[system.layout.h(stream)] = h;
     }
-    Some(start)
+    Some((case.with_modes(modes), start))
 }
 
-/// True where the two solutions have the stream on different sides.
-fn apart(system: &System, s: StreamId, a: &[f64], b: &[f64]) -> bool {
-    match (system.state(s, a), system.state(s, b)) {
-        (Ok(a), Ok(b)) => a.phase != b.phase,
-        _ => false,
-    }
+/// Whether a bound holds the stream at the saturation line.
+fn on_the_line(system: &System, s: StreamId, outcome: &Outcome) -> bool {
+    let bounds = system.structure.bounds.iter().zip(&outcome.active_bounds);
+    bounds.filter(|(_, active)| **active).any(|(&k, _)| {
+        let relation = &system.relations[k];
+        let of_stream = matches!(&relation.law, Law::Saturated { stream, .. } if *stream == s);
+        relation.role == Role::SideOfSaturation && of_stream
+    })
 }
 
-/// `s` and every stream that relations hold at its enthalpy.
-fn equal_enthalpy(system: &System, s: StreamId) -> Vec<StreamId> {
+/// `s` and every stream that relations hold at its pressure and enthalpy, as
+/// those of a splitter or of a well-mixed header are.
+fn equal_state(system: &System, s: StreamId) -> Vec<StreamId> {
     let mut members = vec![s];
     let mut next = 0;
     while next < members.len() {
-        let h = system.layout.h(members[next]);
+        let of = members[next];
         next += 1;
-        for relation in &system.relations {
-            let (Role::Condition("equal enthalpy"), Law::Linear(terms)) =
-                (&relation.role, &relation.law)
-            else {
-                continue;
-            };
-            if terms.iter().any(|&(j, _)| j == h) {
-                for stream in terms.iter().filter_map(|&(j, _)| system.layout.stream_of(j)) {
-                    if !members.contains(&stream) {
-                        members.push(stream);
-                    }
-                }
+        let by_enthalpy = partners(system, "equal enthalpy", system.layout.h(of));
+        let by_pressure = partners(system, "equal pressure", system.layout.p(of));
+        for stream in by_enthalpy {
+            if by_pressure.contains(&stream) && !members.contains(&stream) {
+                members.push(stream);
             }
         }
     }
     members
+}
+
+/// Streams that share a condition on state `j`.
+fn partners(system: &System, condition: &'static str, j: usize) -> Vec<StreamId> {
+    let relations = system.relations.iter();
+    relations
+        .filter(|relation| relation.role == Role::Condition(condition))
+        .filter(|relation| relation.row.contains(&j))
+        .flat_map(|relation| &relation.row)
+        .filter_map(|&state| system.layout.stream_of(state))
+        .collect()
 }

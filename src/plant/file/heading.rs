@@ -220,7 +220,7 @@ fn confidence(root: &Fields<'_>, cx: &mut Context<'_>) -> Option<f64> {
         Content::Number(_) => at.number(cx, "0.95")?,
         _ => fraction(&at, cx)?,
     };
-    if !(value >= 0.5 && value < 1.0) {
+    if !(0.5..1.0).contains(&value) {
         let mend = "write 50 % or more and less than 100 %, such as \"95 %\"";
         cx.error(&at.place, "no test can have this confidence", mend);
         return None;

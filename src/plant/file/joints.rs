@@ -35,46 +35,47 @@ fn check_ports(network: &Network<'_>, draft: &EquipmentDraft<'_>, cx: &mut Conte
         }
     }
     ports.extend(draft.joints.iter().map(|(p, n, _)| (*p, *n)));
-    let reheats: BTreeSet<u32> = ports.iter().map(|p| p.1).filter(|n| *n > 0).collect();
-    for (expected, &number) in (1..).zip(&reheats) {
-        if number != expected {
-            let what = format!(
-                "`{}` has a reheat-{number} but no reheat-{expected}",
-                draft.name
-            );
-            cx.error(
-                &draft.place,
-                what,
-                "number the reheaters from 1 without gaps",
-            );
-            break;
-        }
-    }
     if draft.joints.is_empty() && !row.ports.is_empty() && draft.unclear == [false; 2] {
         let what = format!("no stream joins the {} `{}`", row.name, draft.name);
         let mend = format!("lead streams to and from it: {}", wanted(draft));
         cx.error(&draft.place, what, mend);
         return;
     }
-    let mut seen_missing = BTreeSet::new();
-    let exchanger_empty = row.name == "exchanger" && draft.joints.is_empty();
     for &(index, number) in &ports {
         let port = &row.ports[index];
         let name = port_name(port.name, number);
         let streams = draft.on(&name, port.direction);
+        let other = port.direction.other();
+        let has_partner = !draft.on(&name, other).is_empty();
         if port.is_single() && streams.len() > 1 {
             too_many(network, draft, &name, port.direction, &streams, cx);
         }
-        let numbered = number > 0;
-        let other = draft.on(&name, port.direction.other());
-        let partner = !other.is_empty();
-        if streams.len() < port.least(partner) && !exchanger_empty {
+        if streams.len() < port.least(has_partner) {
             missing(draft, &name, port.direction, cx);
         }
-        // A reheater that is there at all needs both of its ends.
-        if numbered && other.is_empty() && seen_missing.insert(number) {
-            missing(draft, &name, port.direction.other(), cx);
+        // A reheater stands here only if a stream joins it: it needs the other
+        // end too.
+        if number > 0 && !has_partner {
+            missing(draft, &name, other, cx);
         }
+    }
+    check_numbers(draft, &ports, cx);
+}
+
+/// Reheaters are numbered from 1 without gaps.
+fn check_numbers(draft: &EquipmentDraft<'_>, ports: &BTreeSet<(usize, u32)>, cx: &mut Context<'_>) {
+    let numbers: BTreeSet<u32> = ports.iter().map(|p| p.1).filter(|n| *n > 0).collect();
+    let gap = (1..)
+        .zip(&numbers)
+        .find(|(expected, number)| expected != *number);
+    if let Some((expected, number)) = gap {
+        let name = draft.name;
+        let what = format!("`{name}` has a reheat-{number} but no reheat-{expected}");
+        cx.error(
+            &draft.place,
+            what,
+            "number the reheaters from 1 without gaps",
+        );
     }
 }
 

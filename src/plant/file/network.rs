@@ -214,13 +214,13 @@ impl<'n> Network<'n> {
     /// A stream from a side of a piece of equipment back to that side goes
     /// nowhere. From one side of a boiler or exchanger to another it may go.
     fn check_loop(&mut self, stream: &mut StreamDraft<'n>, to: &At<'n>, cx: &mut Context<'_>) {
-        let (End::Joined(a, out, _), End::Joined(b, into, _)) = (stream.from, stream.to) else {
+        let (End::Joined(a, out, m), End::Joined(b, into, n)) = (stream.from, stream.to) else {
             return;
         };
         let Some(row) = self.draft(a).row.filter(|_| a == b) else {
             return;
         };
-        let sides_differ = row.ports[out].name != row.ports[into].name;
+        let sides_differ = (row.ports[out].name, m) != (row.ports[into].name, n);
         if sides_differ && matches!(row.name, "boiler" | "exchanger") {
             return;
         }

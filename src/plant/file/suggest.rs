@@ -4,6 +4,12 @@
 /// tables: a file of nothing but misspelt names must not take minutes.
 const BUDGET: usize = 20_000_000;
 
+/// What looking at one name costs, whatever its length.
+const NAME_COST: usize = 20;
+
+/// Longest word that is compared, in bytes.
+const MAX_LENGTH: usize = 512;
+
 /// Finds the closest name, within a budget.
 pub(super) struct Suggester {
     spent: usize,
@@ -32,18 +38,25 @@ impl Suggester {
         word: &str,
         names: impl IntoIterator<Item = &'n str>,
     ) -> Vec<&'n str> {
-        let word_folded = fold(word);
         let mut found: Vec<(usize, bool, &'n str)> = Vec::new();
+        if word.len() > MAX_LENGTH {
+            return Vec::new();
+        }
+        let word_folded = fold(word);
         for name in names {
+            if self.spent > BUDGET {
+                return Vec::new();
+            }
+            self.spent += NAME_COST;
+            if name.len() > MAX_LENGTH {
+                continue;
+            }
             let folded = fold(name);
             let limit = word_folded.len().max(folded.len()) / 3;
             if word_folded.len().abs_diff(folded.len()) > limit {
                 continue;
             }
             self.spent += word_folded.len() * folded.len();
-            if self.spent > BUDGET {
-                break;
-            }
             let distance = edit_distance(&word_folded, &folded);
             if distance <= limit {
                 let goes_on = name.starts_with(word) || word.starts_with(name);

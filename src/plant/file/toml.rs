@@ -31,11 +31,11 @@ pub(super) fn read(text: &str, findings: &mut Findings<'_>) -> Option<Node> {
             if let Some(section) = section(&mut root, &parent) {
                 let entry = repeated(text, key, span);
                 if matches!(entry.node.value, Content::Other(_)) {
-                    // The keys below a second heading are mixed with those
-                    // below the first: no faults of their own.
-                    definitions
-                        .closed
-                        .insert(format!("{}/{}", parent.path, entry.key));
+                    // The parser mixes the keys below a second heading with
+                    // those below the first.
+                    let path = parent.child(&entry.key, 0).path;
+                    definitions.closed.insert(path);
+                    section.forget_after(&entry.key, entry.key_span.start);
                 }
                 section.repeated.push(entry);
             }
@@ -188,11 +188,12 @@ impl Definitions {
         }
     }
 
-    /// The table in which a key was last defined before an offset: the one in
-    /// which the parser met it again. `None` where that is of no interest.
+    /// The table in which a key was last defined up to an offset: the one in
+    /// which the parser met it again (a repeated heading takes the place of the
+    /// first). `None` where that is of no interest.
     fn parent(&self, key: &str, offset: usize) -> Option<Place> {
         let places = self.found.get(key).map_or(&[][..], Vec::as_slice);
-        let before = places.partition_point(|(start, _)| *start < offset);
+        let before = places.partition_point(|(start, _)| *start <= offset);
         let parent = match before.checked_sub(1) {
             Some(last) => places[last].1.clone(),
             None => Place::file(),

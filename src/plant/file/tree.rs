@@ -40,6 +40,18 @@ pub(super) struct Table {
     pub repeated: Vec<Entry>,
 }
 
+impl Table {
+    /// Drops the members of a member that stand beyond an offset.
+    pub fn forget_after(&mut self, key: &str, offset: usize) {
+        let entry = self.entries.iter_mut().find(|entry| entry.key == key);
+        if let Some(Content::Table(table)) = entry.map(|entry| &mut entry.node.value) {
+            table
+                .entries
+                .retain(|member| member.key_span.start < offset);
+        }
+    }
+}
+
 /// One key and its value.
 #[derive(Clone, Debug)]
 pub(super) struct Entry {

@@ -145,10 +145,15 @@ fn ports() {
 + [equipment]
 ! /streams/stray | stray | joins nothing | `from` or `to`
 
-- boiler.reheat-1" }
-+ boiler.reheat-2" }
-! /equipment/boiler | boiler | no stream out of `reheat-2` | boiler.reheat-2
-! /equipment/boiler | boiler | no stream into `reheat-1` | boiler.reheat-1"#,
+- from = "boiler.reheat-1", to = "turbine-lp"
++ from = "boiler.water", to = "turbine-lp"
+! /equipment/boiler | boiler | no stream out of `reheat-1` | boiler.reheat-1
+
+- to = "boiler.reheat-1"
++ to = "boiler.reheat-2"
+- from = "boiler.reheat-1"
++ from = "boiler.reheat-2"
+! /equipment/boiler | boiler | a reheat-2 but no reheat-1 | without gaps"#,
     );
 }
 
@@ -225,6 +230,30 @@ fn names_and_duplicates() {
 - feed-c      = {
 + feed-1      = {
 ! /streams/feed-1 | feed-1 | `feed-1` is there twice | rename
+
+# Tables may stand below headings of their own, once.
+- [equipment]
++ [streams.x-1]
++ fluid = "water"
++ to = "x-valve"
++ [streams.x-2]
++ fluid = "water"
++ from = "x-valve"
++ [streams.x-2]
++ fluid = "water"
++ from = "x-pump"
++ to = "x-valve"
++ [equipment]
++ x-valve = { kind = "valve" }
++ x-pump = { kind = "pump" }
+- [tags]
++ [tags.x]
++ measures = "mass-flow"
++ of = "x-1"
++ unit = "t/h"
++ uncertainty.absolute = "1 t/h"
++ [tags]
+! /streams/x-2 | x-2 | `x-2` is there twice | rename
 
 - feed-c      = {
 + "feed.c" = {
