@@ -8,10 +8,18 @@
 //! sockets stay at the edges.
 #![forbid(unsafe_code)]
 
+pub mod cli;
+pub mod config;
+pub mod demo;
 pub mod diagnosis;
 pub mod equations;
 pub mod fluid;
+pub mod http;
+pub mod ingest;
 pub mod pipeline;
 pub mod plant;
 pub mod report;
+pub mod server;
 pub mod solver;
+pub mod store;
+pub mod telemetry;

@@ -22,7 +22,12 @@ pub enum LogFormat {
 /// Where the filter cannot be read, or logging has been started before.
 pub fn start(format: LogFormat, filter: &str) -> anyhow::Result<()> {
     let filter = EnvFilter::try_new(filter)?;
-    let builder = tracing_subscriber::fmt().with_env_filter(filter).with_writer(io::stderr);
+    // A log that nobody reads any more must not end the service: the complaint
+    // about it would go the same way, and panic.
+    let builder = tracing_subscriber::fmt()
+        .with_env_filter(filter)
+        .with_writer(io::stderr)
+        .log_internal_errors(false);
     let started = match format {
         LogFormat::Text => builder.with_target(false).try_init(),
         LogFormat::Json => builder.json().flatten_event(true).try_init(),

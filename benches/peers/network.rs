@@ -25,8 +25,14 @@ fn heat_capacity(t: f64) -> f64 {
 /// One relation of a network; streams by number.
 #[derive(Clone, Debug)]
 pub enum Relation {
-    Mass { inlets: Vec<usize>, outlets: Vec<usize> },
-    Energy { inlets: Vec<usize>, outlets: Vec<usize> },
+    Mass {
+        inlets: Vec<usize>,
+        outlets: Vec<usize>,
+    },
+    Energy {
+        inlets: Vec<usize>,
+        outlets: Vec<usize>,
+    },
     SameTemperature(usize, usize),
 }
 
@@ -45,17 +51,33 @@ pub struct Network {
 
 impl Network {
     pub fn read(path: &Path) -> Network {
-        let text = std::fs::read_to_string(path).unwrap_or_else(|error| panic!("{}: {error}", path.display()));
+        let text = std::fs::read_to_string(path)
+            .unwrap_or_else(|error| panic!("{}: {error}", path.display()));
         Network::parse(&text)
     }
 
     pub fn parse(text: &str) -> Network {
         let file: Value = serde_json::from_str(text).expect("a problem file is JSON");
         let streams = file["n"].as_u64().expect("n") as usize;
-        let relations = file["eqs"].as_array().expect("eqs").iter().map(relation).collect();
-        let (y, sigma, start) = (numbers(&file["y"]), numbers(&file["sigma"]), numbers(&file["x0"]));
-        let measured: Vec<bool> = numbers(&file["meas"]).iter().map(|&flag| flag != 0.0).collect();
-        let readings = (0..2 * streams).filter(|&j| measured[j]).map(|j| (j, y[j], sigma[j])).collect();
+        let relations = file["eqs"]
+            .as_array()
+            .expect("eqs")
+            .iter()
+            .map(relation)
+            .collect();
+        let (y, sigma, start) = (
+            numbers(&file["y"]),
+            numbers(&file["sigma"]),
+            numbers(&file["x0"]),
+        );
+        let measured: Vec<bool> = numbers(&file["meas"])
+            .iter()
+            .map(|&flag| flag != 0.0)
+            .collect();
+        let readings = (0..2 * streams)
+            .filter(|&j| measured[j])
+            .map(|j| (j, y[j], sigma[j]))
+            .collect();
         let state_scale = (0..2 * streams)
             .map(|j| match (measured[j], j < streams) {
                 (true, _) => sigma[j],
@@ -63,7 +85,14 @@ impl Network {
                 (false, false) => 0.5,
             })
             .collect();
-        Network::new(streams, relations, numbers(&file["escale"]), state_scale, readings, start)
+        Network::new(
+            streams,
+            relations,
+            numbers(&file["escale"]),
+            state_scale,
+            readings,
+            start,
+        )
     }
 
     fn new(
@@ -74,12 +103,18 @@ impl Network {
         readings: Vec<(usize, f64, f64)>,
         start: Vec<f64>,
     ) -> Network {
-        let lists: Vec<Vec<usize>> = relations.iter().map(|relation| states_of(relation, streams)).collect();
+        let lists: Vec<Vec<usize>> = relations
+            .iter()
+            .map(|relation| states_of(relation, streams))
+            .collect();
         let observations: Vec<[usize; 1]> = readings.iter().map(|&(j, _, _)| [j]).collect();
         let mut with_energy = vec![false; streams];
         for relation in &relations {
             if let Relation::Energy { inlets, outlets } = relation {
-                inlets.iter().chain(outlets).for_each(|&i| with_energy[i] = true);
+                inlets
+                    .iter()
+                    .chain(outlets)
+                    .for_each(|&i| with_energy[i] = true);
             }
         }
         let structure = Structure {
@@ -87,21 +122,48 @@ impl Network {
             relations: Rows::from_lists(&lists),
             observations: Rows::from_lists(&observations),
             bounds: Vec::new(),
-            pairs: (0..streams).filter(|&i| with_energy[i]).map(|i| (i, streams + i)).collect(),
+            pairs: (0..streams)
+                .filter(|&i| with_energy[i])
+                .map(|i| (i, streams + i))
+                .collect(),
         };
-        Network { streams, relations, relation_scale, state_scale, readings, start, structure }
+        Network {
+            streams,
+            relations,
+            relation_scale,
+            state_scale,
+            readings,
+            start,
+            structure,
+        }
     }
 }
 
 fn numbers(value: &Value) -> Vec<f64> {
-    value.as_array().expect("a list").iter().map(|v| v.as_f64().expect("a number")).collect()
+    value
+        .as_array()
+        .expect("a list")
+        .iter()
+        .map(|v| v.as_f64().expect("a number"))
+        .collect()
 }
 
 fn relation(row: &Value) -> Relation {
-    let list = |value: &Value| numbers(value).iter().map(|&i| i as usize).collect::<Vec<usize>>();
+    let list = |value: &Value| {
+        numbers(value)
+            .iter()
+            .map(|&i| i as usize)
+            .collect::<Vec<usize>>()
+    };
     match row[0].as_str() {
-        Some("mass") => Relation::Mass { inlets: list(&row[1]), outlets: list(&row[2]) },
-        Some("energy") => Relation::Energy { inlets: list(&row[1]), outlets: list(&row[2]) },
+        Some("mass") => Relation::Mass {
+            inlets: list(&row[1]),
+            outlets: list(&row[2]),
+        },
+        Some("energy") => Relation::Energy {
+            inlets: list(&row[1]),
+            outlets: list(&row[2]),
+        },
         Some("teq") => Relation::SameTemperature(
             row[1].as_u64().expect("a stream") as usize,
             row[2].as_u64().expect("a stream") as usize,
@@ -113,7 +175,11 @@ fn relation(row: &Value) -> Relation {
 fn states_of(relation: &Relation, n: usize) -> Vec<usize> {
     match relation {
         Relation::Mass { inlets, outlets } => inlets.iter().chain(outlets).copied().collect(),
-        Relation::Energy { inlets, outlets } => inlets.iter().chain(outlets).flat_map(|&i| [i, n + i]).collect(),
+        Relation::Energy { inlets, outlets } => inlets
+            .iter()
+            .chain(outlets)
+            .flat_map(|&i| [i, n + i])
+            .collect(),
         Relation::SameTemperature(a, b) => vec![n + a, n + b],
     }
 }
@@ -176,7 +242,12 @@ impl Problem for Network {
 
     fn limit(&self, _x: &[f64], _step: &mut [f64]) {}
 
-    fn curvature(&self, x: &[f64], multipliers: &[f64], into: &mut Vec<(usize, usize, f64)>) -> bool {
+    fn curvature(
+        &self,
+        x: &[f64],
+        multipliers: &[f64],
+        into: &mut Vec<(usize, usize, f64)>,
+    ) -> bool {
         let n = self.streams;
         into.clear();
         for (relation, multiplier) in self.relations.iter().zip(multipliers) {

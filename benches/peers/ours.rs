@@ -12,14 +12,19 @@ use counterpoise::solver::{Options, Problem, Symbolic, solve};
 use network::Network;
 
 fn main() {
-    let mut arguments = std::env::args().skip(1).filter(|argument| argument != "--bench");
+    let mut arguments = std::env::args()
+        .skip(1)
+        .filter(|argument| argument != "--bench");
     let (Some(file), Some(repetitions)) = (arguments.next(), arguments.next()) else {
         println!("usage: ours FILE REPETITIONS");
         return;
     };
     let network = Network::read(Path::new(&file));
     let repetitions: usize = repetitions.parse().expect("a number of repetitions");
-    let options = Options { tolerance_step: 1e-6, ..Options::default() };
+    let options = Options {
+        tolerance_step: 1e-6,
+        ..Options::default()
+    };
     let begun = Instant::now();
     let symbolic = Symbolic::new(network.structure());
     let symbolic_ms = begun.elapsed().as_secs_f64() * 1e3;
@@ -27,7 +32,12 @@ fn main() {
     let mut outcome = solve(&network, &symbolic, &network.start, &options);
     for _ in 0..repetitions {
         let begun = Instant::now();
-        outcome = black_box(solve(&network, &symbolic, black_box(&network.start), &options));
+        outcome = black_box(solve(
+            &network,
+            &symbolic,
+            black_box(&network.start),
+            &options,
+        ));
         times.push(begun.elapsed().as_secs_f64() * 1e3);
     }
     times.sort_by(f64::total_cmp);

@@ -19,10 +19,10 @@ for n in $sizes; do
         files+=("$file")
     done
 done
-binary=$(cd "$root" && cargo bench --bench ours --no-run --message-format=json 2>/dev/null |
+binary=$(cd "$root" && cargo bench --bench peers --no-run --message-format=json 2>/dev/null |
     "$work/venv/bin/python" -c 'import json, sys
 for line in sys.stdin:
     message = json.loads(line)
-    if message.get("executable") and message["target"]["name"] == "ours":
+    if message.get("executable") and message["target"]["name"] == "peers":
         print(message["executable"])')
 "$work/venv/bin/python" "$here/compare.py" "$binary" "$rounds" "${files[@]}"

@@ -12,7 +12,7 @@
 //! no solution stands.
 
 use super::relation::Side;
-use crate::fluid::{self, Phase, State};
+use crate::fluid::{self, Phase, Saturation, State};
 use crate::plant::StreamId;
 
 /// Enthalpy beyond the line at which the slope of the single phase is taken,
@@ -63,11 +63,13 @@ impl Modes {
 
     /// The state with its temperature continued from the stream's side, where
     /// it lies beyond.
-    pub(super) fn continued(&self, s: StreamId, state: State) -> State {
-        let Some(mode) = self.0[s.0] else {
-            return state;
-        };
-        let Ok(saturation) = fluid::saturation(state.p) else {
+    pub(super) fn continued(
+        &self,
+        s: StreamId,
+        state: State,
+        saturation: Option<&Saturation>,
+    ) -> State {
+        let (Some(mode), Some(saturation)) = (self.0[s.0], saturation) else {
             return state;
         };
         let (line, off) = match (mode, state.phase) {

@@ -9,7 +9,7 @@
 //! function holds it in.
 
 use super::layout::Layout;
-use super::relation::Side;
+use super::relation::{Saturations, Side};
 use crate::fluid::{self, State};
 use crate::plant::{Barometer, Equipment, Kind, PressureReference, Quantity, StreamId};
 
@@ -29,8 +29,8 @@ enum Function {
     Linear { coefficients: [f64; 2], constant: f64 },
     Temperature(StreamId),
     /// Temperature of a stream that a relation holds on the saturation line.
-    SaturationTemperature,
-    Quality,
+    SaturationTemperature(StreamId),
+    Quality(StreamId),
     Subcooling(StreamId),
     Efficiency { inlet: StreamId, outlet: StreamId, compression: bool },
 }
@@ -88,11 +88,11 @@ impl Observation {
                 Some((vec![layout.p(a), layout.p(b)], linear(1.0, -1.0, 0.0)))
             }
             Quantity::Temperature(s) => Some(if on_saturation[s.0].is_some() {
-                (vec![layout.p(s)], Function::SaturationTemperature)
+                (vec![layout.p(s)], Function::SaturationTemperature(s))
             } else {
                 (vec![layout.p(s), layout.h(s)], Function::Temperature(s))
             }),
-            Quantity::Quality(s) => Some((vec![layout.p(s), layout.h(s)], Function::Quality)),
+            Quantity::Quality(s) => Some((vec![layout.p(s), layout.h(s)], Function::Quality(s))),
             Quantity::Subcooling(s) => {
                 Some((vec![layout.p(s), layout.h(s)], Function::Subcooling(s)))
             }
@@ -125,6 +125,16 @@ impl Observation {
         }
     }
 
+    /// The stream whose saturated states the function needs.
+    pub fn needs_saturation(&self) -> Option<StreamId> {
+        match self.function {
+            Function::SaturationTemperature(s)
+            | Function::Quality(s)
+            | Function::Subcooling(s) => Some(s),
+            _ => None,
+        }
+    }
+
     /// Inlet and outlet, where the function is the efficiency of a compression.
     pub fn compression(&self) -> Option<(StreamId, StreamId)> {
         match self.function {
@@ -138,13 +148,21 @@ impl Observation {
     }
 
     /// g(x) in internal units; its gradient goes into `values`, beside
-    /// [`Observation::row`].
+    /// [`Observation::row`]. `states` and `saturations` hold what the streams
+    /// that it needs are at `x`.
     ///
     /// # Errors
     /// The state to blame, where a property has no value.
-    pub fn evaluate(&self, x: &[f64], states: &States, values: &mut [f64]) -> Result<f64, usize> {
+    pub fn evaluate(
+        &self,
+        x: &[f64],
+        states: &States,
+        saturations: &Saturations,
+        values: &mut [f64],
+    ) -> Result<f64, usize> {
         let blame = self.row.first().copied().unwrap_or_default();
         let state = |s: StreamId| states[s.0].ok_or(blame);
+        let saturation = || self.needs_saturation().and_then(|s| saturations[s.0]).ok_or(blame);
         match self.function {
             Function::Linear { coefficients, constant } => {
                 let mut sum = constant;
@@ -159,13 +177,13 @@ impl Observation {
                 values.copy_from_slice(&[state.t_p, state.t_h]);
                 Ok(state.t)
             }
-            Function::SaturationTemperature => {
-                let saturation = fluid::saturation(x[self.row[0]]).map_err(|_| blame)?;
+            Function::SaturationTemperature(_) => {
+                let saturation = saturation()?;
                 values[0] = saturation.t_p;
                 Ok(saturation.t)
             }
-            Function::Quality => {
-                let saturation = fluid::saturation(x[self.row[0]]).map_err(|_| blame)?;
+            Function::Quality(_) => {
+                let saturation = saturation()?;
                 let (liquid, vapour) = (saturation.liquid, saturation.vapour);
                 let latent = vapour.h - liquid.h;
                 let quality = (x[self.row[1]] - liquid.h) / latent;
@@ -174,7 +192,7 @@ impl Observation {
                 Ok(quality)
             }
             Function::Subcooling(s) => {
-                let saturation = fluid::saturation(x[self.row[0]]).map_err(|_| blame)?;
+                let saturation = saturation()?;
                 let state = state(s)?;
                 values.copy_from_slice(&[saturation.t_p - state.t_p, -state.t_h]);
                 Ok(saturation.t - state.t)

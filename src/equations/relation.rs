@@ -6,7 +6,7 @@
 //! is positive, so a residual is what enters less what leaves.
 
 use super::layout::Layout;
-use crate::fluid;
+use crate::fluid::{self, Saturation};
 use crate::plant::{EquipmentId, StreamId};
 
 /// A side of the saturation line.
@@ -70,6 +70,10 @@ pub enum Law {
     },
 }
 
+/// Saturated states at the pressure of each stream that needs them; `None` for
+/// the others and outside the range.
+pub type Saturations = [Option<Saturation>];
+
 /// A relation of the plant.
 #[derive(Clone, Debug, PartialEq)]
 pub struct Relation {
@@ -115,12 +119,33 @@ impl Relation {
         Relation { of, role, law, row }
     }
 
+    /// The stream whose saturated states the relation needs.
+    pub fn needs_saturation(&self) -> Option<StreamId> {
+        match &self.law {
+            Law::Linear(_) => None,
+            Law::Energy { products, .. } => products.iter().find_map(|(_, carried, _)| {
+                match carried {
+                    Carried::Stream(_) => None,
+                    Carried::SaturatedLiquid(s) => Some(*s),
+                }
+            }),
+            Law::Saturated { stream, .. } => Some(*stream),
+        }
+    }
+
     /// Residual at `x`; the Jacobian goes into `values`, which stands beside
-    /// [`Relation::row`].
+    /// [`Relation::row`]. `saturations` holds the saturated states at the
+    /// pressures of `x` of the streams that need them.
     ///
     /// # Errors
     /// The state to blame, where saturation is asked for outside its range.
-    pub fn evaluate(&self, layout: &Layout, x: &[f64], values: &mut [f64]) -> Result<f64, usize> {
+    pub fn evaluate(
+        &self,
+        layout: &Layout,
+        x: &[f64],
+        saturations: &Saturations,
+        values: &mut [f64],
+    ) -> Result<f64, usize> {
         values.fill(0.0);
         let mut residual = 0.0;
         let mut add = |state: usize, value: f64| {
@@ -137,7 +162,7 @@ impl Relation {
             }
             Law::Energy { products, linear } => {
                 for &(flow, carried, sign) in products {
-                    let (h, stream, slope) = carried_enthalpy(carried, layout, x)?;
+                    let (h, stream, slope) = carried_enthalpy(carried, layout, x, saturations)?;
                     residual += sign * x[flow] * h;
                     add(flow, sign * h);
                     match slope {
@@ -152,7 +177,7 @@ impl Relation {
             }
             Law::Saturated { stream, side, sign } => {
                 let p = layout.p(*stream);
-                let saturation = fluid::saturation(x[p]).map_err(|_| p)?;
+                let saturation = saturations[stream.0].ok_or(p)?;
                 let branch = match side {
                     Side::Liquid => saturation.liquid,
                     Side::Vapour => saturation.vapour,
@@ -223,11 +248,11 @@ fn carried_enthalpy(
     carried: Carried,
     layout: &Layout,
     x: &[f64],
+    saturations: &Saturations,
 ) -> Result<(f64, StreamId, Option<f64>), usize> {
     match carried {
         Carried::SaturatedLiquid(s) if x[layout.p(s)] < fluid::MAX_SATURATION_PRESSURE => {
-            let p = layout.p(s);
-            let saturation = fluid::saturation(x[p]).map_err(|_| p)?;
+            let saturation = saturations[s.0].ok_or(layout.p(s))?;
             Ok((saturation.liquid.h, s, Some(saturation.liquid.h_p)))
         }
         Carried::Stream(s) | Carried::SaturatedLiquid(s) => Ok((x[layout.h(s)], s, None)),

@@ -8,8 +8,8 @@ use super::kinds;
 use super::layout::{Layout, StateKind};
 use super::modes::Modes;
 use super::observation::Observation;
-use super::relation::{Floors, Law, Relation, Role, Side};
-use crate::fluid::{self, State};
+use super::relation::{Floors, Law, Relation, Role, Saturations, Side};
+use crate::fluid::{self, Saturation, State};
 use crate::plant::{Plant, Sigma, StreamId};
 use crate::solver::{Evaluation, Outside, Problem, Rows, Structure};
 
@@ -20,6 +20,12 @@ const HIGHEST_PRESSURE: f64 = fluid::MAX_PRESSURE;
 const PRESSURE_STEP: f64 = 2.0;
 /// Largest change of a pump's rise of enthalpy in one step, as a factor.
 const RISE_STEP: f64 = 3.0;
+/// Between `COLD_SLOPE * p + COLD` and `HOT` (kJ/kg, p in MPa) every enthalpy
+/// is in range: the coldest liquid has -0.04 kJ/kg at no pressure and 95.4 at
+/// 100 MPa, the hottest steam of 1073.15 K 3715 at 100 MPa and more below.
+const COLD_SLOPE: f64 = 1.05;
+const COLD: f64 = 0.1;
+const HOT: f64 = 3700.0;
 /// Largest change of enthalpy in one step, kJ/kg.
 const ENTHALPY_STEP: f64 = 600.0;
 
@@ -36,6 +42,8 @@ pub struct System {
     pub on_saturation: Vec<Option<Side>>,
     /// Sparsity, for the solver.
     pub structure: Structure,
+    /// Streams whose saturated states a relation or tag always needs.
+    needs_saturation: Vec<bool>,
 }
 
 /// One observation's value in a batch, internal units.
@@ -90,12 +98,20 @@ impl System {
                 .map(|s| (layout.p(StreamId(s)), layout.h(StreamId(s))))
                 .collect(),
         };
+        let mut needs_saturation = vec![false; plant.streams.len()];
+        let by_relations = relations.iter().filter(|r| r.role != Role::SideOfSaturation);
+        let by_relations = by_relations.filter_map(Relation::needs_saturation);
+        let by_tags = observations.iter().filter_map(Observation::needs_saturation);
+        by_relations
+            .chain(by_tags)
+            .for_each(|s| needs_saturation[s.0] = true);
         System {
             layout,
             relations,
             observations,
             on_saturation,
             structure,
+            needs_saturation,
         }
     }
 
@@ -107,22 +123,34 @@ impl System {
         for s in observation.needs().into_iter().flatten() {
             states[s.0] = self.state(s, x).ok();
         }
+        let mut saturations = vec![None; self.layout.streams()];
+        if let Some(s) = observation.needs_saturation() {
+            saturations[s.0] = self.saturation(s, x);
+        }
         let mut gradient = vec![0.0; observation.row.len()];
-        let value = observation.evaluate(x, &states, &mut gradient).ok()?;
+        let value = observation
+            .evaluate(x, &states, &saturations, &mut gradient)
+            .ok()?;
         Some((value, gradient))
     }
 
-    /// Saturated liquid's and vapour's enthalpy at a stream's pressure, kJ/kg;
-    /// `None` above the critical pressure.
-    pub fn saturated_enthalpies(&self, stream: StreamId, x: &[f64]) -> Option<(f64, f64)> {
-        let saturation = fluid::saturation(x[self.layout.p(stream)]).ok()?;
-        Some((saturation.liquid.h, saturation.vapour.h))
+    /// Residual of relation `k` at `x`, with its gradient beside
+    /// `relations[k].row`; `None` where it has none.
+    pub fn residual(&self, k: usize, x: &[f64]) -> Option<(f64, Vec<f64>)> {
+        let relation = &self.relations[k];
+        let mut saturations = vec![None; self.layout.streams()];
+        if let Some(s) = relation.needs_saturation() {
+            saturations[s.0] = self.saturation(s, x);
+        }
+        let mut gradient = vec![0.0; relation.row.len()];
+        let value = relation.evaluate(&self.layout, x, &saturations, &mut gradient);
+        Some((value.ok()?, gradient))
     }
 
-    /// Saturation temperature at a stream's pressure, K, likewise.
-    pub fn saturation_temperature(&self, stream: StreamId, x: &[f64]) -> Option<f64> {
-        let saturation = fluid::saturation(x[self.layout.p(stream)]);
-        saturation.ok().map(|saturation| saturation.t)
+    /// Saturated states at a stream's pressure; `None` above the critical
+    /// pressure.
+    pub fn saturation(&self, stream: StreamId, x: &[f64]) -> Option<Saturation> {
+        fluid::saturation(x[self.layout.p(stream)]).ok()
     }
 
     /// Thermodynamic state of a stream at `x`.
@@ -204,7 +232,8 @@ impl<'a> Case<'a> {
         self.measured.iter().map(Option::is_some).collect()
     }
 
-    fn thermodynamic_states(&self, x: &[f64]) -> Result<Vec<Option<State>>, Outside> {
+    /// Thermodynamic states of the streams whose tags need them.
+    fn states(&self, x: &[f64], saturations: &Saturations) -> Result<Vec<Option<State>>, Outside> {
         let mut states = vec![None; self.system.layout.streams()];
         for (observation, measured) in self.system.observations.iter().zip(&self.measured) {
             if measured.is_none() {
@@ -212,15 +241,26 @@ impl<'a> Case<'a> {
             }
             for s in observation.needs().into_iter().flatten() {
                 if states[s.0].is_none() {
-                    let state = self.system.state(s, x);
-                    let state = state.map_err(|_| Outside {
+                    let state = self.system.state(s, x).map_err(|_| Outside {
                         state: self.system.layout.h(s),
                     })?;
-                    states[s.0] = Some(self.modes.continued(s, state));
+                    let saturation = saturations[s.0].as_ref();
+                    states[s.0] = Some(self.modes.continued(s, state, saturation));
                 }
             }
         }
         Ok(states)
+    }
+
+    /// Saturated states of the streams that relations, tags or modes need.
+    fn saturations(&self, x: &[f64]) -> Vec<Option<Saturation>> {
+        let streams = (0..self.system.layout.streams()).map(StreamId);
+        streams
+            .map(|s| {
+                let needed = self.system.needs_saturation[s.0] || self.modes.get(s).is_some();
+                if needed { self.system.saturation(s, x) } else { None }
+            })
+            .collect()
     }
 }
 
@@ -232,7 +272,8 @@ impl Problem for Case<'_> {
     fn evaluate(&self, x: &[f64], into: &mut Evaluation) -> Result<(), Outside> {
         let system = self.system;
         let outside = |state| Outside { state };
-        let states = self.thermodynamic_states(x)?;
+        let saturations = self.saturations(x);
+        let states = self.states(x, &saturations)?;
         for (k, relation) in system.relations.iter().enumerate() {
             let values = &mut into.f_values[system.structure.relations.range(k)];
             let sign = match (&relation.role, &relation.law) {
@@ -246,7 +287,7 @@ impl Problem for Case<'_> {
                 into.f[k] = 0.0;
                 continue;
             }
-            let f = relation.evaluate(&system.layout, x, values);
+            let f = relation.evaluate(&system.layout, x, &saturations, values);
             into.f[k] = sign * f.map_err(outside)?;
             if sign < 0.0 {
                 values.iter_mut().for_each(|value| *value = -*value);
@@ -260,7 +301,9 @@ impl Problem for Case<'_> {
                     0.0
                 }
                 Some(Measured { value, sigma }) => {
-                    let g = observation.evaluate(x, &states, values).map_err(outside)?;
+                    let g = observation
+                        .evaluate(x, &states, &saturations, values)
+                        .map_err(outside)?;
                     values.iter_mut().for_each(|v| *v /= sigma.get());
                     (value - g) / sigma.get()
                 }
@@ -287,7 +330,9 @@ impl Problem for Case<'_> {
             let (low, high) = pressure_range(x[p]);
             bend(x[p], &mut step[p], low.max(LOWEST_PRESSURE), high.min(HIGHEST_PRESSURE));
             bend(x[h], &mut step[h], x[h] - ENTHALPY_STEP, x[h] + ENTHALPY_STEP);
-            if let Ok((low, high)) = fluid::enthalpy_range(x[p] + step[p]) {
+            let (new_p, new_h) = (x[p] + step[p], x[h] + step[h]);
+            let inside = new_h > COLD_SLOPE * new_p + COLD && new_h < HOT;
+            if !inside && let Ok((low, high)) = fluid::enthalpy_range(new_p) {
                 bend(x[h], &mut step[h], low, high);
             }
         }

@@ -2,10 +2,16 @@
 //! documents for whatever the layers below answered.
 
 use super::{App, ambient, error};
+use axum::body::{Body, Bytes, HttpBody};
 use axum::extract::{MatchedPath, Request, State};
-use axum::http::{HeaderMap, HeaderName, HeaderValue};
+use axum::http::{HeaderMap, HeaderName, HeaderValue, header};
 use axum::middleware::Next;
 use axum::response::Response;
+use hyper::body::{Frame, SizeHint};
+use std::pin::Pin;
+use std::sync::Arc;
+use std::sync::atomic::{AtomicBool, Ordering};
+use std::task::{Context, Poll};
 use std::time::Instant;
 use tracing::Instrument;
 
@@ -32,9 +38,17 @@ pub(super) async fn observe(State(app): State<App>, mut request: Request, next: 
         parent_span_id = trace.as_ref().map(|trace| trace.1.as_str()),
     );
     request.extensions_mut().insert(RequestId(id.clone()));
+    let was_read = Arc::new(AtomicBool::new(request.body().is_end_stream()));
+    let watch = Arc::clone(&was_read);
+    let request = request.map(|body| Body::new(Watched { body, was_read: watch }));
     let started = Instant::now();
     let response = next.run(request).instrument(span.clone()).await;
     let mut response = error::finish(response, &id);
+    if response.status().is_client_error() && !was_read.load(Ordering::Relaxed) {
+        // The connection ends with this answer, because the rest of the body
+        // stands in the way of the next request; the client has to know.
+        response.headers_mut().insert(header::CONNECTION, HeaderValue::from_static("close"));
+    }
     if let Ok(value) = HeaderValue::from_str(&id) {
         response.headers_mut().insert(REQUEST_ID, value);
     }
@@ -42,6 +56,36 @@ pub(super) async fn observe(State(app): State<App>, mut request: Request, next: 
     let status = response.status().as_u16();
     span.in_scope(|| tracing::info!(status, milliseconds, "answered"));
     response
+}
+
+/// A body that tells whether it was read to its end.
+struct Watched {
+    body: Body,
+    was_read: Arc<AtomicBool>,
+}
+
+impl HttpBody for Watched {
+    type Data = Bytes;
+    type Error = axum::Error;
+
+    fn poll_frame(
+        mut self: Pin<&mut Self>,
+        context: &mut Context<'_>,
+    ) -> Poll<Option<Result<Frame<Bytes>, axum::Error>>> {
+        let polled = Pin::new(&mut self.body).poll_frame(context);
+        if matches!(polled, Poll::Ready(None)) || self.body.is_end_stream() {
+            self.was_read.store(true, Ordering::Relaxed);
+        }
+        polled
+    }
+
+    fn is_end_stream(&self) -> bool {
+        self.body.is_end_stream()
+    }
+
+    fn size_hint(&self) -> SizeHint {
+        self.body.size_hint()
+    }
 }
 
 /// A client's id, where it can go into a log and a URI reference as it is.

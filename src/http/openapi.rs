@@ -16,7 +16,7 @@ use utoipa_axum::routes;
             (absolute), Cel and kJ/kg; heat, work and power in kW. Times are RFC 3339: any offset \
             in, UTC out. Every error is a problem document (RFC 9457).\n\nAdvisory only: never \
             for protection or safety functions.",
-        license(name = "Apache-2.0", identifier = "Apache-2.0"),
+        license(name = "MIT", identifier = "MIT"),
     ),
     tags(
         (name = "plants", description = "Plant files and what their tags can determine"),

@@ -35,13 +35,13 @@ pub fn doubtful(case: &Case, x: &[f64], modes: &mut Modes) {
             (observation.quantity, case.measured()[i])
             && system.on_saturation[s.0].is_none()
             && modes.get(s).is_none()
-            && let Some((liquid, vapour)) = system.saturated_enthalpies(s, x)
-            && let Some(saturated) = system.saturation_temperature(s, x)
+            && let Some(saturation) = system.saturation(s, x)
         {
             let h = x[system.layout.h(s)];
-            let wet = h > liquid && h < vapour;
-            if wet || (measured.value - saturated).abs() < NEAR * measured.sigma.get() {
-                modes.set(s, mode_at(h, liquid, vapour));
+            let mode = mode_at(h, saturation.liquid.h, saturation.vapour.h);
+            let near = (measured.value - saturation.t).abs() < NEAR * measured.sigma.get();
+            if near || mode == Mode::Wet {
+                modes.set(s, mode);
             }
         }
     }
@@ -107,14 +107,14 @@ pub fn settle<'a>(compiled: &Compiled, mut case: Case<'a>, mut best: Outcome) ->
 /// the stream is held at the line, or it is wet and its temperature disagrees.
 fn worth_trying(case: &Case, s: StreamId, observation: usize, best: &Outcome) -> bool {
     let system = case.system();
-    let (Some(mode), Some(measured), Some(saturated)) = (
+    let (Some(mode), Some(measured), Some(saturation)) = (
         case.modes().get(s),
         case.measured()[observation],
-        system.saturation_temperature(s, &best.x),
+        system.saturation(s, &best.x),
     ) else {
         return false;
     };
-    let near = (measured.value - saturated).abs() < NEAR * measured.sigma.get();
+    let near = (measured.value - saturation.t).abs() < NEAR * measured.sigma.get();
     let disagrees = best.evaluation.r[observation].abs() > SUSPICIOUS;
     near || on_the_line(system, s, best) || (mode == Mode::Wet && disagrees)
 }
@@ -128,7 +128,8 @@ fn other_side<'a>(
     best: &Outcome,
 ) -> Option<(Case<'a>, Vec<f64>)> {
     let system = case.system();
-    let (liquid, vapour) = system.saturated_enthalpies(s, &best.x)?;
+    let saturation = system.saturation(s, &best.x)?;
+    let (liquid, vapour) = (saturation.liquid.h, saturation.vapour.h);
     let h = best.x[system.layout.h(s)];
     let nearer_vapour = h > 0.5 * (liquid + vapour);
     let (mode, h) = match (case.modes().get(s)?, nearer_vapour) {

@@ -15,13 +15,12 @@
 //! pivoting (see `sparse_rows` and `rank`).
 
 use super::problem::{Evaluation, Structure};
-use super::rank::{NULL_TOLERANCE, PivotedQr, RANK_TOLERANCE};
+use super::projection::{Observed, Split};
+use super::rank::{NULL_TOLERANCE, PivotedQr};
 use super::sparse_rows::{SparseRow, scaled_row, take_apart};
 
 /// A relation whose gradient is below this fraction of its scale is out of use.
 const NO_GRADIENT: f64 = 1e-13;
-/// An observation that moves less than this many sigma per state scale observes nothing.
-const NO_OBSERVATION: f64 = 1e-12;
 
 /// The classes of states, observations and relations at one point.
 #[derive(Clone, Debug, PartialEq)]
@@ -92,13 +91,25 @@ pub fn classify(
     active_bounds: &[bool],
     observation_used: &[bool],
 ) -> Classes {
-    let relations = relation_rows(structure, evaluation, state_scale, relation_scale, active_bounds);
+    let relations = relation_rows(
+        structure,
+        evaluation,
+        state_scale,
+        relation_scale,
+        active_bounds,
+    );
     let relation_used: Vec<bool> = relations.iter().map(|row| !row.is_empty()).collect();
     let dependent_relations = dependent(&relations, structure.states);
-    let relations_independent = (0..relations.len()).filter(|&k| relation_used[k] && !dependent_relations[k]).count();
+    let relations_independent = (0..relations.len())
+        .filter(|&k| relation_used[k] && !dependent_relations[k])
+        .count();
     let observed = Observed::new(structure, evaluation, state_scale, observation_used);
     let mut independent = relations;
-    for (row, _) in independent.iter_mut().zip(&dependent_relations).filter(|&(_, &dependent)| dependent) {
+    for (row, _) in independent
+        .iter_mut()
+        .zip(&dependent_relations)
+        .filter(|&(_, &dependent)| dependent)
+    {
         row.clear();
     }
     let split = Split::new(structure.states, independent, &observed);
@@ -108,10 +119,16 @@ pub fn classify(
     for &(j, _) in split.basis.iter().flatten() {
         observable[j] = false;
     }
-    let in_units = |direction: SparseRow| direction.into_iter().map(|(j, v)| (j, v * state_scale[j])).collect();
+    let in_units = |direction: SparseRow| {
+        direction
+            .into_iter()
+            .map(|(j, v)| (j, v * state_scale[j]))
+            .collect()
+    };
     Classes {
         relations_independent,
-        degrees_of_freedom: (relations_independent + used + unobservable_directions).saturating_sub(structure.states),
+        degrees_of_freedom: (relations_independent + used + unobservable_directions)
+            .saturating_sub(structure.states),
         unobservable_directions,
         redundant: observed.redundant(&split.checked),
         observation_used: observation_used.to_vec(),
@@ -134,9 +151,22 @@ fn relation_rows(
 ) -> Vec<SparseRow> {
     let rows = &structure.relations;
     let mut scaled: Vec<SparseRow> = (0..rows.len())
-        .map(|k| scaled_row(rows, &evaluation.f_values, k, state_scale, NO_GRADIENT * relation_scale[k]))
+        .map(|k| {
+            scaled_row(
+                rows,
+                &evaluation.f_values,
+                k,
+                state_scale,
+                NO_GRADIENT * relation_scale[k],
+            )
+        })
         .collect();
-    for (&k, _) in structure.bounds.iter().zip(active_bounds).filter(|&(_, &active)| !active) {
+    for (&k, _) in structure
+        .bounds
+        .iter()
+        .zip(active_bounds)
+        .filter(|&(_, &active)| !active)
+    {
         scaled[k].clear();
     }
     scaled
@@ -158,169 +188,6 @@ fn dependent(rows: &[SparseRow], states: usize) -> Vec<bool> {
     dependent
 }
 
-/// The observations in use, sorted by how many states they truly depend on.
-struct Observed {
-    /// The state that observation i measures alone, if it does.
-    alone: Vec<Option<usize>>,
-    /// (observation, row) of those that involve several states.
-    several: Vec<(usize, SparseRow)>,
-    /// In use, but without any gradient.
-    constant: Vec<bool>,
-    /// How many observations measure each state alone.
-    count: Vec<usize>,
-}
-
-impl Observed {
-    fn new(structure: &Structure, evaluation: &Evaluation, state_scale: &[f64], used: &[bool]) -> Self {
-        let rows = &structure.observations;
-        let mut observed = Observed {
-            alone: vec![None; rows.len()],
-            several: Vec::new(),
-            constant: vec![false; rows.len()],
-            count: vec![0; structure.states],
-        };
-        for i in (0..rows.len()).filter(|&i| used[i]) {
-            let row = scaled_row(rows, &evaluation.g_values, i, state_scale, NO_OBSERVATION);
-            match row.as_slice() {
-                [] => observed.constant[i] = true,
-                [(j, _)] => {
-                    observed.alone[i] = Some(*j);
-                    observed.count[*j] += 1;
-                }
-                _ => observed.several.push((i, row)),
-            }
-        }
-        observed
-    }
-
-    /// `checked` lies beside the states, then beside `several`.
-    fn redundant(&self, checked: &[bool]) -> Vec<bool> {
-        let mut redundant: Vec<bool> = self
-            .alone
-            .iter()
-            .zip(&self.constant)
-            .map(|(alone, &constant)| constant || alone.is_some_and(|j| self.count[j] > 1 || checked[j]))
-            .collect();
-        let own = &checked[self.count.len()..];
-        for ((i, _), &checked) in self.several.iter().zip(own) {
-            redundant[*i] = checked;
-        }
-        redundant
-    }
-}
-
-/// The rows split into unmeasured states and readings.
-struct Split {
-    /// Null vectors in scaled states, sorted by state.
-    basis: Vec<SparseRow>,
-    free_states: Vec<usize>,
-    /// Beside the states, then the observations of several states: the column
-    /// of this reading survives the projection.
-    checked: Vec<bool>,
-    /// Beside the relations: part of a combination free of unmeasured states.
-    relation_checked: Vec<bool>,
-}
-
-impl Split {
-    fn new(states: usize, relations: Vec<SparseRow>, observed: &Observed) -> Self {
-        let columns = states + observed.several.len();
-        let count = relations.len();
-        let mut rows = relations;
-        for (nth, (_, row)) in observed.several.iter().enumerate() {
-            let mut row = row.clone();
-            row.push((states + nth, 1.0));
-            rows.push(row);
-        }
-        let unmeasured: Vec<bool> = (0..columns).map(|j| j < states && observed.count[j] == 0).collect();
-        let pieces = take_apart(&rows, &unmeasured);
-        let mut split = Split {
-            basis: Vec::new(),
-            free_states: Vec::new(),
-            checked: vec![false; columns],
-            relation_checked: vec![false; count],
-        };
-        let mut directions: Vec<(usize, SparseRow)> = pieces.free.iter().map(|&j| (j, vec![(j, 1.0)])).collect();
-        for block in &pieces.blocks {
-            let qr = PivotedQr::new(block.rows.len(), block.dense_columns(&rows));
-            for (free, vector) in qr.null_vectors() {
-                let entries = block.columns.iter().copied().zip(vector).filter(|&(_, v)| v != 0.0).collect();
-                directions.push((block.columns[free], entries));
-            }
-            if qr.rank < block.rows.len() {
-                split.check(&qr, &block.rows, &rows, &unmeasured);
-            }
-        }
-        let mut work = vec![0.0; columns];
-        for (free, core) in directions {
-            split.free_states.push(free);
-            split.basis.push(extend(core, &pieces.peeled, &rows, &mut work));
-        }
-        split
-    }
-
-    /// Projects the readings' columns of a block, and a unit column for each of
-    /// its relations, onto its left null space.
-    fn check(&mut self, qr: &PivotedQr, numbers: &[usize], rows: &[SparseRow], unmeasured: &[bool]) {
-        let survives = |mut column: Vec<f64>| {
-            let before = length(&column);
-            qr.apply_transpose(&mut column);
-            length(&column[qr.rank..]) > RANK_TOLERANCE * before
-        };
-        let mut cells: Vec<(usize, usize, f64)> = Vec::new();
-        for (at, &i) in numbers.iter().enumerate() {
-            cells.extend(rows[i].iter().filter(|&&(j, _)| !unmeasured[j]).map(|&(j, v)| (j, at, v)));
-            if i < self.relation_checked.len() && !rows[i].is_empty() {
-                let mut unit = vec![0.0; numbers.len()];
-                unit[at] = 1.0;
-                self.relation_checked[i] = survives(unit);
-            }
-        }
-        cells.sort_unstable_by_key(|&(j, at, _)| (j, at));
-        for column in cells.chunk_by(|a, b| a.0 == b.0) {
-            let mut dense = vec![0.0; numbers.len()];
-            for &(_, at, value) in column {
-                dense[at] = value;
-            }
-            if survives(dense) {
-                self.checked[column[0].0] = true;
-            }
-        }
-    }
-}
-
-/// Carries a null vector of the core over to the peeled states: each peeled
-/// row, last first, gives its own state.
-fn extend(core: SparseRow, peeled: &[(usize, usize)], rows: &[SparseRow], work: &mut [f64]) -> SparseRow {
-    let mut touched: Vec<usize> = core.iter().map(|&(j, _)| j).collect();
-    for &(j, value) in &core {
-        work[j] = value;
-    }
-    for &(i, own) in peeled.iter().rev() {
-        let (mut sum, mut size, mut pivot) = (0.0, 0.0, 1.0);
-        for &(j, value) in &rows[i] {
-            if j == own {
-                pivot = value;
-            } else {
-                sum += value * work[j];
-                size += (value * work[j]).abs();
-            }
-        }
-        if sum.abs() > NULL_TOLERANCE * size {
-            work[own] = -sum / pivot;
-            touched.push(own);
-        }
-    }
-    let largest = touched.iter().map(|&j| work[j].abs()).fold(0.0, f64::max);
-    touched.sort_unstable();
-    let vector = touched.iter().map(|&j| (j, work[j] / largest)).collect();
-    touched.iter().for_each(|&j| work[j] = 0.0);
-    vector
-}
-
-fn length(v: &[f64]) -> f64 {
-    v.iter().map(|a| a * a).sum::<f64>().sqrt()
-}
-
 #[cfg(test)]
 mod tests {
     use super::super::Problem;
@@ -329,7 +196,14 @@ mod tests {
 
     fn classes_of(sample: &Sample, evaluation: &Evaluation, active: &[bool]) -> Classes {
         let (states, relations) = (sample.state_scale(), sample.relation_scale());
-        classify(sample.structure(), evaluation, states, relations, active, &sample.used())
+        classify(
+            sample.structure(),
+            evaluation,
+            states,
+            relations,
+            active,
+            &sample.used(),
+        )
     }
 
     fn agree(sample: &Sample, x: &[f64]) {
@@ -347,8 +221,12 @@ mod tests {
         // The basis lies in the dense null space and has its dimension.
         for direction in classes.unobservable_basis() {
             let mut dense = nalgebra::DVector::zeros(x.len());
-            direction.iter().for_each(|&(j, v)| dense[j] = v / sample.state_scale[j]);
-            let null = nalgebra::DMatrix::from_fn(x.len(), oracle.null.ncols(), |i, j| oracle.null[(i, j)] / sample.state_scale[i]);
+            direction
+                .iter()
+                .for_each(|&(j, v)| dense[j] = v / sample.state_scale[j]);
+            let null = nalgebra::DMatrix::from_fn(x.len(), oracle.null.ncols(), |i, j| {
+                oracle.null[(i, j)] / sample.state_scale[i]
+            });
             let left = &dense - &null * (null.transpose() * &dense);
             assert!(left.norm() < 1e-7 * dense.norm());
         }
@@ -372,7 +250,11 @@ mod tests {
             let mut random = Random(1000 + seed);
             let mut sample = random_network(&mut random, 8, 20, 0.5);
             let mut relations = sample.relations.clone();
-            let sum = relations.iter().take(3).flat_map(|relation| relation.0.clone()).collect();
+            let sum = relations
+                .iter()
+                .take(3)
+                .flat_map(|relation| relation.0.clone())
+                .collect();
             relations.push(Polynomial(sum));
             relations.push(relations[0].clone());
             let scale = sample.state_scale.clone();
@@ -384,14 +266,20 @@ mod tests {
             assert_eq!(before.relations_independent, after.relations_independent);
             assert_eq!(before.redundant, after.redundant);
             assert_eq!(before.degrees_of_freedom, after.degrees_of_freedom);
-            let named = after.dependent_relations.iter().filter(|&&dependent| dependent).count();
+            let named = after
+                .dependent_relations
+                .iter()
+                .filter(|&&dependent| dependent)
+                .count();
             assert_eq!(named + after.relations_independent, sample.relations.len());
         }
     }
 
     fn evaluated(sample: &Sample, states: usize) -> Evaluation {
         let mut evaluation = Evaluation::for_structure(sample.structure());
-        sample.evaluate(&vec![1.0; states], &mut evaluation).expect("inside");
+        sample
+            .evaluate(&vec![1.0; states], &mut evaluation)
+            .expect("inside");
         evaluation
     }
 
@@ -403,17 +291,28 @@ mod tests {
             // A second balance of flow times concentration at every node.
             let mut relations = flows.relations.clone();
             for relation in &flows.relations {
-                relations.push(Polynomial(relation.0.iter().map(|(c, j)| (*c, vec![j[0], 14 + j[0]])).collect()));
+                relations.push(Polynomial(
+                    relation
+                        .0
+                        .iter()
+                        .map(|(c, j)| (*c, vec![j[0], 14 + j[0]]))
+                        .collect(),
+                ));
             }
             let mut readings = flows.readings.clone();
             for j in 0..14 {
                 if random.uniform() < 0.5 {
-                    let mut extra = flows.readings.first().cloned().unwrap_or(super::super::testing::Reading {
-                        of: Polynomial::default(),
-                        value: 1.0,
-                        sigma: 1.0,
-                        used: true,
-                    });
+                    let mut extra =
+                        flows
+                            .readings
+                            .first()
+                            .cloned()
+                            .unwrap_or(super::super::testing::Reading {
+                                of: Polynomial::default(),
+                                value: 1.0,
+                                sigma: 1.0,
+                                used: true,
+                            });
                     extra.of = Polynomial::linear(&[(14 + j, 1.0)]);
                     readings.push(extra);
                 }
@@ -427,14 +326,23 @@ mod tests {
     #[test]
     fn a_cycle_of_unmeasured_flows_has_one_unobservable_direction() {
         // Three nodes in a ring; flows 0, 1, 2 go round, 3, 4, 5 leave and are read.
-        let ring: Vec<Polynomial> =
-            (0..3).map(|i| Polynomial::linear(&[(i, 1.0), ((i + 1) % 3, -1.0), (3 + i, 1.0)])).collect();
+        let ring: Vec<Polynomial> = (0..3)
+            .map(|i| Polynomial::linear(&[(i, 1.0), ((i + 1) % 3, -1.0), (3 + i, 1.0)]))
+            .collect();
         let readings = (3..6)
-            .map(|j| super::super::testing::Reading { of: Polynomial::linear(&[(j, 1.0)]), value: 0.0, sigma: 1.0, used: true })
+            .map(|j| super::super::testing::Reading {
+                of: Polynomial::linear(&[(j, 1.0)]),
+                value: 0.0,
+                sigma: 1.0,
+                used: true,
+            })
             .collect();
         let sample = Sample::new(6, ring, readings, Vec::new());
         let classes = classes_of(&sample, &evaluated(&sample, 6), &[]);
-        assert_eq!((classes.unobservable_directions, classes.degrees_of_freedom), (1, 1));
+        assert_eq!(
+            (classes.unobservable_directions, classes.degrees_of_freedom),
+            (1, 1)
+        );
         assert!((0..3).all(|j| !classes.state_observable(j)));
         assert!(classes.redundant.iter().all(|&redundant| redundant));
         // The difference of two flows round the ring is known all the same.

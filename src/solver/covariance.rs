@@ -85,8 +85,15 @@ impl<'a> Covariance<'a> {
         system.factorise(WrongSign::Replace);
         let selected = Selected::of(symbolic, &system.factor);
         let fraction = |place: usize| system.regularisation[place] * selected.diagonal(place);
-        let biased = (0..symbolic.dimension()).any(|place| !(fraction(place) <= BIAS));
-        Covariance { system, evaluation, classes, selected, biased }
+        let biased = (0..symbolic.dimension())
+            .any(|place| fraction(place).is_nan() || fraction(place) > BIAS);
+        Covariance {
+            system,
+            evaluation,
+            classes,
+            selected,
+            biased,
+        }
     }
 
     /// Variance of a state, in its unit squared; infinite where nothing determines it.
@@ -108,7 +115,10 @@ impl<'a> Covariance<'a> {
     /// Covariance of two states, both of them determined.
     pub fn state_covariance(&self, i: usize, j: usize) -> f64 {
         let (a, b) = (self.state_place(i), self.state_place(j));
-        let held = self.selected.entry(self.system.symbolic, a, b).filter(|_| !self.biased);
+        let held = self
+            .selected
+            .entry(self.system.symbolic, a, b)
+            .filter(|_| !self.biased);
         let scaled = held.unwrap_or_else(|| {
             let mut rhs = self.zeros();
             rhs[b] = 1.0;
@@ -123,9 +133,11 @@ impl<'a> Covariance<'a> {
         if !self.classes.combination_observable(gradient) {
             return f64::INFINITY;
         }
-        let scaled: Vec<(usize, f64)> =
-            gradient.iter().map(|&(j, d)| (self.state_place(j), d * self.system.state_scale[j])).collect();
-        self.from_pairs(&scaled).unwrap_or_else(|| {
+        let scaled: Vec<(usize, f64)> = gradient
+            .iter()
+            .map(|&(j, d)| (self.state_place(j), d * self.system.state_scale[j]))
+            .collect();
+        self.within_fill(&scaled).unwrap_or_else(|| {
             let mut rhs = self.zeros();
             scaled.iter().for_each(|&(place, d)| rhs[place] += d);
             let solution = self.refined(&rhs);
@@ -134,7 +146,7 @@ impl<'a> Covariance<'a> {
     }
 
     /// The same from the selected inverse, where that holds all pairs.
-    fn from_pairs(&self, gradient: &[(usize, f64)]) -> Option<f64> {
+    fn within_fill(&self, gradient: &[(usize, f64)]) -> Option<f64> {
         if self.biased {
             return None;
         }
@@ -164,7 +176,9 @@ impl<'a> Covariance<'a> {
             let g = self.evaluation.g_values[range.start] * self.system.state_scale[j];
             1.0 - g * g * self.selected.diagonal(self.state_place(j))
         } else if let Ok(nth) = self.system.symbolic.several.binary_search(&observation) {
-            -self.selected.diagonal(self.system.symbolic.residual_place(nth))
+            -self
+                .selected
+                .diagonal(self.system.symbolic.residual_place(nth))
         } else {
             1.0
         };
@@ -204,7 +218,12 @@ impl<'a> Covariance<'a> {
     ///
     /// A slice may be empty for zeros. Only determined quantities answer
     /// meaningfully.
-    pub fn column(&self, rhs_states: &[f64], rhs_relations: &[f64], rhs_observations: &[f64]) -> Column {
+    pub fn column(
+        &self,
+        rhs_states: &[f64],
+        rhs_relations: &[f64],
+        rhs_observations: &[f64],
+    ) -> Column {
         let symbolic = self.system.symbolic;
         let scale = self.system.state_scale;
         let mut rhs = self.zeros();
@@ -222,23 +241,33 @@ impl<'a> Covariance<'a> {
                 rhs[symbolic.residual_place(nth)] = -change;
                 nth += 1;
             } else if let [j] = rows.index[range.clone()] {
-                rhs[self.state_place(j)] += change * self.evaluation.g_values[range.start] * scale[j];
+                rhs[self.state_place(j)] +=
+                    change * self.evaluation.g_values[range.start] * scale[j];
             }
         }
         let solution = self.refined(&rhs);
-        let states: Vec<f64> = (0..symbolic.states).map(|j| solution[self.state_place(j)] * scale[j]).collect();
+        let states: Vec<f64> = (0..symbolic.states)
+            .map(|j| solution[self.state_place(j)] * scale[j])
+            .collect();
         let multipliers = (0..symbolic.relations)
             .map(|k| solution[symbolic.relation_place(k)] * self.system.row_scale[k])
             .collect();
         let residuals = (0..rows.len())
             .map(|i| {
                 let range = rows.range(i);
-                let moved: f64 =
-                    rows.index[range.clone()].iter().zip(&self.evaluation.g_values[range]).map(|(&j, g)| g * states[j]).sum();
+                let moved: f64 = rows.index[range.clone()]
+                    .iter()
+                    .zip(&self.evaluation.g_values[range])
+                    .map(|(&j, g)| g * states[j])
+                    .sum();
                 rhs_observations.get(i).copied().unwrap_or(0.0) - moved
             })
             .collect();
-        Column { states, multipliers, residuals }
+        Column {
+            states,
+            multipliers,
+            residuals,
+        }
     }
 
     fn state_place(&self, j: usize) -> usize {
@@ -285,29 +314,56 @@ mod tests {
         let mut evaluation = Evaluation::for_structure(structure);
         sample.evaluate(x, &mut evaluation).expect("inside");
         let (states, relations) = (sample.state_scale(), sample.relation_scale());
-        let classes = classify(structure, &evaluation, states, relations, &[], &sample.used());
+        let classes = classify(
+            structure,
+            &evaluation,
+            states,
+            relations,
+            &[],
+            &sample.used(),
+        );
         let symbolic = Symbolic::new(structure);
-        let covariance = Covariance::new(&symbolic, structure, &evaluation, states, relations, &classes);
+        let covariance = Covariance::new(
+            &symbolic,
+            structure,
+            &evaluation,
+            states,
+            relations,
+            &classes,
+        );
         let oracle = Oracle::at(sample, &evaluation, &[]);
         for (i, &expected) in oracle.redundancy.iter().enumerate() {
             let redundancy = covariance.redundancy(i);
-            assert!((redundancy - expected).abs() < 1e-5, "redundancy {redundancy} {expected}");
+            assert!(
+                (redundancy - expected).abs() < 1e-5,
+                "redundancy {redundancy} {expected}"
+            );
         }
         for j in (0..x.len()).filter(|&j| classes.state_observable(j)) {
             let variance = covariance.state_variance(j);
             let unit = sample.state_scale[j].powi(2);
-            assert!(close(variance / unit, oracle.covariance[(j, j)] / unit, BIAS), "{variance} {}", oracle.covariance[(j, j)]);
+            assert!(
+                close(variance / unit, oracle.covariance[(j, j)] / unit, BIAS),
+                "{variance} {}",
+                oracle.covariance[(j, j)]
+            );
             for i in (0..j).filter(|&i| classes.state_observable(i)) {
                 let size = (oracle.covariance[(i, i)] * oracle.covariance[(j, j)]).sqrt();
                 let off = covariance.state_covariance(i, j) - oracle.covariance[(i, j)];
-                assert!(off.abs() <= BIAS * size + 1e-5 * sample.state_scale[i] * sample.state_scale[j], "{off} {size}");
+                assert!(
+                    off.abs() <= BIAS * size + 1e-5 * sample.state_scale[i] * sample.state_scale[j],
+                    "{off} {size}"
+                );
             }
         }
         if classes.relations_independent == sample.relations.len() {
             for k in 0..sample.relations.len() {
                 let expected = oracle.multiplier_covariance[(k, k)];
                 let variance = covariance.multiplier_variance(k);
-                assert!(close(variance, expected, BIAS), "multiplier {variance} {expected}");
+                assert!(
+                    close(variance, expected, BIAS),
+                    "multiplier {variance} {expected}"
+                );
             }
         }
     }
@@ -331,7 +387,13 @@ mod tests {
             let flows = random_network(&mut random, 6, 14, 0.6);
             let mut relations = flows.relations.clone();
             for relation in &flows.relations {
-                relations.push(Polynomial(relation.0.iter().map(|(c, j)| (*c, vec![j[0], 14 + j[0]])).collect()));
+                relations.push(Polynomial(
+                    relation
+                        .0
+                        .iter()
+                        .map(|(c, j)| (*c, vec![j[0], 14 + j[0]]))
+                        .collect(),
+                ));
             }
             let mut readings = flows.readings.clone();
             for (i, reading) in flows.readings.iter().enumerate() {
@@ -350,8 +412,12 @@ mod tests {
         // x1 = w x0 with a tiny w: the reading of x1 says little about x0.
         for weight in [1e-2, 1e-4, 1e-6] {
             let relation = Polynomial::linear(&[(1, 1.0), (0, -weight), (2, -1.0)]);
-            let readings = [1, 2]
-                .map(|j| super::super::testing::Reading { of: Polynomial::linear(&[(j, 1.0)]), value: 1.0, sigma: 1.0, used: true });
+            let readings = [1, 2].map(|j| super::super::testing::Reading {
+                of: Polynomial::linear(&[(j, 1.0)]),
+                value: 1.0,
+                sigma: 1.0,
+                used: true,
+            });
             let sample = Sample::new(3, vec![relation], readings.to_vec(), Vec::new());
             agree(&sample, &[1.0; 3]);
         }
@@ -359,20 +425,49 @@ mod tests {
 
     #[test]
     fn what_nothing_determines_has_infinite_variance_and_harms_nothing() {
-        let relations = vec![Polynomial::linear(&[(0, 1.0), (1, -1.0)]), Polynomial::linear(&[(2, 1.0), (3, -1.0)])];
-        let readings = [0, 1]
-            .map(|j| super::super::testing::Reading { of: Polynomial::linear(&[(j, 1.0)]), value: 1.0, sigma: 1.0, used: true });
+        let relations = vec![
+            Polynomial::linear(&[(0, 1.0), (1, -1.0)]),
+            Polynomial::linear(&[(2, 1.0), (3, -1.0)]),
+        ];
+        let readings = [0, 1].map(|j| super::super::testing::Reading {
+            of: Polynomial::linear(&[(j, 1.0)]),
+            value: 1.0,
+            sigma: 1.0,
+            used: true,
+        });
         let sample = Sample::new(5, relations, readings.to_vec(), Vec::new());
         let outcome = sample.solve(&[0.0, 0.0, 7.0, 9.0, 3.0]);
         let (states, relations) = (sample.state_scale(), sample.relation_scale());
-        let classes = classify(sample.structure(), &outcome.evaluation, states, relations, &[], &sample.used());
+        let classes = classify(
+            sample.structure(),
+            &outcome.evaluation,
+            states,
+            relations,
+            &[],
+            &sample.used(),
+        );
         let symbolic = Symbolic::new(sample.structure());
-        let covariance =
-            Covariance::new(&symbolic, sample.structure(), &outcome.evaluation, states, relations, &classes);
+        let covariance = Covariance::new(
+            &symbolic,
+            sample.structure(),
+            &outcome.evaluation,
+            states,
+            relations,
+            &classes,
+        );
         assert!((covariance.state_variance(0) - 0.5).abs() < 1e-9);
-        assert!([2, 3, 4].iter().all(|&j| covariance.state_variance(j).is_infinite()));
+        assert!(
+            [2, 3, 4]
+                .iter()
+                .all(|&j| covariance.state_variance(j).is_infinite())
+        );
         assert!(covariance.combination_variance(&[(2, 1.0)]).is_infinite());
-        assert!(covariance.combination_variance(&[(2, 1.0), (3, -1.0)]).abs() < 1e-6);
+        assert!(
+            covariance
+                .combination_variance(&[(2, 1.0), (3, -1.0)])
+                .abs()
+                < 1e-6
+        );
         assert_eq!(outcome.x[4], 3.0);
         assert!((outcome.x[2] - 8.0).abs() < 1e-6 && (outcome.x[3] - 8.0).abs() < 1e-6);
     }

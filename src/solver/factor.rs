@@ -1,37 +1,38 @@
-//! Numeric LDL' factorisation of a symmetric quasi-definite matrix, without
-//! pivoting (Vanderbei, SIAM J. Optim. 5, 1995, 100), and solves with it.
+//! Numeric LDL' factorisation of a symmetric quasi-definite matrix in 2x2
+//! blocks, without pivoting (Vanderbei, SIAM J. Optim. 5, 1995, 100), and
+//! solves with it.
 //!
-//! A quasi-definite matrix has a factor with a diagonal D in any elimination
-//! order, with as many positive pivots as states. Regularisation makes the
-//! augmented matrix so. A state and its partner are eliminated as one block
+//! A quasi-definite matrix has such a factor in any elimination order. Every
+//! diagonal block pairs a state with a relation,
 //!
 //! ```text
-//! B = | h  e |,   h > 0 > d,   |det B| >= e^2,
+//! B = | h  e |,   h >= 0 >= d,   |det B| >= e^2,
 //!     | e  d |
 //! ```
 //!
-//! so that the tiny pivots h and d of an unmeasured state and of a relation do
-//! not amplify rounding. Where a pivot comes out next to nothing all the same
-//! (a block with a small e, or rounding), it is moved away from zero by
-//! [`LEAST_PIVOT`]: entries of 1e8 in what follows still leave half of the
-//! digits. The factor is a preconditioner: refinement against the true matrix
-//! puts that right.
+//! so that the tiny h and d of an unmeasured state and of a relation do not
+//! amplify rounding. Where a block comes out next to singular all the same (a
+//! small e, or rounding), h and d are moved away from zero by [`LEAST_PIVOT`]:
+//! entries of 1e8 in what follows still leave half of the digits. The factor is
+//! a preconditioner: refinement against the true matrix puts that right.
 
 use super::symbolic::Symbolic;
 
 /// Least magnitude of a pivot, in the scaled matrix.
 const LEAST_PIVOT: f64 = 1e-8;
 
+/// A 2x2 block by rows.
+pub(super) type Block2 = [f64; 4];
+
 /// A factor whose storage is kept from one factorisation to the next.
 #[derive(Clone, Debug)]
 pub(super) struct Factor {
-    /// Entries of L beside `FactorPattern::column_row`; zero within a pair.
-    pub(super) lower: Vec<f64>,
-    /// Diagonal of D^-1.
-    pub(super) inverse: Vec<f64>,
-    /// Entry of D^-1 between the first of a pair and the second, at the first.
-    pub(super) inverse_between: Vec<f64>,
-    row: Vec<f64>,
+    /// Blocks of L beside `FactorPattern::column_row`.
+    pub(super) lower: Vec<Block2>,
+    /// Diagonal blocks of D^-1 as h, e, d.
+    pub(super) inverse: Vec<[f64; 3]>,
+    /// Block column of the upper triangle, spread over all rows.
+    column: Vec<Block2>,
     next: Vec<u32>,
 }
 
@@ -46,118 +47,101 @@ pub(super) enum WrongSign {
 
 impl Factor {
     pub(super) fn new(symbolic: &Symbolic) -> Self {
-        let n = symbolic.dimension();
+        let n = symbolic.blocks();
         Factor {
-            lower: vec![0.0; symbolic.fill()],
-            inverse: vec![0.0; n],
-            inverse_between: vec![0.0; n],
-            row: vec![0.0; n],
+            lower: vec![[0.0; 4]; symbolic.factor.column_row.len()],
+            inverse: vec![[0.0; 3]; n],
+            column: vec![[0.0; 4]; n],
             next: vec![0; n],
         }
     }
 
-    /// Factors the matrix with the given strict upper triangle and diagonal.
+    /// Factors the matrix with the given values (see `Pattern`) and diagonal.
     ///
-    /// Returns whether there are as many positive pivots as states, as there are at a point
-    /// where the problem is convex on the null space of the relations.
+    /// Returns whether there are as many positive eigenvalues as there are at a
+    /// point where the problem is convex on the null space of the relations:
+    /// one per block.
     pub(super) fn factorise(
         &mut self,
         symbolic: &Symbolic,
-        upper: &[f64],
+        values: &[f64],
         diagonal: &[f64],
         wrong_sign: WrongSign,
     ) -> bool {
         let matrix = &symbolic.matrix;
-        let n = diagonal.len();
-        self.next.copy_from_slice(&symbolic.factor.column_start[..n]);
+        let n = symbolic.blocks();
+        let (blocks, _) = values.as_chunks::<4>();
+        let between = &values[4 * matrix.row.len()..];
+        self.next
+            .copy_from_slice(&symbolic.factor.column_start[..n]);
         let mut positive = 0;
         for k in 0..n {
             let range = matrix.start[k] as usize..matrix.start[k + 1] as usize;
-            for (&i, &value) in matrix.row[range.clone()].iter().zip(&upper[range]) {
-                self.row[i as usize] = value;
+            for (&i, &block) in matrix.row[range.clone()].iter().zip(&blocks[range]) {
+                self.column[i as usize] = block;
             }
-            let sign = if symbolic.positive[k] { 1.0 } else { -1.0 };
-            let mut pivot = diagonal[k] - self.eliminate(symbolic, k);
-            if wrong_sign == WrongSign::Replace && !(pivot * sign > 0.0) {
-                pivot = 0.0;
-            }
-            let second = k > 0 && symbolic.leads_pair[k - 1];
-            if second {
-                positive += self.invert_pair(k - 1, pivot);
-            } else if symbolic.leads_pair[k] {
-                // Kept as it is until the partner completes the block.
-                self.inverse[k] = pivot;
-            } else {
-                if !(pivot.abs() >= LEAST_PIVOT) {
-                    pivot = sign * LEAST_PIVOT;
-                }
-                positive += usize::from(pivot > 0.0);
-                self.inverse[k] = pivot.recip();
-            }
+            let taken = self.eliminate(symbolic, k);
+            let pivot = [
+                diagonal[2 * k] - taken[0],
+                between[k] - taken[1],
+                diagonal[2 * k + 1] - taken[2],
+            ];
+            positive += self.invert(k, pivot, wrong_sign);
         }
-        positive == symbolic.states
+        positive == n
     }
 
-    /// Computes row k of L from the spread row; returns what it takes from the pivot.
-    fn eliminate(&mut self, symbolic: &Symbolic, k: usize) -> f64 {
+    /// Computes row k of L from the spread column; returns what it takes from the diagonal block.
+    fn eliminate(&mut self, symbolic: &Symbolic, k: usize) -> [f64; 3] {
         let pattern = &symbolic.factor;
-        let mut taken = 0.0;
-        let columns = &pattern.row_column[pattern.row_start[k] as usize..pattern.row_start[k + 1] as usize];
-        let mut at = 0;
-        while at < columns.len() {
-            let j = columns[at] as usize;
-            at += 1;
+        let mut taken = [0.0; 3];
+        for &j in
+            &pattern.row_column[pattern.row_start[k] as usize..pattern.row_start[k + 1] as usize]
+        {
+            let j = j as usize;
             let (first, last) = (pattern.column_start[j] as usize, self.next[j] as usize);
-            if !symbolic.leads_pair[j] {
-                let value = std::mem::take(&mut self.row[j]);
-                for (&i, &l) in pattern.column_row[first..last].iter().zip(&self.lower[first..last]) {
-                    self.row[i as usize] -= l * value;
-                }
-                let scaled = value * self.inverse[j];
-                self.lower[last] = scaled;
-                self.next[j] += 1;
-                taken += scaled * value;
-                continue;
+            let [y00, y01, y10, y11] = std::mem::take(&mut self.column[j]);
+            for (&i, l) in pattern.column_row[first..last]
+                .iter()
+                .zip(&self.lower[first..last])
+            {
+                let target = &mut self.column[i as usize];
+                target[0] -= l[0] * y00 + l[1] * y10;
+                target[1] -= l[0] * y01 + l[1] * y11;
+                target[2] -= l[2] * y00 + l[3] * y10;
+                target[3] -= l[2] * y01 + l[3] * y11;
             }
+            let [h, e, d] = self.inverse[j];
+            let (t00, t01) = (h * y00 + e * y10, h * y01 + e * y11);
+            let (t10, t11) = (e * y00 + d * y10, e * y01 + d * y11);
+            self.lower[last] = [t00, t10, t01, t11];
             self.next[j] += 1;
-            if j + 1 == k {
-                // The partner itself: what is left of the row is the block's off-diagonal entry.
-                self.lower[last] = 0.0;
-                self.inverse_between[j] = std::mem::take(&mut self.row[j]);
-                continue;
-            }
-            at += 1;
-            let (a, b) = (std::mem::take(&mut self.row[j]), std::mem::take(&mut self.row[j + 1]));
-            let (own_first, own_last) = (pattern.column_start[j + 1] as usize, self.next[j + 1] as usize);
-            let rows = pattern.column_row[own_first..own_last].iter();
-            let lower = self.lower[first + 1..last].iter().zip(&self.lower[own_first..own_last]);
-            for (&i, (&la, &lb)) in rows.zip(lower) {
-                self.row[i as usize] -= la * a + lb * b;
-            }
-            let scaled_a = self.inverse[j] * a + self.inverse_between[j] * b;
-            let scaled_b = self.inverse_between[j] * a + self.inverse[j + 1] * b;
-            self.lower[last] = scaled_a;
-            self.lower[own_last] = scaled_b;
-            self.next[j + 1] += 1;
-            taken += scaled_a * a + scaled_b * b;
+            taken[0] += t00 * y00 + t10 * y10;
+            taken[1] += t00 * y01 + t10 * y11;
+            taken[2] += t01 * y01 + t11 * y11;
         }
         taken
     }
 
-    /// Inverts the block of the pair that starts at j; returns its positive eigenvalues.
-    fn invert_pair(&mut self, j: usize, mut d: f64) -> usize {
-        let (mut h, e) = (self.inverse[j], self.inverse_between[j]);
-        let size = (h * d - e * e).abs();
-        if !(LEAST_PIVOT * h.abs() <= size) {
-            d -= LEAST_PIVOT;
+    /// Inverts the diagonal block k; returns the number of its positive eigenvalues.
+    fn invert(&mut self, k: usize, [mut h, e, mut d]: [f64; 3], wrong_sign: WrongSign) -> usize {
+        if wrong_sign == WrongSign::Replace {
+            // Written so that not-a-number ends up as zero too.
+            h = if h > 0.0 { h } else { 0.0 };
+            d = if d < 0.0 { d } else { 0.0 };
         }
-        if !(LEAST_PIVOT * d.abs() <= size) {
-            h += LEAST_PIVOT;
+        let singular = |h: f64, d: f64, pivot: f64| {
+            let determinant = (h * d - e * e).abs();
+            determinant < LEAST_PIVOT * pivot.abs().max(LEAST_PIVOT)
+        };
+        if singular(h, d, h) {
+            d += if d > 0.0 { LEAST_PIVOT } else { -LEAST_PIVOT };
+        }
+        if singular(h, d, d) {
+            h += if h < 0.0 { -LEAST_PIVOT } else { LEAST_PIVOT };
         }
         let determinant = h * d - e * e;
-        self.inverse[j] = d / determinant;
-        self.inverse[j + 1] = h / determinant;
-        self.inverse_between[j] = -e / determinant;
+        self.inverse[k] = [d / determinant, -e / determinant, h / determinant];
         match determinant < 0.0 {
             true => 1,
             false if h > 0.0 => 2,
@@ -167,64 +151,45 @@ impl Factor {
 
     /// Solves in place, in the elimination order.
     pub(super) fn solve(&self, symbolic: &Symbolic, x: &mut [f64]) {
-        let n = x.len();
-        let mut j = 0;
-        while j < n {
-            if symbolic.leads_pair[j] {
-                let (a, b) = (x[j], x[j + 1]);
-                if a != 0.0 || b != 0.0 {
-                    let (rows, lower_a, lower_b) = self.pair(symbolic, j);
-                    for (&i, (&la, &lb)) in rows.iter().zip(lower_a.iter().zip(lower_b)) {
-                        x[i as usize] -= la * a + lb * b;
-                    }
-                }
-                x[j] = self.inverse[j] * a + self.inverse_between[j] * b;
-                x[j + 1] = self.inverse_between[j] * a + self.inverse[j + 1] * b;
-                j += 2;
+        let pattern = &symbolic.factor;
+        let (x, _) = x.as_chunks_mut::<2>();
+        for (j, [h, e, d]) in self.inverse.iter().enumerate() {
+            let [a, b] = x[j];
+            if a == 0.0 && b == 0.0 {
                 continue;
             }
-            let value = x[j];
-            if value != 0.0 {
-                let (rows, lower) = self.single(symbolic, j);
-                for (&i, &l) in rows.iter().zip(lower) {
-                    x[i as usize] -= l * value;
-                }
+            let range = pattern.column(j);
+            for (&i, l) in pattern.column_row[range.clone()]
+                .iter()
+                .zip(&self.lower[range])
+            {
+                let target = &mut x[i as usize];
+                target[0] -= l[0] * a + l[1] * b;
+                target[1] -= l[2] * a + l[3] * b;
             }
-            x[j] = value * self.inverse[j];
-            j += 1;
+            x[j] = [h * a + e * b, e * a + d * b];
         }
-        while j > 0 {
-            j -= 1;
-            if j > 0 && symbolic.leads_pair[j - 1] {
-                j -= 1;
-                let (rows, lower_a, lower_b) = self.pair(symbolic, j);
-                let (mut a, mut b) = (x[j], x[j + 1]);
-                for (&i, (&la, &lb)) in rows.iter().zip(lower_a.iter().zip(lower_b)) {
-                    let value = x[i as usize];
-                    a -= la * value;
-                    b -= lb * value;
-                }
-                (x[j], x[j + 1]) = (a, b);
-                continue;
+        for j in (0..self.inverse.len()).rev() {
+            let range = pattern.column(j);
+            let [mut a, mut b] = x[j];
+            for (&i, l) in pattern.column_row[range.clone()]
+                .iter()
+                .zip(&self.lower[range])
+            {
+                let [c, d] = x[i as usize];
+                a -= l[0] * c + l[2] * d;
+                b -= l[1] * c + l[3] * d;
             }
-            let (rows, lower) = self.single(symbolic, j);
-            let mut value = x[j];
-            for (&i, &l) in rows.iter().zip(lower) {
-                value -= l * x[i as usize];
-            }
-            x[j] = value;
+            x[j] = [a, b];
         }
     }
 
-    /// Rows and entries of column j.
-    pub(super) fn single<'s>(&self, symbolic: &'s Symbolic, j: usize) -> (&'s [u32], &[f64]) {
+    /// Rows and blocks of column j of L.
+    pub(super) fn column<'s>(&self, symbolic: &'s Symbolic, j: usize) -> (&'s [u32], &[Block2]) {
         let range = symbolic.factor.column(j);
-        (&symbolic.factor.column_row[range.clone()], &self.lower[range])
-    }
-
-    /// Rows below a pair, and the entries of its two columns there.
-    pub(super) fn pair<'s>(&self, symbolic: &'s Symbolic, j: usize) -> (&'s [u32], &[f64], &[f64]) {
-        let (first, second) = (symbolic.factor.column(j), symbolic.factor.column(j + 1));
-        (&symbolic.factor.column_row[second.clone()], &self.lower[first.start + 1..first.end], &self.lower[second])
+        (
+            &symbolic.factor.column_row[range.clone()],
+            &self.lower[range],
+        )
     }
 }

@@ -55,7 +55,11 @@ mod tests {
     use super::*;
 
     fn merit(violation: f64, objective: f64) -> Merit {
-        Merit { violation, objective, feasible: violation < 1e-10 }
+        Merit {
+            violation,
+            objective,
+            feasible: violation < 1e-10,
+        }
     }
 
     #[test]

@@ -15,12 +15,13 @@
 //! shift of the diagonal makes it so. Where no step helps, a few steps restore
 //! the relations alone.
 
-use super::filter::{Filter, Merit};
 use super::factor::WrongSign;
+use super::filter::{Filter, Merit};
 use super::outcome::{Hold, Options, Reason, Status};
 use super::problem::{Evaluation, Outside, Problem};
+use super::search::Search;
 use super::symbolic::Symbolic;
-use super::system::{Block, System, norm};
+use super::system::{Block, System};
 
 /// A step with an old factor must be this much shorter than the one before.
 const CONTRACTION: f64 = 0.2;
@@ -29,16 +30,12 @@ const SLOW: f64 = 0.6;
 /// So many of them in a row do.
 const SLOW_STEPS: usize = 3;
 /// Residual of the linear system that a fresh step is refined to.
-const LINEAR_TOLERANCE: f64 = 1e-3;
+pub(super) const LINEAR_TOLERANCE: f64 = 1e-3;
 /// The same once second derivatives are in.
 const LINEAR_TOLERANCE_CURVED: f64 = 1e-6;
 /// A gradient of the Lagrangian below this (per sigma) is rounding: where the
 /// steps no longer shrink it is as good as zero.
 const STATIONARY: f64 = 1e-9;
-/// Halvings of a step before it is given up.
-const HALVINGS: usize = 14;
-/// Steps that restore the relations alone.
-const RESTORATION_STEPS: usize = 30;
 /// Second derivatives that make the matrix indefinite are taken in part, each
 /// time this fraction of the last, and then not at all.
 const CURVATURE_FRACTIONS: [f64; 3] = [1.0, 0.5, 0.2];
@@ -47,9 +44,9 @@ const LOCAL: f64 = 1.0;
 
 /// Where a run stands; the point, its evaluation and its multipliers belong together.
 pub(super) struct Run<'a, P: Problem + ?Sized> {
-    problem: &'a P,
-    options: &'a Options,
-    system: System<'a>,
+    pub(super) problem: &'a P,
+    pub(super) options: &'a Options,
+    pub(super) system: System<'a>,
     pub(super) x: Vec<f64>,
     pub(super) evaluation: Evaluation,
     pub(super) multipliers: Vec<f64>,
@@ -57,27 +54,27 @@ pub(super) struct Run<'a, P: Problem + ?Sized> {
     pub(super) in_use: Vec<bool>,
     pub(super) iterations: usize,
     pub(super) factorisations: usize,
-    filter: Filter,
-    trial: Evaluation,
-    rhs: Vec<f64>,
-    direction: Vec<f64>,
-    step: Vec<f64>,
+    pub(super) filter: Filter,
+    pub(super) trial: Evaluation,
+    pub(super) rhs: Vec<f64>,
+    pub(super) direction: Vec<f64>,
+    pub(super) step: Vec<f64>,
+    /// How good the point is, with the row scales of the last factorisation.
+    pub(super) here: Merit,
     /// Largest scaled change of a state in the last full step.
-    last_size: Option<f64>,
-    second_order: bool,
-    slow_steps: usize,
-}
-
-/// What a search along a step found.
-enum Search {
-    Full,
-    Shortened,
-    Failed(Option<Outside>),
+    pub(super) last_size: Option<f64>,
+    pub(super) second_order: bool,
+    pub(super) slow_steps: usize,
 }
 
 impl<'a, P: Problem + ?Sized> Run<'a, P> {
     /// Evaluates the start.
-    pub(super) fn new(problem: &'a P, symbolic: &'a Symbolic, start: &[f64], options: &'a Options) -> (Self, Result<(), Outside>) {
+    pub(super) fn new(
+        problem: &'a P,
+        symbolic: &'a Symbolic,
+        start: &[f64],
+        options: &'a Options,
+    ) -> (Self, Result<(), Outside>) {
         let structure = problem.structure();
         let mut in_use = vec![true; structure.relations.len()];
         for &k in &structure.bounds {
@@ -86,7 +83,12 @@ impl<'a, P: Problem + ?Sized> Run<'a, P> {
         let mut run = Run {
             problem,
             options,
-            system: System::new(symbolic, structure, problem.state_scale(), problem.relation_scale()),
+            system: System::new(
+                symbolic,
+                structure,
+                problem.state_scale(),
+                problem.relation_scale(),
+            ),
             x: start.to_vec(),
             evaluation: Evaluation::for_structure(structure),
             multipliers: vec![0.0; structure.relations.len()],
@@ -98,6 +100,11 @@ impl<'a, P: Problem + ?Sized> Run<'a, P> {
             rhs: vec![0.0; symbolic.dimension()],
             direction: vec![0.0; symbolic.dimension()],
             step: vec![0.0; structure.states],
+            here: Merit {
+                violation: f64::INFINITY,
+                objective: f64::INFINITY,
+                feasible: false,
+            },
             last_size: None,
             second_order: false,
             slow_steps: 0,
@@ -124,7 +131,11 @@ impl<'a, P: Problem + ?Sized> Run<'a, P> {
     /// One step; true when it was the last one needed.
     fn iterate(&mut self) -> Result<bool, Reason> {
         self.iterations += 1;
-        let hold = self.options.hold.as_ref().filter(|hold| self.iterations <= hold.steps);
+        let hold = self
+            .options
+            .hold
+            .as_ref()
+            .filter(|hold| self.iterations <= hold.steps);
         let mut fresh = false;
         let mut size = f64::INFINITY;
         if let (Some(before), None) = (self.last_size, hold) {
@@ -145,13 +156,16 @@ impl<'a, P: Problem + ?Sized> Run<'a, P> {
         }
         self.watch_contraction(size, fresh, hold.is_some());
         let limited = self.scale_and_limit();
-        let shrinks = self.last_size.is_some_and(|before| size <= 0.5 * before) && size < LOCAL && !limited;
-        self.remember_here();
+        let shrinks =
+            self.last_size.is_some_and(|before| size <= 0.5 * before) && size < LOCAL && !limited;
+        if fresh {
+            self.here = self.merit(&self.evaluation);
+        }
+        self.filter.remember(self.here);
         match self.search(shrinks) {
             Search::Full if !limited && hold.is_none() => {
                 self.last_size = Some(size);
-                let merit = self.merit(&self.evaluation);
-                if size <= self.options.tolerance_step && merit.feasible {
+                if size <= self.options.tolerance_step && self.here.feasible {
                     return Ok(true);
                 }
                 if size <= 1e-3 * self.options.tolerance_step {
@@ -166,9 +180,12 @@ impl<'a, P: Problem + ?Sized> Run<'a, P> {
     }
 
     fn solve_with_old_factor(&mut self) {
-        self.system.right_hand_side(&self.evaluation, &self.multipliers, &mut self.rhs);
+        self.system
+            .right_hand_side(&self.evaluation, &self.multipliers, &mut self.rhs);
         self.direction.copy_from_slice(&self.rhs);
-        self.system.factor.solve(self.system.symbolic, &mut self.direction);
+        self.system
+            .factor
+            .solve(self.system.symbolic, &mut self.direction);
     }
 
     fn solve_afresh(&mut self, hold: Option<&Hold>) {
@@ -178,24 +195,33 @@ impl<'a, P: Problem + ?Sized> Run<'a, P> {
             self.system.factorise(WrongSign::Replace);
             self.factorisations += 1;
         }
-        self.system.right_hand_side(&self.evaluation, &self.multipliers, &mut self.rhs);
-        let tolerance = if self.second_order { LINEAR_TOLERANCE_CURVED } else { LINEAR_TOLERANCE };
+        self.system
+            .right_hand_side(&self.evaluation, &self.multipliers, &mut self.rhs);
+        let tolerance = if self.second_order {
+            LINEAR_TOLERANCE_CURVED
+        } else {
+            LINEAR_TOLERANCE
+        };
         self.system.solve(&self.rhs, &mut self.direction, tolerance);
     }
 
     /// Factors with second derivatives, shifted until the inertia is right.
     fn factorise_curved(&mut self) -> bool {
         let mut entries = Vec::new();
-        if !self.problem.curvature(&self.x, &self.multipliers, &mut entries) {
+        if !self
+            .problem
+            .curvature(&self.x, &self.multipliers, &mut entries)
+        {
             self.second_order = false;
             return false;
         }
         for fraction in CURVATURE_FRACTIONS {
             entries.iter_mut().for_each(|entry| entry.2 *= fraction);
-            self.system.assemble(&self.evaluation, &self.in_use, Block::Curved(&entries));
+            self.system
+                .assemble(&self.evaluation, &self.in_use, Block::Curved(&entries));
             self.factorisations += 1;
             let w = self.system.factorise(WrongSign::Keep);
-                if w {
+            if w {
                 return true;
             }
         }
@@ -207,13 +233,17 @@ impl<'a, P: Problem + ?Sized> Run<'a, P> {
         let place = &self.system.symbolic.place[..self.system.symbolic.states];
         place.iter().fold(0.0, |largest: f64, &at| {
             let change = self.direction[at as usize].abs();
-            if change.is_nan() { f64::NAN } else { largest.max(change) }
+            if change.is_nan() {
+                f64::NAN
+            } else {
+                largest.max(change)
+            }
         })
     }
 
     /// True where the relations hold and the gradient of the Lagrangian is down to rounding.
     fn is_stationary(&self) -> bool {
-        self.merit(&self.evaluation).feasible && self.rhs.iter().all(|value| value.abs() <= STATIONARY)
+        self.here.feasible && self.rhs.iter().all(|value| value.abs() <= STATIONARY)
     }
 
     fn watch_contraction(&mut self, size: f64, fresh: bool, held: bool) {
@@ -229,85 +259,48 @@ impl<'a, P: Problem + ?Sized> Run<'a, P> {
     }
 
     /// Turns the direction into a step in the states' own units; true where the problem bent it.
-    fn scale_and_limit(&mut self) -> bool {
+    pub(super) fn scale_and_limit(&mut self) -> bool {
         for (j, step) in self.step.iter_mut().enumerate() {
-            *step = self.direction[self.system.symbolic.place[j] as usize] * self.system.state_scale[j];
+            *step =
+                self.direction[self.system.symbolic.place[j] as usize] * self.system.state_scale[j];
         }
         let before = self.step.clone();
         self.problem.limit(&self.x, &mut self.step);
         before != self.step
     }
 
-    fn merit(&self, at: &Evaluation) -> Merit {
+    pub(super) fn merit(&self, at: &Evaluation) -> Merit {
         let mut violation = 0.0;
         let mut feasible = true;
         let tolerance = self.options.tolerance_relation;
-        for (k, f) in at.f.iter().enumerate().filter(|&(k, _)| self.in_use[k]) {
-            violation += (f * self.system.row_scale[k]).abs();
-            feasible &= f.abs() <= tolerance * self.problem.relation_scale()[k];
-        }
-        Merit { violation, objective: 0.5 * at.r.iter().map(|r| r * r).sum::<f64>(), feasible }
-    }
-
-    fn remember_here(&mut self) {
-        let here = self.merit(&self.evaluation);
-        self.filter.remember(here);
-    }
-
-    /// Tries the step, corrected and then shorter; moves to the first acceptable point.
-    fn search(&mut self, shrinks: bool) -> Search {
-        let mut outside = None;
-        let mut length = 1.0;
-        for nth in 0..HALVINGS {
-            let trial: Vec<f64> = self.x.iter().zip(&self.step).map(|(x, step)| x + length * step).collect();
-            match self.problem.evaluate(&trial, &mut self.trial) {
-                Ok(()) => {
-                    let merit = self.merit(&self.trial);
-                    let finite = merit.violation.is_finite() && merit.objective.is_finite();
-                    if self.filter.accepts(merit) || (nth == 0 && shrinks && finite) {
-                        self.move_to(trial, length);
-                        return if nth == 0 { Search::Full } else { Search::Shortened };
-                    }
-                    if nth == 0 && finite && self.corrected() {
-                        return Search::Shortened;
-                    }
-                }
-                Err(at) => outside = Some(at),
+        let scales = self
+            .problem
+            .relation_scale()
+            .iter()
+            .zip(&self.system.row_scale);
+        for ((f, &used), (scale, row_scale)) in at.f.iter().zip(&self.in_use).zip(scales) {
+            if used {
+                violation += (f * row_scale).abs();
+                feasible &= f.abs() <= tolerance * scale;
             }
-            length *= 0.5;
         }
-        Search::Failed(outside)
+        Merit {
+            violation,
+            objective: 0.5 * at.r.iter().map(|r| r * r).sum::<f64>(),
+            feasible,
+        }
     }
 
-    /// Second-order correction: the relations' values at the trial point join the right-hand side.
-    fn corrected(&mut self) -> bool {
-        let symbolic = self.system.symbolic;
-        let mut correction = vec![0.0; symbolic.dimension()];
-        for k in 0..symbolic.relations {
-            correction[symbolic.relation_place(k)] = -self.system.row_scale[k] * self.trial.f[k];
-        }
-        self.system.factor.solve(symbolic, &mut correction);
-        let mut step = self.step.clone();
-        for (j, step) in step.iter_mut().enumerate() {
-            *step += correction[symbolic.place[j] as usize] * self.system.state_scale[j];
-        }
-        self.problem.limit(&self.x, &mut step);
-        let trial: Vec<f64> = self.x.iter().zip(&step).map(|(x, step)| x + step).collect();
-        let fine = self.problem.evaluate(&trial, &mut self.trial).is_ok() && self.filter.accepts(self.merit(&self.trial));
-        if fine {
-            self.move_to(trial, 1.0);
-        }
-        fine
-    }
-
-    fn move_to(&mut self, point: Vec<f64>, length: f64) {
+    pub(super) fn move_to(&mut self, point: Vec<f64>, length: f64, merit: Merit) {
         self.x = point;
+        self.here = merit;
         std::mem::swap(&mut self.evaluation, &mut self.trial);
         // Gauss-Newton multipliers are those of the linearised problem, whatever the length;
         // with second derivatives they are unknowns like the states.
         let fraction = if self.second_order { length } else { 1.0 };
         for (k, multiplier) in self.multipliers.iter_mut().enumerate() {
-            let change = self.direction[self.system.symbolic.relation_place(k)] * self.system.row_scale[k];
+            let change =
+                self.direction[self.system.symbolic.relation_place(k)] * self.system.row_scale[k];
             *multiplier += fraction * change;
         }
     }
@@ -318,58 +311,19 @@ impl<'a, P: Problem + ?Sized> Run<'a, P> {
         if !fresh {
             return Ok(());
         }
-        if !self.second_order && self.problem.curvature(&self.x, &self.multipliers, &mut Vec::new()) {
+        if !self.second_order
+            && self
+                .problem
+                .curvature(&self.x, &self.multipliers, &mut Vec::new())
+        {
             self.second_order = true;
             return Ok(());
         }
         if self.restore() {
             return Ok(());
         }
-        Err(outside.map_or(Reason::Stalled, |at| Reason::OutsideDomain { state: at.state }))
-    }
-
-    /// Shortest steps (in sigma) towards the relations alone, until the filter accepts the point.
-    fn restore(&mut self) -> bool {
-        let start = self.merit(&self.evaluation).violation;
-        for _ in 0..RESTORATION_STEPS {
-            self.system.assemble(&self.evaluation, &self.in_use, Block::Identity);
-            self.system.factorise(WrongSign::Replace);
-            self.factorisations += 1;
-            let here = self.violation(&self.evaluation);
-            self.rhs.fill(0.0);
-            for k in 0..self.system.symbolic.relations {
-                self.rhs[self.system.symbolic.relation_place(k)] = -self.system.row_scale[k] * self.evaluation.f[k];
-            }
-            self.system.solve(&self.rhs, &mut self.direction, LINEAR_TOLERANCE);
-            self.scale_and_limit();
-            let mut length = 1.0;
-            let mut moved = false;
-            for _ in 0..HALVINGS {
-                let trial: Vec<f64> = self.x.iter().zip(&self.step).map(|(x, step)| x + length * step).collect();
-                if self.problem.evaluate(&trial, &mut self.trial).is_ok()
-                    && self.violation(&self.trial) < (1.0 - 0.1 * length) * here
-                {
-                    self.x = trial;
-                    std::mem::swap(&mut self.evaluation, &mut self.trial);
-                    moved = true;
-                    break;
-                }
-                length *= 0.5;
-            }
-            if !moved {
-                return false;
-            }
-            let merit = self.merit(&self.evaluation);
-            if merit.violation <= 0.5 * start && self.filter.accepts(merit) {
-                self.multipliers.fill(0.0);
-                return true;
-            }
-        }
-        false
-    }
-
-    fn violation(&self, at: &Evaluation) -> f64 {
-        let scaled: Vec<f64> = at.f.iter().zip(&self.system.row_scale).map(|(f, scale)| f * scale).collect();
-        norm(&scaled)
+        Err(outside.map_or(Reason::Stalled, |at| Reason::OutsideDomain {
+            state: at.state,
+        }))
     }
 }

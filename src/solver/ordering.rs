@@ -56,7 +56,9 @@ impl Quotient {
             .iter()
             .map(|list| list.iter().map(|&j| weight[j as usize]).sum())
             .collect();
-        let queue = (0..n as u32).map(|i| Reverse((degree[i as usize], i))).collect();
+        let queue = (0..n as u32)
+            .map(|i| Reverse((degree[i as usize], i)))
+            .collect();
         Quotient {
             kind: vec![Kind::Variable; n],
             weight: weight.to_vec(),
@@ -153,7 +155,13 @@ impl Quotient {
     }
 
     /// Puts element p in the place of what it covers and bounds the degree of i.
-    fn update(&mut self, p: u32, i: u32, total: u32, outside: &std::collections::HashMap<u32, u32>) {
+    fn update(
+        &mut self,
+        p: u32,
+        i: u32,
+        total: u32,
+        outside: &std::collections::HashMap<u32, u32>,
+    ) {
         let at = i as usize;
         let (kind, mark, stamp, weight) = (&self.kind, &self.mark, self.stamp, &self.weight);
         let mut bound = total - weight[at];
@@ -167,7 +175,8 @@ impl Quotient {
         let mut seen = 0;
         self.elements[at].retain(|&e| {
             // An element whose members all lie in L_p says nothing more.
-            let keep = kind[e as usize] == Kind::Element && outside.get(&e).is_some_and(|&left| left > 0);
+            let keep =
+                kind[e as usize] == Kind::Element && outside.get(&e).is_some_and(|&left| left > 0);
             if keep {
                 seen += outside[&e];
             }
@@ -209,7 +218,10 @@ impl Quotient {
         // Nothing but p is next to these: they follow it without further fill.
         for &i in members {
             let at = i as usize;
-            if self.kind[at] == Kind::Variable && self.variables[at].is_empty() && self.elements[at].len() == 1 {
+            if self.kind[at] == Kind::Variable
+                && self.variables[at].is_empty()
+                && self.elements[at].len() == 1
+            {
                 self.kind[at] = Kind::Gone;
                 self.followers[p as usize].push(i);
             }
@@ -232,11 +244,15 @@ mod tests {
     /// Fill of the Cholesky factor in the given order, by explicit elimination.
     fn fill(neighbours: &[Vec<u32>], order: &[u32]) -> usize {
         let n = neighbours.len();
-        let mut joined: Vec<std::collections::BTreeSet<u32>> =
-            neighbours.iter().map(|list| list.iter().copied().collect()).collect();
+        let mut joined: Vec<std::collections::BTreeSet<u32>> = neighbours
+            .iter()
+            .map(|list| list.iter().copied().collect())
+            .collect();
         let mut total = 0;
         for &p in order {
-            let around: Vec<u32> = std::mem::take(&mut joined[p as usize]).into_iter().collect();
+            let around: Vec<u32> = std::mem::take(&mut joined[p as usize])
+                .into_iter()
+                .collect();
             total += around.len();
             for &i in &around {
                 joined[i as usize].remove(&p);
@@ -252,10 +268,18 @@ mod tests {
             .map(|k| {
                 let (i, j) = (k / side, k % side);
                 let mut list = Vec::new();
-                if i > 0 { list.push(k - side) }
-                if i + 1 < side { list.push(k + side) }
-                if j > 0 { list.push(k - 1) }
-                if j + 1 < side { list.push(k + 1) }
+                if i > 0 {
+                    list.push(k - side)
+                }
+                if i + 1 < side {
+                    list.push(k + side)
+                }
+                if j > 0 {
+                    list.push(k - 1)
+                }
+                if j + 1 < side {
+                    list.push(k + 1)
+                }
                 list
             })
             .collect()
@@ -287,6 +311,9 @@ mod tests {
     #[test]
     fn an_empty_graph_and_single_nodes_are_ordered() {
         assert!(minimum_degree(Vec::new(), &[]).is_empty());
-        assert_eq!(minimum_degree(vec![Vec::new(); 3], &[1, 1, 1]), vec![0, 1, 2]);
+        assert_eq!(
+            minimum_degree(vec![Vec::new(); 3], &[1, 1, 1]),
+            vec![0, 1, 2]
+        );
     }
 }

@@ -17,7 +17,12 @@ pub struct Options {
 
 impl Default for Options {
     fn default() -> Self {
-        Options { tolerance_relation: 1e-10, tolerance_step: 1e-7, max_iterations: 100, hold: None }
+        Options {
+            tolerance_relation: 1e-10,
+            tolerance_step: 1e-7,
+            max_iterations: 100,
+            hold: None,
+        }
     }
 }
 
@@ -34,7 +39,9 @@ pub struct Hold {
 /// Whether a solve found what it was asked for.
 #[derive(Clone, Copy, Debug, PartialEq, Eq)]
 pub enum Status {
+    /// The relations hold and the last step was negligible.
     Converged,
+    /// No solution was found; the outcome holds the last point.
     NotConverged(Reason),
 }
 
@@ -46,7 +53,10 @@ pub enum Reason {
     /// No step improves the point, and the relations do not hold or the steps do not shrink.
     Stalled,
     /// The start, or every step however short, leaves the domain of a function at this state.
-    OutsideDomain { state: usize },
+    OutsideDomain {
+        /// The state to blame.
+        state: usize,
+    },
     /// The linear system has no usable solution.
     Singular,
     /// No set of active bounds was found that agrees with its own multipliers.
@@ -56,6 +66,7 @@ pub enum Reason {
 /// The answer of a solve; where it did not converge, the last point reached.
 #[derive(Clone, Debug)]
 pub struct Outcome {
+    /// Whether `x` is a solution.
     pub status: Status,
     /// States, in their own units.
     pub x: Vec<f64>,

@@ -26,11 +26,17 @@ pub(super) fn partners(structure: &Structure) -> Vec<Option<u32>> {
         }
     }
     // Relations with few unmeasured states are the scarcest partners: try them first.
-    let scarcity: Vec<usize> = states_of.iter().map(|list| list.iter().filter(|&&j| !measured[j as usize]).count()).collect();
+    let scarcity: Vec<usize> = states_of
+        .iter()
+        .map(|list| list.iter().filter(|&&j| !measured[j as usize]).count())
+        .collect();
     for list in &mut relations_of {
         list.sort_by_key(|&k| (scarcity[k as usize], k));
     }
-    let mut matching = Matching { left: vec![None; n], right: vec![None; m] };
+    let mut matching = Matching {
+        left: vec![None; n],
+        right: vec![None; m],
+    };
     let mut visited = vec![u32::MAX; m];
     for j in (0..n).filter(|&j| !measured[j]) {
         matching.augment(j as u32, &relations_of, &mut visited);
@@ -53,7 +59,10 @@ struct Matching {
 
 impl Matching {
     fn turned(self) -> Self {
-        Matching { left: self.right, right: self.left }
+        Matching {
+            left: self.right,
+            right: self.left,
+        }
     }
 
     /// Matches left node `root` by an augmenting path, if there is one

@@ -133,7 +133,12 @@ pub trait Problem {
     /// Second derivatives of sum_k multiplier_k f_k, as (row, column, value)
     /// of the lower triangle, where the problem can give them. Rows and
     /// columns must be among `structure().pairs` or the diagonal.
-    fn curvature(&self, _x: &[f64], _multipliers: &[f64], _into: &mut Vec<(usize, usize, f64)>) -> bool {
+    fn curvature(
+        &self,
+        _x: &[f64],
+        _multipliers: &[f64],
+        _into: &mut Vec<(usize, usize, f64)>,
+    ) -> bool {
         false
     }
 }

@@ -38,7 +38,14 @@ impl PivotedQr {
             }
         }
         let order = (0..columns.len()).collect();
-        let mut qr = PivotedQr { columns, reflector: Vec::new(), head: Vec::new(), order, length, rank: 0 };
+        let mut qr = PivotedQr {
+            columns,
+            reflector: Vec::new(),
+            head: Vec::new(),
+            order,
+            length,
+            rank: 0,
+        };
         while qr.rank < rows.min(qr.columns.len()) && qr.eliminate() {
             qr.rank += 1;
         }
@@ -65,7 +72,11 @@ impl PivotedQr {
         self.order[step..=best.0].rotate_right(1);
         let (done, rest) = self.columns.split_at_mut(step + 1);
         let pivot = &mut done[step][step..];
-        let diagonal = if pivot[0] > 0.0 { -best.1.sqrt() } else { best.1.sqrt() };
+        let diagonal = if pivot[0] > 0.0 {
+            -best.1.sqrt()
+        } else {
+            best.1.sqrt()
+        };
         let head = pivot[0] - diagonal;
         pivot[0] = head;
         let scale = 2.0 / square(pivot);
@@ -82,7 +93,12 @@ impl PivotedQr {
     pub(super) fn apply_transpose(&self, y: &mut [f64]) {
         for step in 0..self.rank {
             let below = &self.columns[step][step + 1..];
-            let dot = self.head[step] * y[step] + below.iter().zip(&y[step + 1..]).map(|(a, b)| a * b).sum::<f64>();
+            let dot = self.head[step] * y[step]
+                + below
+                    .iter()
+                    .zip(&y[step + 1..])
+                    .map(|(a, b)| a * b)
+                    .sum::<f64>();
             let factor = self.reflector[step] * dot;
             y[step] -= factor * self.head[step];
             for (v, b) in y[step + 1..].iter_mut().zip(below) {
@@ -93,7 +109,9 @@ impl PivotedQr {
 
     /// Vectors that span the right null space, each with the column that only it moves.
     pub(super) fn null_vectors(&self) -> Vec<(usize, Vec<f64>)> {
-        (self.rank..self.columns.len()).map(|free| (self.order[free], self.null_vector(free))).collect()
+        (self.rank..self.columns.len())
+            .map(|free| (self.order[free], self.null_vector(free)))
+            .collect()
     }
 
     fn null_vector(&self, free: usize) -> Vec<f64> {
@@ -138,8 +156,14 @@ mod tests {
     #[test]
     fn rank_null_space_and_left_null_space_of_a_deficient_block() {
         // Third column = first + 2 second; third row = first - second.
-        let rows = [[1.0, 2.0, 5.0, 0.5], [3.0, -1.0, 1.0, 2.0], [-2.0, 3.0, 4.0, -1.5]];
-        let columns: Vec<Vec<f64>> = (0..4).map(|j| rows.iter().map(|row| row[j]).collect()).collect();
+        let rows = [
+            [1.0, 2.0, 5.0, 0.5],
+            [3.0, -1.0, 1.0, 2.0],
+            [-2.0, 3.0, 4.0, -1.5],
+        ];
+        let columns: Vec<Vec<f64>> = (0..4)
+            .map(|j| rows.iter().map(|row| row[j]).collect())
+            .collect();
         let qr = PivotedQr::new(3, columns.clone());
         assert_eq!(qr.rank, 2);
         for (_, vector) in qr.null_vectors() {
@@ -162,7 +186,14 @@ mod tests {
 
     #[test]
     fn the_later_of_two_equal_columns_is_the_dependent_one() {
-        let qr = PivotedQr::new(3, vec![vec![0.0, 1.0, 1.0], vec![1.0, 1.0, 0.0], vec![1.0, 1.0, 0.0]]);
+        let qr = PivotedQr::new(
+            3,
+            vec![
+                vec![0.0, 1.0, 1.0],
+                vec![1.0, 1.0, 0.0],
+                vec![1.0, 1.0, 0.0],
+            ],
+        );
         assert_eq!((qr.rank, qr.order[2]), (2, 2));
     }
 }

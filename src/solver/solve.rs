@@ -20,11 +20,18 @@ const ROUNDS: usize = 20;
 ///
 /// Never fails: where no solution was found the status says why, and the
 /// outcome holds the last point reached.
-pub fn solve<P: Problem + ?Sized>(problem: &P, symbolic: &Symbolic, start: &[f64], options: &Options) -> Outcome {
+pub fn solve<P: Problem + ?Sized>(
+    problem: &P,
+    symbolic: &Symbolic,
+    start: &[f64],
+    options: &Options,
+) -> Outcome {
     let structure = problem.structure();
     let (mut run, first) = Run::new(problem, symbolic, start, options);
     let status = match first {
-        Err(outside) => Status::NotConverged(Reason::OutsideDomain { state: outside.state }),
+        Err(outside) => Status::NotConverged(Reason::OutsideDomain {
+            state: outside.state,
+        }),
         Ok(()) => with_bounds(&mut run, problem, options),
     };
     outcome(run, status, structure, problem.relation_scale())
@@ -45,7 +52,9 @@ fn with_bounds<P: Problem + ?Sized>(run: &mut Run<P>, problem: &P, options: &Opt
                 run.evaluation.f[k] < -options.tolerance_relation * scale[k]
             }
         });
-        let change: Vec<usize> = wrong.take(if round < FREE_ROUNDS { usize::MAX } else { 1 }).collect();
+        let change: Vec<usize> = wrong
+            .take(if round < FREE_ROUNDS { usize::MAX } else { 1 })
+            .collect();
         if change.is_empty() {
             return Status::Converged;
         }
@@ -57,7 +66,12 @@ fn with_bounds<P: Problem + ?Sized>(run: &mut Run<P>, problem: &P, options: &Opt
     Status::NotConverged(Reason::BoundsCycle)
 }
 
-fn outcome<P: Problem + ?Sized>(run: Run<P>, status: Status, structure: &Structure, relation_scale: &[f64]) -> Outcome {
+fn outcome<P: Problem + ?Sized>(
+    run: Run<P>,
+    status: Status,
+    structure: &Structure,
+    relation_scale: &[f64],
+) -> Outcome {
     let worst = (0..structure.relations.len())
         .filter(|&k| run.in_use[k])
         .map(|k| (k, run.evaluation.f[k].abs() / relation_scale[k]))

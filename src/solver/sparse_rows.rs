@@ -18,7 +18,13 @@ pub(super) type SparseRow = Vec<(usize, f64)>;
 
 /// Row `i` of a Jacobian in scaled states, of length one, without negligible
 /// entries; empty where its length does not exceed `least`.
-pub(super) fn scaled_row(rows: &Rows, values: &[f64], i: usize, state_scale: &[f64], least: f64) -> SparseRow {
+pub(super) fn scaled_row(
+    rows: &Rows,
+    values: &[f64],
+    i: usize,
+    state_scale: &[f64],
+    least: f64,
+) -> SparseRow {
     let range = rows.range(i);
     let mut row: SparseRow = rows.index[range.clone()]
         .iter()
@@ -26,7 +32,7 @@ pub(super) fn scaled_row(rows: &Rows, values: &[f64], i: usize, state_scale: &[f
         .map(|(&j, v)| (j, v * state_scale[j]))
         .collect();
     let length = row.iter().map(|(_, v)| v * v).sum::<f64>().sqrt();
-    if !(length > least) {
+    if length.is_nan() || length <= least {
         return SparseRow::new();
     }
     row.iter_mut().for_each(|(_, v)| *v /= length);
@@ -90,12 +96,18 @@ pub(super) fn take_apart(rows: &[SparseRow], of_interest: &[bool]) -> Pieces {
     let mut row_left = vec![true; rows.len()];
     let mut column_left: Vec<bool> = of_interest.to_vec();
     let mut peeled = Vec::new();
-    let mut queue: Vec<usize> = (0..count.len()).rev().filter(|&j| of_interest[j] && count[j] == 1).collect();
+    let mut queue: Vec<usize> = (0..count.len())
+        .rev()
+        .filter(|&j| of_interest[j] && count[j] == 1)
+        .collect();
     while let Some(j) = queue.pop() {
         let Some(&i) = rows_of[j].iter().find(|&&i| row_left[i]) else {
             continue;
         };
-        let entry = rows[i].iter().find(|&&(column, _)| column == j).map_or(0.0, |&(_, value)| value);
+        let entry = rows[i]
+            .iter()
+            .find(|&&(column, _)| column == j)
+            .map_or(0.0, |&(_, value)| value);
         if !column_left[j] || entry.abs() < PEEL {
             continue;
         }
@@ -109,19 +121,33 @@ pub(super) fn take_apart(rows: &[SparseRow], of_interest: &[bool]) -> Pieces {
             }
         }
     }
-    let free = (0..count.len()).filter(|&j| column_left[j] && count[j] == 0).collect();
+    let free = (0..count.len())
+        .filter(|&j| column_left[j] && count[j] == 0)
+        .collect();
     let blocks = components(rows, &rows_of, row_left, column_left);
-    Pieces { peeled, blocks, free }
+    Pieces {
+        peeled,
+        blocks,
+        free,
+    }
 }
 
 /// Connected components of what is left, in the order of their first row.
-fn components(rows: &[SparseRow], rows_of: &[Vec<usize>], mut row_left: Vec<bool>, mut column_left: Vec<bool>) -> Vec<Block> {
+fn components(
+    rows: &[SparseRow],
+    rows_of: &[Vec<usize>],
+    mut row_left: Vec<bool>,
+    mut column_left: Vec<bool>,
+) -> Vec<Block> {
     let mut blocks = Vec::new();
     for seed in 0..rows.len() {
         if !row_left[seed] {
             continue;
         }
-        let mut block = Block { rows: Vec::new(), columns: Vec::new() };
+        let mut block = Block {
+            rows: Vec::new(),
+            columns: Vec::new(),
+        };
         let mut stack = vec![seed];
         row_left[seed] = false;
         while let Some(i) = stack.pop() {

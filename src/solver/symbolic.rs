@@ -12,12 +12,13 @@
 //! ```
 //!
 //! A relation has nothing on the diagonal, nor has a state that no observation
-//! measures alone. Relations are therefore paired with states by a maximum
-//! matching, unmeasured states first, and a pair is eliminated together, the
-//! state first: the pivots of a pair form the block [h a; a 0], which is sound
-//! even where h is next to nothing. Relations that find no partner (bounds,
-//! which are mostly out of use, and relations that others imply) follow the
-//! first of their states, for the same reason.
+//! measures alone. The unknowns are therefore eliminated in blocks of two: a
+//! state and a relation that it takes part in (see `pairing`), which form
+//! [h e; e d] with h >= 0 >= d, sound even where both are next to nothing. A
+//! block with one unknown is filled up with an idle one, +1 or -1 on the
+//! diagonal and nothing beside. Relations without a partner (bounds, which are
+//! mostly out of use, and relations that others imply) follow the first of
+//! their states. All patterns are of blocks: one index for four numbers.
 
 use super::ordering::minimum_degree;
 use super::pairing::partners;
@@ -33,14 +34,14 @@ pub struct Symbolic {
     pub(super) relations: usize,
     /// Observations with a residual of their own among the unknowns.
     pub(super) several: Vec<usize>,
-    /// Place of each unknown (states, relations, residuals) in the elimination order.
+    /// Place of each unknown (states, relations, residuals): twice its block,
+    /// plus one for relations and residuals.
     pub(super) place: Vec<u32>,
-    /// True where the unknown at this place is a state: its pivot is positive.
-    pub(super) positive: Vec<bool>,
-    /// True where the unknown at this place is a state whose partner follows it.
-    pub(super) leads_pair: Vec<bool>,
+    /// Places of idle unknowns.
+    pub(super) idle: Vec<u32>,
+    /// Blocks above the diagonal.
     pub(super) matrix: Pattern,
-    /// Place in the strict upper triangle, beside `relations.index`.
+    /// Place among the matrix's values, beside `relations.index`.
     pub(super) relation_slot: Vec<u32>,
     /// The same beside `observations.index`; meaningless for observations of one state.
     pub(super) observation_slot: Vec<u32>,
@@ -50,6 +51,9 @@ pub struct Symbolic {
 }
 
 /// Strict upper triangle by columns: `row[start[k]..start[k + 1]]` are the rows above k.
+///
+/// Block number i holds the values 4 i to 4 i + 3, by rows; behind those of all
+/// blocks come the entries e of the diagonal blocks.
 #[derive(Clone, Debug, Default)]
 pub(super) struct Pattern {
     pub(super) start: Vec<u32>,
@@ -74,28 +78,32 @@ impl Symbolic {
             .filter(|&i| structure.observations.range(i).len() > 1)
             .collect();
         let entries = Entries::collect(structure, &several);
-        let dimension = states + relations + several.len();
-        let partner = partners(structure);
-        let order = order_with_pairs(dimension, structure, &entries, &partner);
-        let mut place = vec![0; dimension];
-        for (at, &unknown) in order.iter().enumerate() {
-            place[unknown as usize] = at as u32;
+        let blocks = order_blocks(structure, &several, &entries);
+        let mut place = vec![0; states + relations + several.len()];
+        let mut idle = Vec::new();
+        for (at, &unknown) in blocks.iter().flatten().enumerate() {
+            match unknown {
+                Some(unknown) => place[unknown as usize] = at as u32,
+                None => idle.push(at as u32),
+            }
         }
-        let (matrix, slots) = entries.lay_out(&place);
+        let (matrix, slots) = entries.lay_out(&place, blocks.len());
         let (relation_slot, rest) = slots.split_at(structure.relations.index.len());
         let (observation_slot, pair_slots) = rest.split_at(structure.observations.index.len());
-        let mut pair_slot: Vec<((u32, u32), u32)> = entries.pairs.iter().copied().zip(pair_slots.iter().copied()).collect();
+        let mut pair_slot: Vec<((u32, u32), u32)> = entries
+            .pairs
+            .iter()
+            .copied()
+            .zip(pair_slots.iter().copied())
+            .collect();
         pair_slot.sort_unstable();
         pair_slot.dedup();
-        let leads_pair: Vec<bool> =
-            order.iter().map(|&unknown| partner.get(unknown as usize).is_some_and(Option::is_some)).collect();
         Symbolic {
             states,
             relations,
             several,
-            positive: order.iter().map(|&unknown| (unknown as usize) < states).collect(),
-            factor: FactorPattern::of(&matrix, &leads_pair),
-            leads_pair,
+            idle,
+            factor: FactorPattern::of(&matrix),
             relation_slot: relation_slot.to_vec(),
             observation_slot: observation_slot.to_vec(),
             pair_slot,
@@ -104,14 +112,24 @@ impl Symbolic {
         }
     }
 
-    /// Number of unknowns of the augmented system.
+    /// Length of the vectors of the augmented system, idle unknowns included.
     pub fn dimension(&self) -> usize {
-        self.place.len()
+        self.place.len() + self.idle.len()
     }
 
-    /// Entries of the factor below the diagonal.
+    /// Number of 2x2 blocks on the diagonal.
+    pub(super) fn blocks(&self) -> usize {
+        self.dimension() / 2
+    }
+
+    /// Number of values of the matrix beside its diagonal.
+    pub(super) fn values(&self) -> usize {
+        4 * self.matrix.row.len() + self.blocks()
+    }
+
+    /// Numbers held by the factor below its diagonal.
     pub fn fill(&self) -> usize {
-        self.factor.column_row.len()
+        4 * self.factor.column_row.len()
     }
 
     /// Place of a relation's multiplier in the elimination order.
@@ -127,7 +145,10 @@ impl Symbolic {
     /// Slot of an off-diagonal pair of states, if it is among the structure's pairs.
     pub(super) fn slot_of_pair(&self, i: usize, j: usize) -> Option<u32> {
         let key = (i.max(j) as u32, i.min(j) as u32);
-        let at = self.pair_slot.binary_search_by_key(&key, |&(pair, _)| pair).ok()?;
+        let at = self
+            .pair_slot
+            .binary_search_by_key(&key, |&(pair, _)| pair)
+            .ok()?;
         Some(self.pair_slot[at].1)
     }
 }
@@ -185,23 +206,39 @@ impl Entries {
         lists
     }
 
-    /// The upper triangle in the elimination order, and the slot of every entry.
-    fn lay_out(&self, place: &[u32]) -> (Pattern, Vec<u32>) {
+    /// The upper triangle of blocks in the elimination order, and the slot of every entry.
+    fn lay_out(&self, place: &[u32], blocks: usize) -> (Pattern, Vec<u32>) {
+        // (later, earlier) place of an entry.
         let at = |&(a, b): &(u32, u32)| {
             let (a, b) = (place[a as usize], place[b as usize]);
             (a.max(b), a.min(b))
         };
-        let mut cells: Vec<(u32, u32)> = self.list.iter().map(at).filter(|(column, row)| column != row).collect();
+        let cell = |(later, earlier): (u32, u32)| (later / 2, earlier / 2);
+        let mut cells: Vec<(u32, u32)> = self
+            .list
+            .iter()
+            .map(|entry| cell(at(entry)))
+            .filter(|(column, row)| column != row)
+            .collect();
         cells.sort_unstable();
         cells.dedup();
-        let mut start = vec![0; place.len() + 1];
+        let mut start = vec![0; blocks + 1];
         for &(column, _) in &cells {
             start[column as usize + 1] += 1;
         }
-        for k in 0..place.len() {
+        for k in 0..blocks {
             start[k + 1] += start[k];
         }
-        let slot = |entry: &(u32, u32)| cells.binary_search(&at(entry)).map_or(CONDENSED, |slot| slot as u32);
+        let slot = |entry: &(u32, u32)| {
+            let (later, earlier) = at(entry);
+            if later == earlier {
+                return CONDENSED;
+            }
+            match cells.binary_search(&cell((later, earlier))) {
+                Ok(number) => 4 * number as u32 + 2 * (earlier % 2) + later % 2,
+                Err(_) => 4 * cells.len() as u32 + later / 2,
+            }
+        };
         let slots = self.list.iter().map(slot).collect();
         let row = cells.iter().map(|&(_, row)| row).collect();
         (Pattern { start, row }, slots)
@@ -215,10 +252,7 @@ impl FactorPattern {
     }
 
     /// Row patterns of L by walking the elimination tree (Liu, ACM Trans. Math. Softw. 12, 1986, 127).
-    ///
-    /// The two columns of a pair get one pattern: that of the second, in which
-    /// the first's is contained. The second is the first row of the first.
-    fn of(matrix: &Pattern, leads_pair: &[bool]) -> Self {
+    fn of(matrix: &Pattern) -> Self {
         let n = matrix.start.len().saturating_sub(1);
         let mut parent = vec![u32::MAX; n];
         let mut mark = vec![u32::MAX; n];
@@ -241,10 +275,6 @@ impl FactorPattern {
                 }
             }
             row_column[first..].sort_unstable();
-            let completed = with_leaders(&row_column[first..], leads_pair);
-            completed.iter().filter(|&j| row_column[first..].binary_search(j).is_err()).for_each(|&j| count[j as usize + 1] += 1);
-            row_column.truncate(first);
-            row_column.extend(completed);
             row_start[k + 1] = row_column.len() as u32;
         }
         for k in 0..n {
@@ -258,46 +288,56 @@ impl FactorPattern {
                 next[j as usize] += 1;
             }
         }
-        FactorPattern { column_start: count, column_row, row_start, row_column }
+        FactorPattern {
+            column_start: count,
+            column_row,
+            row_start,
+            row_column,
+        }
     }
 }
 
-/// The columns of a row, with the first of every pair whose second is there.
-fn with_leaders(columns: &[u32], leads_pair: &[bool]) -> Vec<u32> {
-    let mut completed: Vec<u32> = Vec::with_capacity(columns.len() + columns.len() / 2);
-    for &j in columns {
-        if let Some(leader) = j.checked_sub(1).filter(|&leader| leads_pair[leader as usize])
-            && completed.last() != Some(&leader)
-        {
-            completed.push(leader);
+/// The blocks of unknowns in the order of elimination: a state first, a
+/// relation or residual second, either of them possibly idle.
+fn order_blocks(
+    structure: &Structure,
+    several: &[usize],
+    entries: &Entries,
+) -> Vec<[Option<u32>; 2]> {
+    let (states, relations) = (structure.states, structure.relations.len());
+    let mut second: Vec<Option<u32>> = partners(structure)
+        .into_iter()
+        .map(|partner| partner.map(|k| (states as u32) + k))
+        .collect();
+    let mut placed = vec![false; relations + several.len()];
+    second
+        .iter()
+        .flatten()
+        .for_each(|&unknown| placed[unknown as usize - states] = true);
+    // Each group is eliminated in one go; it starts with a state, if it has one.
+    let mut groups: Vec<Vec<[Option<u32>; 2]>> = vec![Vec::new(); states];
+    for at in (0..placed.len()).filter(|&at| !placed[at]) {
+        let row = match at.checked_sub(relations) {
+            None => structure.relations.row(at),
+            Some(nth) => structure.observations.row(several[nth]),
+        };
+        let unknown = Some((states + at) as u32);
+        match (row.iter().find(|&&j| second[j].is_none()), row.first()) {
+            (Some(&j), _) => second[j] = unknown,
+            (None, Some(&j)) if at < relations => groups[j].push([None, unknown]),
+            _ => groups.push(vec![[None, unknown]]),
         }
-        completed.push(j);
     }
-    completed
-}
-
-/// Order of all unknowns in which a relation follows a state of its own.
-fn order_with_pairs(dimension: usize, structure: &Structure, entries: &Entries, partner: &[Option<u32>]) -> Vec<u32> {
-    let states = structure.states;
-    let mut groups: Vec<Vec<u32>> = (0..states as u32).map(|j| vec![j]).collect();
-    let mut paired = vec![false; structure.relations.len()];
-    for (group, k) in groups.iter_mut().zip(partner) {
-        if let Some(k) = k {
-            group.push((states + *k as usize) as u32);
-            paired[*k as usize] = true;
-        }
+    for (j, (group, second)) in groups.iter_mut().zip(second).enumerate() {
+        group.insert(0, [Some(j as u32), second]);
     }
-    for k in (0..paired.len()).filter(|&k| !paired[k]) {
-        let relation = (states + k) as u32;
-        match structure.relations.row(k).first() {
-            Some(&j) => groups[j].push(relation),
-            None => groups.push(vec![relation]),
-        }
-    }
-    groups.extend((states + paired.len()..dimension).map(|residual| vec![residual as u32]));
-    let mut node = vec![0; dimension];
+    let mut node = vec![0; states + placed.len()];
     for (number, group) in groups.iter().enumerate() {
-        group.iter().for_each(|&unknown| node[unknown as usize] = number as u32);
+        group
+            .iter()
+            .flatten()
+            .flatten()
+            .for_each(|&unknown| node[unknown as usize] = number as u32);
     }
     let weight: Vec<u32> = groups.iter().map(|group| group.len() as u32).collect();
     let graph = entries.neighbours(&node, groups.len());

@@ -7,8 +7,7 @@
 //! notices.
 //!
 //! The factor is that of K + diag(+d, -e): regularised. Solutions are those of
-//! K itself, by refinement and, where that is too slow (nearly unobservable
-//! states), by a few steps of GMRES preconditioned with the factor.
+//! K itself (see `refine`).
 
 use super::factor::{Factor, WrongSign};
 use super::problem::{Evaluation, Structure};
@@ -18,8 +17,6 @@ use super::symbolic::Symbolic;
 pub(super) const STATE_REGULARISATION: f64 = 1e-7;
 /// Taken from the diagonal of each normalised relation.
 pub(super) const RELATION_REGULARISATION: f64 = 1e-9;
-/// Steps of GMRES before the best solution so far is taken.
-const KRYLOV_STEPS: usize = 20;
 /// A gradient below this fraction of the relation's own scale counts as none.
 const NO_GRADIENT: f64 = 1e-13;
 
@@ -34,9 +31,12 @@ pub(super) struct System<'a> {
     pub(super) factor: Factor,
     /// Regularisation of each place, with its sign.
     pub(super) regularisation: Vec<f64>,
-    upper: Vec<f64>,
+    /// See `Pattern`.
+    values: Vec<f64>,
     diagonal: Vec<f64>,
     regularised: Vec<f64>,
+    /// Gradient by the states in their own units.
+    gradient: Vec<f64>,
 }
 
 /// What goes on the diagonal block of the states.
@@ -53,7 +53,12 @@ pub(super) enum Block<'b> {
 }
 
 impl<'a> System<'a> {
-    pub(super) fn new(symbolic: &'a Symbolic, structure: &'a Structure, state_scale: &'a [f64], relation_scale: &'a [f64]) -> Self {
+    pub(super) fn new(
+        symbolic: &'a Symbolic,
+        structure: &'a Structure,
+        state_scale: &'a [f64],
+        relation_scale: &'a [f64],
+    ) -> Self {
         let n = symbolic.dimension();
         let mut regularisation = vec![0.0; n];
         for &place in &symbolic.place[..symbolic.states] {
@@ -70,16 +75,20 @@ impl<'a> System<'a> {
             row_scale: vec![0.0; symbolic.relations],
             factor: Factor::new(symbolic),
             regularisation,
-            upper: vec![0.0; symbolic.matrix.row.len()],
+            values: vec![0.0; symbolic.values()],
             diagonal: vec![0.0; n],
             regularised: vec![0.0; n],
+            gradient: vec![0.0; symbolic.states],
         }
     }
 
     /// Fills the matrix at a point. `in_use` says which relations take part.
     pub(super) fn assemble(&mut self, at: &Evaluation, in_use: &[bool], block: Block) {
-        self.upper.fill(0.0);
+        self.values.fill(0.0);
         self.diagonal.fill(0.0);
+        for &place in &self.symbolic.idle {
+            self.diagonal[place as usize] = if place % 2 == 0 { 1.0 } else { -1.0 };
+        }
         self.assemble_relations(at, in_use);
         let place = &self.symbolic.place;
         for nth in 0..self.symbolic.several.len() {
@@ -107,17 +116,25 @@ impl<'a> System<'a> {
 
     fn assemble_relations(&mut self, at: &Evaluation, in_use: &[bool]) {
         let rows = &self.structure.relations;
-        for k in 0..rows.len() {
+        for (k, &used) in in_use.iter().enumerate() {
             let range = rows.range(k);
             let (index, values) = (&rows.index[range.clone()], &at.f_values[range.clone()]);
-            let square: f64 = index.iter().zip(values).map(|(&j, v)| (v * self.state_scale[j]).powi(2)).sum();
+            let square: f64 = index
+                .iter()
+                .zip(values)
+                .map(|(&j, v)| (v * self.state_scale[j]).powi(2))
+                .sum();
             let norm = square.sqrt();
             let place = self.symbolic.relation_place(k);
-            if in_use[k] && norm > NO_GRADIENT * self.relation_scale[k] {
+            if used && norm > NO_GRADIENT * self.relation_scale[k] {
                 let scale = norm.recip();
                 self.row_scale[k] = scale;
-                for ((&j, v), &slot) in index.iter().zip(values).zip(&self.symbolic.relation_slot[range]) {
-                    self.upper[slot as usize] = v * self.state_scale[j] * scale;
+                for ((&j, v), &slot) in index
+                    .iter()
+                    .zip(values)
+                    .zip(&self.symbolic.relation_slot[range])
+                {
+                    self.values[slot as usize] = v * self.state_scale[j] * scale;
                 }
             } else {
                 self.row_scale[k] = 0.0;
@@ -137,7 +154,7 @@ impl<'a> System<'a> {
             }
             for at_entry in range {
                 let slot = self.symbolic.observation_slot[at_entry] as usize;
-                self.upper[slot] = -at.g_values[at_entry] * self.state_scale[rows.index[at_entry]];
+                self.values[slot] = -at.g_values[at_entry] * self.state_scale[rows.index[at_entry]];
             }
         }
     }
@@ -148,7 +165,7 @@ impl<'a> System<'a> {
             if i == j {
                 self.diagonal[self.symbolic.place[i] as usize] += value;
             } else if let Some(slot) = self.symbolic.slot_of_pair(i, j) {
-                self.upper[slot as usize] += value;
+                self.values[slot as usize] += value;
             }
         }
     }
@@ -163,159 +180,82 @@ impl<'a> System<'a> {
         for k in 0..self.diagonal.len() {
             self.regularised[k] = self.diagonal[k] + self.regularisation[k];
         }
-        self.factor.factorise(self.symbolic, &self.upper, &self.regularised, wrong_sign)
+        self.factor
+            .factorise(self.symbolic, &self.values, &self.regularised, wrong_sign)
     }
 
     /// Right-hand side of a step: minus the gradient of the Lagrangian, minus the relations.
-    pub(super) fn right_hand_side(&self, at: &Evaluation, multipliers: &[f64], rhs: &mut [f64]) {
+    pub(super) fn right_hand_side(
+        &mut self,
+        at: &Evaluation,
+        multipliers: &[f64],
+        rhs: &mut [f64],
+    ) {
         rhs.fill(0.0);
-        let (place, scale) = (&self.symbolic.place, self.state_scale);
+        let gradient = &mut self.gradient;
+        gradient.fill(0.0);
         let observations = &self.structure.observations;
-        for i in 0..observations.len() {
-            let range = observations.range(i);
-            for (&j, g) in observations.index[range.clone()].iter().zip(&at.g_values[range]) {
-                rhs[place[j] as usize] += scale[j] * g * at.r[i];
+        for (bounds, r) in observations.start.windows(2).zip(&at.r) {
+            let range = bounds[0]..bounds[1];
+            for (&j, g) in observations.index[range.clone()]
+                .iter()
+                .zip(&at.g_values[range])
+            {
+                gradient[j] += g * r;
             }
         }
         let relations = &self.structure.relations;
-        for k in 0..relations.len() {
-            if self.row_scale[k] == 0.0 {
+        let places = &self.symbolic.place[self.symbolic.states..];
+        for (k, bounds) in relations.start.windows(2).enumerate() {
+            let (scale, multiplier) = (self.row_scale[k], multipliers[k]);
+            if scale == 0.0 {
                 continue;
             }
-            rhs[self.symbolic.relation_place(k)] = -self.row_scale[k] * at.f[k];
-            let range = relations.range(k);
-            for (&j, v) in relations.index[range.clone()].iter().zip(&at.f_values[range]) {
-                rhs[place[j] as usize] -= scale[j] * v * multipliers[k];
+            rhs[places[k] as usize] = -scale * at.f[k];
+            let range = bounds[0]..bounds[1];
+            for (&j, v) in relations.index[range.clone()]
+                .iter()
+                .zip(&at.f_values[range])
+            {
+                gradient[j] -= v * multiplier;
             }
+        }
+        for ((&place, scale), value) in self
+            .symbolic
+            .place
+            .iter()
+            .zip(self.state_scale)
+            .zip(gradient)
+        {
+            rhs[place as usize] = scale * *value;
         }
     }
 
     /// y = K x, without the regularisation.
-    fn multiply(&self, x: &[f64], y: &mut [f64]) {
+    pub(super) fn multiply(&self, x: &[f64], y: &mut [f64]) {
         let matrix = &self.symbolic.matrix;
+        let (blocks, _) = self.values.as_chunks::<4>();
+        let between = &self.values[4 * matrix.row.len()..];
+        let ((x, _), (y, _), (diagonal, _)) = (
+            x.as_chunks::<2>(),
+            y.as_chunks_mut::<2>(),
+            self.diagonal.as_chunks::<2>(),
+        );
         for k in 0..x.len() {
+            let [a, b] = x[k];
+            let mut sum = [
+                diagonal[k][0] * a + between[k] * b,
+                between[k] * a + diagonal[k][1] * b,
+            ];
             let range = matrix.start[k] as usize..matrix.start[k + 1] as usize;
-            let mut sum = self.diagonal[k] * x[k];
-            for (&i, &value) in matrix.row[range.clone()].iter().zip(&self.upper[range]) {
-                sum += value * x[i as usize];
-                y[i as usize] += value * x[k];
+            for (&i, v) in matrix.row[range.clone()].iter().zip(&blocks[range]) {
+                let i = i as usize;
+                sum[0] += v[0] * x[i][0] + v[2] * x[i][1];
+                sum[1] += v[1] * x[i][0] + v[3] * x[i][1];
+                y[i][0] += v[0] * a + v[1] * b;
+                y[i][1] += v[2] * a + v[3] * b;
             }
             y[k] = sum;
         }
     }
-
-    /// Solves K x = rhs until the residual is below `tolerance` times the
-    /// right-hand side, or gets no smaller. Returns the ratio reached.
-    pub(super) fn solve(&self, rhs: &[f64], x: &mut [f64], tolerance: f64) -> f64 {
-        let size = norm(rhs);
-        if size == 0.0 {
-            x.fill(0.0);
-            return 0.0;
-        }
-        x.copy_from_slice(rhs);
-        self.factor.solve(self.symbolic, x);
-        let mut residual = vec![0.0; rhs.len()];
-        let mut reached = self.residual(rhs, x, &mut residual) / size;
-        while reached > tolerance {
-            let mut correction = residual.clone();
-            self.factor.solve(self.symbolic, &mut correction);
-            let before = reached;
-            add(x, 1.0, &correction);
-            reached = self.residual(rhs, x, &mut residual) / size;
-            if !(reached < 0.1 * before) {
-                break;
-            }
-        }
-        if reached > tolerance || reached.is_nan() {
-            reached = self.krylov(rhs, x, tolerance, size);
-        }
-        reached
-    }
-
-    /// residual = rhs - K x; returns its norm.
-    fn residual(&self, rhs: &[f64], x: &[f64], residual: &mut [f64]) -> f64 {
-        self.multiply(x, residual);
-        for (r, b) in residual.iter_mut().zip(rhs) {
-            *r = b - *r;
-        }
-        norm(residual)
-    }
-
-    /// GMRES from zero, preconditioned from the right with the factor (Saad and Schultz 1986).
-    fn krylov(&self, rhs: &[f64], x: &mut [f64], tolerance: f64, size: f64) -> f64 {
-        let n = rhs.len();
-        let mut basis: Vec<Vec<f64>> = vec![rhs.iter().map(|b| b / size).collect()];
-        // Upper triangle of the Hessenberg matrix after Givens rotations, by columns.
-        let mut columns: Vec<Vec<f64>> = Vec::new();
-        let mut rotations: Vec<(f64, f64)> = Vec::new();
-        let mut reduced = vec![size];
-        while columns.len() < KRYLOV_STEPS && reduced[columns.len()].abs() > tolerance * size {
-            let mut direction = basis[columns.len()].clone();
-            self.factor.solve(self.symbolic, &mut direction);
-            let mut image = vec![0.0; n];
-            self.multiply(&direction, &mut image);
-            let mut column = Vec::with_capacity(basis.len() + 1);
-            for v in &basis {
-                let h = dot(v, &image);
-                add(&mut image, -h, v);
-                column.push(h);
-            }
-            for (v, h) in basis.iter().zip(&mut column) {
-                let again = dot(v, &image);
-                add(&mut image, -again, v);
-                *h += again;
-            }
-            let rest = norm(&image);
-            for (i, &(c, s)) in rotations.iter().enumerate() {
-                (column[i], column[i + 1]) = rotate(c, s, column[i], column[i + 1]);
-            }
-            let last = column.len() - 1;
-            let length = column[last].hypot(rest);
-            if !(length > 0.0) || !length.is_finite() {
-                break;
-            }
-            let (c, s) = (column[last] / length, rest / length);
-            column[last] = length;
-            columns.push(column);
-            rotations.push((c, s));
-            let top = reduced[columns.len() - 1];
-            reduced[columns.len() - 1] = c * top;
-            reduced.push(-s * top);
-            if rest <= 1e-14 * length {
-                break;
-            }
-            basis.push(image.iter().map(|v| v / rest).collect());
-        }
-        let steps = columns.len();
-        let mut weights = vec![0.0; steps];
-        for i in (0..steps).rev() {
-            let known: f64 = (i + 1..steps).map(|j| columns[j][i] * weights[j]).sum();
-            weights[i] = (reduced[i] - known) / columns[i][i];
-        }
-        x.fill(0.0);
-        for (v, weight) in basis.iter().zip(&weights) {
-            add(x, *weight, v);
-        }
-        self.factor.solve(self.symbolic, x);
-        self.residual(rhs, x, &mut vec![0.0; n]) / size
-    }
-}
-
-fn rotate(c: f64, s: f64, a: f64, b: f64) -> (f64, f64) {
-    (c * a + s * b, c * b - s * a)
-}
-
-fn add(x: &mut [f64], factor: f64, y: &[f64]) {
-    for (a, b) in x.iter_mut().zip(y) {
-        *a += factor * b;
-    }
-}
-
-fn dot(x: &[f64], y: &[f64]) -> f64 {
-    x.iter().zip(y).map(|(a, b)| a * b).sum()
-}
-
-/// Euclidean norm.
-pub(super) fn norm(x: &[f64]) -> f64 {
-    dot(x, x).sqrt()
 }

@@ -50,14 +50,21 @@ impl Polynomial {
     }
 
     fn states(&self) -> Vec<usize> {
-        let mut states: Vec<usize> = self.0.iter().flat_map(|(_, product)| product.clone()).collect();
+        let mut states: Vec<usize> = self
+            .0
+            .iter()
+            .flat_map(|(_, product)| product.clone())
+            .collect();
         states.sort_unstable();
         states.dedup();
         states
     }
 
     pub(super) fn value(&self, x: &[f64]) -> f64 {
-        self.0.iter().map(|(c, product)| c * product.iter().map(|&j| x[j]).product::<f64>()).sum()
+        self.0
+            .iter()
+            .map(|(c, product)| c * product.iter().map(|&j| x[j]).product::<f64>())
+            .sum()
     }
 
     fn without(&self, state: usize) -> Polynomial {
@@ -99,13 +106,23 @@ pub(super) struct Sample {
 }
 
 impl Sample {
-    pub(super) fn new(states: usize, relations: Vec<Polynomial>, readings: Vec<Reading>, bounds: Vec<usize>) -> Self {
+    pub(super) fn new(
+        states: usize,
+        relations: Vec<Polynomial>,
+        readings: Vec<Reading>,
+        bounds: Vec<usize>,
+    ) -> Self {
         let lists: Vec<Vec<usize>> = relations.iter().map(Polynomial::states).collect();
         let seen: Vec<Vec<usize>> = readings.iter().map(|reading| reading.of.states()).collect();
         let mut pairs = Vec::new();
         for (_, product) in relations.iter().flat_map(|relation| &relation.0) {
             for (at, &i) in product.iter().enumerate() {
-                pairs.extend(product[at + 1..].iter().filter(|&&j| j != i).map(|&j| (i.max(j), i.min(j))));
+                pairs.extend(
+                    product[at + 1..]
+                        .iter()
+                        .filter(|&&j| j != i)
+                        .map(|&j| (i.max(j), i.min(j))),
+                );
             }
         }
         pairs.sort_unstable();
@@ -152,14 +169,25 @@ impl Problem for Sample {
             let weight = if self.relation_used[k] { 1.0 } else { 0.0 };
             into.f[k] = weight * (relation.value(x) - self.offsets[k]);
             for at in self.structure.relations.range(k) {
-                into.f_values[at] = weight * relation.without(self.structure.relations.index[at]).value(x);
+                into.f_values[at] = weight
+                    * relation
+                        .without(self.structure.relations.index[at])
+                        .value(x);
             }
         }
         for (i, reading) in self.readings.iter().enumerate() {
-            let weight = if reading.used { reading.sigma.recip() } else { 0.0 };
+            let weight = if reading.used {
+                reading.sigma.recip()
+            } else {
+                0.0
+            };
             into.r[i] = weight * (reading.value - reading.of.value(x));
             for at in self.structure.observations.range(i) {
-                into.g_values[at] = weight * reading.of.without(self.structure.observations.index[at]).value(x);
+                into.g_values[at] = weight
+                    * reading
+                        .of
+                        .without(self.structure.observations.index[at])
+                        .value(x);
             }
         }
         Ok(())
@@ -175,7 +203,12 @@ impl Problem for Sample {
 
     fn limit(&self, _x: &[f64], _step: &mut [f64]) {}
 
-    fn curvature(&self, x: &[f64], multipliers: &[f64], into: &mut Vec<(usize, usize, f64)>) -> bool {
+    fn curvature(
+        &self,
+        x: &[f64],
+        multipliers: &[f64],
+        into: &mut Vec<(usize, usize, f64)>,
+    ) -> bool {
         into.clear();
         for (relation, multiplier) in self.relations.iter().zip(multipliers) {
             for i in relation.states() {
@@ -217,7 +250,9 @@ fn null_space(matrix: &DMatrix<f64>, size: f64) -> DMatrix<f64> {
     square.rows_mut(0, matrix.nrows()).copy_from(matrix);
     let svd = square.svd(false, true);
     let vectors = svd.v_t.expect("asked for").transpose();
-    let zero: Vec<usize> = (0..n).filter(|&i| svd.singular_values[i] <= TINY * size).collect();
+    let zero: Vec<usize> = (0..n)
+        .filter(|&i| svd.singular_values[i] <= TINY * size)
+        .collect();
     vectors.select_columns(&zero)
 }
 
@@ -235,7 +270,12 @@ impl Oracle {
             matrix
         };
         let mut a = dense(&structure.relations, &evaluation.f_values);
-        for (&k, _) in structure.bounds.iter().zip(active).filter(|&(_, &active)| !active) {
+        for (&k, _) in structure
+            .bounds
+            .iter()
+            .zip(active)
+            .filter(|&(_, &active)| !active)
+        {
             a.row_mut(k).fill(0.0);
         }
         let g = dense(&structure.observations, &evaluation.g_values);
@@ -248,17 +288,23 @@ impl Oracle {
         let free = null_space(&a_scaled, a_scaled.norm());
         let reduced = &g_scaled * &free;
         let idle = null_space(&reduced, g_scaled.norm());
-        let inverse = (reduced.transpose() * &reduced + &idle * idle.transpose()).try_inverse().expect("regular");
+        let inverse = (reduced.transpose() * &reduced + &idle * idle.transpose())
+            .try_inverse()
+            .expect("regular");
         let scaled = &free * (inverse - &idle * idle.transpose()) * free.transpose();
         let checks = null_space(&reduced.transpose(), g_scaled.norm());
         let residual = &checks * checks.transpose();
         let used = sample.used();
-        let redundancy: Vec<f64> = (0..g.nrows()).map(|i| if used[i] { residual[(i, i)] } else { 0.0 }).collect();
+        let redundancy: Vec<f64> = (0..g.nrows())
+            .map(|i| if used[i] { residual[(i, i)] } else { 0.0 })
+            .collect();
         let relation_rank = n - free.ncols();
         let count = used.iter().filter(|&&used| used).count();
         // l = -A'^+ (G' R r) with R = I - G P G', so cov(l) = A'^+ G' R G A^+.
         let left = null_space(&a.transpose(), a.norm());
-        let inverse = (&a * a.transpose() + &left * left.transpose()).try_inverse().expect("regular");
+        let inverse = (&a * a.transpose() + &left * left.transpose())
+            .try_inverse()
+            .expect("regular");
         let pull = (inverse - &left * left.transpose()) * &a * g.transpose();
         Oracle {
             redundancy,
@@ -275,7 +321,12 @@ impl Oracle {
 
 /// A random network of flow balances: `nodes` balances over streams from and to
 /// nodes or the edge, some streams read, some read as sums, some read twice.
-pub(super) fn random_network(random: &mut Random, nodes: usize, streams: usize, measured: f64) -> Sample {
+pub(super) fn random_network(
+    random: &mut Random,
+    nodes: usize,
+    streams: usize,
+    measured: f64,
+) -> Sample {
     let mut balances = vec![Vec::new(); nodes];
     for j in 0..streams {
         let (from, to) = (random.below(nodes + 1), random.below(nodes + 1));
@@ -288,7 +339,11 @@ pub(super) fn random_network(random: &mut Random, nodes: usize, streams: usize, 
             }
         }
     }
-    let relations = balances.iter().filter(|terms| !terms.is_empty()).map(|terms| Polynomial::linear(terms)).collect();
+    let relations = balances
+        .iter()
+        .filter(|terms| !terms.is_empty())
+        .map(|terms| Polynomial::linear(terms))
+        .collect();
     let mut readings = Vec::new();
     for j in 0..streams {
         while random.uniform() < measured {
@@ -300,12 +355,17 @@ pub(super) fn random_network(random: &mut Random, nodes: usize, streams: usize, 
         if random.uniform() < 0.1 {
             let other = random.below(streams);
             if other != j {
-                readings.push(reading(&[(j, 1.0), (other, random.between(-1.0, 1.0))], random));
+                readings.push(reading(
+                    &[(j, 1.0), (other, random.between(-1.0, 1.0))],
+                    random,
+                ));
             }
         }
     }
     let mut sample = Sample::new(streams, relations, readings, Vec::new());
-    sample.state_scale = (0..streams).map(|_| 10_f64.powf(random.between(-1.0, 1.0))).collect();
+    sample.state_scale = (0..streams)
+        .map(|_| 10_f64.powf(random.between(-1.0, 1.0)))
+        .collect();
     sample
 }
 

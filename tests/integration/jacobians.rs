@@ -5,7 +5,7 @@
 //! The plants are those of `tests/reference`, which between them use every kind
 //! of equipment, every measured quantity and every assumption.
 
-use counterpoise::equations::{Observation, Relation, System};
+use counterpoise::equations::{Observation, System};
 use counterpoise::fluid;
 use counterpoise::plant::{self, Format, Plant, Quantity, StreamId};
 use rand::{Rng, SeedableRng};
@@ -103,21 +103,6 @@ fn check(f: &dyn Fn(&[f64]) -> Option<f64>, x: &[f64], row: &[usize], exact: &[f
     worst.is_finite().then_some(worst)
 }
 
-fn relation_value(system: &System, relation: &Relation, x: &[f64]) -> Option<(f64, Vec<f64>)> {
-    let mut values = vec![0.0; relation.row.len()];
-    let value = relation.evaluate(&system.layout, x, &mut values).ok()?;
-    Some((value, values))
-}
-
-fn observation_value(
-    system: &System,
-    observation: &Observation,
-    x: &[f64],
-) -> Option<(f64, Vec<f64>)> {
-    let i = system.observations.iter().position(|o| o == observation)?;
-    system.predict(i, x)
-}
-
 /// An efficiency over next to no pressure ratio is the quotient of two small
 /// differences, which no finite difference of it resolves.
 fn is_idle_machine(observation: &Observation, x: &[f64]) -> bool {
@@ -137,20 +122,20 @@ fn relations_and_measurements_have_exact_jacobians() {
         let system = System::new(&plant);
         for _ in 0..STATES {
             let x = random_state(&system, &mut random);
-            for relation in &system.relations {
-                let f = |x: &[f64]| Some(relation_value(&system, relation, x)?.0);
-                let (_, exact) = relation_value(&system, relation, &x).unwrap();
+            for (k, relation) in system.relations.iter().enumerate() {
+                let f = |x: &[f64]| Some(system.residual(k, x)?.0);
+                let (_, exact) = system.residual(k, &x).unwrap();
                 let worst = check(&f, &x, &relation.row, &exact).unwrap();
                 assert!(worst < TOLERANCE, "{:?}: {worst:e}", relation.role);
                 checked += 1;
             }
-            for observation in &system.observations {
-                let f = |x: &[f64]| Some(observation_value(&system, observation, x)?.0);
+            for (i, observation) in system.observations.iter().enumerate() {
+                let f = |x: &[f64]| Some(system.predict(i, x)?.0);
                 if is_idle_machine(observation, &x) {
                     without_value += 1;
                     continue;
                 }
-                let exact = observation_value(&system, observation, &x);
+                let exact = system.predict(i, &x);
                 // An efficiency has no value where the isentropic end state lies
                 // outside the range of the properties.
                 let Some(worst) =

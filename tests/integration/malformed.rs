@@ -8,10 +8,20 @@ use std::time::Duration;
 use tokio::io::{AsyncReadExt, AsyncWriteExt};
 use tokio::net::TcpStream;
 
-/// A server with a plant, a batch, and little patience.
+/// A server with a plant, a batch, and small limits.
 async fn service() -> Service {
+    with_patience(Duration::from_secs(10)).await
+}
+
+/// One that gives a client little time: only for clients that are slow, or a
+/// busy machine makes others fail.
+async fn impatient() -> Service {
+    with_patience(Duration::from_millis(300)).await
+}
+
+async fn with_patience(read_timeout: Duration) -> Service {
     let limits = Limits {
-        read_timeout: Duration::from_millis(300),
+        read_timeout,
         document: 64 << 10,
         stream: 256 << 10,
         ..Limits::default()
@@ -131,6 +141,9 @@ async fn deeply_nested() {
 
 #[tokio::test]
 async fn oversized() {
+    let service = service().await;
+    let answer = service.post("application/json", " ".repeat(65 << 10)).await;
+    assert_eq!(answer.headers()["connection"], "close", "the body stands in the way");
     let padded = |length| format!("{}{}", batch("bad", 1, 150.0), " ".repeat(length));
     refused("application/json", padded(64 << 10), StatusCode::PAYLOAD_TOO_LARGE).await;
     refused("application/x-ndjson", padded(256 << 10), StatusCode::PAYLOAD_TOO_LARGE).await;
@@ -226,7 +239,7 @@ const CONTINUE: &[u8] = b"HTTP/1.1 100 Continue\r\n\r\n";
 
 #[tokio::test]
 async fn slow_headers() {
-    let service = service().await;
+    let service = impatient().await;
     let before = contents(&service.database).await;
     is_timeout(&raw(&service, HEAD).await);
     is_timeout(&raw(&service, "POST /v1/pl").await);
@@ -235,7 +248,7 @@ async fn slow_headers() {
 
 #[tokio::test]
 async fn slow_body() {
-    let service = service().await;
+    let service = impatient().await;
     let before = contents(&service.database).await;
     is_timeout(&raw(&service, &format!("{HEAD}content-length: 500\r\n\r\n{{\"batch\": ")).await);
     assert_eq!(contents(&service.database).await, before);
@@ -243,7 +256,7 @@ async fn slow_body() {
 
 #[tokio::test]
 async fn dripping_body() {
-    let service = service().await;
+    let service = impatient().await;
     let before = contents(&service.database).await;
     let drops = futures::stream::unfold((), |()| async {
         tokio::time::sleep(Duration::from_millis(50)).await;

@@ -9,171 +9,58 @@
 
 use std::path::{Path, PathBuf};
 
-use counterpoise::solver::{
-    Classes, Covariance, Evaluation, Options, Outcome, Outside, Problem, Rows, Status, Structure, Symbolic, classify, solve,
-};
+use counterpoise::solver::{Options, Problem, Status, Symbolic, solve};
 use serde_json::Value;
 
 #[path = "../../benches/peers/network.rs"]
 mod network;
+
+#[path = "published_networks/case.rs"]
+mod case;
+
+#[path = "published_networks/pai_fisher.rs"]
+mod pai_fisher;
+
+use case::{Case, Function, linear};
 use network::Network;
 
 fn data(path: &str) -> PathBuf {
-    Path::new(env!("CARGO_MANIFEST_DIR")).join("tests/data").join(path)
+    Path::new(env!("CARGO_MANIFEST_DIR"))
+        .join("tests/data")
+        .join(path)
 }
 
 fn published(name: &str) -> Value {
     let path = data(&format!("published/{name}.json"));
-    let text = std::fs::read_to_string(&path).unwrap_or_else(|error| panic!("{}: {error}", path.display()));
+    let text = std::fs::read_to_string(&path)
+        .unwrap_or_else(|error| panic!("{}: {error}", path.display()));
     serde_json::from_str(&text).expect("JSON")
 }
 
 fn numbers(value: &Value) -> Vec<f64> {
-    value.as_array().expect("a list").iter().map(|v| v.as_f64().expect("a number")).collect()
+    value
+        .as_array()
+        .expect("a list")
+        .iter()
+        .map(|v| v.as_f64().expect("a number"))
+        .collect()
 }
 
 fn matrix(value: &Value) -> Vec<Vec<f64>> {
-    value.as_array().expect("a list").iter().map(numbers).collect()
-}
-
-type Function = Box<dyn Fn(&[f64]) -> (f64, Vec<f64>)>;
-
-/// A small problem: functions of all states that give value and full gradient.
-struct Case {
-    relations: Vec<Function>,
-    /// (function, reading, sigma)
-    observations: Vec<(Function, f64, f64)>,
-    structure: Structure,
-    state_scale: Vec<f64>,
-    relation_scale: Vec<f64>,
-}
-
-/// The sum of c_j x_j less a constant, and the states it depends on.
-fn linear(row: &[f64], constant: f64) -> (Function, Vec<usize>) {
-    let states = (0..row.len()).filter(|&j| row[j] != 0.0).collect();
-    let row = row.to_vec();
-    let function = move |x: &[f64]| (row.iter().zip(x).map(|(c, v)| c * v).sum::<f64>() - constant, row.clone());
-    (Box::new(function), states)
-}
-
-impl Case {
-    fn new(
-        states: usize,
-        relations: Vec<(Function, Vec<usize>)>,
-        observations: Vec<((Function, Vec<usize>), f64, f64)>,
-    ) -> Self {
-        let relation_states: Vec<Vec<usize>> = relations.iter().map(|(_, states)| states.clone()).collect();
-        let observed: Vec<Vec<usize>> = observations.iter().map(|((_, states), _, _)| states.clone()).collect();
-        Case {
-            state_scale: vec![1.0; states],
-            relation_scale: vec![1.0; relations.len()],
-            structure: Structure {
-                states,
-                relations: Rows::from_lists(&relation_states),
-                observations: Rows::from_lists(&observed),
-                bounds: Vec::new(),
-                pairs: Vec::new(),
-            },
-            relations: relations.into_iter().map(|(function, _)| function).collect(),
-            observations: observations.into_iter().map(|((function, _), y, sigma)| (function, y, sigma)).collect(),
-        }
-    }
-
-    /// A network of flows with the given balances; `readings` as (stream, value, sigma).
-    fn network(balances: &[Vec<f64>], readings: &[(usize, f64, f64)]) -> Self {
-        let streams = balances[0].len();
-        let observations = readings
-            .iter()
-            .map(|&(j, y, sigma)| {
-                let unit: Vec<f64> = (0..streams).map(|i| f64::from(i == j)).collect();
-                (linear(&unit, 0.0), y, sigma)
-            })
-            .collect();
-        let mut case = Case::new(streams, balances.iter().map(|row| linear(row, 0.0)).collect(), observations);
-        for &(j, _, sigma) in readings {
-            case.state_scale[j] = sigma;
-        }
-        case
-    }
-
-    fn solve(&self, start: &[f64]) -> Solved {
-        let symbolic = Symbolic::new(&self.structure);
-        let outcome = solve(self, &symbolic, start, &Options::default());
-        assert_eq!(outcome.status, Status::Converged);
-        let used = vec![true; self.observations.len()];
-        let classes =
-            classify(&self.structure, &outcome.evaluation, &self.state_scale, &self.relation_scale, &[], &used);
-        let covariance = Covariance::new(
-            &symbolic,
-            &self.structure,
-            &outcome.evaluation,
-            &self.state_scale,
-            &self.relation_scale,
-            &classes,
-        );
-        let redundancy: Vec<f64> = (0..used.len()).map(|i| covariance.redundancy(i)).collect();
-        let leak_ratio = (0..self.relations.len())
-            .map(|k| outcome.multipliers[k].powi(2) / covariance.multiplier_variance(k))
-            .collect();
-        let covariances = (0..start.len())
-            .map(|i| (0..start.len()).map(|j| covariance.state_covariance(i, j)).collect())
-            .collect();
-        Solved { redundancy, leak_ratio, covariances, classes, outcome }
-    }
-}
-
-impl Problem for Case {
-    fn structure(&self) -> &Structure {
-        &self.structure
-    }
-
-    fn evaluate(&self, x: &[f64], into: &mut Evaluation) -> Result<(), Outside> {
-        for (k, function) in self.relations.iter().enumerate() {
-            let (value, gradient) = function(x);
-            into.f[k] = value;
-            for at in self.structure.relations.range(k) {
-                into.f_values[at] = gradient[self.structure.relations.index[at]];
-            }
-        }
-        for (i, (function, y, sigma)) in self.observations.iter().enumerate() {
-            let (value, gradient) = function(x);
-            into.r[i] = (y - value) / sigma;
-            for at in self.structure.observations.range(i) {
-                into.g_values[at] = gradient[self.structure.observations.index[at]] / sigma;
-            }
-        }
-        Ok(())
-    }
-
-    fn state_scale(&self) -> &[f64] {
-        &self.state_scale
-    }
-
-    fn relation_scale(&self) -> &[f64] {
-        &self.relation_scale
-    }
-
-    fn limit(&self, _x: &[f64], _step: &mut [f64]) {}
-}
-
-struct Solved {
-    outcome: Outcome,
-    classes: Classes,
-    redundancy: Vec<f64>,
-    /// Multiplier squared over its variance: the likelihood ratio of a leak.
-    leak_ratio: Vec<f64>,
-    covariances: Vec<Vec<f64>>,
-}
-
-impl Solved {
-    fn standardised(&self, i: usize) -> f64 {
-        self.outcome.evaluation.r[i] / self.redundancy[i].sqrt()
-    }
+    value
+        .as_array()
+        .expect("a list")
+        .iter()
+        .map(numbers)
+        .collect()
 }
 
 #[track_caller]
 fn near(got: f64, expected: f64, tolerance: f64) {
-    assert!((got - expected).abs() <= tolerance, "got {got}, expected {expected} within {tolerance}");
+    assert!(
+        (got - expected).abs() <= tolerance,
+        "got {got}, expected {expected} within {tolerance}"
+    );
 }
 
 #[track_caller]
@@ -185,7 +72,12 @@ fn all_near(got: &[f64], expected: &[f64], relative: f64) {
 }
 
 fn all_read(values: &[f64], sigma: &[f64]) -> Vec<(usize, f64, f64)> {
-    values.iter().zip(sigma).enumerate().map(|(j, (&y, &sigma))| (j, y, sigma)).collect()
+    values
+        .iter()
+        .zip(sigma)
+        .enumerate()
+        .map(|(j, (&y, &sigma))| (j, y, sigma))
+        .collect()
 }
 
 #[test]
@@ -194,17 +86,37 @@ fn exchanger_with_bypass_all_flows_read() {
     let (problem, expected) = (&case["problem"], &case["expected"]);
     let readings = all_read(&numbers(&problem["measured"]), &numbers(&problem["sigma"]));
     let solved = Case::network(&matrix(&problem["incidence"]), &readings).solve(&[50.0; 6]);
-    for (got, printed) in solved.outcome.x.iter().zip(numbers(&expected["published"]["reconciled"])) {
+    for (got, printed) in solved
+        .outcome
+        .x
+        .iter()
+        .zip(numbers(&expected["published"]["reconciled"]))
+    {
         near(*got, printed, 0.005);
     }
     let computed = &expected["computed"];
-    near(solved.outcome.objective, computed["J"].as_f64().expect("J"), 1e-6);
+    near(
+        solved.outcome.objective,
+        computed["J"].as_f64().expect("J"),
+        1e-6,
+    );
     assert_eq!(solved.classes.degrees_of_freedom, 4);
-    for (j, variance) in numbers(&computed["reconciled_variance_diag"]).into_iter().enumerate() {
+    for (j, variance) in numbers(&computed["reconciled_variance_diag"])
+        .into_iter()
+        .enumerate()
+    {
         near(solved.covariances[j][j], variance, 1e-7);
     }
-    near(solved.covariances[0][1], computed["cov_1_2"].as_f64().expect("a number"), 1e-7);
-    near(solved.covariances[1][2], computed["cov_2_3"].as_f64().expect("a number"), 1e-7);
+    near(
+        solved.covariances[0][1],
+        computed["cov_1_2"].as_f64().expect("a number"),
+        1e-7,
+    );
+    near(
+        solved.covariances[1][2],
+        computed["cov_2_3"].as_f64().expect("a number"),
+        1e-7,
+    );
 }
 
 #[test]
@@ -212,11 +124,19 @@ fn level_network_of_differences_between_unread_heads() {
     let case = published("lin-level-net-unweighted");
     let problem = &case["problem"];
     let rows = matrix(&problem["design_rows"]);
-    let readings = rows.iter().zip(numbers(&problem["obs_vector"])).map(|(row, y)| (linear(row, 0.0), y, 1.0)).collect();
+    let readings = rows
+        .iter()
+        .zip(numbers(&problem["obs_vector"]))
+        .map(|(row, y)| (linear(row, 0.0), y, 1.0))
+        .collect();
     let solved = Case::new(3, Vec::new(), readings).solve(&[100.0; 3]);
     let published = &case["expected"]["published"];
     for (j, name) in ["A", "B", "C"].into_iter().enumerate() {
-        near(solved.outcome.x[j], published[name].as_f64().expect("a level"), 0.0006);
+        near(
+            solved.outcome.x[j],
+            published[name].as_f64().expect("a level"),
+            0.0006,
+        );
     }
     assert_eq!(solved.classes.degrees_of_freedom, 4);
     let unit_weight = (solved.outcome.objective / 4.0).sqrt();
@@ -227,7 +147,11 @@ fn level_network_of_differences_between_unread_heads() {
 fn two_product_formula() {
     let case = published("met-two-product");
     let problem = &case["problem"];
-    let (feed, rich, tail) = (numbers(&problem["feed"]), numbers(&problem["concentrate"]), numbers(&problem["tailing"]));
+    let (feed, rich, tail) = (
+        numbers(&problem["feed"]),
+        numbers(&problem["concentrate"]),
+        numbers(&problem["tailing"]),
+    );
     let printed = numbers(&case["expected"]["published_C_percent"]);
     for i in 0..printed.len() {
         // Feed f = C c + (1 - C) t with C the fraction that becomes concentrate.
@@ -247,13 +171,19 @@ fn steam_metering_system_of_28_streams() {
         .iter()
         .map(|node| {
             let mut row = vec![0.0; 28];
-            node.iter().for_each(|signed| row[signed.abs() as usize - 1] = signed.signum());
+            node.iter()
+                .for_each(|signed| row[signed.abs() as usize - 1] = signed.signum());
             row
         })
         .collect();
     let measured = numbers(&problem["measured"]);
-    let solved = Case::network(&balances, &all_read(&measured, &numbers(&problem["sigma"]))).solve(&measured);
-    near(solved.outcome.objective, expected["J"].as_f64().expect("J"), 1e-5);
+    let solved = Case::network(&balances, &all_read(&measured, &numbers(&problem["sigma"])))
+        .solve(&measured);
+    near(
+        solved.outcome.objective,
+        expected["J"].as_f64().expect("J"),
+        1e-5,
+    );
     assert_eq!(solved.classes.degrees_of_freedom, 11);
     assert!(solved.classes.redundant.iter().all(|&redundant| redundant));
     all_near(&solved.outcome.x, &numbers(&expected["reconciled"]), 1e-6);
@@ -262,55 +192,20 @@ fn steam_metering_system_of_28_streams() {
     }
 }
 
-/// The six equations in x1..x5, u1..u3; gradient by hand.
-fn pai_fisher_relations() -> Vec<(Function, Vec<usize>)> {
-    let all: Vec<usize> = (0..8).collect();
-    let with = |function: fn(&[f64]) -> (f64, Vec<f64>)| -> (Function, Vec<usize>) { (Box::new(function), all.clone()) };
-    vec![
-        with(|v| {
-            let [x1, x2, x3, _, _, u1, u2, u3] = states(v);
-            let f = 0.5 * x1 * x1 - 0.7 * x2 + x3 * u1 + x2 * x2 * u1 * u2 + 2.0 * x3 * u3 * u3 - 255.8;
-            let dx2 = -0.7 + 2.0 * x2 * u1 * u2;
-            (f, vec![x1, dx2, u1 + 2.0 * u3 * u3, 0.0, 0.0, x3 + x2 * x2 * u2, x2 * x2 * u1, 4.0 * x3 * u3])
-        }),
-        with(|v| {
-            let [x1, x2, x3, _, _, u1, u2, u3] = states(v);
-            let f = x1 - 2.0 * x2 + 3.0 * x1 * x3 - 2.0 * x2 * u1 - x2 * u2 * u3 + 111.2;
-            let dx2 = -2.0 - 2.0 * u1 - u2 * u3;
-            (f, vec![1.0 + 3.0 * x3, dx2, 3.0 * x1, 0.0, 0.0, -2.0 * x2, -x2 * u3, -x2 * u2])
-        }),
-        with(|v| {
-            let [x1, x2, x3, _, _, u1, u2, u3] = states(v);
-            let f = x3 * u1 - x1 + 3.0 * x2 + x1 * u2 - x3 * u3.sqrt() - 33.57;
-            (f, vec![u2 - 1.0, 3.0, u1 - u3.sqrt(), 0.0, 0.0, x3, x1, -0.5 * x3 / u3.sqrt()])
-        }),
-        with(|v| {
-            let [x1, _, x3, x4, _, _, u2, u3] = states(v);
-            (x4 - x1 - x3 * x3 + u2 + 3.0 * u3, vec![-1.0, 0.0, -2.0 * x3, 1.0, 0.0, 0.0, 1.0, 3.0])
-        }),
-        with(|v| {
-            let [_, _, x3, _, x5, _, u2, u3] = states(v);
-            (x5 - 2.0 * x3 * u2 * u3, vec![0.0, 0.0, -2.0 * u2 * u3, 0.0, 1.0, 0.0, -2.0 * x3 * u3, -2.0 * x3 * u2])
-        }),
-        with(|v| {
-            let [x1, x2, x3, _, _, u1, u2, u3] = states(v);
-            (2.0 * x1 + x2 * x3 * u1 + u2 - u3 - 126.6, vec![2.0, x3 * u1, x2 * u1, 0.0, 0.0, x2 * x3, 1.0, -1.0])
-        }),
-    ]
-}
-
-fn states(v: &[f64]) -> [f64; 8] {
-    v.try_into().expect("eight states")
-}
-
 #[test]
 fn nonlinear_problem_with_three_unread_variables() {
     let case = published("nl-pai-fisher");
     let start = &case["problem"]["start"];
-    let start: Vec<f64> = numbers(&start["x"]).into_iter().chain(numbers(&start["u"])).collect();
+    let start: Vec<f64> = numbers(&start["x"])
+        .into_iter()
+        .chain(numbers(&start["u"]))
+        .collect();
     let mut measured = numbers(&case["problem"]["measured"]);
     let expected = &case["expected"];
-    for (fifth, answer) in [(None, &expected["computed"]), (Some(5.4), &expected["variant_x5_5p4"])] {
+    for (fifth, answer) in [
+        (None, &expected["computed"]),
+        (Some(5.4), &expected["variant_x5_5p4"]),
+    ] {
         measured[4] = fifth.unwrap_or(measured[4]);
         let observations = (0..5)
             .map(|j| {
@@ -318,16 +213,26 @@ fn nonlinear_problem_with_three_unread_variables() {
                 (linear(&unit, 0.0), measured[j], 1.0)
             })
             .collect();
-        let solved = Case::new(8, pai_fisher_relations(), observations).solve(&start);
-        let reconciled: Vec<f64> = numbers(&answer["x"]).into_iter().chain(numbers(&answer["u"])).collect();
+        let solved = Case::new(8, pai_fisher::relations(), observations).solve(&start);
+        let reconciled: Vec<f64> = numbers(&answer["x"])
+            .into_iter()
+            .chain(numbers(&answer["u"]))
+            .collect();
         all_near(&solved.outcome.x, &reconciled, 1e-6);
-        near(solved.outcome.objective, answer["J"].as_f64().expect("J"), 1e-6);
+        near(
+            solved.outcome.objective,
+            answer["J"].as_f64().expect("J"),
+            1e-6,
+        );
         assert_eq!(solved.classes.degrees_of_freedom, 3);
         if fifth.is_none() {
             let printed = &expected["published"];
             let tolerances = [6e-5, 6e-5, 6e-5, 6e-5, 6e-5, 6e-4, 6e-5, 6e-5];
-            let printed = numbers(&printed["x"]).into_iter().chain(numbers(&printed["u"]));
-            for ((got, printed), tolerance) in solved.outcome.x.iter().zip(printed).zip(tolerances) {
+            let printed = numbers(&printed["x"])
+                .into_iter()
+                .chain(numbers(&printed["u"]));
+            for ((got, printed), tolerance) in solved.outcome.x.iter().zip(printed).zip(tolerances)
+            {
                 near(*got, printed, tolerance);
             }
         }
@@ -354,11 +259,16 @@ fn binary_column_with_and_without_normalised_compositions() {
         (Box::new(function), vec![0, j, 3, 3 + j, 6, 6 + j])
     };
     let whole = |first: usize| {
-        let row: Vec<f64> = (0..9).map(|i| f64::from(i == first || i == first + 1)).collect();
+        let row: Vec<f64> = (0..9)
+            .map(|i| f64::from(i == first || i == first + 1))
+            .collect();
         linear(&row, 1.0)
     };
     let expected = &case["expected"];
-    for (normalised, answer, freedom) in [(false, &expected["computed_a"], 2), (true, &expected["computed_b"], 5)] {
+    for (normalised, answer, freedom) in [
+        (false, &expected["computed_a"], 2),
+        (true, &expected["computed_b"], 5),
+    ] {
         let mut relations = vec![component(1), component(2)];
         if normalised {
             relations.extend([whole(1), whole(4), whole(7)]);
@@ -373,7 +283,11 @@ fn binary_column_with_and_without_normalised_compositions() {
         problem.state_scale = sigma.clone();
         let solved = problem.solve(&measured);
         all_near(&solved.outcome.x, &numbers(&answer["x"]), 1e-5);
-        all_near(&[solved.outcome.objective], &[answer["J"].as_f64().expect("J")], 1e-5);
+        all_near(
+            &[solved.outcome.objective],
+            &[answer["J"].as_f64().expect("J")],
+            1e-5,
+        );
         assert_eq!(solved.classes.degrees_of_freedom, freedom);
     }
 }
@@ -383,31 +297,59 @@ fn observability_and_redundancy_of_partly_read_flows() {
     let case = published("obs-nj-classification");
     let problem = &case["problem"];
     let balances = matrix(&problem["incidence"]);
-    for (set, name) in problem["sets"].as_array().expect("sets").iter().zip(["set1", "set2"]) {
+    for (set, name) in problem["sets"]
+        .as_array()
+        .expect("sets")
+        .iter()
+        .zip(["set1", "set2"])
+    {
         let expected = &case["expected"]["computed"][name];
         let readings: Vec<(usize, f64, f64)> = set["measured"]
             .as_object()
             .expect("readings")
             .iter()
-            .map(|(stream, value)| (stream.parse::<usize>().expect("a number") - 1, value.as_f64().expect("a flow"), 1.0))
+            .map(|(stream, value)| {
+                (
+                    stream.parse::<usize>().expect("a number") - 1,
+                    value.as_f64().expect("a flow"),
+                    1.0,
+                )
+            })
             .collect();
         let solved = Case::network(&balances, &readings).solve(&[50.0; 6]);
-        let streams = |key: &str| -> Vec<usize> { numbers(&expected[key]).iter().map(|&v| v as usize - 1).collect() };
+        let streams = |key: &str| -> Vec<usize> {
+            numbers(&expected[key])
+                .iter()
+                .map(|&v| v as usize - 1)
+                .collect()
+        };
         let read: Vec<usize> = readings.iter().map(|&(j, _, _)| j).collect();
         let unread = |observable: bool| -> Vec<usize> {
-            (0..6).filter(|j| !read.contains(j) && solved.classes.state_observable(*j) == observable).collect()
+            (0..6)
+                .filter(|j| !read.contains(j) && solved.classes.state_observable(*j) == observable)
+                .collect()
         };
         assert_eq!(unread(true), streams("observable"));
         assert_eq!(unread(false), streams("unobservable"));
         let of_class = |redundant: bool| -> Vec<usize> {
-            (0..read.len()).filter(|&i| solved.classes.redundant[i] == redundant).map(|i| read[i]).collect()
+            (0..read.len())
+                .filter(|&i| solved.classes.redundant[i] == redundant)
+                .map(|i| read[i])
+                .collect()
         };
         assert_eq!(of_class(true), streams("redundant"));
         assert_eq!(of_class(false), streams("nonredundant"));
-        assert_eq!(solved.classes.degrees_of_freedom as f64, expected["dof"].as_f64().expect("dof"));
+        assert_eq!(
+            solved.classes.degrees_of_freedom as f64,
+            expected["dof"].as_f64().expect("dof")
+        );
         let estimates = match name {
             "set1" => numbers(&case["expected"]["published_remembered"]["set1_estimates"]),
-            _ => vec![case["expected"]["computed"]["set2_estimate_1_and_6"].as_f64().expect("an estimate")],
+            _ => vec![
+                case["expected"]["computed"]["set2_estimate_1_and_6"]
+                    .as_f64()
+                    .expect("an estimate"),
+            ],
         };
         for (j, estimate) in estimates.into_iter().enumerate() {
             near(solved.outcome.x[j], estimate, 0.005);
@@ -423,26 +365,59 @@ fn statistics_of_a_biased_flow() {
     let balances = matrix(&problem["incidence"]);
     let solved = Case::network(&balances, &readings).solve(&[50.0; 6]);
     let computed = &expected["computed"];
-    near(solved.outcome.objective, expected["published_remembered"]["global_test"].as_f64().expect("a number"), 0.0005);
+    near(
+        solved.outcome.objective,
+        expected["published_remembered"]["global_test"]
+            .as_f64()
+            .expect("a number"),
+        0.0005,
+    );
     all_near(&solved.outcome.x, &numbers(&computed["reconciled"]), 1e-8);
     for (i, z) in numbers(&computed["measurement_z"]).into_iter().enumerate() {
         near(solved.standardised(i).abs(), z, 1e-4);
     }
-    for (i, ratio) in numbers(&computed["glr_measurement_T"]).into_iter().enumerate() {
+    for (i, ratio) in numbers(&computed["glr_measurement_T"])
+        .into_iter()
+        .enumerate()
+    {
         near(solved.standardised(i).powi(2), ratio, 1e-4);
     }
     for (k, ratio) in numbers(&computed["glr_leak_T"]).into_iter().enumerate() {
         near(solved.leak_ratio[k], ratio, 1e-4);
     }
-    let largest = (0..6).max_by(|&a, &b| solved.standardised(a).abs().total_cmp(&solved.standardised(b).abs()));
+    let largest = (0..6).max_by(|&a, &b| {
+        solved
+            .standardised(a)
+            .abs()
+            .total_cmp(&solved.standardised(b).abs())
+    });
     assert_eq!(largest, Some(1));
     let bias = solved.outcome.evaluation.r[1] / solved.redundancy[1];
-    near(bias, computed["bias_estimate_2"].as_f64().expect("a bias"), 1e-6);
-    let others: Vec<(usize, f64, f64)> = readings.iter().copied().filter(|&(j, _, _)| j != 1).collect();
+    near(
+        bias,
+        computed["bias_estimate_2"].as_f64().expect("a bias"),
+        1e-6,
+    );
+    let others: Vec<(usize, f64, f64)> = readings
+        .iter()
+        .copied()
+        .filter(|&(j, _, _)| j != 1)
+        .collect();
     let without = Case::network(&balances, &others).solve(&[50.0; 6]);
-    near(without.outcome.objective, computed["J_after_deleting_2"].as_f64().expect("J"), 1e-6);
-    let kept: Vec<f64> = [0, 2, 3, 4, 5].iter().map(|&j| without.outcome.x[j]).collect();
-    all_near(&kept, &numbers(&computed["x_after_deleting_2_streams_13456"]), 1e-8);
+    near(
+        without.outcome.objective,
+        computed["J_after_deleting_2"].as_f64().expect("J"),
+        1e-6,
+    );
+    let kept: Vec<f64> = [0, 2, 3, 4, 5]
+        .iter()
+        .map(|&j| without.outcome.x[j])
+        .collect();
+    all_near(
+        &kept,
+        &numbers(&computed["x_after_deleting_2_streams_13456"]),
+        1e-8,
+    );
 }
 
 #[test]
@@ -457,7 +432,11 @@ fn networks_reach_the_objective_of_a_general_purpose_optimiser_or_a_lower_one() 
         let outcome = solve(&network, &symbolic, &network.start, &Options::default());
         assert_eq!(outcome.status, Status::Converged, "{name}");
         let peer = objective.as_f64().expect("a number");
-        assert!(outcome.objective <= peer * (1.0 + 1e-6), "{name}: {} against {peer}", outcome.objective);
+        assert!(
+            outcome.objective <= peer * (1.0 + 1e-6),
+            "{name}: {} against {peer}",
+            outcome.objective
+        );
         assert!(outcome.worst_residual_scaled <= 1e-10);
     }
 }

@@ -87,12 +87,11 @@ impl Differences {
 /// it likes.
 fn imbalances<'a>(ours: &'a Value, theirs: &'a Value) -> Vec<(String, &'a Value, &'a Value)> {
     let mut pairs = vec![("energy".to_owned(), &ours["energy"], &theirs["energy"])];
-    let empty = serde_json::Map::new();
-    let (a, b) = (
-        ours["mass"].as_object().unwrap_or(&empty),
-        theirs["mass"].as_object().unwrap_or(&empty),
-    );
-    if let ([one], [other]) = (&a.values().collect::<Vec<_>>()[..], &b.values().collect::<Vec<_>>()[..]) {
+    let sides = |imbalance: &'a Value| -> Vec<(&'a String, &'a Value)> {
+        imbalance["mass"].as_object().map_or_else(Vec::new, |sides| sides.iter().collect())
+    };
+    let (a, b) = (sides(ours), sides(theirs));
+    if let ([(_, one)], [(_, other)]) = (&a[..], &b[..]) {
         pairs.push(("mass".to_owned(), one, other));
         return pairs;
     }

@@ -154,7 +154,13 @@ fn serve(directory: &Path) -> (Child, Lines<BufReader<ChildStderr>>, String) {
 #[tokio::test]
 async fn a_killed_service_has_lost_nothing_that_it_acknowledged() {
     let directory = tempfile::tempdir().expect("a directory");
-    let (mut child, _log, mut address) = serve(directory.path());
+    let start = || {
+        let (child, log, address) = serve(directory.path());
+        // A pipe that nobody reads fills up, and a log that waits stops the rest.
+        std::thread::spawn(move || log.for_each(drop));
+        (child, address)
+    };
+    let (mut child, mut address) = start();
     let client = reqwest::Client::new();
     let put = client.put(format!("http://{address}/v1/plants/mixer"));
     let put = put.header("content-type", "application/toml").body(PLANT).send().await;
@@ -175,14 +181,14 @@ async fn a_killed_service_has_lost_nothing_that_it_acknowledged() {
                 acknowledged.push(name);
             }
             if acknowledged.len() >= 20 * (round + 1) {
-                // SIGKILL, in the middle of the others.
-                child.kill().expect("killed");
                 break;
             }
         }
-        drop(posts);
+        // SIGKILL, in the middle of the others.
+        child.kill().expect("killed");
         child.wait().expect("an end");
-        (child, _, address) = serve(directory.path());
+        drop(posts);
+        (child, address) = start();
     }
     assert!(acknowledged.len() >= 60, "{}", acknowledged.len());
     for name in &acknowledged {
