@@ -16,7 +16,11 @@ pub struct Config {
     pub listen: SocketAddr,
 
     /// Database file; made where it is missing.
-    #[arg(long, env = "COUNTERPOISE_DATABASE", default_value = "counterpoise.sqlite")]
+    #[arg(
+        long,
+        env = "COUNTERPOISE_DATABASE",
+        default_value = "counterpoise.sqlite"
+    )]
     pub database: PathBuf,
 
     /// What a service can be held to.
@@ -106,7 +110,9 @@ fn at_least_one(text: &str) -> Result<usize, String> {
 }
 
 fn seconds(text: &str) -> Result<Duration, String> {
-    let number: f64 = text.parse().map_err(|_| "a number of seconds is needed".to_owned())?;
+    let number: f64 = text
+        .parse()
+        .map_err(|_| "a number of seconds is needed".to_owned())?;
     match Duration::try_from_secs_f64(number) {
         Ok(duration) if !duration.is_zero() => Ok(duration),
         _ => Err("a positive number of seconds is needed".to_owned()),

@@ -19,6 +19,7 @@ fn main() -> ExitCode {
         Command::Check(check) => cli::check(&check),
         Command::Reconcile(reconcile) => cli::reconcile(&reconcile),
         Command::Openapi => cli::openapi(),
+        Command::MakeDemoFixture { out } => cli::make_demo_fixture(&out),
     };
     outcome.unwrap_or_else(|error| {
         eprintln!("error: {error:#}");

@@ -21,7 +21,9 @@ fn main() {
     };
     let network = Network::read(Path::new(&file));
     let repetitions: usize = repetitions.parse().expect("a number of repetitions");
+    // A relation holds to the tolerance that IPOPT is given; 1e-6 sigma is 1e-8 of a flow.
     let options = Options {
+        tolerance_relation: 1e-9,
         tolerance_step: 1e-6,
         ..Options::default()
     };

@@ -1,9 +1,9 @@
 //! `check`: every fault of a plant file, or what its tags can determine.
 
+use super::CAUTION;
 use super::input::{self, Read, Show};
 use super::table::{Table, fixed, number};
 use super::text::class_name;
-use super::CAUTION;
 use crate::pipeline::{self, Compiled};
 use crate::report::{Assessment, Class, Observability};
 use clap::{Args, ValueEnum};
@@ -46,7 +46,9 @@ pub fn check(arguments: &Check) -> anyhow::Result<ExitCode> {
         Read::Plant(file) => {
             let title = file.plant.title.clone();
             let mut assessment = pipeline::assess(&Compiled::new(file.plant, 1));
-            assessment.warnings.extend(file.warnings.iter().map(ToString::to_string));
+            assessment
+                .warnings
+                .extend(file.warnings.iter().map(ToString::to_string));
             if json {
                 println!("{}", serde_json::to_string_pretty(&assessment)?);
             } else {
@@ -73,7 +75,13 @@ pub(super) fn describe(title: &str, assessment: &Assessment) -> String {
         assessment.degrees_of_freedom,
         assessment.unobservable_directions,
     );
-    let mut table = Table::new(&["<tag or assumption", "<class", "redundancy", "smallest bias found", "<unit"]);
+    let mut table = Table::new(&[
+        "<tag or assumption",
+        "<class",
+        "redundancy",
+        "smallest bias found",
+        "<unit",
+    ]);
     for (name, tag) in assessment.tags.iter().chain(&assessment.assumptions) {
         table.row(vec![
             name.clone(),
@@ -84,9 +92,20 @@ pub(super) fn describe(title: &str, assessment: &Assessment) -> String {
         ]);
     }
     let _ = writeln!(text, "{table}");
-    let mut streams = Table::new(&["<stream", "<mass flow", "<pressure", "<temperature", "<enthalpy"]);
+    let mut streams = Table::new(&[
+        "<stream",
+        "<mass flow",
+        "<pressure",
+        "<temperature",
+        "<enthalpy",
+    ]);
     for (name, stream) in &assessment.streams {
-        let quantities = [stream.mass_flow, stream.pressure, stream.temperature, stream.enthalpy];
+        let quantities = [
+            stream.mass_flow,
+            stream.pressure,
+            stream.temperature,
+            stream.enthalpy,
+        ];
         if quantities.contains(&Observability::Unobservable) {
             let mut row = vec![name.clone()];
             row.extend(quantities.map(|class| match class {
@@ -99,12 +118,19 @@ pub(super) fn describe(title: &str, assessment: &Assessment) -> String {
     if streams.is_empty() {
         let _ = writeln!(text, "Every quantity of every stream is observable.\n");
     } else {
-        let _ = writeln!(text, "Streams that are not determined completely:\n{streams}");
+        let _ = writeln!(
+            text,
+            "Streams that are not determined completely:\n{streams}"
+        );
     }
     if !assessment.unobservable.is_empty() {
         let _ = writeln!(text, "Unobservable, and why:");
         for quantity in &assessment.unobservable {
-            let _ = writeln!(text, "  {} of {}: {}", quantity.quantity, quantity.of, quantity.why);
+            let _ = writeln!(
+                text,
+                "  {} of {}: {}",
+                quantity.quantity, quantity.of, quantity.why
+            );
         }
         text.push('\n');
     }

@@ -9,7 +9,7 @@ use anyhow::{Context, bail, ensure};
 use clap::Args;
 use futures::StreamExt;
 use indicatif::{ProgressBar, ProgressStyle};
-use reqwest::{Client, Response, StatusCode};
+use reqwest::{Client, Response};
 use std::net::{Ipv4Addr, SocketAddr, TcpListener};
 use std::path::PathBuf;
 
@@ -21,6 +21,9 @@ const BATCHES: &str = include_str!("../../fixtures/demo/batches.ndjson");
 
 /// The port that people expect; another free one is taken where it is not free.
 const USUAL_PORT: u16 = 8080;
+
+/// The status of an answer to a name that other content has taken.
+const CONFLICT: u16 = 409;
 
 /// Batches on their way at once.
 const TOGETHER: usize = 8;
@@ -64,7 +67,10 @@ impl Demo {
             listen,
             database: self.database.clone(),
             bounds: self.bounds.clone(),
-            log: Log { log_format: Default::default(), log: self.log.clone() },
+            log: Log {
+                log_format: Default::default(),
+                log: self.log.clone(),
+            },
         }
     }
 }
@@ -79,8 +85,13 @@ pub async fn demo(demo: &Demo, address: SocketAddr) -> anyhow::Result<()> {
     let client = Client::new();
     let name = put_plant(&client, &base).await?;
     let reports = post_all(&client, &base, &name, demo).await?;
-    let assessment: Assessment =
-        fetch(client.get(format!("{base}/v1/plants/{name}/assessment")).send().await?).await?;
+    let assessment: Assessment = fetch(
+        client
+            .get(format!("{base}/v1/plants/{name}/assessment"))
+            .send()
+            .await?,
+    )
+    .await?;
     print!("{}", Summary::new(&reports, &assessment));
     println!("{}", examples(&base, &name, &reports));
     if !demo.exit {
@@ -91,12 +102,17 @@ pub async fn demo(demo: &Demo, address: SocketAddr) -> anyhow::Result<()> {
 
 async fn put_plant(client: &Client, base: &str) -> anyhow::Result<String> {
     let plant: toml::Table = toml::from_str(PLANT).context("the demo plant")?;
-    let name = plant.get("plant").and_then(toml::Value::as_str).context("the demo plant's name")?;
+    let name = plant
+        .get("plant")
+        .and_then(toml::Value::as_str)
+        .context("the demo plant's name")?;
     let request = client
         .put(format!("{base}/v1/plants/{name}"))
         .header("content-type", "application/toml")
         .body(PLANT);
-    let _: serde_json::Value = fetch(request.send().await?).await.context("the demo plant")?;
+    let _: serde_json::Value = fetch(request.send().await?)
+        .await
+        .context("the demo plant")?;
     println!("An invented plant: {base}/v1/plants/{name}");
     Ok(name.to_owned())
 }
@@ -114,7 +130,9 @@ async fn post_all(
     let address = format!("{base}/v1/plants/{plant}/batches");
     let mut answers = futures::stream::iter(batches)
         .map(|batch| {
-            let request = client.post(&address).header("content-type", "application/json");
+            let request = client
+                .post(&address)
+                .header("content-type", "application/json");
             async move { request.body(batch).send().await }
         })
         .buffered(TOGETHER);
@@ -122,7 +140,7 @@ async fn post_all(
     while let Some(answer) = answers.next().await {
         let answer = answer?;
         ensure!(
-            answer.status() != StatusCode::CONFLICT,
+            answer.status().as_u16() != CONFLICT,
             "{} holds another version of the demo: remove it, or name another with --database",
             demo.database.display()
         );
@@ -150,7 +168,10 @@ fn examples(base: &str, plant: &str, reports: &[Report]) -> String {
     let worst = worst.max_by(|a, b| a.0.total_cmp(&b.0));
     let mut table = Table::new(&["<Look at", "<"]);
     table.row(vec!["all routes".into(), format!("{base}/docs/")]);
-    table.row(vec!["verdicts".into(), format!("{base}/v1/plants/{plant}/batches?limit=12")]);
+    table.row(vec![
+        "verdicts".into(),
+        format!("{base}/v1/plants/{plant}/batches?limit=12"),
+    ]);
     if let Some((statistic, batch)) = worst {
         let batch = batch.replace(':', "%3A");
         table.row(vec![

@@ -40,12 +40,19 @@ pub(super) fn plant_file(path: &Path, show: Show) -> anyhow::Result<Read> {
         _ => &[],
     };
     for fault in faults {
-        eprintln!("{}", plant::render(fault, &source, &path.display().to_string()));
+        eprintln!(
+            "{}",
+            plant::render(fault, &source, &path.display().to_string())
+        );
     }
     Ok(match read {
         Ok(file) => Read::Plant(Box::new(file)),
         Err(faults) => {
-            let errors = faults.0.iter().filter(|fault| fault.severity == Severity::Error).count();
+            let errors = faults
+                .0
+                .iter()
+                .filter(|fault| fault.severity == Severity::Error)
+                .count();
             let noun = if errors == 1 { "error" } else { "errors" };
             eprintln!("{}: {errors} {noun}; nothing was done", path.display());
             Read::Faulty(faults.0)

@@ -18,6 +18,7 @@ pub use reconcile::{Reconcile, reconcile};
 
 use crate::config::Config;
 use clap::{Parser, Subcommand};
+use std::path::{Path, PathBuf};
 use std::process::ExitCode;
 
 /// Exit code where the plant file or a batch has faults.
@@ -31,7 +32,12 @@ pub const CAUTION: &str = "Advisory only, not for protection or safety functions
 
 /// Reconciles the measurements of steam and power plants.
 #[derive(Debug, Parser)]
-#[command(name = "counterpoise", version, about, after_help = "Exit codes: 0 done, whatever the verdict; 1 the plant file or a batch has faults; 2 wrong command line; 3 anything else.\n\nAdvisory only, not for protection or safety functions.")]
+#[command(
+    name = "counterpoise",
+    version,
+    about,
+    after_help = "Exit codes: 0 done, whatever the verdict; 1 the plant file or a batch has faults; 2 wrong command line; 3 anything else.\n\nAdvisory only, not for protection or safety functions."
+)]
 pub struct Cli {
     /// What to do.
     #[command(subcommand)]
@@ -51,6 +57,23 @@ pub enum Command {
     Demo(Demo),
     /// Print the OpenAPI document of the service.
     Openapi,
+    /// Make the demo's batches, and the truth beside them, again from their seed.
+    #[command(hide = true)]
+    MakeDemoFixture {
+        /// Directory to write into.
+        #[arg(long)]
+        out: PathBuf,
+    },
+}
+
+/// Makes the demo's batches again.
+///
+/// # Errors
+///
+/// Where they cannot be written.
+pub fn make_demo_fixture(out: &Path) -> anyhow::Result<ExitCode> {
+    crate::demo::make_fixture(out)?;
+    Ok(ExitCode::SUCCESS)
 }
 
 /// Prints the OpenAPI document.

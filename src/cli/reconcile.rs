@@ -64,11 +64,15 @@ pub fn reconcile(arguments: &Reconcile) -> anyhow::Result<ExitCode> {
         lines(&plant, source, &name, arguments.format, &mut output)
     } else {
         let mut body = Vec::new();
-        source.read_to_end(&mut body).with_context(|| name.clone())?;
+        source
+            .read_to_end(&mut body)
+            .with_context(|| name.clone())?;
         match one(&plant, &body) {
             Ok(report) => {
                 match arguments.format {
-                    ReconcileFormat::Text => output.write_all(text::describe(&report).as_bytes())?,
+                    ReconcileFormat::Text => {
+                        output.write_all(text::describe(&report).as_bytes())?
+                    }
                     _ => writeln!(output, "{}", serde_json::to_string_pretty(&report)?)?,
                 }
                 Ok(ExitCode::SUCCESS)
@@ -124,7 +128,11 @@ fn lines(
         }
         output.flush()?;
     }
-    Ok(if all_read { ExitCode::SUCCESS } else { input::faulty() })
+    Ok(if all_read {
+        ExitCode::SUCCESS
+    } else {
+        input::faulty()
+    })
 }
 
 fn show(refusal: &Refusal, source: &str, name: &str) {

@@ -1,8 +1,8 @@
 //! What a day of reports comes to, for people.
 
+use super::CAUTION;
 use super::table::{Table, decimals, fixed, number};
 use super::text::{class_name, minute, verdict_name};
-use super::CAUTION;
 use crate::report::{Assessment, Class, Report, Verdict};
 use std::collections::BTreeMap;
 use std::fmt;
@@ -15,7 +15,6 @@ const LISTED: usize = 10;
 struct Disagreement {
     standardised: f64,
     adjustment: Option<f64>,
-    uncertainty: Option<f64>,
     unit: String,
     time: OffsetDateTime,
     /// Batches in which it was beyond the critical value, and the first.
@@ -31,7 +30,10 @@ pub(super) struct Summary<'r> {
 
 impl<'r> Summary<'r> {
     pub fn new(reports: &'r [Report], assessment: &'r Assessment) -> Self {
-        Summary { reports, assessment }
+        Summary {
+            reports,
+            assessment,
+        }
     }
 
     fn disagreements(&self) -> Vec<(&'r str, Disagreement)> {
@@ -39,12 +41,13 @@ impl<'r> Summary<'r> {
         for report in self.reports {
             let critical = report.single_test.as_ref().map(|test| test.critical_value);
             for (name, tag) in report.tags.iter().chain(&report.assumptions) {
-                let Some(standardised) = tag.standardised_adjustment else { continue };
+                let Some(standardised) = tag.standardised_adjustment else {
+                    continue;
+                };
                 let is_beyond = critical.is_some_and(|critical| standardised.abs() > critical);
                 let entry = worst.entry(name).or_insert_with(|| Disagreement {
                     standardised: 0.0,
                     adjustment: None,
-                    uncertainty: None,
                     unit: tag.unit.clone(),
                     time: report.start,
                     beyond: 0,
@@ -57,7 +60,6 @@ impl<'r> Summary<'r> {
                 if standardised.abs() > entry.standardised.abs() {
                     entry.standardised = standardised;
                     entry.adjustment = tag.adjustment;
-                    entry.uncertainty = tag.uncertainty_measured;
                     entry.time = report.start;
                 }
             }
@@ -75,7 +77,11 @@ impl<'r> Summary<'r> {
             Verdict::NotConverged,
         ];
         let count = |reports: &[&Report], verdict| {
-            reports.iter().filter(|report| report.verdict == verdict).count().to_string()
+            reports
+                .iter()
+                .filter(|report| report.verdict == verdict)
+                .count()
+                .to_string()
         };
         let mut hours: BTreeMap<OffsetDateTime, Vec<&Report>> = BTreeMap::new();
         for report in self.reports {
@@ -85,7 +91,11 @@ impl<'r> Summary<'r> {
             hours.entry(hour).or_default().push(report);
         }
         let mut table = Table::new(&[
-            "<hour (UTC)", "consistent", "inconsistent", "not redundant", "not converged",
+            "<hour (UTC)",
+            "consistent",
+            "inconsistent",
+            "not redundant",
+            "not converged",
             "statistic / degrees of freedom, mean",
         ]);
         let all_reports: Vec<&Report> = self.reports.iter().collect();
@@ -102,26 +112,39 @@ impl<'r> Summary<'r> {
 
     fn worst(&self, f: &mut fmt::Formatter<'_>) -> fmt::Result {
         let mut table = Table::new(&[
-            "<tag or assumption", "standardised", "<at (UTC)", "adjustment", "<unit",
-            "batches beyond critical", "<first",
+            "<tag or assumption",
+            "standardised",
+            "<at (UTC)",
+            "adjustment",
+            "<unit",
+            "batches beyond critical",
+            "<first",
         ]);
         for (name, worst) in self.disagreements().into_iter().take(LISTED) {
-            let decimals = worst.uncertainty.filter(|u| *u > 0.0).map_or(3, decimals);
             table.row(vec![
                 name.to_owned(),
                 format!("{:+.1}", worst.standardised),
                 minute(worst.time),
-                worst.adjustment.map_or_else(String::new, |a| format!("{a:+.decimals$}")),
+                worst
+                    .adjustment
+                    .map_or_else(String::new, |a| format!("{a:+.*}", decimals(a.abs()))),
                 worst.unit,
                 worst.beyond.to_string(),
                 worst.first.map_or_else(|| "-".to_owned(), minute),
             ]);
         }
-        writeln!(f, "Largest adjustments of the day, reconciled minus measured\n{table}")
+        writeln!(
+            f,
+            "Largest adjustments of the day, reconciled minus measured\n{table}"
+        )
     }
 
     fn uncertain(&self, f: &mut fmt::Formatter<'_>) -> fmt::Result {
-        let Some(report) = self.reports.iter().rev().find(|r| r.verdict != Verdict::NotConverged)
+        let Some(report) = self
+            .reports
+            .iter()
+            .rev()
+            .find(|r| r.verdict != Verdict::NotConverged)
         else {
             return writeln!(f, "No batch converged.\n");
         };
@@ -143,22 +166,39 @@ impl<'r> Summary<'r> {
                 fixed(Some(relative), 1),
             ]);
         }
-        writeln!(f, "Least certain mass flows at {} UTC\n{table}", minute(report.start))
+        writeln!(
+            f,
+            "Least certain mass flows at {} UTC\n{table}",
+            minute(report.start)
+        )
     }
 
     fn unchecked(&self, f: &mut fmt::Formatter<'_>) -> fmt::Result {
         for class in [Class::NotRedundant, Class::HardlyRedundant] {
-            let tags = self.assessment.tags.iter().filter(|(_, tag)| tag.class == class);
+            let tags = self
+                .assessment
+                .tags
+                .iter()
+                .filter(|(_, tag)| tag.class == class);
             let names: Vec<&str> = tags.map(|(name, _)| name.as_str()).collect();
             if !names.is_empty() {
-                writeln!(f, "Tags that are {}: {}", class_name(class), names.join(", "))?;
+                writeln!(
+                    f,
+                    "Tags that are {}: {}",
+                    class_name(class),
+                    names.join(", ")
+                )?;
             }
         }
         if self.assessment.unobservable.is_empty() {
             writeln!(f, "Every quantity is observable.")?;
         }
         for quantity in &self.assessment.unobservable {
-            writeln!(f, "Unobservable: {} of {}: {}", quantity.quantity, quantity.of, quantity.why)?;
+            writeln!(
+                f,
+                "Unobservable: {} of {}: {}",
+                quantity.quantity, quantity.of, quantity.why
+            )?;
         }
         Ok(())
     }
@@ -185,9 +225,18 @@ impl fmt::Display for Summary<'_> {
         self.uncertain(f)?;
         self.unchecked(f)?;
         self.remarks(f)?;
-        for report in self.reports.iter().filter(|r| r.verdict == Verdict::NotConverged) {
+        for report in self
+            .reports
+            .iter()
+            .filter(|r| r.verdict == Verdict::NotConverged)
+        {
             let reason = report.reason.as_deref().unwrap_or("no reason given");
-            writeln!(f, "{}: {}: {reason}", report.batch, verdict_name(report.verdict))?;
+            writeln!(
+                f,
+                "{}: {}: {reason}",
+                report.batch,
+                verdict_name(report.verdict)
+            )?;
         }
         writeln!(f, "\n{CAUTION}\n")
     }

@@ -14,7 +14,10 @@ impl Table {
     /// A table with these heads. A head that starts with `<` makes its column
     /// stand to the left.
     pub fn new(heads: &[&'static str]) -> Self {
-        Table { heads: heads.to_vec(), rows: Vec::new() }
+        Table {
+            heads: heads.to_vec(),
+            rows: Vec::new(),
+        }
     }
 
     pub fn row(&mut self, cells: Vec<String>) {
@@ -28,9 +31,17 @@ impl Table {
 
 impl fmt::Display for Table {
     fn fmt(&self, f: &mut fmt::Formatter<'_>) -> fmt::Result {
-        let heads: Vec<String> = self.heads.iter().map(|h| h.trim_start_matches('<').to_owned()).collect();
+        let heads: Vec<String> = self
+            .heads
+            .iter()
+            .map(|h| h.trim_start_matches('<').to_owned())
+            .collect();
         let width = |column: usize| {
-            let cells = self.rows.iter().chain([&heads]).filter_map(|row| row.get(column));
+            let cells = self
+                .rows
+                .iter()
+                .chain([&heads])
+                .filter_map(|row| row.get(column));
             cells.map(|cell| cell.chars().count()).max().unwrap_or(0)
         };
         let widths: Vec<usize> = (0..heads.len()).map(width).collect();
@@ -38,7 +49,11 @@ impl fmt::Display for Table {
             let mut line = String::new();
             for (column, cell) in row.iter().enumerate() {
                 let width = widths.get(column).copied().unwrap_or(0);
-                if self.heads.get(column).is_some_and(|head| head.starts_with('<')) {
+                if self
+                    .heads
+                    .get(column)
+                    .is_some_and(|head| head.starts_with('<'))
+                {
                     line.push_str(&format!("  {cell:<width$}"));
                 } else {
                     line.push_str(&format!("  {cell:>width$}"));
@@ -53,17 +68,22 @@ impl fmt::Display for Table {
 /// A value and its uncertainty: the uncertainty with two significant digits,
 /// the value with as many decimals.
 pub(super) fn pair(value: Option<f64>, uncertainty: Option<f64>) -> [String; 2] {
-    let Some(value) = value else { return [String::from("-"), String::new()] };
+    let Some(value) = value else {
+        return [String::from("-"), String::new()];
+    };
     match uncertainty {
         Some(uncertainty) if uncertainty > 0.0 && uncertainty.is_finite() => {
             let decimals = decimals(uncertainty);
-            [format!("{value:.decimals$}"), format!("{uncertainty:.decimals$}")]
+            [
+                format!("{value:.decimals$}"),
+                format!("{uncertainty:.decimals$}"),
+            ]
         }
         _ => [number(value), String::new()],
     }
 }
 
-/// Decimals that show two significant digits of a positive number.
+/// Decimals that show two significant digits of a number that is not negative.
 pub(super) fn decimals(number: f64) -> usize {
     // Between 0 and 12, so that the cast is exact.
     (1.0 - number.log10().floor()).clamp(0.0, 12.0) as usize
@@ -107,6 +127,9 @@ mod tests {
         let mut table = Table::new(&["<tag", "value"]);
         table.row(vec!["A".into(), "10.5".into()]);
         table.row(vec!["LONG".into(), "9".into()]);
-        assert_eq!(table.to_string(), "  tag   value\n  A      10.5\n  LONG      9\n");
+        assert_eq!(
+            table.to_string(),
+            "  tag   value\n  A      10.5\n  LONG      9\n"
+        );
     }
 }

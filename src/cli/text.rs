@@ -69,7 +69,11 @@ pub(super) fn describe(report: &Report) -> String {
         let _ = writeln!(text, "{}", equipment(report, critical));
     }
     if !report.ignored_tags.is_empty() {
-        let _ = writeln!(text, "Tags that the plant file does not know: {}", report.ignored_tags.join(", "));
+        let _ = writeln!(
+            text,
+            "Tags that the plant file does not know: {}",
+            report.ignored_tags.join(", ")
+        );
     }
     for remark in &report.remarks {
         let _ = writeln!(text, "Note: {remark}");
@@ -83,10 +87,18 @@ fn verdict_line(report: &Report) -> String {
     if let Some(reason) = &report.reason {
         let _ = write!(line, ": {reason}");
     }
-    if let Some(GlobalTest { statistic, degrees_of_freedom, critical_value, p_value, .. }) =
-        &report.global_test
+    if let Some(GlobalTest {
+        statistic,
+        degrees_of_freedom,
+        critical_value,
+        p_value,
+        ..
+    }) = &report.global_test
     {
-        let _ = write!(line, ": {statistic:.1} on {degrees_of_freedom} degrees of freedom");
+        let _ = write!(
+            line,
+            ": {statistic:.1} on {degrees_of_freedom} degrees of freedom"
+        );
         if let (Some(critical), Some(p)) = (critical_value, p_value) {
             let _ = write!(line, " (critical {critical:.1}, p = {p:.3})");
         }
@@ -103,7 +115,15 @@ fn disagrees(standardised: Option<f64>, critical: Option<f64>) -> &'static str {
 
 fn tags(report: &Report, critical: Option<f64>) -> Table {
     let mut table = Table::new(&[
-        "<tag or assumption", "measured", "±", "reconciled", "±", "<unit", "adjustment", "standardised", "<",
+        "<tag or assumption",
+        "measured",
+        "±",
+        "reconciled",
+        "±",
+        "<unit",
+        "adjustment",
+        "standardised",
+        "<",
     ]);
     for (name, tag) in report.tags.iter().chain(&report.assumptions) {
         let [measured, uncertainty_measured] = pair(tag.measured, tag.uncertainty_measured);
@@ -152,7 +172,12 @@ fn streams(report: &Report) -> Table {
     ]);
     for (name, stream) in &report.streams {
         let mut row = vec![name.clone()];
-        for quantity in [&stream.mass_flow, &stream.pressure, &stream.temperature, &stream.enthalpy] {
+        for quantity in [
+            &stream.mass_flow,
+            &stream.pressure,
+            &stream.temperature,
+            &stream.enthalpy,
+        ] {
             row.extend(pair(quantity.value, quantity.uncertainty));
         }
         row.push(stream.phase.map_or("-", phase_name).to_owned());
@@ -162,7 +187,15 @@ fn streams(report: &Report) -> Table {
 }
 
 fn equipment(report: &Report, critical: Option<f64>) -> Table {
-    let mut table = Table::new(&["<equipment", "<", "value", "±", "<unit", "standardised", "<"]);
+    let mut table = Table::new(&[
+        "<equipment",
+        "<",
+        "value",
+        "±",
+        "<unit",
+        "standardised",
+        "<",
+    ]);
     for (name, equipment) in &report.equipment {
         let quantities = [
             ("heat", &equipment.heat),
@@ -181,7 +214,12 @@ fn equipment(report: &Report, critical: Option<f64>) -> Table {
             table.row(imbalance_row(name, what, imbalance, critical));
         }
         if let Some(imbalance) = &equipment.imbalance.energy {
-            table.row(imbalance_row(name, "energy imbalance".to_owned(), imbalance, critical));
+            table.row(imbalance_row(
+                name,
+                "energy imbalance".to_owned(),
+                imbalance,
+                critical,
+            ));
         }
     }
     table
@@ -189,12 +227,31 @@ fn equipment(report: &Report, critical: Option<f64>) -> Table {
 
 fn quantity_row(name: &str, what: &str, quantity: &QuantityReport) -> Vec<String> {
     let [value, uncertainty] = pair(quantity.value, quantity.uncertainty);
-    vec![name.to_owned(), what.to_owned(), value, uncertainty, quantity.unit.clone()]
+    vec![
+        name.to_owned(),
+        what.to_owned(),
+        value,
+        uncertainty,
+        quantity.unit.clone(),
+    ]
 }
 
-fn imbalance_row(name: &str, what: String, imbalance: &Imbalance, critical: Option<f64>) -> Vec<String> {
+fn imbalance_row(
+    name: &str,
+    what: String,
+    imbalance: &Imbalance,
+    critical: Option<f64>,
+) -> Vec<String> {
     let [value, uncertainty] = pair(imbalance.value, imbalance.uncertainty);
     let standardised = fixed(imbalance.standardised, 2);
     let mark = disagrees(imbalance.standardised, critical).to_owned();
-    vec![name.to_owned(), what, value, uncertainty, imbalance.unit.clone(), standardised, mark]
+    vec![
+        name.to_owned(),
+        what,
+        value,
+        uncertainty,
+        imbalance.unit.clone(),
+        standardised,
+        mark,
+    ]
 }

@@ -153,6 +153,11 @@ impl System {
         fluid::saturation(x[self.layout.p(stream)]).ok()
     }
 
+    /// Saturation temperature at a stream's pressure, K, likewise.
+    pub fn saturation_temperature(&self, stream: StreamId, x: &[f64]) -> Option<f64> {
+        fluid::saturation_temperature(x[self.layout.p(stream)]).ok()
+    }
+
     /// Thermodynamic state of a stream at `x`.
     ///
     /// # Errors

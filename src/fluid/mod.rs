@@ -48,7 +48,7 @@ mod saturation;
 
 pub use inverse::{from_hs, from_ph, from_ps, from_pt, from_px};
 pub use range::{OutOfRange, Quantity, enthalpy_range};
-pub use saturation::{saturation, saturation_t};
+pub use saturation::{saturation, saturation_t, saturation_temperature};
 
 /// Critical temperature in K.
 pub const CRITICAL_TEMPERATURE: f64 = 647.096;

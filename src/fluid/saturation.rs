@@ -39,6 +39,21 @@ pub fn saturation(p: f64) -> Result<Saturation, OutOfRange> {
     Ok(at(p, temperature(p)))
 }
 
+/// Saturation temperature in K at `p` MPa alone.
+///
+/// # Errors
+///
+/// A pressure outside [`MIN_SATURATION_PRESSURE`] to [`MAX_SATURATION_PRESSURE`].
+pub fn saturation_temperature(p: f64) -> Result<f64, OutOfRange> {
+    range::check(
+        Quantity::Pressure,
+        p,
+        MIN_SATURATION_PRESSURE,
+        MAX_SATURATION_PRESSURE,
+    )?;
+    Ok(temperature(p))
+}
+
 /// Both saturated states at `t` K.
 ///
 /// # Errors

@@ -5,7 +5,7 @@ use super::error::{Kind, Problem};
 use super::headers::{encode, next_link, prefers_async, value};
 use super::observe::RequestId;
 use super::params::{Params, cursor_text, with_cursor};
-use super::App;
+use super::{App, shapes};
 use crate::report::{Report, Verdict};
 use crate::store::{BatchLine, BatchQuery, Stored};
 use axum::body::{Body, Bytes};
@@ -14,7 +14,7 @@ use axum::http::{HeaderName, StatusCode, Uri, header};
 use axum::response::{IntoResponse, Response};
 use axum::{Extension, Json};
 use futures::StreamExt;
-use serde::{Deserialize, Serialize};
+use serde::Serialize;
 use std::convert::Infallible;
 use std::sync::Arc;
 use time::OffsetDateTime;
@@ -26,81 +26,6 @@ const NDJSON: &str = "application/x-ndjson";
 /// Lines of a stream that are worked on together: enough for the store to
 /// commit many at once.
 const LINES_TOGETHER: usize = 32;
-
-/// A batch, as it is sent. This is its description for readers; what reads it
-/// is in `ingest`.
-#[derive(Deserialize, ToSchema)]
-#[schema(as = Batch, example = json!({
-    "batch": "2031-04-02T10:05Z", "start": "2031-04-02T10:00:00Z", "end": "2031-04-02T10:05:00Z",
-    "readings": [{"tag": "FT-201", "value": 371.2, "quality": "good"}, {"tag": "TT-201", "value": null, "quality": "bad"}],
-}))]
-#[serde(deny_unknown_fields)]
-#[expect(dead_code, reason = "it describes; nothing is read with it")]
-pub(super) struct BatchShape {
-    /// The client's own name for it, unique in the plant.
-    #[schema(min_length = 1, max_length = 128)]
-    batch: String,
-    /// Start of the period, RFC 3339 with offset.
-    #[serde(with = "time::serde::rfc3339")]
-    start: OffsetDateTime,
-    /// End of the period, after its start and not in the future.
-    #[serde(with = "time::serde::rfc3339")]
-    end: OffsetDateTime,
-    /// At most one per tag; unknown tags are listed in the answer.
-    readings: Vec<ReadingShape>,
-}
-
-/// A reading, as it is sent.
-#[derive(Deserialize, ToSchema)]
-#[schema(as = Reading)]
-#[serde(deny_unknown_fields)]
-#[expect(dead_code, reason = "it describes; nothing is read with it")]
-struct ReadingShape {
-    /// Name of the tag.
-    #[schema(min_length = 1, max_length = 128)]
-    tag: String,
-    /// Value in the tag's own unit; null only with bad quality.
-    value: Option<f64>,
-    /// Quality; good where it is left out.
-    #[schema(required = false)]
-    quality: Option<QualityShape>,
-    /// Time of the value, RFC 3339 with offset; kept with the batch.
-    #[schema(required = false)]
-    #[serde(default, with = "time::serde::rfc3339::option")]
-    time: Option<OffsetDateTime>,
-}
-
-/// Quality of a reading.
-#[derive(Deserialize, ToSchema)]
-#[schema(as = Quality)]
-#[serde(untagged)]
-#[expect(dead_code, reason = "it describes; nothing is read with it")]
-enum QualityShape {
-    /// In words.
-    Grade(GradeShape),
-    Code(StatusCodeShape),
-}
-
-/// OPC UA status code: an unsigned number of 32 bits.
-// Labelled as 64 bits wide: 32 would be described as signed, which excludes the
-// bad codes, whose highest bit is set.
-#[derive(Deserialize, ToSchema)]
-#[schema(as = StatusCode, minimum = 0, maximum = 4_294_967_295_i64)]
-#[expect(dead_code, reason = "it describes; nothing is read with it")]
-struct StatusCodeShape(i64);
-
-/// Quality in words.
-#[derive(Deserialize, ToSchema)]
-#[schema(as = Grade)]
-#[serde(rename_all = "kebab-case")]
-enum GradeShape {
-    /// Used.
-    Good,
-    /// Used with a wider uncertainty.
-    Uncertain,
-    /// Kept and not used.
-    Bad,
-}
 
 /// A batch that is durable and not finished.
 #[derive(Serialize, ToSchema)]
@@ -157,7 +82,7 @@ struct BatchItem {
         ("Prefer" = Option<String>, Header, description = "`respond-async`: do not wait for the report"),
     ),
     request_body(description = "One batch, or one per line", content(
-        (BatchShape = "application/json"), (BatchShape = "application/x-ndjson"),
+        (shapes::Batch = "application/json"), (shapes::Batch = "application/x-ndjson"),
     )),
     responses(
         (status = 200, description = "The report; of a stream one line per batch, a report or a problem", content(
@@ -188,7 +113,11 @@ pub(super) async fn post(
     match media_type(request.headers()).as_str() {
         "application/json" => {
             let body = body::read(&app, request, app.limits.document).await?;
-            if wait { one(&app, &plant, body).await } else { one_later(&app, &plant, body, permit).await }
+            if wait {
+                one(&app, &plant, body).await
+            } else {
+                one_later(&app, &plant, body, permit).await
+            }
         }
         NDJSON => {
             let body = body::read(&app, request, app.limits.stream).await?;
@@ -203,20 +132,38 @@ pub(super) async fn post(
 }
 
 async fn one(app: &App, plant: &str, body: Bytes) -> Result<Response, Problem> {
-    let accepted = app.engine.accept(plant, body.into(), app.clock.now()).await?;
+    let accepted = app
+        .engine
+        .accept(plant, body.into(), app.clock.now())
+        .await?;
     let location = location(plant, &accepted.ticket.batch);
     let report = app.engine.finish(accepted).await?;
-    Ok(([(header::CONTENT_LOCATION, value(&location))], Json(&*report)).into_response())
+    Ok((
+        [(header::CONTENT_LOCATION, value(&location))],
+        Json(&*report),
+    )
+        .into_response())
 }
 
-async fn one_later(app: &App, plant: &str, body: Bytes, permit: Permit) -> Result<Response, Problem> {
-    let accepted = app.engine.accept(plant, body.into(), app.clock.now()).await?;
+async fn one_later(
+    app: &App,
+    plant: &str,
+    body: Bytes,
+    permit: Permit,
+) -> Result<Response, Problem> {
+    let accepted = app
+        .engine
+        .accept(plant, body.into(), app.clock.now())
+        .await?;
     let pending = pending(plant, &accepted);
     // The permit goes with the work: what waits is bounded like what runs.
     app.engine.finish_later(accepted, permit);
     let headers = [
         (header::LOCATION, value(&pending.location)),
-        (HeaderName::from_static("preference-applied"), value("respond-async")),
+        (
+            HeaderName::from_static("preference-applied"),
+            value("respond-async"),
+        ),
     ];
     Ok((StatusCode::ACCEPTED, headers, Json(pending)).into_response())
 }
@@ -237,13 +184,29 @@ fn location(plant: &str, batch: &str) -> String {
 /// Answers a stream line by line. The whole of it has been read before, so that
 /// a client that sends everything before it reads anything cannot block us and
 /// itself, and a stream that breaks off changes nothing.
-fn many(app: App, plant: String, body: Bytes, wait: bool, permit: Permit, id: RequestId) -> Response {
-    let status = if wait { StatusCode::OK } else { StatusCode::ACCEPTED };
+fn many(
+    app: App,
+    plant: String,
+    body: Bytes,
+    wait: bool,
+    permit: Permit,
+    id: RequestId,
+) -> Response {
+    let status = if wait {
+        StatusCode::OK
+    } else {
+        StatusCode::ACCEPTED
+    };
     // Later work holds the permit too, until the last line is finished.
     let permit = Arc::new(permit);
     let plant: Arc<str> = plant.into();
     let answers = futures::stream::iter(lines(&body)).map(move |(number, line)| {
-        let (app, plant, permit, id) = (app.clone(), Arc::clone(&plant), Arc::clone(&permit), id.clone());
+        let (app, plant, permit, id) = (
+            app.clone(),
+            Arc::clone(&plant),
+            Arc::clone(&permit),
+            id.clone(),
+        );
         async move {
             let answer = if line.len() > app.limits.document {
                 let detail = format!("more than {} bytes in one line", app.limits.document);
@@ -253,7 +216,8 @@ fn many(app: App, plant: String, body: Bytes, wait: bool, permit: Permit, id: Re
             } else {
                 line_later(&app, &plant, line, permit).await
             };
-            let mut json = answer.unwrap_or_else(|problem| problem.on_line(number).at(&id.0).document());
+            let mut json =
+                answer.unwrap_or_else(|problem| problem.on_line(number).at(&id.0).document());
             json.push(b'\n');
             Ok::<_, Infallible>(Bytes::from(json))
         }
@@ -266,17 +230,30 @@ fn many(app: App, plant: String, body: Bytes, wait: bool, permit: Permit, id: Re
 fn lines(body: &Bytes) -> Vec<(usize, Bytes)> {
     let lines = body.split(|&byte| byte == b'\n').map(<[u8]>::trim_ascii);
     let numbered = lines.enumerate().filter(|(_, line)| !line.is_empty());
-    numbered.map(|(index, line)| (index + 1, body.slice_ref(line))).collect()
+    numbered
+        .map(|(index, line)| (index + 1, body.slice_ref(line)))
+        .collect()
 }
 
 async fn line_now(app: &App, plant: &str, line: Bytes) -> Result<Vec<u8>, Problem> {
-    let accepted = app.engine.accept(plant, line.into(), app.clock.now()).await?;
+    let accepted = app
+        .engine
+        .accept(plant, line.into(), app.clock.now())
+        .await?;
     let report = app.engine.finish(accepted).await?;
     json(&*report)
 }
 
-async fn line_later(app: &App, plant: &str, line: Bytes, permit: Arc<Permit>) -> Result<Vec<u8>, Problem> {
-    let accepted = app.engine.accept(plant, line.into(), app.clock.now()).await?;
+async fn line_later(
+    app: &App,
+    plant: &str,
+    line: Bytes,
+    permit: Arc<Permit>,
+) -> Result<Vec<u8>, Problem> {
+    let accepted = app
+        .engine
+        .accept(plant, line.into(), app.clock.now())
+        .await?;
     let answer = json(&pending(plant, &accepted));
     app.engine.finish_later(accepted, permit);
     answer
@@ -323,7 +300,9 @@ pub(super) async fn list(
     params.finish()?;
     app.engine.revisions().know(&plant).await?;
     let page = app.store.batches(query).await?;
-    let list = BatchList { batches: page.items.into_iter().map(item).collect() };
+    let list = BatchList {
+        batches: page.items.into_iter().map(item).collect(),
+    };
     Ok(match page.next {
         Some(next) => {
             let target = with_cursor(&uri, "cursor", &cursor_text(next));

@@ -7,8 +7,8 @@
 //! bounded too: a zstd frame may ask for a window of any size, and gets 8 MiB
 //! (RFC 9659).
 
-use super::error::{Kind, Problem};
 use super::App;
+use super::error::{Kind, Problem};
 use axum::body::{Body, Bytes};
 use axum::extract::{FromRequestParts, Request};
 use axum::http::request::Parts;
@@ -42,8 +42,14 @@ impl FromRequestParts<App> for Permit {
 
 /// The media type of a body, without parameters.
 pub(super) fn media_type(headers: &HeaderMap) -> String {
-    let text = headers.get(header::CONTENT_TYPE).and_then(|value| value.to_str().ok());
-    let essence = text.unwrap_or_default().split(';').next().unwrap_or_default();
+    let text = headers
+        .get(header::CONTENT_TYPE)
+        .and_then(|value| value.to_str().ok());
+    let essence = text
+        .unwrap_or_default()
+        .split(';')
+        .next()
+        .unwrap_or_default();
     essence.trim().to_ascii_lowercase()
 }
 
@@ -59,17 +65,22 @@ pub(super) async fn read(app: &App, request: Request, limit: usize) -> Result<By
         return Err(too_large(limit));
     }
     let deadline = app.limits.read_timeout;
-    let sent = tokio::time::timeout(deadline, collect(body, limit)).await.map_err(|_| {
-        Problem::new(
-            Kind::Timeout,
-            format!("the body did not come within {} s", deadline.as_secs_f64()),
-        )
-    })??;
+    let sent = tokio::time::timeout(deadline, collect(body, limit))
+        .await
+        .map_err(|_| {
+            Problem::new(
+                Kind::Timeout,
+                format!("the body did not come within {} s", deadline.as_secs_f64()),
+            )
+        })??;
     match coding {
         Coding::Identity => Ok(sent),
         coding => {
-            let decompressed = tokio::task::spawn_blocking(move || decompress(coding, &sent, limit));
-            decompressed.await.map_err(|_| Problem::new(Kind::Internal, "decompression"))?
+            let decompressed =
+                tokio::task::spawn_blocking(move || decompress(coding, &sent, limit));
+            decompressed
+                .await
+                .map_err(|_| Problem::new(Kind::Internal, "decompression"))?
         }
     }
 }
@@ -97,7 +108,12 @@ async fn collect(mut body: Body, limit: usize) -> Result<Bytes, Problem> {
 }
 
 fn declared_length(headers: &HeaderMap) -> Option<usize> {
-    headers.get(header::CONTENT_LENGTH)?.to_str().ok()?.parse().ok()
+    headers
+        .get(header::CONTENT_LENGTH)?
+        .to_str()
+        .ok()?
+        .parse()
+        .ok()
 }
 
 fn too_large(limit: usize) -> Problem {
@@ -115,7 +131,9 @@ enum Coding {
 }
 
 fn coding(headers: &HeaderMap) -> Result<Coding, Problem> {
-    let Some(value) = headers.get(header::CONTENT_ENCODING) else { return Ok(Coding::Identity) };
+    let Some(value) = headers.get(header::CONTENT_ENCODING) else {
+        return Ok(Coding::Identity);
+    };
     match value.as_bytes().to_ascii_lowercase().trim_ascii() {
         b"identity" | b"" => Ok(Coding::Identity),
         b"gzip" | b"x-gzip" => Ok(Coding::Gzip),
@@ -130,7 +148,10 @@ fn coding(headers: &HeaderMap) -> Result<Coding, Problem> {
 
 fn decompress(coding: Coding, sent: &[u8], limit: usize) -> Result<Bytes, Problem> {
     let broken = |error: std::io::Error| {
-        Problem::new(Kind::Malformed, format!("the body cannot be decompressed: {error}"))
+        Problem::new(
+            Kind::Malformed,
+            format!("the body cannot be decompressed: {error}"),
+        )
     };
     let mut decompressed = Vec::new();
     // One byte beyond the limit tells that there is more.
@@ -139,12 +160,18 @@ fn decompress(coding: Coding, sent: &[u8], limit: usize) -> Result<Bytes, Proble
         Coding::Identity => decompressed.extend_from_slice(sent),
         Coding::Gzip => {
             let decoder = flate2::read::MultiGzDecoder::new(sent);
-            decoder.take(most).read_to_end(&mut decompressed).map_err(broken)?;
+            decoder
+                .take(most)
+                .read_to_end(&mut decompressed)
+                .map_err(broken)?;
         }
         Coding::Zstd => {
             let mut decoder = zstd::Decoder::with_buffer(sent).map_err(broken)?;
             decoder.window_log_max(LARGEST_WINDOW).map_err(broken)?;
-            decoder.take(most).read_to_end(&mut decompressed).map_err(broken)?;
+            decoder
+                .take(most)
+                .read_to_end(&mut decompressed)
+                .map_err(broken)?;
         }
     }
     if decompressed.len() > limit {

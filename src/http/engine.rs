@@ -86,19 +86,34 @@ impl Engine {
             body,
         };
         match self.store.accept(incoming).await? {
-            Acceptance::New(ticket) => Ok(Accepted { ticket, batch, known: false }),
-            Acceptance::Known(ticket) => Ok(Accepted { ticket, batch, known: true }),
+            Acceptance::New(ticket) => Ok(Accepted {
+                ticket,
+                batch,
+                known: false,
+            }),
+            Acceptance::Known(ticket) => Ok(Accepted {
+                ticket,
+                batch,
+                known: true,
+            }),
             Acceptance::NoPlant => Err(no_plant(plant)),
             Acceptance::Conflict => Err(Problem::new(
                 Kind::Conflict,
-                format!("batch \"{}\" was accepted before with other content", batch.name),
+                format!(
+                    "batch \"{}\" was accepted before with other content",
+                    batch.name
+                ),
             )),
         }
     }
 
     /// The report of an accepted batch, as soon as there is one.
     pub async fn finish(self: &Arc<Self>, accepted: Accepted) -> Outcome {
-        let Accepted { ticket, batch, known } = accepted;
+        let Accepted {
+            ticket,
+            batch,
+            known,
+        } = accepted;
         if known
             && let Some(Stored::Done(report)) =
                 self.store.batch(&ticket.plant, &ticket.batch).await?
@@ -124,16 +139,28 @@ impl Engine {
         let mut after = 0;
         loop {
             let unfinished = self.store.unfinished(after, RESUMED_TOGETHER).await?;
-            let Some(last) = unfinished.last() else { return Ok(()) };
+            let Some(last) = unfinished.last() else {
+                return Ok(());
+            };
             after = last.ticket.id;
-            tracing::info!(batches = unfinished.len(), "finishing what was accepted before");
+            tracing::info!(
+                batches = unfinished.len(),
+                "finishing what was accepted before"
+            );
             let resumed = futures::stream::iter(unfinished).map(|one| self.resume_one(one));
-            resumed.buffered(RESUMED_TOGETHER).for_each(|()| async {}).await;
+            resumed
+                .buffered(RESUMED_TOGETHER)
+                .for_each(|()| async {})
+                .await;
         }
     }
 
     async fn resume_one(self: &Arc<Self>, unfinished: Unfinished) {
-        let Unfinished { ticket, received, body } = unfinished;
+        let Unfinished {
+            ticket,
+            received,
+            body,
+        } = unfinished;
         let id = ticket.id;
         let outcome = match parse(body, received).await {
             Ok((_, Ok(parsed))) => self.start(ticket, parsed.batch).await,
@@ -171,7 +198,10 @@ impl Engine {
     }
 
     async fn work(&self, ticket: Ticket, batch: Batch) -> Outcome {
-        let revision = self.revisions.get(&ticket.plant, Some(ticket.revision)).await?;
+        let revision = self
+            .revisions
+            .get(&ticket.plant, Some(ticket.revision))
+            .await?;
         let report = {
             let lane = Arc::clone(lock(&self.lanes).entry(ticket.plant.clone()).or_default());
             let _turn = lane.lock().await;
@@ -201,10 +231,12 @@ pub(super) async fn compute<T: Send + 'static>(
     work: impl FnOnce() -> T + Send + 'static,
 ) -> Result<T, Problem> {
     let span = tracing::Span::current();
-    tokio::task::spawn_blocking(move || span.in_scope(work)).await.map_err(|error| {
-        tracing::error!(%error, "a computation broke off");
-        Problem::new(Kind::Internal, "a computation broke off; the log says more")
-    })
+    tokio::task::spawn_blocking(move || span.in_scope(work))
+        .await
+        .map_err(|error| {
+            tracing::error!(%error, "a computation broke off");
+            Problem::new(Kind::Internal, "a computation broke off; the log says more")
+        })
 }
 
 async fn parse(
@@ -216,7 +248,11 @@ async fn parse(
         let parsed = ingest::parse(&body, received);
         (body, parsed)
     };
-    if long { compute(read).await } else { Ok(read()) }
+    if long {
+        compute(read).await
+    } else {
+        Ok(read())
+    }
 }
 
 /// The answer where a plant is not known.

@@ -8,7 +8,7 @@
 use crate::ingest::Refusal;
 use crate::plant::Fault;
 use crate::store::StoreError;
-use axum::http::{HeaderMap, HeaderName, HeaderValue, StatusCode, header};
+use axum::http::{HeaderName, HeaderValue, StatusCode, header};
 use axum::response::{IntoResponse, Response};
 use serde::Serialize;
 use std::any::Any;
@@ -19,77 +19,118 @@ pub const PROBLEM_JSON: &str = "application/problem+json";
 
 /// What kind of problem.
 #[derive(Clone, Copy, Debug, PartialEq, Eq)]
-#[expect(missing_docs, reason = "the titles in `describe` say it")]
 pub enum Kind {
+    /// The body cannot be read.
     Malformed,
+    /// A parameter of the query cannot be used.
     BadParameter,
+    /// There is no such thing.
     NotFound,
+    /// The address does not take the method.
     MethodNotAllowed,
+    /// It does not exist in the form that was asked for.
     NotAcceptable,
+    /// The request did not come in time.
     Timeout,
+    /// The name is taken by other content.
     Conflict,
+    /// The current revision is not the one that was expected.
     PreconditionFailed,
+    /// The body is too large, as sent or after decompression.
     TooLarge,
+    /// The body is of a kind that is not taken.
     UnsupportedMediaType,
+    /// The content has faults.
     Unacceptable,
+    /// There is too much to do now.
     Overloaded,
+    /// The service made a mistake.
     Internal,
+    /// The service cannot do this now.
     Unavailable,
+    /// Any other error of HTTP.
     Other(StatusCode),
 }
 
 impl Kind {
+    /// Status code, type and title.
     fn describe(self) -> (StatusCode, &'static str, &'static str) {
         match self {
-            Kind::Malformed => (StatusCode::BAD_REQUEST, "malformed", "The body cannot be read"),
-            Kind::BadParameter => {
-                (StatusCode::BAD_REQUEST, "bad-parameter", "A parameter cannot be used")
-            }
-            Kind::NotFound => (StatusCode::NOT_FOUND, "not-found", "There is nothing here"),
+            Kind::Malformed => (
+                StatusCode::BAD_REQUEST,
+                "urn:counterpoise:problem:malformed",
+                "The body cannot be read",
+            ),
+            Kind::BadParameter => (
+                StatusCode::BAD_REQUEST,
+                "urn:counterpoise:problem:bad-parameter",
+                "A parameter cannot be used",
+            ),
+            Kind::NotFound => (
+                StatusCode::NOT_FOUND,
+                "urn:counterpoise:problem:not-found",
+                "There is nothing here",
+            ),
             Kind::MethodNotAllowed => (
                 StatusCode::METHOD_NOT_ALLOWED,
-                "method-not-allowed",
+                "urn:counterpoise:problem:method-not-allowed",
                 "This address does not take this method",
             ),
             Kind::NotAcceptable => (
                 StatusCode::NOT_ACCEPTABLE,
-                "not-acceptable",
+                "urn:counterpoise:problem:not-acceptable",
                 "It does not exist in the form that was asked for",
             ),
-            Kind::Timeout => {
-                (StatusCode::REQUEST_TIMEOUT, "timeout", "The request did not come in time")
-            }
-            Kind::Conflict => {
-                (StatusCode::CONFLICT, "conflict", "The name is taken by other content")
-            }
+            Kind::Timeout => (
+                StatusCode::REQUEST_TIMEOUT,
+                "urn:counterpoise:problem:timeout",
+                "The request did not come in time",
+            ),
+            Kind::Conflict => (
+                StatusCode::CONFLICT,
+                "urn:counterpoise:problem:conflict",
+                "The name is taken by other content",
+            ),
             Kind::PreconditionFailed => (
                 StatusCode::PRECONDITION_FAILED,
-                "precondition-failed",
+                "urn:counterpoise:problem:precondition-failed",
                 "The current revision is not the one that was expected",
             ),
-            Kind::TooLarge => (StatusCode::PAYLOAD_TOO_LARGE, "too-large", "The body is too large"),
+            Kind::TooLarge => (
+                StatusCode::PAYLOAD_TOO_LARGE,
+                "urn:counterpoise:problem:too-large",
+                "The body is too large",
+            ),
             Kind::UnsupportedMediaType => (
                 StatusCode::UNSUPPORTED_MEDIA_TYPE,
-                "unsupported-media-type",
+                "urn:counterpoise:problem:unsupported-media-type",
                 "The body is of a kind that is not taken here",
             ),
             Kind::Unacceptable => (
                 StatusCode::UNPROCESSABLE_ENTITY,
-                "unacceptable",
+                "urn:counterpoise:problem:unacceptable",
                 "The content has faults",
             ),
-            Kind::Overloaded => {
-                (StatusCode::TOO_MANY_REQUESTS, "overloaded", "There is too much to do now")
-            }
-            Kind::Internal => {
-                (StatusCode::INTERNAL_SERVER_ERROR, "internal", "The service made a mistake")
-            }
-            Kind::Unavailable => {
-                (StatusCode::SERVICE_UNAVAILABLE, "unavailable", "The service cannot do this now")
-            }
-            Kind::Other(status) => {
-                (status, "http", status.canonical_reason().unwrap_or("An HTTP error"))
-            }
+            Kind::Overloaded => (
+                StatusCode::TOO_MANY_REQUESTS,
+                "urn:counterpoise:problem:overloaded",
+                "There is too much to do now",
+            ),
+            Kind::Internal => (
+                StatusCode::INTERNAL_SERVER_ERROR,
+                "urn:counterpoise:problem:internal",
+                "The service made a mistake",
+            ),
+            Kind::Unavailable => (
+                StatusCode::SERVICE_UNAVAILABLE,
+                "urn:counterpoise:problem:unavailable",
+                "The service cannot do this now",
+            ),
+            Kind::Other(status) => (
+                status,
+                "urn:counterpoise:problem:http",
+                status.canonical_reason().unwrap_or("An HTTP error"),
+            ),
         }
     }
 
@@ -113,41 +154,41 @@ pub struct Problem {
     /// Kind of problem: `urn:counterpoise:problem:` and a word.
     #[serde(rename = "type")]
     #[schema(example = "urn:counterpoise:problem:unacceptable")]
-    kind: String,
+    kind: &'static str,
     /// The same for people.
     #[schema(example = "The content has faults")]
-    title: String,
+    title: &'static str,
     /// HTTP status code.
     #[schema(example = 422)]
     status: u16,
     /// What is wrong this time.
-    #[schema(example = "1 fault in the batch")]
-    detail: String,
+    #[schema(value_type = String, example = "1 fault in the batch")]
+    detail: Box<str>,
     /// Id of the request, as in its `x-request-id`.
-    #[schema(example = "0195f3a8-6c1e-7d0a-9f53-2b8c4e1f7a60")]
-    instance: String,
+    #[schema(value_type = String, example = "0195f3a8-6c1e-7d0a-9f53-2b8c4e1f7a60")]
+    instance: Box<str>,
     /// Every fault of the content.
     #[serde(skip_serializing_if = "Vec::is_empty")]
     #[schema(required = false)]
     faults: Vec<Fault>,
     #[serde(skip)]
-    headers: HeaderMap,
+    headers: Vec<(HeaderName, &'static str)>,
 }
 
 impl Problem {
     /// A problem of a kind.
     pub fn new(kind: Kind, detail: impl Into<String>) -> Self {
-        let (status, word, title) = kind.describe();
-        let mut headers = HeaderMap::new();
+        let (status, kind_urn, title) = kind.describe();
+        let mut headers = Vec::new();
         if matches!(kind, Kind::Overloaded | Kind::Unavailable) {
-            headers.insert(header::RETRY_AFTER, HeaderValue::from_static("1"));
+            headers.push((header::RETRY_AFTER, "1"));
         }
         Problem {
-            kind: format!("urn:counterpoise:problem:{word}"),
-            title: title.to_owned(),
+            kind: kind_urn,
+            title,
             status: status.as_u16(),
-            detail: detail.into(),
-            instance: String::new(),
+            detail: detail.into().into_boxed_str(),
+            instance: Box::default(),
             faults: Vec::new(),
             headers,
         }
@@ -161,19 +202,19 @@ impl Problem {
 
     /// The same with a header on its response.
     pub fn with_header(mut self, name: HeaderName, value: &'static str) -> Self {
-        self.headers.insert(name, HeaderValue::from_static(value));
+        self.headers.push((name, value));
         self
     }
 
     /// The same, said of a request.
     pub fn at(mut self, request_id: &str) -> Self {
-        request_id.clone_into(&mut self.instance);
+        self.instance = request_id.into();
         self
     }
 
     /// The same, said of a line of a stream: its faults have that line.
     pub fn on_line(mut self, line: usize) -> Self {
-        self.detail = format!("line {line}: {}", self.detail);
+        self.detail = format!("line {line}: {}", self.detail).into_boxed_str();
         for fault in &mut self.faults {
             fault.line = Some(line);
         }
@@ -199,7 +240,10 @@ impl From<StoreError> for Problem {
             StoreError::Unavailable(reason) => Problem::new(Kind::Unavailable, reason),
             StoreError::Unusable(_) | StoreError::Corrupt(_) => {
                 tracing::error!(%error, "the store");
-                Problem::new(Kind::Internal, "the store could not answer; the log says why")
+                Problem::new(
+                    Kind::Internal,
+                    "the store could not answer; the log says why",
+                )
             }
         }
     }
@@ -207,7 +251,11 @@ impl From<StoreError> for Problem {
 
 impl From<Refusal> for Problem {
     fn from(refusal: Refusal) -> Self {
-        let kind = if refusal.syntax { Kind::Malformed } else { Kind::Unacceptable };
+        let kind = if refusal.syntax {
+            Kind::Malformed
+        } else {
+            Kind::Unacceptable
+        };
         Problem::new(kind, format!("{} in the batch", count(&refusal.faults)))
             .with_faults(refusal.faults)
     }
@@ -244,15 +292,24 @@ pub(super) fn finish(mut response: Response, request_id: &str) -> Response {
         .extensions_mut()
         .remove::<Problem>()
         .unwrap_or_else(|| {
-            Problem::new(Kind::of(status), status.canonical_reason().unwrap_or("an HTTP error"))
+            Problem::new(
+                Kind::of(status),
+                status.canonical_reason().unwrap_or("an HTTP error"),
+            )
         })
         .at(request_id);
     let mut headers = std::mem::take(response.headers_mut());
-    for name in [header::CONTENT_LENGTH, header::CONTENT_ENCODING, header::TRANSFER_ENCODING] {
+    for name in [
+        header::CONTENT_LENGTH,
+        header::CONTENT_ENCODING,
+        header::TRANSFER_ENCODING,
+    ] {
         headers.remove(name);
     }
     headers.insert(header::CONTENT_TYPE, HeaderValue::from_static(PROBLEM_JSON));
-    headers.extend(problem.headers.clone());
+    for (name, value) in &problem.headers {
+        headers.insert(name, HeaderValue::from_static(value));
+    }
     let mut finished = (status, problem.document()).into_response();
     *finished.headers_mut() = headers;
     finished

@@ -7,8 +7,11 @@ use percent_encoding::{AsciiSet, NON_ALPHANUMERIC, utf8_percent_encode};
 
 /// What a segment of a path keeps as it is: the unreserved characters of RFC
 /// 3986.
-const SEGMENT: &AsciiSet =
-    &NON_ALPHANUMERIC.remove(b'-').remove(b'.').remove(b'_').remove(b'~');
+const SEGMENT: &AsciiSet = &NON_ALPHANUMERIC
+    .remove(b'-')
+    .remove(b'.')
+    .remove(b'_')
+    .remove(b'~');
 
 /// A name as a segment of a path or a value of a query.
 pub(super) fn encode(name: &str) -> String {
@@ -18,8 +21,11 @@ pub(super) fn encode(name: &str) -> String {
 /// The first of the offered media types that the client likes best (RFC 9110,
 /// section 12.5.1); `None` where it likes none of them.
 pub(super) fn accepted<'o>(headers: &HeaderMap, offered: &[&'o str]) -> Option<&'o str> {
-    let wanted: Vec<&str> =
-        headers.get_all(header::ACCEPT).iter().filter_map(|value| value.to_str().ok()).collect();
+    let wanted: Vec<&str> = headers
+        .get_all(header::ACCEPT)
+        .iter()
+        .filter_map(|value| value.to_str().ok())
+        .collect();
     if wanted.is_empty() {
         return offered.first().copied();
     }
@@ -51,7 +57,9 @@ fn weight(wanted: &[&str], offer: &str) -> f32 {
             .find_map(|weight| weight.parse::<f32>().ok());
         Some((specific, weight.unwrap_or(1.0)))
     });
-    matching.max_by_key(|(specific, _)| *specific).map_or(0.0, |(_, weight)| weight)
+    matching
+        .max_by_key(|(specific, _)| *specific)
+        .map_or(0.0, |(_, weight)| weight)
 }
 
 /// Whether the client prefers not to wait (RFC 7240).
@@ -70,7 +78,11 @@ const TAG_DIGITS: usize = 16;
 /// The strong entity tag of a revision, as JSON or, with `suffix`, as
 /// something else.
 pub(super) fn entity_tag(plant: &StoredPlant, suffix: &str) -> String {
-    format!("\"r{}-{}{suffix}\"", plant.revision, &plant.digest[..TAG_DIGITS.min(plant.digest.len())])
+    format!(
+        "\"r{}-{}{suffix}\"",
+        plant.revision,
+        &plant.digest[..TAG_DIGITS.min(plant.digest.len())]
+    )
 }
 
 /// The conditions of a request that changes a plant.
@@ -92,7 +104,8 @@ pub(super) fn precondition(headers: &HeaderMap) -> Precondition {
 /// Whether the client has this representation already.
 pub(super) fn has_already(headers: &HeaderMap, tag: &str) -> bool {
     list(headers, header::IF_NONE_MATCH).is_some_and(|tags| {
-        tags.iter().any(|&sent| sent == "*" || sent.trim_start_matches("W/") == tag)
+        tags.iter()
+            .any(|&sent| sent == "*" || sent.trim_start_matches("W/") == tag)
     })
 }
 
@@ -100,7 +113,12 @@ fn list(headers: &HeaderMap, name: HeaderName) -> Option<Vec<&str>> {
     let mut values = headers.get_all(name).iter().peekable();
     values.peek()?;
     let texts = values.filter_map(|value| value.to_str().ok());
-    Some(texts.flat_map(|text| text.split(',')).map(str::trim).collect())
+    Some(
+        texts
+            .flat_map(|text| text.split(','))
+            .map(str::trim)
+            .collect(),
+    )
 }
 
 fn revision_of_tag(tag: &str) -> Option<(u32, String)> {
@@ -132,12 +150,18 @@ mod tests {
 
     #[test]
     fn the_best_liked_form_is_chosen() {
-        assert_eq!(accepted(&HeaderMap::new(), &["application/json"]), Some("application/json"));
+        assert_eq!(
+            accepted(&HeaderMap::new(), &["application/json"]),
+            Some("application/json")
+        );
         assert_eq!(accept("*/*"), Some("application/json"));
         assert_eq!(accept("text/csv"), Some("text/csv"));
         assert_eq!(accept("text/*, application/json;q=0.5"), Some("text/csv"));
         assert_eq!(accept("text/csv;q=0, */*"), Some("application/json"));
-        assert_eq!(accept("application/json; q=0.2, text/csv; q=0.9"), Some("text/csv"));
+        assert_eq!(
+            accept("application/json; q=0.2, text/csv; q=0.9"),
+            Some("text/csv")
+        );
         assert_eq!(accept("image/png"), None);
     }
 
@@ -156,14 +180,24 @@ mod tests {
 
     #[test]
     fn conditions() {
-        let read = |name, value: &str| precondition(&HeaderMap::from_iter([(name, super::value(value))]));
+        let read =
+            |name, value: &str| precondition(&HeaderMap::from_iter([(name, super::value(value))]));
         let tag = "\"r3-0123456789abcdef-toml\"";
         let revision = vec![(3, "0123456789abcdef".to_owned())];
-        assert_eq!(read(header::IF_MATCH, tag), Precondition::OneOf(revision.clone()));
-        assert_eq!(read(header::IF_MATCH, "W/\"x\", \"y\""), Precondition::OneOf(vec![]));
+        assert_eq!(
+            read(header::IF_MATCH, tag),
+            Precondition::OneOf(revision.clone())
+        );
+        assert_eq!(
+            read(header::IF_MATCH, "W/\"x\", \"y\""),
+            Precondition::OneOf(vec![])
+        );
         assert_eq!(read(header::IF_MATCH, "*"), Precondition::Present);
         assert_eq!(read(header::IF_NONE_MATCH, "*"), Precondition::Absent);
-        assert_eq!(read(header::IF_NONE_MATCH, tag), Precondition::NoneOf(revision));
+        assert_eq!(
+            read(header::IF_NONE_MATCH, tag),
+            Precondition::NoneOf(revision)
+        );
         assert_eq!(precondition(&HeaderMap::new()), Precondition::Any);
     }
 

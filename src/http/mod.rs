@@ -17,6 +17,7 @@ mod params;
 mod plants;
 mod revisions;
 mod series;
+pub mod shapes;
 
 pub use ambient::{Clock, Entropy, SystemClock, SystemEntropy};
 pub use error::{Kind, Problem};

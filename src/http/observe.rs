@@ -26,7 +26,10 @@ pub(super) struct RequestId(pub String);
 pub(super) async fn observe(State(app): State<App>, mut request: Request, next: Next) -> Response {
     let id = given_id(request.headers())
         .unwrap_or_else(|| ambient::request_id(&*app.clock, &*app.entropy));
-    let route = request.extensions().get::<MatchedPath>().map(MatchedPath::as_str);
+    let route = request
+        .extensions()
+        .get::<MatchedPath>()
+        .map(MatchedPath::as_str);
     let trace = trace_parent(request.headers());
     let span = tracing::info_span!(
         "request",
@@ -40,14 +43,21 @@ pub(super) async fn observe(State(app): State<App>, mut request: Request, next: 
     request.extensions_mut().insert(RequestId(id.clone()));
     let was_read = Arc::new(AtomicBool::new(request.body().is_end_stream()));
     let watch = Arc::clone(&was_read);
-    let request = request.map(|body| Body::new(Watched { body, was_read: watch }));
+    let request = request.map(|body| {
+        Body::new(Watched {
+            body,
+            was_read: watch,
+        })
+    });
     let started = Instant::now();
     let response = next.run(request).instrument(span.clone()).await;
     let mut response = error::finish(response, &id);
     if response.status().is_client_error() && !was_read.load(Ordering::Relaxed) {
         // The connection ends with this answer, because the rest of the body
         // stands in the way of the next request; the client has to know.
-        response.headers_mut().insert(header::CONNECTION, HeaderValue::from_static("close"));
+        response
+            .headers_mut()
+            .insert(header::CONNECTION, HeaderValue::from_static("close"));
     }
     if let Ok(value) = HeaderValue::from_str(&id) {
         response.headers_mut().insert(REQUEST_ID, value);
@@ -103,7 +113,9 @@ fn trace_parent(headers: &HeaderMap) -> Option<(String, String)> {
         (parts.next()?, parts.next()?, parts.next()?, parts.next()?);
     let is_hex = |part: &str, length: usize| {
         part.len() == length
-            && part.bytes().all(|byte| matches!(byte, b'0'..=b'9' | b'a'..=b'f'))
+            && part
+                .bytes()
+                .all(|byte| matches!(byte, b'0'..=b'9' | b'a'..=b'f'))
     };
     let not_zero = |part: &str| part.bytes().any(|byte| byte != b'0');
     let valid = is_hex(version, 2)
@@ -130,7 +142,10 @@ mod tests {
 
     #[test]
     fn only_usable_ids_are_taken_over() {
-        assert_eq!(given_id(&headers("x-request-id", "a-1._Z")), Some("a-1._Z".to_owned()));
+        assert_eq!(
+            given_id(&headers("x-request-id", "a-1._Z")),
+            Some("a-1._Z".to_owned())
+        );
         for bad in ["", "a b", "a\"b", "<x>", &"x".repeat(129)] {
             assert_eq!(given_id(&headers("x-request-id", bad)), None, "{bad}");
         }

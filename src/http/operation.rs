@@ -1,7 +1,7 @@
 //! What an operator's machinery asks.
 
-use super::error::{Kind, Problem};
 use super::App;
+use super::error::{Kind, Problem};
 use crate::store::Health;
 use axum::Json;
 use axum::extract::State;

@@ -18,8 +18,13 @@ pub(super) struct Params {
 impl Params {
     pub fn new(uri: &Uri) -> Self {
         let query = uri.query().unwrap_or_default();
-        let pairs = form_urlencoded::parse(query.as_bytes()).into_owned().collect();
-        Params { pairs, faults: Vec::new() }
+        let pairs = form_urlencoded::parse(query.as_bytes())
+            .into_owned()
+            .collect();
+        Params {
+            pairs,
+            faults: Vec::new(),
+        }
     }
 
     fn fault(&mut self, name: &str, what: impl Into<String>, mend: impl Into<String>) {
@@ -35,7 +40,9 @@ impl Params {
 
     /// All values of a parameter that may be repeated.
     pub fn all(&mut self, name: &str) -> Vec<String> {
-        let (taken, left) = std::mem::take(&mut self.pairs).into_iter().partition(|p| p.0 == name);
+        let (taken, left) = std::mem::take(&mut self.pairs)
+            .into_iter()
+            .partition(|p| p.0 == name);
         self.pairs = left;
         let taken: Vec<(String, String)> = taken;
         taken.into_iter().map(|(_, value)| value).collect()
@@ -73,7 +80,8 @@ impl Params {
     /// A time.
     pub fn time(&mut self, name: &str) -> Option<OffsetDateTime> {
         // An unencoded plus sign of an offset arrives as a space.
-        let mend = "write it as in RFC 3339: 2031-04-02T10:05:00Z, or with %2B for the + of an offset";
+        let mend =
+            "write it as in RFC 3339: 2031-04-02T10:05:00Z, or with %2B for the + of an offset";
         self.choose(name, mend, |text| {
             let time = OffsetDateTime::parse(&text.replace(' ', "+"), &Rfc3339).ok()?;
             Some(time.to_offset(UtcOffset::UTC))
@@ -91,10 +99,17 @@ impl Params {
 
     /// A place in a list by time, as [`cursor_text`] writes it.
     pub fn cursor(&mut self) -> Option<Cursor> {
-        self.choose("cursor", "take it from the Link header of the answer before", |text| {
-            let (start, id) = text.split_once('.')?;
-            Some(Cursor { start_ns: start.parse().ok()?, id: id.parse().ok()? })
-        })
+        self.choose(
+            "cursor",
+            "take it from the Link header of the answer before",
+            |text| {
+                let (start, id) = text.split_once('.')?;
+                Some(Cursor {
+                    start_ns: start.parse().ok()?,
+                    id: id.parse().ok()?,
+                })
+            },
+        )
     }
 
     /// Refuses what is left and tells every fault.
@@ -138,7 +153,11 @@ mod tests {
         assert_eq!(params.time("from"), None);
         assert_eq!(params.cursor(), Some(Cursor { start_ns: 1, id: 2 }));
         assert_eq!(params.all("tag"), ["A", "B"]);
-        let places: Vec<_> = params.faults.iter().map(|fault| fault.path.clone()).collect();
+        let places: Vec<_> = params
+            .faults
+            .iter()
+            .map(|fault| fault.path.clone())
+            .collect();
         assert_eq!(places, ["?limit", "?from"]);
         assert!(params.finish().is_err());
     }
@@ -146,6 +165,9 @@ mod tests {
     #[test]
     fn the_next_part_has_the_same_query() {
         let uri = Uri::from_static("/x?tag=A%20B&cursor=1.2&limit=3");
-        assert_eq!(with_cursor(&uri, "cursor", "5.6"), "/x?tag=A+B&limit=3&cursor=5.6");
+        assert_eq!(
+            with_cursor(&uri, "cursor", "5.6"),
+            "/x?tag=A+B&limit=3&cursor=5.6"
+        );
     }
 }

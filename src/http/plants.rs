@@ -1,12 +1,12 @@
 //! Plants: taking a plant file, giving it back, listing, assessing.
 
+use super::App;
 use super::body::{self, Permit, media_type};
 use super::engine::compute;
 use super::error::{Kind, Problem, count};
 use super::headers::{accepted, encode, entity_tag, has_already, next_link, precondition, value};
 use super::params::{Params, with_cursor};
 use super::revisions::{JSON, TOML, format_of};
-use super::App;
 use crate::plant::{self, Fault, PlantFile, Severity};
 use crate::report::Assessment;
 use crate::store::{NewPlant, PutOutcome, StoredPlant};
@@ -131,8 +131,11 @@ fn wrong_type() -> Problem {
 }
 
 fn refused(faults: Vec<Fault>) -> Problem {
-    Problem::new(Kind::Unacceptable, format!("{} in the plant file", count(&faults)))
-        .with_faults(faults)
+    Problem::new(
+        Kind::Unacceptable,
+        format!("{} in the plant file", count(&faults)),
+    )
+    .with_faults(faults)
 }
 
 fn misnamed(in_file: &str, in_path: &str) -> Fault {
@@ -147,7 +150,11 @@ fn misnamed(in_file: &str, in_path: &str) -> Fault {
 }
 
 fn answer(status: StatusCode, stored: &StoredPlant, warnings: Vec<Fault>) -> Response {
-    let location = format!("/v1/plants/{}?revision={}", encode(&stored.name), stored.revision);
+    let location = format!(
+        "/v1/plants/{}?revision={}",
+        encode(&stored.name),
+        stored.revision
+    );
     let headers = [
         (header::ETAG, value(&entity_tag(stored, ""))),
         (header::CONTENT_LOCATION, value(&location)),
@@ -186,10 +193,21 @@ pub(super) async fn get(
     uri: Uri,
     headers: HeaderMap,
 ) -> Result<Response, Problem> {
-    let stored = app.engine.revisions().stored(&name, revision_of(&uri)?).await?;
-    let offered: &[&str] = if stored.media_type == TOML { &[JSON, TOML] } else { &[JSON] };
+    let stored = app
+        .engine
+        .revisions()
+        .stored(&name, revision_of(&uri)?)
+        .await?;
+    let offered: &[&str] = if stored.media_type == TOML {
+        &[JSON, TOML]
+    } else {
+        &[JSON]
+    };
     let chosen = accepted(&headers, offered).ok_or_else(|| {
-        Problem::new(Kind::NotAcceptable, format!("it can be had as {}", offered.join(" or ")))
+        Problem::new(
+            Kind::NotAcceptable,
+            format!("it can be had as {}", offered.join(" or ")),
+        )
     })?;
     let (suffix, text) = match chosen {
         TOML => ("-toml", stored.source.clone()),
@@ -240,7 +258,9 @@ pub(super) async fn list(State(app): State<App>, uri: Uri) -> Result<Response, P
         revision: line.revision,
         created: line.created,
     };
-    let list = PlantList { plants: lines.into_iter().map(item).collect() };
+    let list = PlantList {
+        plants: lines.into_iter().map(item).collect(),
+    };
     Ok(match link {
         Some(link) => (link, Json(list)).into_response(),
         None => Json(list).into_response(),
@@ -265,6 +285,10 @@ pub(super) async fn assessment(
     Path(name): Path<String>,
     uri: Uri,
 ) -> Result<Json<Assessment>, Problem> {
-    let revision = app.engine.revisions().get(&name, revision_of(&uri)?).await?;
+    let revision = app
+        .engine
+        .revisions()
+        .get(&name, revision_of(&uri)?)
+        .await?;
     Ok(Json(app.engine.assess(revision).await?))
 }

@@ -47,7 +47,10 @@ pub(super) struct Revisions {
 
 impl Revisions {
     pub fn new(store: Arc<dyn Store>) -> Self {
-        Revisions { store, kept: Mutex::default() }
+        Revisions {
+            store,
+            kept: Mutex::default(),
+        }
     }
 
     /// Makes sure that there is a plant, without reading its file every time.
@@ -126,12 +129,21 @@ pub(super) fn format_of(media_type: &str) -> Option<Format> {
 
 fn compile(stored: &StoredPlant) -> Result<Arc<Revision>, Problem> {
     let unreadable = |detail: String| {
-        tracing::error!(plant = stored.name, revision = stored.revision, detail, "unreadable");
-        Problem::new(Kind::Internal, "a stored plant file cannot be read any more")
+        tracing::error!(
+            plant = stored.name,
+            revision = stored.revision,
+            detail,
+            "unreadable"
+        );
+        Problem::new(
+            Kind::Internal,
+            "a stored plant file cannot be read any more",
+        )
     };
     let format = format_of(&stored.media_type)
         .ok_or_else(|| unreadable(format!("media type {}", stored.media_type)))?;
-    let file = plant::read(&stored.source, format).map_err(|faults| unreadable(faults.to_string()))?;
+    let file =
+        plant::read(&stored.source, format).map_err(|faults| unreadable(faults.to_string()))?;
     Ok(Arc::new(Revision {
         compiled: Compiled::new(file.plant, stored.revision),
         warnings: file.warnings,

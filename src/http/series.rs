@@ -1,10 +1,10 @@
 //! Numbers over time, as JSON or CSV.
 
+use super::App;
 use super::error::{Kind, Problem};
 use super::headers::{accepted, next_link, value};
 use super::params::{Params, cursor_text, with_cursor};
 use super::revisions::JSON;
-use super::App;
 use crate::report::Verdict;
 use crate::store::{Column, Field, Selector, SeriesPage, SeriesQuery};
 use axum::Json;
@@ -114,9 +114,17 @@ pub(super) async fn get(
     let plant = query.plant.clone();
     let page = app.store.series(query).await?;
     unknown(&page.columns, revision.compiled.plant())?;
-    let next = page.next.map(|next| [next_link(&with_cursor(&uri, "cursor", &cursor_text(next)))]);
+    let next = page
+        .next
+        .map(|next| [next_link(&with_cursor(&uri, "cursor", &cursor_text(next)))]);
     let mut response = match chosen {
-        CSV => ([(header::CONTENT_TYPE, "text/csv; charset=utf-8; header=present")], csv(&page)?)
+        CSV => (
+            [(
+                header::CONTENT_TYPE,
+                "text/csv; charset=utf-8; header=present",
+            )],
+            csv(&page)?,
+        )
             .into_response(),
         _ => Json(document(plant, field, page)).into_response(),
     };
@@ -169,7 +177,10 @@ fn unknown(columns: &[Column], plant: &crate::plant::Plant) -> Result<(), Proble
             || match &column.selector {
                 Selector::Tag(name) => {
                     plant.tags.iter().any(|tag| tag.name == *name)
-                        || plant.assumptions.iter().any(|assumption| assumption.name == *name)
+                        || plant
+                            .assumptions
+                            .iter()
+                            .any(|assumption| assumption.name == *name)
                 }
                 Selector::Quantity(name) => {
                     let of = name.split('.').next().unwrap_or_default();
@@ -178,12 +189,18 @@ fn unknown(columns: &[Column], plant: &crate::plant::Plant) -> Result<(), Proble
                 }
             }
     };
-    let unknown: Vec<&str> =
-        columns.iter().filter(|column| !is_known(column)).map(|c| name(&c.selector)).collect();
+    let unknown: Vec<&str> = columns
+        .iter()
+        .filter(|column| !is_known(column))
+        .map(|c| name(&c.selector))
+        .collect();
     if unknown.is_empty() {
         return Ok(());
     }
-    Err(Problem::new(Kind::NotFound, format!("no report has {}", unknown.join(", "))))
+    Err(Problem::new(
+        Kind::NotFound,
+        format!("no report has {}", unknown.join(", ")),
+    ))
 }
 
 fn name(selector: &Selector) -> &str {
@@ -204,19 +221,28 @@ fn document(plant: String, field: &'static str, page: SeriesPage) -> SeriesDocum
         unit: column.unit,
         values: column.values,
     });
-    SeriesDocument { plant, field, batches: batches.collect(), series: series.collect() }
+    SeriesDocument {
+        plant,
+        field,
+        batches: batches.collect(),
+        series: series.collect(),
+    }
 }
 
 fn csv(page: &SeriesPage) -> Result<Vec<u8>, Problem> {
     let broken = |error: String| Problem::new(Kind::Internal, error);
     let time = |time: OffsetDateTime| time.format(&Rfc3339).map_err(|e| broken(e.to_string()));
     let mut writer = csv::Writer::from_writer(Vec::new());
-    let mut record: Vec<String> = ["batch", "start", "end", "verdict"].map(str::to_owned).into();
+    let mut record: Vec<String> = ["batch", "start", "end", "verdict"]
+        .map(str::to_owned)
+        .into();
     record.extend(page.columns.iter().map(|column| match &column.unit {
         Some(unit) => format!("{} [{unit}]", name(&column.selector)),
         None => name(&column.selector).to_owned(),
     }));
-    writer.write_record(&record).map_err(|e| broken(e.to_string()))?;
+    writer
+        .write_record(&record)
+        .map_err(|e| broken(e.to_string()))?;
     for (place, row) in page.rows.iter().enumerate() {
         let verdict = serde_json::to_value(row.verdict).map_err(|e| broken(e.to_string()))?;
         record.clear();
@@ -226,7 +252,9 @@ fn csv(page: &SeriesPage) -> Result<Vec<u8>, Problem> {
         record.push(verdict.as_str().unwrap_or_default().to_owned());
         let values = page.columns.iter().map(|column| column.values[place]);
         record.extend(values.map(|value| value.map(|v| v.to_string()).unwrap_or_default()));
-        writer.write_record(&record).map_err(|e| broken(e.to_string()))?;
+        writer
+            .write_record(&record)
+            .map_err(|e| broken(e.to_string()))?;
     }
     writer.into_inner().map_err(|e| broken(e.to_string()))
 }

@@ -1,8 +1,8 @@
 //! The shape of a batch at the edge, and its faults.
 
+use super::LONGEST_NAME;
 use super::digest;
 use super::json::{self, Faults, Member, Node, Path, Value, shorten};
-use super::LONGEST_NAME;
 use crate::plant::{Batch, Fault, Grade, Quality, Reading};
 use std::collections::HashMap;
 use time::format_description::well_known::Rfc3339;
@@ -44,13 +44,22 @@ pub fn parse(body: &[u8], now: OffsetDateTime) -> Result<Parsed, Refusal> {
     };
     let mut faults = Faults::new(source);
     let Ok(root) = json::read(source, &mut faults) else {
-        return Err(Refusal { syntax: true, faults: faults.found });
+        return Err(Refusal {
+            syntax: true,
+            faults: faults.found,
+        });
     };
-    let mut reader = Reader { faults, latest: now + FUTURE_ALLOWANCE };
+    let mut reader = Reader {
+        faults,
+        latest: now + FUTURE_ALLOWANCE,
+    };
     let draft = reader.batch(&root);
     match draft {
         Some(draft) if reader.faults.found.is_empty() => Ok(draft.finish()),
-        _ => Err(Refusal { syntax: reader.faults.syntax, faults: reader.faults.found }),
+        _ => Err(Refusal {
+            syntax: reader.faults.syntax,
+            faults: reader.faults.found,
+        }),
     }
 }
 
@@ -58,8 +67,16 @@ fn not_utf8(body: &[u8], valid: usize) -> Refusal {
     // The part before `valid` is UTF-8 by the meaning of `valid_up_to`.
     let readable = String::from_utf8_lossy(&body[..valid]);
     let mut faults = Faults::new(&readable);
-    faults.add(&Path::Root, readable.len(), "the text is not UTF-8", "send JSON in UTF-8");
-    Refusal { syntax: true, faults: faults.found }
+    faults.add(
+        &Path::Root,
+        readable.len(),
+        "the text is not UTF-8",
+        "send JSON in UTF-8",
+    );
+    Refusal {
+        syntax: true,
+        faults: faults.found,
+    }
 }
 
 /// A reading with what only its digest needs.
@@ -77,10 +94,20 @@ struct DraftBatch {
 
 impl DraftBatch {
     fn finish(mut self) -> Parsed {
-        self.readings.sort_by(|a, b| a.reading.tag.cmp(&b.reading.tag));
+        self.readings
+            .sort_by(|a, b| a.reading.tag.cmp(&b.reading.tag));
         let digest = digest::of(&self.name, self.start, self.end, &self.readings);
-        let readings = self.readings.into_iter().map(|draft| draft.reading).collect();
-        let batch = Batch { name: self.name, start: self.start, end: self.end, readings };
+        let readings = self
+            .readings
+            .into_iter()
+            .map(|draft| draft.reading)
+            .collect();
+        let batch = Batch {
+            name: self.name,
+            start: self.start,
+            end: self.end,
+            readings,
+        };
         Parsed { batch, digest }
     }
 }
@@ -93,16 +120,45 @@ struct Reader<'a> {
 impl<'a> Reader<'a> {
     fn batch(&mut self, root: &Node<'a>) -> Option<DraftBatch> {
         let path = Path::Root;
-        let members = self.members(&path, root, "a batch", &["batch", "start", "end", "readings"])?;
+        let members = self.members(
+            &path,
+            root,
+            "a batch",
+            &["batch", "start", "end", "readings"],
+        )?;
         let name = self
-            .required(&path, root, members, "batch", "the name of the batch, unique in its plant")
+            .required(
+                &path,
+                root,
+                members,
+                "batch",
+                "the name of the batch, unique in its plant",
+            )
             .and_then(|node| self.name(&Path::Key(&path, "batch"), node));
         let start = self
-            .required(&path, root, members, "start", "the start of the period, as 2031-04-02T10:00:00Z")
-            .and_then(|node| self.time(&Path::Key(&path, "start"), node).map(|time| (node, time)));
+            .required(
+                &path,
+                root,
+                members,
+                "start",
+                "the start of the period, as 2031-04-02T10:00:00Z",
+            )
+            .and_then(|node| {
+                self.time(&Path::Key(&path, "start"), node)
+                    .map(|time| (node, time))
+            });
         let end = self
-            .required(&path, root, members, "end", "the end of the period, as 2031-04-02T10:05:00Z")
-            .and_then(|node| self.time(&Path::Key(&path, "end"), node).map(|time| (node, time)));
+            .required(
+                &path,
+                root,
+                members,
+                "end",
+                "the end of the period, as 2031-04-02T10:05:00Z",
+            )
+            .and_then(|node| {
+                self.time(&Path::Key(&path, "end"), node)
+                    .map(|time| (node, time))
+            });
         if let (Some((_, start)), Some((node, end))) = (start, end)
             && end <= start
         {
@@ -116,24 +172,39 @@ impl<'a> Reader<'a> {
         let readings = self
             .required(&path, root, members, "readings", "a list of readings")
             .and_then(|node| self.readings(&Path::Key(&path, "readings"), node));
-        Some(DraftBatch { name: name?, start: start?.1, end: end?.1, readings: readings? })
+        Some(DraftBatch {
+            name: name?,
+            start: start?.1,
+            end: end?.1,
+            readings: readings?,
+        })
     }
 
     fn readings(&mut self, path: &Path<'_>, node: &Node<'a>) -> Option<Vec<Draft>> {
         let Value::Array(items) = &node.value else {
-            self.wrong_type(path, node, "a list of readings", "write \"readings\": [{\"tag\": \"FT-201\", \"value\": 371.2}]");
+            self.wrong_type(
+                path,
+                node,
+                "a list of readings",
+                "write \"readings\": [{\"tag\": \"FT-201\", \"value\": 371.2}]",
+            );
             return None;
         };
         let mut seen: HashMap<String, usize> = HashMap::with_capacity(items.len());
         let mut drafts = Vec::with_capacity(items.len());
         for (index, item) in items.iter().enumerate() {
             let item_path = Path::Index(path, index);
-            let Some((tag_node, draft)) = self.reading(&item_path, item) else { continue };
+            let Some((tag_node, draft)) = self.reading(&item_path, item) else {
+                continue;
+            };
             if let Some(first) = seen.insert(draft.reading.tag.clone(), index) {
                 self.faults.add(
                     &Path::Key(&item_path, "tag"),
                     tag_node.offset,
-                    format!("a second reading of tag {} (the first is reading {first})", draft.reading.tag),
+                    format!(
+                        "a second reading of tag {} (the first is reading {first})",
+                        draft.reading.tag
+                    ),
                     "a batch has one value per tag: average before sending",
                 );
             }
@@ -142,12 +213,24 @@ impl<'a> Reader<'a> {
         Some(drafts)
     }
 
-    fn reading<'n>(&mut self, path: &Path<'_>, node: &'n Node<'a>) -> Option<(&'n Node<'a>, Draft)> {
-        let members = self.members(path, node, "a reading", &["tag", "value", "quality", "time"])?;
+    fn reading<'n>(
+        &mut self,
+        path: &Path<'_>,
+        node: &'n Node<'a>,
+    ) -> Option<(&'n Node<'a>, Draft)> {
+        let members = self.members(
+            path,
+            node,
+            "a reading",
+            &["tag", "value", "quality", "time"],
+        )?;
         let tag_node = self.required(path, node, members, "tag", "the name of the tag");
         let tag = tag_node.and_then(|tag| self.name(&Path::Key(path, "tag"), tag));
         let quality = match find(members, "quality") {
-            None => Some(Quality { grade: Grade::Good, code: None }),
+            None => Some(Quality {
+                grade: Grade::Good,
+                code: None,
+            }),
             Some(member) => self.quality(&Path::Key(path, "quality"), &member.node),
         };
         let time = match find(members, "time") {
@@ -157,8 +240,18 @@ impl<'a> Reader<'a> {
         // A quality that could not be read must not add a second fault here.
         let may_lack = quality.is_none_or(|quality| quality.grade == Grade::Bad);
         let value = self.value(path, node, members, may_lack);
-        let reading = Reading { tag: tag?, value: value?, quality: quality? };
-        Some((tag_node?, Draft { reading, time: time? }))
+        let reading = Reading {
+            tag: tag?,
+            value: value?,
+            quality: quality?,
+        };
+        Some((
+            tag_node?,
+            Draft {
+                reading,
+                time: time?,
+            },
+        ))
     }
 
     fn value(
@@ -216,7 +309,10 @@ impl<'a> Reader<'a> {
                 Some(Quality { grade, code: None })
             }
             Value::Number { text, .. } => match text.parse::<u32>() {
-                Ok(code) => Some(Quality { grade: grade(code), code: Some(code) }),
+                Ok(code) => Some(Quality {
+                    grade: grade(code),
+                    code: Some(code),
+                }),
                 Err(_) => {
                     let what = format!("{text} is no status code of 32 bits");
                     self.faults.add(path, node.offset, what, MEND);
@@ -233,7 +329,8 @@ impl<'a> Reader<'a> {
     }
 
     fn time(&mut self, path: &Path<'_>, node: &Node<'a>) -> Option<OffsetDateTime> {
-        const MEND: &str = "write it as in RFC 3339, with seconds and offset: 2031-04-02T10:05:00+02:00";
+        const MEND: &str =
+            "write it as in RFC 3339, with seconds and offset: 2031-04-02T10:05:00+02:00";
         let Value::String(text) = &node.value else {
             self.wrong_type(path, node, "a time", MEND);
             return None;
@@ -246,12 +343,18 @@ impl<'a> Reader<'a> {
         let time = time.to_offset(UtcOffset::UTC);
         if time > self.latest {
             let what = format!("{} lies in the future", shorten(text));
-            self.faults.add(path, node.offset, what, "check the clock and the offset of the sender");
+            self.faults.add(
+                path,
+                node.offset,
+                what,
+                "check the clock and the offset of the sender",
+            );
             return None;
         }
         if time < OffsetDateTime::UNIX_EPOCH {
             let what = format!("{} lies before 1970", shorten(text));
-            self.faults.add(path, node.offset, what, "check the clock of the sender");
+            self.faults
+                .add(path, node.offset, what, "check the clock of the sender");
             return None;
         }
         Some(time)
@@ -273,7 +376,12 @@ impl<'a> Reader<'a> {
             return None;
         }
         if text.chars().any(char::is_control) {
-            self.faults.add(path, node.offset, "a control character in a name", "leave it out");
+            self.faults.add(
+                path,
+                node.offset,
+                "a control character in a name",
+                "leave it out",
+            );
             return None;
         }
         Some(text.clone().into_owned())
@@ -288,7 +396,12 @@ impl<'a> Reader<'a> {
         known: &[&str],
     ) -> Option<&'n [Member<'a>]> {
         let Value::Object(members) = &node.value else {
-            self.wrong_type(path, node, what, &format!("send an object with {}", known.join(", ")));
+            self.wrong_type(
+                path,
+                node,
+                what,
+                &format!("send an object with {}", known.join(", ")),
+            );
             return None;
         };
         for member in members {

@@ -15,7 +15,11 @@ fn paths(body: &str) -> Vec<String> {
 
 fn whats(body: &str) -> String {
     let refusal = parse(body.as_bytes(), NOW).expect_err("a refusal");
-    refusal.faults.into_iter().map(|fault| fault.what + "\n").collect()
+    refusal
+        .faults
+        .into_iter()
+        .map(|fault| fault.what + "\n")
+        .collect()
 }
 
 fn with_readings(readings: &str) -> String {
@@ -28,7 +32,12 @@ fn with_readings(readings: &str) -> String {
 fn a_good_batch_is_read() {
     let parsed = parse(GOOD.as_bytes(), NOW).expect("a batch");
     assert_eq!(parsed.batch.start, datetime!(2031-04-02 10:00 UTC));
-    let tags: Vec<&str> = parsed.batch.readings.iter().map(|r| r.tag.as_str()).collect();
+    let tags: Vec<&str> = parsed
+        .batch
+        .readings
+        .iter()
+        .map(|r| r.tag.as_str())
+        .collect();
     assert_eq!(tags, ["A", "B"]);
     assert_eq!(parsed.batch.readings[1].quality.grade, Grade::Uncertain);
 }
@@ -39,7 +48,13 @@ fn spelling_and_order_do_not_change_the_digest_and_content_does() {
         "end":"2031-04-02T10:05:00Z","start":"2031-04-02T10:00:00Z","batch":"b\u002d1"}"#;
     let digest = |body: &str| parse(body.as_bytes(), NOW).expect("a batch").digest;
     assert_eq!(digest(GOOD), digest(same));
-    for (from, to) in [("1.5", "1.6"), ("b-1", "b-2"), ("uncertain", "bad"), ("\"A\"", "\"C\""), ("10:05", "10:04")] {
+    for (from, to) in [
+        ("1.5", "1.6"),
+        ("b-1", "b-2"),
+        ("uncertain", "bad"),
+        ("\"A\"", "\"C\""),
+        ("10:05", "10:04"),
+    ] {
         assert_ne!(digest(GOOD), digest(&GOOD.replace(from, to)), "{to}");
     }
 }
@@ -55,9 +70,17 @@ fn every_fault_is_told_at_once() {
     assert_eq!(
         found,
         [
-            "/batch", "/colour", "/readings/0/value", "/readings/1/value", "/readings/2/tag",
-            "/readings/3/value", "/readings/4/quality", "/readings/5/value", "/readings/7/tag",
-            "/readings/8", "/start",
+            "/batch",
+            "/colour",
+            "/readings/0/value",
+            "/readings/1/value",
+            "/readings/2/tag",
+            "/readings/3/value",
+            "/readings/4/quality",
+            "/readings/5/value",
+            "/readings/7/tag",
+            "/readings/8",
+            "/start",
         ]
     );
 }
@@ -80,7 +103,11 @@ fn the_period_must_run_forward_and_be_past() {
 
 #[test]
 fn null_needs_bad_quality() {
-    let lacks = |quality: &str| with_readings(&format!(r#"[{{"tag": "A", "value": null, "quality": {quality}}}]"#));
+    let lacks = |quality: &str| {
+        with_readings(&format!(
+            r#"[{{"tag": "A", "value": null, "quality": {quality}}}]"#
+        ))
+    };
     assert!(parse(lacks("\"bad\"").as_bytes(), NOW).is_ok());
     assert!(parse(lacks("2147483648").as_bytes(), NOW).is_ok());
     assert_eq!(paths(&lacks("\"uncertain\"")), ["/readings/0/value"]);
@@ -89,7 +116,9 @@ fn null_needs_bad_quality() {
 #[test]
 fn status_codes_of_32_bits() {
     let grade_of = |code: &str| {
-        let body = with_readings(&format!(r#"[{{"tag": "A", "value": 1, "quality": {code}}}]"#));
+        let body = with_readings(&format!(
+            r#"[{{"tag": "A", "value": 1, "quality": {code}}}]"#
+        ));
         parse(body.as_bytes(), NOW).map(|parsed| parsed.batch.readings[0].quality.grade)
     };
     assert_eq!(grade_of("0"), Ok(Grade::Good));

@@ -22,7 +22,10 @@ pub(super) struct Node<'a> {
 pub(super) enum Value<'a> {
     Null,
     Bool,
-    Number { text: &'a str, value: f64 },
+    Number {
+        text: &'a str,
+        value: f64,
+    },
     String(Cow<'a, str>),
     Array(Vec<Node<'a>>),
     Object(Vec<Member<'a>>),
@@ -69,7 +72,11 @@ pub(super) struct Faults<'a> {
 
 impl<'a> Faults<'a> {
     pub fn new(source: &'a str) -> Self {
-        Faults { source, found: Vec::new(), syntax: false }
+        Faults {
+            source,
+            found: Vec::new(),
+            syntax: false,
+        }
     }
 
     pub fn add(
@@ -111,12 +118,21 @@ pub(super) struct Broken;
 
 /// Reads one JSON text; what is wrong with it is added to `faults`.
 pub(super) fn read<'a>(source: &'a str, faults: &mut Faults<'a>) -> Result<Node<'a>, Broken> {
-    let mut reader = Reader { source, bytes: source.as_bytes(), at: 0, faults };
+    let mut reader = Reader {
+        source,
+        bytes: source.as_bytes(),
+        at: 0,
+        faults,
+    };
     reader.skip_space();
     let node = reader.node(&Path::Root, 0)?;
     reader.skip_space();
     if reader.at < reader.bytes.len() {
-        return reader.broken(&Path::Root, "there is more after the end of the document", "send one JSON document, or application/x-ndjson with one per line");
+        return reader.broken(
+            &Path::Root,
+            "there is more after the end of the document",
+            "send one JSON document, or application/x-ndjson with one per line",
+        );
     }
     Ok(node)
 }
@@ -194,12 +210,20 @@ impl<'a> Reader<'a, '_> {
             self.skip_space();
             let offset = self.at;
             if self.peek() != Some(b'"') {
-                return self.broken(path, "a key in double quotes is expected here", "write \"key\": value");
+                return self.broken(
+                    path,
+                    "a key in double quotes is expected here",
+                    "write \"key\": value",
+                );
             }
             let key = self.string(path)?;
             self.skip_space();
             if self.peek() != Some(b':') {
-                return self.broken(path, "a colon is expected after a key", "write \"key\": value");
+                return self.broken(
+                    path,
+                    "a colon is expected after a key",
+                    "write \"key\": value",
+                );
             }
             self.at += 1;
             self.skip_space();
@@ -221,7 +245,13 @@ impl<'a> Reader<'a, '_> {
                     self.at += 1;
                     return Ok(Value::Object(members));
                 }
-                _ => return self.broken(path, "a comma or } is expected here", "separate members with commas"),
+                _ => {
+                    return self.broken(
+                        path,
+                        "a comma or } is expected here",
+                        "separate members with commas",
+                    );
+                }
             }
         }
     }
@@ -245,7 +275,13 @@ impl<'a> Reader<'a, '_> {
                     self.at += 1;
                     return Ok(Value::Array(items));
                 }
-                _ => return self.broken(path, "a comma or ] is expected here", "separate items with commas"),
+                _ => {
+                    return self.broken(
+                        path,
+                        "a comma or ] is expected here",
+                        "separate items with commas",
+                    );
+                }
             }
         }
     }
@@ -290,7 +326,11 @@ impl<'a> Reader<'a, '_> {
             return Ok(Value::Faulty);
         }
         self.at = offset;
-        self.broken(path, &format!("\"{}\" is no JSON value", shorten(text)), "put text in double quotes; write numbers as in 1.5e3")
+        self.broken(
+            path,
+            &format!("\"{}\" is no JSON value", shorten(text)),
+            "put text in double quotes; write numbers as in 1.5e3",
+        )
     }
 
     fn string(&mut self, path: &Path<'_>) -> Result<Cow<'a, str>, Broken> {
@@ -316,13 +356,21 @@ impl<'a> Reader<'a, '_> {
                     let text = unescaped.get_or_insert_default();
                     text.push_str(&self.source[run..self.at]);
                     let Some(character) = self.escape() else {
-                        return self.broken(path, "a bad escape in a string", "see RFC 8259, section 7");
+                        return self.broken(
+                            path,
+                            "a bad escape in a string",
+                            "see RFC 8259, section 7",
+                        );
                     };
                     unescaped.get_or_insert_default().push(character);
                     run = self.at;
                 }
                 Some(byte) if byte < 0x20 => {
-                    return self.broken(path, "a control character in a string", "write it as \\u00XX");
+                    return self.broken(
+                        path,
+                        "a control character in a string",
+                        "write it as \\u00XX",
+                    );
                 }
                 Some(_) => self.at += 1,
             }
@@ -368,7 +416,9 @@ impl<'a> Reader<'a, '_> {
         let escape = self.bytes.get(at..at + 6)?;
         let digits = std::str::from_utf8(escape.strip_prefix(b"\\u")?).ok()?;
         let all_digits = digits.bytes().all(|digit| digit.is_ascii_hexdigit());
-        all_digits.then(|| u32::from_str_radix(digits, 16).ok()).flatten()
+        all_digits
+            .then(|| u32::from_str_radix(digits, 16).ok())
+            .flatten()
     }
 }
 
@@ -405,60 +455,5 @@ pub(super) fn shorten(text: &str) -> String {
 }
 
 #[cfg(test)]
-mod tests {
-    use super::*;
-
-    fn faults(source: &str) -> Vec<(String, String)> {
-        let mut faults = Faults::new(source);
-        let _ = read(source, &mut faults);
-        faults.found.into_iter().map(|fault| (fault.path, fault.what)).collect()
-    }
-
-    #[test]
-    fn agrees_with_serde_json_on_what_is_json() {
-        let texts = [
-            "null", "true", "0", "-0.5e-3", "01", "1.", ".5", "+1", "1e", "-", "\"a\\u00e9\\n\"",
-            "\"\\ud83d\\ude00\"", "\"\\ud83d\"", "\"\\x\"", "\"a\nb\"", "[1, 2]", "[1,]", "[", "{}",
-            "{\"a\": 1}", "{\"a\" 1}", "{a: 1}", "{\"a\": 1,}", "", " ", "1 2", "nul", "\"abc", "[1 2]",
-        ];
-        for text in texts {
-            let ours = faults(text).is_empty();
-            let theirs = serde_json::from_str::<serde_json::Value>(text).is_ok();
-            assert_eq!(ours, theirs, "{text}");
-        }
-    }
-
-    #[test]
-    fn strings_are_unescaped() {
-        let source = r#""a\"\\\/\b\f\n\r\té😀é""#;
-        let mut notes = Faults::new(source);
-        let node = read(source, &mut notes).expect("valid");
-        let Value::String(text) = node.value else { panic!("{node:?}") };
-        assert_eq!(text, "a\"\\/\u{8}\u{c}\n\r\t\u{e9}\u{1f600}\u{e9}");
-    }
-
-    #[test]
-    fn goes_on_after_what_is_no_number() {
-        let found = faults("[NaN, -Infinity, 1e400, {\"a/b\": 1, \"a/b\": 2}]");
-        let paths: Vec<&str> = found.iter().map(|(path, _)| path.as_str()).collect();
-        assert_eq!(paths, ["/0", "/1", "/2", "/3/a~1b"]);
-        assert!(found[0].1.contains("NaN"));
-        assert!(found[2].1.contains("1e400"));
-    }
-
-    #[test]
-    fn deep_nesting_is_named() {
-        let found = faults(&"[".repeat(100_000));
-        assert_eq!(found.len(), 1);
-        assert!(found[0].1.contains("nested deeper"), "{found:?}");
-    }
-
-    #[test]
-    fn places_are_lines_and_columns_in_characters() {
-        let source = "{\n  \"\u{e9}\": 1, NaN";
-        let mut notes = Faults::new(source);
-        let _ = read(source, &mut notes);
-        let fault = &notes.found[0];
-        assert_eq!((fault.line, fault.column), (Some(2), Some(11)));
-    }
-}
+#[path = "json_tests.rs"]
+mod tests;

@@ -5,7 +5,7 @@
 use super::attempt::Found;
 use super::compiled::Compiled;
 use crate::diagnosis::{Critical, HARDLY_REDUNDANT, Method, Miss, critical_value};
-use crate::equations::Role;
+use crate::equations::{Role, System};
 use crate::plant::StreamId;
 use crate::report::SingleTest;
 use crate::solver::{Classes, Covariance, Problem, classify};
@@ -16,6 +16,9 @@ use std::sync::Arc;
 /// A flow below this part of the largest is zero: its stream's enthalpy drops
 /// out of every energy balance.
 const ZERO_FLOW: f64 = 1e-7;
+
+/// Enthalpy this close to the saturation line is on it, kJ/kg.
+const ON_THE_LINE: f64 = 1e-5;
 
 /// What tells one class set from another.
 #[derive(Clone, Debug, PartialEq, Eq, Hash)]
@@ -33,13 +36,7 @@ impl ClassKey {
         key.extend(found.case.measured().iter().map(|m| u8::from(m.is_some())));
         key.extend(found.outcome.active_bounds.iter().map(|&a| u8::from(a)));
         for s in streams() {
-            // On the saturation line both sides are the same state.
-            let phase = match system.state(s, x) {
-                Ok(_) if system.on_saturation[s.0].is_some() => 0,
-                Ok(state) => 1 + state.phase as u8,
-                Err(_) => 9,
-            };
-            key.push(phase);
+            key.push(side(system, s, x));
             key.push(u8::from(x[system.layout.m(s)].abs() <= zero));
         }
         ClassKey(key)
@@ -50,6 +47,23 @@ impl ClassKey {
         let digest = Sha256::digest(&self.0);
         digest.iter().take(8).map(|byte| format!("{byte:02x}")).collect()
     }
+}
+
+/// A number for the side of the saturation line; on the line, where rounding
+/// puts a stream on either, one for the line itself.
+fn side(system: &System, s: StreamId, x: &[f64]) -> u8 {
+    let h = x[system.layout.h(s)];
+    match system.saturation(s, x) {
+        None => 0,
+        Some(at) if on_the_line(h, at.liquid.h) || on_the_line(h, at.vapour.h) => 1,
+        Some(at) if h < at.liquid.h => 2,
+        Some(at) if h < at.vapour.h => 3,
+        Some(_) => 4,
+    }
+}
+
+fn on_the_line(h: f64, line: f64) -> bool {
+    (h - line).abs() < ON_THE_LINE
 }
 
 /// Classes and critical value of one class set.

@@ -10,7 +10,7 @@
 
 use super::attempt::Found;
 use super::compiled::Compiled;
-use crate::equations::{Case, Law, Mode, Modes, Role, System};
+use crate::equations::{Case, Law, Measured, Mode, Modes, Role, System};
 use crate::plant::{Quantity, StreamId};
 use crate::solver::{Options, Outcome, Status, solve};
 
@@ -23,6 +23,11 @@ const SUSPICIOUS: f64 = 2.0;
 const SIGNIFICANT: f64 = 3.841_459;
 /// Improvement of the objective that is more than rounding.
 const LOWER: f64 = 1e-7;
+/// Last step of a coarse solve, in sigma: the objective is then right to about
+/// its square.
+const COARSE: f64 = 1e-2;
+/// Enthalpy that no wet steam reaches, kJ/kg: IF97 has 2803.3 at 3 MPa at most.
+const NEVER_WET: f64 = 2804.0;
 /// How far a stream starts on the other side, kJ/kg.
 const ACROSS: f64 = 5.0;
 
@@ -35,6 +40,7 @@ pub fn doubtful(case: &Case, x: &[f64], modes: &mut Modes) {
             (observation.quantity, case.measured()[i])
             && system.on_saturation[s.0].is_none()
             && modes.get(s).is_none()
+            && may_be_near(system, s, measured, x)
             && let Some(saturation) = system.saturation(s, x)
         {
             let h = x[system.layout.h(s)];
@@ -45,6 +51,14 @@ pub fn doubtful(case: &Case, x: &[f64], modes: &mut Modes) {
             }
         }
     }
+}
+
+/// Whether it pays to work out the saturated states: not for steam that is
+/// plainly superheated.
+fn may_be_near(system: &System, s: StreamId, measured: Measured, x: &[f64]) -> bool {
+    let saturated = system.saturation_temperature(s, x).unwrap_or(f64::INFINITY);
+    x[system.layout.h(s)] < NEVER_WET
+        || (measured.value - saturated).abs() < NEAR * measured.sigma.get()
 }
 
 fn mode_at(h: f64, liquid: f64, vapour: f64) -> Mode {
@@ -77,15 +91,9 @@ pub fn settle<'a>(compiled: &Compiled, mut case: Case<'a>, mut best: Outcome) ->
             continue;
         };
         settled.extend(together);
-        let other = solve(
-            &other_case,
-            compiled.symbolic(),
-            &start,
-            &Options::default(),
-        );
-        if other.status != Status::Converged {
+        let Some(other) = explore(compiled, &other_case, &start, best.objective) else {
             continue;
-        }
+        };
         let difference = other.objective - best.objective;
         let apart = !on_the_line(system, s, &best) && !on_the_line(system, s, &other);
         if difference.abs() < SIGNIFICANT && apart {
@@ -101,6 +109,29 @@ pub fn settle<'a>(compiled: &Compiled, mut case: Case<'a>, mut best: Outcome) ->
         outcome: best,
         open,
     }
+}
+
+/// The solution of the other side where it is not significantly worse. A coarse
+/// solve tells; only one that is worth it is carried to the end.
+fn explore(
+    compiled: &Compiled,
+    case: &Case,
+    start: &[f64],
+    best_objective: f64,
+) -> Option<Outcome> {
+    let coarse = Options {
+        tolerance_step: COARSE,
+        ..Options::default()
+    };
+    let converged = |start: &[f64], options: &Options| {
+        let outcome = solve(case, compiled.symbolic(), start, options);
+        (outcome.status == Status::Converged).then_some(outcome)
+    };
+    let first = converged(start, &coarse)?;
+    if first.objective > best_objective + SIGNIFICANT {
+        return None;
+    }
+    converged(&first.x, &Options::default())
 }
 
 /// Whether the other side may fit better: the temperature is near saturation,

@@ -15,6 +15,7 @@ pub struct Solution<'a> {
     class_set: &'a ClassSet,
     covariance: Covariance<'a>,
     multipliers: Vec<f64>,
+    states: Vec<Option<State>>,
 }
 
 impl<'a> Solution<'a> {
@@ -22,11 +23,15 @@ impl<'a> Solution<'a> {
     pub fn new(compiled: &'a Compiled, found: &'a Found<'a>, class_set: &'a ClassSet) -> Self {
         let covariance = class_set::covariance(compiled, found, &class_set.classes);
         let multipliers = covariance.multipliers();
+        let system = compiled.system();
+        let streams = (0..system.layout.streams()).map(StreamId);
+        let states = streams.map(|s| system.state(s, &found.outcome.x).ok()).collect();
         Solution {
             found,
             class_set,
             covariance,
             multipliers,
+            states,
         }
     }
 
@@ -113,7 +118,7 @@ impl<'a> Solution<'a> {
 
     /// Thermodynamic state of a stream.
     pub fn state(&self, s: StreamId) -> Option<State> {
-        self.system().state(s, self.x()).ok()
+        self.states[s.0]
     }
 
     /// Whether the readings fit both sides of the saturation line.

@@ -13,6 +13,7 @@ use axum::Router;
 use hyper::server::conn::http1;
 use hyper::service::service_fn;
 use hyper_util::rt::{TokioIo, TokioTimer};
+use stall::Stalling;
 use std::future::poll_fn;
 use std::io;
 use std::net::SocketAddr;
@@ -20,7 +21,6 @@ use std::pin::Pin;
 use std::sync::Arc;
 use std::task::Poll;
 use std::time::Duration;
-use stall::Stalling;
 use tokio::io::{AsyncReadExt, AsyncWriteExt};
 use tokio::net::{TcpListener, TcpStream};
 use tokio::sync::Semaphore;
@@ -81,7 +81,9 @@ pub enum ServerError {
     Close(#[from] StoreError),
     /// What was accepted could not be finished in time. It is on disk and will
     /// be finished at the next start.
-    #[error("not everything that was accepted could be finished in time; it will be at the next start")]
+    #[error(
+        "not everything that was accepted could be finished in time; it will be at the next start"
+    )]
     Unfinished,
     /// The server's own task broke off.
     #[error("the server broke off")]
@@ -107,13 +109,20 @@ impl Server {
         clock: Arc<dyn Clock>,
         entropy: Arc<dyn Entropy>,
     ) -> Result<Server, ServerError> {
-        let refused = |error| ServerError::Listen { address: options.listen, error };
+        let refused = |error| ServerError::Listen {
+            address: options.listen,
+            error,
+        };
         let listener = TcpListener::bind(options.listen).await.map_err(refused)?;
         let address = listener.local_addr().map_err(refused)?;
         let app = App::new(store, clock, entropy, options.limits);
         let stop = CancellationToken::new();
         let task = tokio::spawn(run(listener, app, stop.clone(), options.grace));
-        Ok(Server { address, stop, task })
+        Ok(Server {
+            address,
+            stop,
+            task,
+        })
     }
 
     /// Where it listens.
@@ -165,7 +174,12 @@ async fn run(
 }
 
 /// Accepts until told to stop.
-async fn accept(listener: TcpListener, app: &App, stop: &CancellationToken, connections: &TaskTracker) {
+async fn accept(
+    listener: TcpListener,
+    app: &App,
+    stop: &CancellationToken,
+    connections: &TaskTracker,
+) {
     let slots = Arc::new(Semaphore::new(app.limits().connections));
     let router = router(app.clone());
     loop {
@@ -226,6 +240,9 @@ async fn serve(stream: TcpStream, router: Router, app: &App, stop: &Cancellation
     // A close while the client is still sending resets the connection, and the
     // client may never see the answer.
     let _ = stream.shutdown().await;
+    if stopped {
+        return;
+    }
     let mut scrap = [0; 16 << 10];
     let drained = async { while matches!(stream.read(&mut scrap).await, Ok(1..)) {} };
     let _ = timeout(LINGER, drained).await;
@@ -236,7 +253,11 @@ async fn serve(stream: TcpStream, router: Router, app: &App, stop: &Cancellation
 async fn resume_whenever_ready(app: App) {
     let mut health = app.store().health();
     loop {
-        if health.wait_for(|health| *health == Health::Ready).await.is_err() {
+        if health
+            .wait_for(|health| *health == Health::Ready)
+            .await
+            .is_err()
+        {
             return;
         }
         if let Err(error) = app.resume().await {

@@ -19,7 +19,12 @@ pub(super) struct Stalling<S> {
 
 impl<S> Stalling<S> {
     pub fn new(stream: S, patience: Duration) -> Self {
-        Stalling { stream, patience, alarm: Box::pin(sleep(patience)), waits: false }
+        Stalling {
+            stream,
+            patience,
+            alarm: Box::pin(sleep(patience)),
+            waits: false,
+        }
     }
 
     /// What a write came to, or that it has waited long enough.
@@ -102,7 +107,10 @@ mod tests {
         assert_eq!(error.kind(), io::ErrorKind::TimedOut);
         assert_eq!(started.elapsed().as_secs(), 30);
         let mut read = [0; 8];
-        theirs.read_exact(&mut read).await.expect("what was written");
+        theirs
+            .read_exact(&mut read)
+            .await
+            .expect("what was written");
         ours.write_all(b"9").await.expect("there is room again");
     }
 }

@@ -10,31 +10,20 @@
 //! ```
 //!
 //! The diagonal and the pairs that the factor's pattern holds come from the
-//! selected inverse. That is the inverse of the regularised matrix, off by a
-//! fraction of about d P where d is the regularisation (and by rounding of
-//! about 1e-16 / d, which is why d is not smaller). Where that fraction exceeds
-//! 1e-4 anywhere, variances are solved one by one by refined columns instead.
+//! selected inverse, with the regularisation taken out (see `unbiased`). Where
+//! that cannot be done, variances are solved one by one by refined columns.
 //!
 //! Directions that nothing determines are held at one state each, which
 //! changes nothing for whatever is determined; relations that others imply are
 //! set aside, so that every multiplier left is unique.
 
 use super::classes::Classes;
-use super::factor::WrongSign;
 use super::problem::{Evaluation, Structure};
 use super::selected::Selected;
 use super::symbolic::Symbolic;
 use super::system::{Block, System};
+use super::unbiased::inverse;
 
-/// Bias of a variance by regularisation that is let pass.
-const BIAS: f64 = 1e-4;
-/// Regularisation of a scaled state that no observation measures alone: less
-/// than in the solve, because here the matrix is regular.
-const STATE_REGULARISATION: f64 = 1e-8;
-/// Regularisation of a normalised relation.
-const RELATION_REGULARISATION: f64 = 1e-12;
-/// Diagonal of a scaled unknown above which it needs no regularisation.
-const MEASURED: f64 = 1e-4;
 /// Residual that columns are refined to.
 const COLUMN_TOLERANCE: f64 = 1e-11;
 
@@ -81,18 +70,13 @@ impl<'a> Covariance<'a> {
             held[j] = 1.0;
         }
         system.assemble(evaluation, &in_use, Block::Held(&held));
-        regularise(&mut system);
-        system.factorise(WrongSign::Replace);
-        let selected = Selected::of(symbolic, &system.factor);
-        let fraction = |place: usize| system.regularisation[place] * selected.diagonal(place);
-        let biased = (0..symbolic.dimension())
-            .any(|place| fraction(place).is_nan() || fraction(place) > BIAS);
+        let (selected, unbiased) = inverse(&mut system);
         Covariance {
             system,
             evaluation,
             classes,
             selected,
-            biased,
+            biased: !unbiased,
         }
     }
 
@@ -285,19 +269,6 @@ impl<'a> Covariance<'a> {
     }
 }
 
-/// Regularises only what has nothing of its own on the diagonal.
-fn regularise(system: &mut System) {
-    for place in 0..system.regularisation.len() {
-        let own = system.diagonal(place).abs();
-        system.regularisation[place] = match system.regularisation[place] {
-            _ if own > MEASURED => 0.0,
-            value if value > 0.0 => STATE_REGULARISATION,
-            value if value < 0.0 => -RELATION_REGULARISATION,
-            _ => 0.0,
-        };
-    }
-}
-
 #[cfg(test)]
 mod tests {
     use super::super::testing::{Oracle, Polynomial, Random, Sample, random_network};
@@ -332,6 +303,12 @@ mod tests {
             &classes,
         );
         let oracle = Oracle::at(sample, &evaluation, &[]);
+        // Rounding is a fraction of the largest variance around.
+        let scaled = |i: usize, j: usize| {
+            oracle.covariance[(i, j)] / (sample.state_scale[i] * sample.state_scale[j])
+        };
+        let largest = (0..x.len()).map(|j| scaled(j, j)).fold(1.0, f64::max);
+        let rounding = 1e-8 * largest + 1e-5;
         for (i, &expected) in oracle.redundancy.iter().enumerate() {
             let redundancy = covariance.redundancy(i);
             assert!(
@@ -341,19 +318,18 @@ mod tests {
         }
         for j in (0..x.len()).filter(|&j| classes.state_observable(j)) {
             let variance = covariance.state_variance(j);
-            let unit = sample.state_scale[j].powi(2);
+            let got = variance / sample.state_scale[j].powi(2);
+            let expected = scaled(j, j);
             assert!(
-                close(variance / unit, oracle.covariance[(j, j)] / unit, BIAS),
-                "{variance} {}",
-                oracle.covariance[(j, j)]
+                (got - expected).abs() <= 1e-4 * expected + rounding,
+                "{got} {expected} {largest}"
             );
             for i in (0..j).filter(|&i| classes.state_observable(i)) {
-                let size = (oracle.covariance[(i, i)] * oracle.covariance[(j, j)]).sqrt();
-                let off = covariance.state_covariance(i, j) - oracle.covariance[(i, j)];
-                assert!(
-                    off.abs() <= BIAS * size + 1e-5 * sample.state_scale[i] * sample.state_scale[j],
-                    "{off} {size}"
-                );
+                let size = (scaled(i, i) * scaled(j, j)).abs().sqrt();
+                let got = covariance.state_covariance(i, j)
+                    / (sample.state_scale[i] * sample.state_scale[j]);
+                let off = (got - scaled(i, j)).abs();
+                assert!(off <= 1e-4 * size + rounding, "{off} {size} {largest}");
             }
         }
         if classes.relations_independent == sample.relations.len() {
@@ -361,7 +337,7 @@ mod tests {
                 let expected = oracle.multiplier_covariance[(k, k)];
                 let variance = covariance.multiplier_variance(k);
                 assert!(
-                    close(variance, expected, BIAS),
+                    close(variance, expected, 1e-4),
                     "multiplier {variance} {expected}"
                 );
             }
@@ -410,7 +386,7 @@ mod tests {
     #[test]
     fn a_weakly_determined_state_keeps_its_true_variance() {
         // x1 = w x0 with a tiny w: the reading of x1 says little about x0.
-        for weight in [1e-2, 1e-4, 1e-6] {
+        for weight in [1e-2, 1e-4, 1e-5, 1e-6, 1e-7] {
             let relation = Polynomial::linear(&[(1, 1.0), (0, -weight), (2, -1.0)]);
             let readings = [1, 2].map(|j| super::super::testing::Reading {
                 of: Polynomial::linear(&[(j, 1.0)]),

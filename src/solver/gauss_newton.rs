@@ -164,8 +164,9 @@ impl<'a, P: Problem + ?Sized> Run<'a, P> {
         self.filter.remember(self.here);
         match self.search(shrinks) {
             Search::Full if !limited && hold.is_none() => {
+                let left = self.left_after(size);
                 self.last_size = Some(size);
-                if size <= self.options.tolerance_step && self.here.feasible {
+                if left <= self.options.tolerance_step && self.here.feasible {
                     return Ok(true);
                 }
                 if size <= 1e-3 * self.options.tolerance_step {
@@ -177,6 +178,15 @@ impl<'a, P: Problem + ?Sized> Run<'a, P> {
             Search::Failed(outside) => self.recover(fresh, outside)?,
         }
         Ok(false)
+    }
+
+    /// How far the solution is after a step of this size, if the steps go on
+    /// shrinking as they did; the step itself where they do not shrink.
+    fn left_after(&self, size: f64) -> f64 {
+        match self.last_size.map(|before| size / before) {
+            Some(ratio) if ratio < 0.5 => size * ratio / (1.0 - ratio),
+            _ => size,
+        }
     }
 
     fn solve_with_old_factor(&mut self) {

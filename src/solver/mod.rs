@@ -26,6 +26,7 @@ mod symbolic;
 mod system;
 #[cfg(test)]
 mod testing;
+mod unbiased;
 
 pub use classes::{Classes, classify};
 pub use covariance::{Column, Covariance};

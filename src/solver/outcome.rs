@@ -7,7 +7,8 @@ use super::problem::Evaluation;
 pub struct Options {
     /// A relation holds when |f| is below this times its scale.
     pub tolerance_relation: f64,
-    /// A solve is done when the last step is below this, in units of the state scale.
+    /// A solve is done when the steps left, as they shrink, are below this in
+    /// units of the state scale.
     pub tolerance_step: f64,
     /// Steps before the solve is given up.
     pub max_iterations: usize,

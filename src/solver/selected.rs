@@ -113,6 +113,25 @@ impl Selected {
         }
     }
 
+    /// Adds `weight` z z' on the pattern.
+    pub(super) fn add_outer_product(&mut self, symbolic: &Symbolic, weight: f64, z: &[f64]) {
+        let (z, _) = z.as_chunks::<2>();
+        let add = |block: &mut Block2, [a, b]: [f64; 2], [c, d]: [f64; 2]| {
+            block[0] += weight * a * c;
+            block[1] += weight * a * d;
+            block[2] += weight * b * c;
+            block[3] += weight * b * d;
+        };
+        for (j, diagonal) in self.diagonal.iter_mut().enumerate() {
+            add(diagonal, z[j], z[j]);
+            let range = symbolic.factor.column(j);
+            let rows = &symbolic.factor.column_row[range.clone()];
+            for (&i, block) in rows.iter().zip(&mut self.lower[range]) {
+                add(block, z[i as usize], z[j]);
+            }
+        }
+    }
+
     /// Diagonal entry at a place of the elimination order.
     pub(super) fn diagonal(&self, place: usize) -> f64 {
         self.diagonal[place / 2][3 * (place % 2)]

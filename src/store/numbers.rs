@@ -40,9 +40,7 @@ impl ChannelKind {
                 Field::Standardised,
             ],
             ChannelKind::Quantity => &[Field::Reconciled, Field::Uncertainty],
-            ChannelKind::Imbalance => {
-                &[Field::Reconciled, Field::Uncertainty, Field::Standardised]
-            }
+            ChannelKind::Imbalance => &[Field::Reconciled, Field::Uncertainty, Field::Standardised],
         }
     }
 }
@@ -55,7 +53,10 @@ pub(super) struct Encoded {
 
 /// Takes the numbers out of a report.
 pub(super) fn encode(report: &Report) -> Encoded {
-    let mut encoder = Encoder { channels: Vec::new(), numbers: Vec::new() };
+    let mut encoder = Encoder {
+        channels: Vec::new(),
+        numbers: Vec::new(),
+    };
     for (name, tag) in report.tags.iter().chain(&report.assumptions) {
         encoder.tag(name, tag);
     }
@@ -85,7 +86,10 @@ pub(super) fn encode(report: &Report) -> Encoded {
             encoder.imbalance(format!("{name}.imbalance.energy"), imbalance);
         }
     }
-    Encoded { channels: encoder.channels, numbers: encoder.numbers }
+    Encoded {
+        channels: encoder.channels,
+        numbers: encoder.numbers,
+    }
 }
 
 struct Encoder {
@@ -95,9 +99,14 @@ struct Encoder {
 
 impl Encoder {
     fn push(&mut self, kind: ChannelKind, name: String, unit: &str, numbers: &[Option<f64>]) {
-        self.channels.push(Channel { name, unit: unit.to_owned(), kind });
+        self.channels.push(Channel {
+            name,
+            unit: unit.to_owned(),
+            kind,
+        });
         for number in numbers {
-            self.numbers.extend(number.unwrap_or(f64::NAN).to_le_bytes());
+            self.numbers
+                .extend(number.unwrap_or(f64::NAN).to_le_bytes());
         }
     }
 
@@ -120,7 +129,11 @@ impl Encoder {
     }
 
     fn imbalance(&mut self, name: String, imbalance: &Imbalance) {
-        let numbers = [imbalance.value, imbalance.uncertainty, imbalance.standardised];
+        let numbers = [
+            imbalance.value,
+            imbalance.uncertainty,
+            imbalance.standardised,
+        ];
         self.push(ChannelKind::Imbalance, name, &imbalance.unit, &numbers);
     }
 }
@@ -152,7 +165,11 @@ impl Layout {
             names.entry(channel.name.clone()).or_insert((place, first));
             first += channel.kind.fields().len();
         }
-        Layout { channels, tags, quantities }
+        Layout {
+            channels,
+            tags,
+            quantities,
+        }
     }
 
     /// Where the field of the selector is; `None` where the layout does not
@@ -168,7 +185,10 @@ impl Layout {
             Field::Redundancy | Field::Standardised => "1",
             _ => &channel.unit,
         };
-        Some(Location { index: offset.map(|offset| first + offset), unit })
+        Some(Location {
+            index: offset.map(|offset| first + offset),
+            unit,
+        })
     }
 }
 

@@ -84,7 +84,11 @@ pub struct Setup {
 
 impl Default for Setup {
     fn default() -> Self {
-        Setup { limits: Limits::default(), database: None, lock_timeout: Duration::from_secs(5) }
+        Setup {
+            limits: Limits::default(),
+            database: None,
+            lock_timeout: Duration::from_secs(5),
+        }
     }
 }
 
@@ -115,7 +119,9 @@ impl Service {
 
     pub fn with(setup: Setup) -> Service {
         let directory = tempfile::tempdir().expect("a directory");
-        let database = setup.database.unwrap_or_else(|| directory.path().join("test.sqlite"));
+        let database = setup
+            .database
+            .unwrap_or_else(|| directory.path().join("test.sqlite"));
         let store_options = SqliteOptions {
             lock_timeout: setup.lock_timeout,
             retry: Duration::from_millis(20),
@@ -137,8 +143,11 @@ impl Service {
                 let store = Arc::new(SqliteStore::open(store_options).await.expect("a store"));
                 let shared: Arc<dyn Store> = store.clone();
                 let (clock, entropy) = (Arc::new(StoppedClock), Arc::new(Counter::default()));
-                let server = Server::start(options, shared, clock, entropy).await.expect("a server");
-                tell.send((server.address(), server.stopper(), store)).expect("a test");
+                let server = Server::start(options, shared, clock, entropy)
+                    .await
+                    .expect("a server");
+                tell.send((server.address(), server.stopper(), store))
+                    .expect("a test");
                 server.ended().await
             })
         });
@@ -158,7 +167,9 @@ impl Service {
     /// Ends it and tells how it ended.
     pub fn stop(&mut self) -> Result<(), ServerError> {
         self.stop.cancel();
-        self.thread.take().map_or(Ok(()), |thread| thread.join().expect("no panic"))
+        self.thread
+            .take()
+            .map_or(Ok(()), |thread| thread.join().expect("no panic"))
     }
 
     pub fn url(&self, path: &str) -> String {
@@ -166,26 +177,45 @@ impl Service {
     }
 
     pub async fn get(&self, path: &str) -> Response {
-        self.client.get(self.url(path)).send().await.expect("an answer")
+        self.client
+            .get(self.url(path))
+            .send()
+            .await
+            .expect("an answer")
     }
 
     pub async fn get_json(&self, path: &str) -> Value {
         let response = self.get(path).await;
-        assert!(response.status().is_success(), "{path}: {}", response.status());
+        assert!(
+            response.status().is_success(),
+            "{path}: {}",
+            response.status()
+        );
         response.json().await.expect("JSON")
     }
 
     pub async fn put_plant(&self) {
         let request = self.client.put(self.url("/v1/plants/mixer"));
-        let request = request.header("content-type", "application/toml").body(PLANT);
+        let request = request
+            .header("content-type", "application/toml")
+            .body(PLANT);
         let response = request.send().await.expect("an answer");
         let status = response.status();
-        assert!(status.is_success(), "{status}: {}", response.text().await.unwrap_or_default());
+        assert!(
+            status.is_success(),
+            "{status}: {}",
+            response.text().await.unwrap_or_default()
+        );
     }
 
     pub async fn post(&self, content_type: &str, body: impl Into<reqwest::Body>) -> Response {
         let request = self.client.post(self.url("/v1/plants/mixer/batches"));
-        request.header("content-type", content_type).body(body).send().await.expect("an answer")
+        request
+            .header("content-type", content_type)
+            .body(body)
+            .send()
+            .await
+            .expect("an answer")
     }
 
     pub async fn post_batch(&self, body: String) -> Response {
@@ -205,7 +235,9 @@ impl Service {
                 }
             }
         };
-        tokio::time::timeout(Duration::from_secs(30), asking).await.expect("a report in time")
+        tokio::time::timeout(Duration::from_secs(30), asking)
+            .await
+            .expect("a report in time")
     }
 }
 
@@ -223,7 +255,10 @@ pub async fn problem(response: Response, status: StatusCode) -> Value {
     assert_eq!(response.status(), status, "{:?}", response.text().await);
     let header = |name: &str| {
         let value = response.headers().get(name);
-        value.and_then(|value| value.to_str().ok()).unwrap_or_default().to_owned()
+        value
+            .and_then(|value| value.to_str().ok())
+            .unwrap_or_default()
+            .to_owned()
     };
     assert_eq!(header("content-type"), "application/problem+json");
     let id = header("x-request-id");
@@ -244,14 +279,24 @@ pub async fn contents(database: &Path) -> Vec<String> {
     let options = sqlx::sqlite::SqliteConnectOptions::new().filename(database);
     let mut connection = options.connect().await.expect("the database");
     let mut rows = Vec::new();
-    for table in ["plants", "revisions", "inbox", "pending", "layouts", "results"] {
+    for table in [
+        "plants",
+        "revisions",
+        "inbox",
+        "pending",
+        "layouts",
+        "results",
+    ] {
         let columns: Vec<String> = sqlx::query_scalar("SELECT name FROM pragma_table_info(?1)")
             .bind(table)
             .fetch_all(&mut connection)
             .await
             .expect("columns");
         assert!(!columns.is_empty(), "{table}");
-        let quoted: Vec<String> = columns.iter().map(|column| format!("quote({column})")).collect();
+        let quoted: Vec<String> = columns
+            .iter()
+            .map(|column| format!("quote({column})"))
+            .collect();
         let statement = format!("SELECT {} FROM {table} ORDER BY 1", quoted.join("||','||"));
         let found: Vec<String> = sqlx::query_scalar(AssertSqlSafe(statement))
             .fetch_all(&mut connection)

@@ -10,6 +10,7 @@
 mod balances;
 mod exact;
 mod invariance;
+mod propagation;
 mod readings;
 mod saturation;
 mod workbench;

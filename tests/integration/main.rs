@@ -1,9 +1,18 @@
-//! The service from outside: a real server, real sockets, a real database.
+//! The tests that look at the whole from outside, in one binary.
 
 mod batches;
+mod demo_truth;
+mod fluid;
 mod harness;
+mod house;
+mod jacobians;
+mod laws;
 mod malformed;
+mod monte_carlo;
 mod openapi;
+mod plant_files;
+mod published_networks;
+mod reference;
 mod service;
 mod service_process;
 mod store;

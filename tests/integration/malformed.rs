@@ -26,9 +26,15 @@ async fn with_patience(read_timeout: Duration) -> Service {
         stream: 256 << 10,
         ..Limits::default()
     };
-    let service = Service::with(Setup { limits, ..Setup::default() });
+    let service = Service::with(Setup {
+        limits,
+        ..Setup::default()
+    });
     service.put_plant().await;
-    assert_eq!(service.post_batch(batch("good", 0, 150.0)).await.status(), StatusCode::OK);
+    assert_eq!(
+        service.post_batch(batch("good", 0, 150.0)).await.status(),
+        StatusCode::OK
+    );
     service
 }
 
@@ -49,7 +55,10 @@ async fn named(from: &str, to: &str, status: StatusCode, path: &str, what: &str)
     let faults = problem["faults"].as_array().expect("faults");
     assert_eq!(faults.len(), 1, "{faults:?}");
     assert_eq!(faults[0]["path"], path);
-    assert!(faults[0]["what"].as_str().expect("text").contains(what), "{faults:?}");
+    assert!(
+        faults[0]["what"].as_str().expect("text").contains(what),
+        "{faults:?}"
+    );
     assert!(!faults[0]["mend"].as_str().expect("text").is_empty());
     assert_eq!(faults[0]["line"], 1);
     assert!(faults[0]["column"].as_u64().expect("a column") > 0);
@@ -64,44 +73,100 @@ async fn not_a_number() {
 
 #[tokio::test]
 async fn infinity() {
-    named(": 150}", ": -Infinity}", StatusCode::BAD_REQUEST, F3, "-Infinity").await;
+    named(
+        ": 150}",
+        ": -Infinity}",
+        StatusCode::BAD_REQUEST,
+        F3,
+        "-Infinity",
+    )
+    .await;
 }
 
 #[tokio::test]
 async fn beyond_a_double() {
-    named(": 150}", ": 1e400}", StatusCode::UNPROCESSABLE_ENTITY, F3, "1e400").await;
+    named(
+        ": 150}",
+        ": 1e400}",
+        StatusCode::UNPROCESSABLE_ENTITY,
+        F3,
+        "1e400",
+    )
+    .await;
 }
 
 #[tokio::test]
 async fn duplicate_tag() {
-    named("F-3", "F-1", StatusCode::UNPROCESSABLE_ENTITY, "/readings/2/tag", "F-1").await;
+    named(
+        "F-3",
+        "F-1",
+        StatusCode::UNPROCESSABLE_ENTITY,
+        "/readings/2/tag",
+        "F-1",
+    )
+    .await;
 }
 
 #[tokio::test]
 async fn future_time() {
-    named("-02T10:01:30", "-03T10:01:30", StatusCode::UNPROCESSABLE_ENTITY, "/end", "future").await;
+    named(
+        "-02T10:01:30",
+        "-03T10:01:30",
+        StatusCode::UNPROCESSABLE_ENTITY,
+        "/end",
+        "future",
+    )
+    .await;
 }
 
 #[tokio::test]
 async fn unknown_field() {
-    named("\"batch\"", "\"colour\": 1, \"batch\"", StatusCode::UNPROCESSABLE_ENTITY, "/colour", "colour").await;
+    named(
+        "\"batch\"",
+        "\"colour\": 1, \"batch\"",
+        StatusCode::UNPROCESSABLE_ENTITY,
+        "/colour",
+        "colour",
+    )
+    .await;
 }
 
 #[tokio::test]
 async fn unknown_field_of_a_reading() {
     let (from, to) = ("\"tag\": \"F-3\"", "\"tag\": \"F-3\", \"unit\": \"t/h\"");
-    named(from, to, StatusCode::UNPROCESSABLE_ENTITY, "/readings/2/unit", "unit").await;
+    named(
+        from,
+        to,
+        StatusCode::UNPROCESSABLE_ENTITY,
+        "/readings/2/unit",
+        "unit",
+    )
+    .await;
 }
 
 #[tokio::test]
 async fn duplicate_key() {
     let (from, to) = ("\"batch\"", "\"batch\": \"x\", \"batch\"");
-    named(from, to, StatusCode::UNPROCESSABLE_ENTITY, "/batch", "twice").await;
+    named(
+        from,
+        to,
+        StatusCode::UNPROCESSABLE_ENTITY,
+        "/batch",
+        "twice",
+    )
+    .await;
 }
 
 #[tokio::test]
 async fn a_number_in_quotes() {
-    named(": 150}", ": \"150\"}", StatusCode::UNPROCESSABLE_ENTITY, F3, "string").await;
+    named(
+        ": 150}",
+        ": \"150\"}",
+        StatusCode::UNPROCESSABLE_ENTITY,
+        F3,
+        "string",
+    )
+    .await;
 }
 
 #[tokio::test]
@@ -113,9 +178,20 @@ async fn every_fault_at_once() {
         .replace("T-3", "T-2");
     let problem = refused("application/json", body, StatusCode::BAD_REQUEST).await;
     let faults = problem["faults"].as_array().expect("faults");
-    let mut paths: Vec<&str> = faults.iter().filter_map(|fault| fault["path"].as_str()).collect();
+    let mut paths: Vec<&str> = faults
+        .iter()
+        .filter_map(|fault| fault["path"].as_str())
+        .collect();
     paths.sort_unstable();
-    assert_eq!(paths, ["/readings/0/tag", "/readings/1/value", F3, "/readings/8/tag"]);
+    assert_eq!(
+        paths,
+        [
+            "/readings/0/tag",
+            "/readings/1/value",
+            F3,
+            "/readings/8/tag"
+        ]
+    );
 }
 
 #[tokio::test]
@@ -134,19 +210,42 @@ async fn not_utf8() {
 
 #[tokio::test]
 async fn deeply_nested() {
-    let body = format!("{{\"batch\": {}1{}}}", "[".repeat(20_000), "]".repeat(20_000));
+    let body = format!(
+        "{{\"batch\": {}1{}}}",
+        "[".repeat(20_000),
+        "]".repeat(20_000)
+    );
     let problem = refused("application/json", body, StatusCode::BAD_REQUEST).await;
-    assert!(problem["faults"][0]["what"].as_str().expect("text").contains("nested"));
+    assert!(
+        problem["faults"][0]["what"]
+            .as_str()
+            .expect("text")
+            .contains("nested")
+    );
 }
 
 #[tokio::test]
 async fn oversized() {
     let service = service().await;
     let answer = service.post("application/json", " ".repeat(65 << 10)).await;
-    assert_eq!(answer.headers()["connection"], "close", "the body stands in the way");
+    assert_eq!(
+        answer.headers()["connection"],
+        "close",
+        "the body stands in the way"
+    );
     let padded = |length| format!("{}{}", batch("bad", 1, 150.0), " ".repeat(length));
-    refused("application/json", padded(64 << 10), StatusCode::PAYLOAD_TOO_LARGE).await;
-    refused("application/x-ndjson", padded(256 << 10), StatusCode::PAYLOAD_TOO_LARGE).await;
+    refused(
+        "application/json",
+        padded(64 << 10),
+        StatusCode::PAYLOAD_TOO_LARGE,
+    )
+    .await;
+    refused(
+        "application/x-ndjson",
+        padded(256 << 10),
+        StatusCode::PAYLOAD_TOO_LARGE,
+    )
+    .await;
 }
 
 #[tokio::test]
@@ -168,7 +267,12 @@ async fn oversized_line() {
 #[tokio::test]
 async fn wrong_content_type() {
     for content_type in ["text/plain", "application/xml", "application/toml"] {
-        refused(content_type, batch("bad", 1, 150.0), StatusCode::UNSUPPORTED_MEDIA_TYPE).await;
+        refused(
+            content_type,
+            batch("bad", 1, 150.0),
+            StatusCode::UNSUPPORTED_MEDIA_TYPE,
+        )
+        .await;
     }
 }
 
@@ -176,7 +280,9 @@ async fn compressed(coding: &str, body: Vec<u8>, status: StatusCode) {
     let service = service().await;
     let before = contents(&service.database).await;
     let request = service.client.post(service.url("/v1/plants/mixer/batches"));
-    let request = request.header("content-type", "application/json").header("content-encoding", coding);
+    let request = request
+        .header("content-type", "application/json")
+        .header("content-encoding", coding);
     let answer = request.body(body).send().await.expect("an answer");
     problem(answer, status).await;
     assert_eq!(contents(&service.database).await, before);
@@ -199,10 +305,17 @@ async fn bombs() {
 async fn a_window_that_would_take_all_memory() {
     use zstd::stream::raw::CParameter;
     let mut encoder = zstd::Encoder::new(Vec::new(), 3).expect("an encoder");
-    encoder.set_parameter(CParameter::WindowLog(27)).expect("a window");
+    encoder
+        .set_parameter(CParameter::WindowLog(27))
+        .expect("a window");
     encoder.include_contentsize(false).expect("no size");
     std::io::Write::write_all(&mut encoder, batch("bad", 1, 150.0).as_bytes()).expect("written");
-    compressed("zstd", encoder.finish().expect("finished"), StatusCode::BAD_REQUEST).await;
+    compressed(
+        "zstd",
+        encoder.finish().expect("finished"),
+        StatusCode::BAD_REQUEST,
+    )
+    .await;
 }
 
 #[tokio::test]
@@ -210,30 +323,47 @@ async fn broken_or_unknown_compression() {
     compressed("gzip", b"no gzip".to_vec(), StatusCode::BAD_REQUEST).await;
     compressed("zstd", b"no zstd".to_vec(), StatusCode::BAD_REQUEST).await;
     let whole = zstd::encode_all(batch("bad", 1, 150.0).as_bytes(), 3).expect("encoded");
-    compressed("zstd", whole[..whole.len() / 2].to_vec(), StatusCode::BAD_REQUEST).await;
+    compressed(
+        "zstd",
+        whole[..whole.len() / 2].to_vec(),
+        StatusCode::BAD_REQUEST,
+    )
+    .await;
     compressed("br", whole, StatusCode::UNSUPPORTED_MEDIA_TYPE).await;
 }
 
 /// Sends bytes and reads until the server closes.
 async fn raw(service: &Service, bytes: &str) -> String {
-    let mut stream = TcpStream::connect(service.address).await.expect("a connection");
+    let mut stream = TcpStream::connect(service.address)
+        .await
+        .expect("a connection");
     stream.write_all(bytes.as_bytes()).await.expect("written");
     let mut answer = String::new();
     let reading = stream.read_to_string(&mut answer);
-    tokio::time::timeout(Duration::from_secs(10), reading).await.expect("a close").expect("text");
+    tokio::time::timeout(Duration::from_secs(10), reading)
+        .await
+        .expect("a close")
+        .expect("text");
     answer
 }
 
 fn is_timeout(answer: &str) {
     assert!(answer.starts_with("HTTP/1.1 408 "), "{answer}");
     let (head, body) = answer.split_once("\r\n\r\n").expect("a body");
-    assert!(head.contains("content-type: application/problem+json"), "{head}");
+    assert!(
+        head.contains("content-type: application/problem+json"),
+        "{head}"
+    );
     let problem: Value = serde_json::from_str(body).expect("JSON");
     assert_eq!(problem["status"], 408);
-    assert!(head.contains(problem["instance"].as_str().expect("an id")), "{head}");
+    assert!(
+        head.contains(problem["instance"].as_str().expect("an id")),
+        "{head}"
+    );
 }
 
-const HEAD: &str = "POST /v1/plants/mixer/batches HTTP/1.1\r\nhost: x\r\ncontent-type: application/json\r\n";
+const HEAD: &str =
+    "POST /v1/plants/mixer/batches HTTP/1.1\r\nhost: x\r\ncontent-type: application/json\r\n";
 
 const CONTINUE: &[u8] = b"HTTP/1.1 100 Continue\r\n\r\n";
 
@@ -250,7 +380,13 @@ async fn slow_headers() {
 async fn slow_body() {
     let service = impatient().await;
     let before = contents(&service.database).await;
-    is_timeout(&raw(&service, &format!("{HEAD}content-length: 500\r\n\r\n{{\"batch\": ")).await);
+    is_timeout(
+        &raw(
+            &service,
+            &format!("{HEAD}content-length: 500\r\n\r\n{{\"batch\": "),
+        )
+        .await,
+    );
     assert_eq!(contents(&service.database).await, before);
 }
 
@@ -262,7 +398,9 @@ async fn dripping_body() {
         tokio::time::sleep(Duration::from_millis(50)).await;
         Some((Ok::<_, std::io::Error>(" "), ()))
     });
-    let answer = service.post("application/json", reqwest::Body::wrap_stream(drops)).await;
+    let answer = service
+        .post("application/json", reqwest::Body::wrap_stream(drops))
+        .await;
     problem(answer, StatusCode::REQUEST_TIMEOUT).await;
     assert_eq!(contents(&service.database).await, before);
 }
@@ -272,29 +410,52 @@ async fn a_connection_that_breaks_off() {
     let service = service().await;
     let before = contents(&service.database).await;
     let whole = batch("bad", 1, 150.0);
-    let mut stream = TcpStream::connect(service.address).await.expect("a connection");
-    let request = format!("{HEAD}content-length: {}\r\n\r\n{}", whole.len(), &whole[..40]);
+    let mut stream = TcpStream::connect(service.address)
+        .await
+        .expect("a connection");
+    let request = format!(
+        "{HEAD}content-length: {}\r\n\r\n{}",
+        whole.len(),
+        &whole[..40]
+    );
     stream.write_all(request.as_bytes()).await.expect("written");
     stream.shutdown().await.expect("half closed");
     let mut answer = String::new();
     // Whether anybody still reads an answer is the network's affair.
     let _ = stream.read_to_string(&mut answer).await;
-    assert!(answer.is_empty() || answer.starts_with("HTTP/1.1 400 "), "{answer}");
+    assert!(
+        answer.is_empty() || answer.starts_with("HTTP/1.1 400 "),
+        "{answer}"
+    );
     assert_eq!(contents(&service.database).await, before);
 }
 
 #[tokio::test]
 async fn too_many_at_once() {
-    let limits = Limits { in_flight: 1, ..Limits::default() };
-    let service = Service::with(Setup { limits, ..Setup::default() });
+    let limits = Limits {
+        in_flight: 1,
+        ..Limits::default()
+    };
+    let service = Service::with(Setup {
+        limits,
+        ..Setup::default()
+    });
     service.put_plant().await;
     // A request that has its permit and is waited for.
-    let mut stream = TcpStream::connect(service.address).await.expect("a connection");
+    let mut stream = TcpStream::connect(service.address)
+        .await
+        .expect("a connection");
     let body = batch("slow", 0, 150.0);
-    let head = format!("{HEAD}expect: 100-continue\r\ncontent-length: {}\r\n\r\n", body.len());
+    let head = format!(
+        "{HEAD}expect: 100-continue\r\ncontent-length: {}\r\n\r\n",
+        body.len()
+    );
     stream.write_all(head.as_bytes()).await.expect("written");
     let mut asked = [0; CONTINUE.len()];
-    stream.read_exact(&mut asked).await.expect("asked to continue");
+    stream
+        .read_exact(&mut asked)
+        .await
+        .expect("asked to continue");
     assert_eq!(&asked, CONTINUE);
     let answer = service.post_batch(batch("second", 1, 150.0)).await;
     assert_eq!(answer.headers()["retry-after"], "1");
@@ -304,7 +465,10 @@ async fn too_many_at_once() {
     let length = stream.read(&mut answer).await.expect("an answer");
     let text = String::from_utf8_lossy(&answer[..length]);
     assert!(text.starts_with("HTTP/1.1 200 "), "{text}");
-    assert_eq!(service.post_batch(batch("second", 1, 150.0)).await.status(), StatusCode::OK);
+    assert_eq!(
+        service.post_batch(batch("second", 1, 150.0)).await.status(),
+        StatusCode::OK
+    );
 }
 
 #[tokio::test]
@@ -313,14 +477,33 @@ async fn plant_files_have_limits_too() {
     let before = contents(&service.database).await;
     let put = |content_type: &'static str, body: String| {
         let request = service.client.put(service.url("/v1/plants/mixer"));
-        request.header("content-type", content_type).body(body).send()
+        request
+            .header("content-type", content_type)
+            .body(body)
+            .send()
     };
     let deep = format!("{{\"plant\": {}}}", "[".repeat(20_000));
     for (content_type, body, status) in [
-        ("text/plain", "x".to_owned(), StatusCode::UNSUPPORTED_MEDIA_TYPE),
-        ("application/toml", "x".repeat(65 << 10), StatusCode::PAYLOAD_TOO_LARGE),
-        ("application/toml", "plant = ".to_owned(), StatusCode::UNPROCESSABLE_ENTITY),
-        ("application/json", "{\"plant\": ".to_owned(), StatusCode::UNPROCESSABLE_ENTITY),
+        (
+            "text/plain",
+            "x".to_owned(),
+            StatusCode::UNSUPPORTED_MEDIA_TYPE,
+        ),
+        (
+            "application/toml",
+            "x".repeat(65 << 10),
+            StatusCode::PAYLOAD_TOO_LARGE,
+        ),
+        (
+            "application/toml",
+            "plant = ".to_owned(),
+            StatusCode::UNPROCESSABLE_ENTITY,
+        ),
+        (
+            "application/json",
+            "{\"plant\": ".to_owned(),
+            StatusCode::UNPROCESSABLE_ENTITY,
+        ),
         ("application/json", deep, StatusCode::UNPROCESSABLE_ENTITY),
     ] {
         problem(put(content_type, body).await.expect("an answer"), status).await;

@@ -14,7 +14,7 @@ use counterpoise::demo::{self, Assumed, Conditions, DAY_SEED, DRIFTING_TAG, Day,
 use counterpoise::fluid;
 use counterpoise::pipeline::{Compiled, reconcile};
 use counterpoise::plant::{Batch, COVERAGE_FACTOR, EquipmentId, Plant, Quantity, StreamId};
-use counterpoise::report::{Phase, QuantityReport, Report, Verdict};
+use counterpoise::report::{Class, Phase, QuantityReport, Report, Verdict};
 use rand::{Rng, SeedableRng};
 use rand_chacha::ChaCha8Rng;
 use time::macros::datetime;
@@ -24,6 +24,9 @@ const BATCHES: u64 = 2000;
 const THREADS: u64 = 2;
 /// Distance from the saturation line within which an interval is not normal, in sigma.
 const NEAR_SATURATION: f64 = 3.0;
+/// First of the late batches of the fixture day: the last two hours, where the
+/// drift has come to 6 sigma.
+const LATE: usize = 264;
 /// Specific enthalpy this close to the line, in kJ/kg, is a stream held at it.
 const AT_SATURATION: f64 = 1e-3;
 
@@ -36,6 +39,8 @@ struct Tally {
     degrees_of_freedom: Vec<usize>,
     statistics: Vec<f64>,
     p_values: Vec<f64>,
+    /// Batches in which a single statistic exceeds its critical value.
+    alarms: usize,
     /// Squared errors of flows in sigma of the reading: measured, reconciled.
     flows: BTreeMap<String, [f64; 2]>,
     /// Intervals that hold the truth, intervals, and the sum of squared errors
@@ -54,6 +59,7 @@ impl Tally {
         self.degrees_of_freedom.push(test.degrees_of_freedom);
         self.statistics.push(test.statistic);
         self.p_values.push(test.p_value.expect("redundant"));
+        self.alarms += usize::from(largest_statistic(report) > report.single_test.as_ref().expect("tested").critical_value);
         for s in 0..plant.streams.len() {
             self.stream(plant, truth, report, StreamId(s));
         }
@@ -142,6 +148,7 @@ impl Tally {
         self.not_converged.extend(other.not_converged);
         self.wrong_phases.extend(other.wrong_phases);
         self.open_phases += other.open_phases;
+        self.alarms += other.alarms;
         self.degrees_of_freedom.extend(other.degrees_of_freedom);
         self.statistics.extend(other.statistics);
         self.p_values.extend(other.p_values);
@@ -157,6 +164,16 @@ impl Tally {
             *self.near_saturation.entry(name).or_default() += count;
         }
     }
+}
+
+/// The largest of all single statistics: adjustments of tags and assumptions,
+/// imbalances.
+fn largest_statistic(report: &Report) -> f64 {
+    let tags = report.tags.values().chain(report.assumptions.values());
+    let adjustments = tags.filter(|tag| tag.class == Class::Redundant).filter_map(|tag| tag.standardised_adjustment);
+    let balances = report.equipment.values().map(|equipment| &equipment.imbalance);
+    let imbalances = balances.flat_map(|i| i.mass.values().chain(&i.energy)).filter_map(|i| i.standardised);
+    adjustments.chain(imbalances).fold(0.0, |largest, statistic| largest.max(statistic.abs()))
 }
 
 /// Phase as a report calls it: what stands on the line is liquid or vapour.
@@ -262,6 +279,12 @@ fn check_statistic(tally: &Tally) {
     println!("{n} batches, {dof} degrees of freedom");
     println!("statistic: mean {mean:.3} +- {error_of_mean:.3}, variance {variance:.2} (2 dof = {}) +- {error_of_variance:.2}", 2.0 * dof);
     println!("p-values: KS distance {distance:.4}, p {p:.4}; {:.2} % below 0.05", 100.0 * rejected);
+    // At 95 % confidence one batch in twenty; the critical value is simulated
+    // with 10 000 draws, whose error counts too.
+    let alarms = tally.alarms as f64 / n;
+    let error_of_alarms = (0.05 * 0.95 * (1.0 / n + 1.0 / 10_000.0)).sqrt();
+    println!("single tests: {:.2} % of batches have an alarm, +- {:.2}", 100.0 * alarms, 100.0 * error_of_alarms);
+    assert!((alarms - 0.05).abs() < 4.0 * error_of_alarms, "{alarms}");
     assert!((mean - dof).abs() < 4.0 * error_of_mean, "mean {mean}");
     assert!((variance - 2.0 * dof).abs() < 4.0 * error_of_variance, "variance {variance}");
     assert!(p > 0.001, "KS p {p}");
@@ -307,21 +330,37 @@ fn the_fixture_day_converges_and_shows_its_drifting_meter() {
     let plant = demo::plant().expect("no faults");
     let compiled = Compiled::new(plant.clone(), 1);
     let mut verdicts: BTreeMap<String, usize> = BTreeMap::new();
-    let mut largest = Vec::new();
+    let mut leaders = Vec::new();
+    let mut sums: BTreeMap<String, f64> = BTreeMap::new();
     for (number, item) in Day::new(&plant, DAY_SEED).enumerate() {
         let (batch, _) = item.expect("the day runs");
         let report = reconcile(&compiled, &batch);
         assert_ne!(report.verdict, Verdict::NotConverged, "{}: {:?}", report.batch, report.reason);
-        let part = if number < 120 { "before the drift" } else { "during the drift" };
+        // The drift begins at ten o'clock.
+        let part = if number <= 120 { "before the drift" } else { "during the drift" };
         *verdicts.entry(format!("{part}: {:?}", report.verdict)).or_default() += 1;
+        if number < LATE {
+            continue;
+        }
         let standardised = report.tags.iter().filter_map(|(name, tag)| Some((name, tag.standardised_adjustment?.abs())));
-        let worst = standardised.max_by(|a, b| a.1.total_cmp(&b.1)).expect("tested tags");
-        largest.push(worst.0.clone());
+        let worst = standardised.clone().max_by(|a, b| a.1.total_cmp(&b.1)).expect("tested tags");
+        leaders.push(worst.0.clone());
+        for (name, size) in standardised {
+            *sums.entry(name.clone()).or_default() += size;
+        }
     }
-    assert_eq!(largest.len(), 288);
-    let late = &largest[264..];
-    let named = late.iter().filter(|name| *name == DRIFTING_TAG).count();
     println!("verdicts: {verdicts:#?}");
-    println!("{DRIFTING_TAG} has the largest standardised adjustment in {named} of the last {} batches", late.len());
-    assert_eq!(named, late.len(), "{late:?}");
+    let mut sums: Vec<(String, f64)> = sums.into_iter().collect();
+    sums.sort_by(|a, b| b.1.total_cmp(&a.1));
+    let count = leaders.len();
+    assert_eq!(count, 24);
+    for (name, sum) in &sums[..4] {
+        let leads = leaders.iter().filter(|leader| *leader == name).count();
+        println!("{name}: standardised adjustment {:.2} on average, the largest in {leads} of {count}", sum / count as f64);
+    }
+    // A flow that is hardly checked moves with the one that drifts, and noise
+    // can put it first in a batch; over the hours it does not.
+    assert_eq!(sums[0].0, DRIFTING_TAG);
+    let leads = leaders.iter().filter(|leader| *leader == DRIFTING_TAG).count();
+    assert!(2 * leads > count, "{leaders:?}");
 }

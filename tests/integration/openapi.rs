@@ -42,7 +42,10 @@ fn every_route_is_described() {
         "post /v1/plants/{plant}/batches",
         "put /v1/plants/{plant}",
     ];
-    assert_eq!(operations, expected.into_iter().map(str::to_owned).collect());
+    assert_eq!(
+        operations,
+        expected.into_iter().map(str::to_owned).collect()
+    );
 }
 
 #[test]
@@ -63,7 +66,9 @@ fn collect(value: &Value, references: &mut Vec<String>) {
             if let Some(Value::String(reference)) = members.get("$ref") {
                 references.push(reference.clone());
             }
-            members.values().for_each(|value| collect(value, references));
+            members
+                .values()
+                .for_each(|value| collect(value, references));
         }
         Value::Array(items) => items.iter().for_each(|item| collect(item, references)),
         _ => {}

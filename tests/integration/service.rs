@@ -11,14 +11,21 @@ async fn put(service: &Service, headers: &[(&str, &str)], body: &str) -> reqwest
     for (name, value) in headers {
         request = request.header(*name, *value);
     }
-    request.body(body.to_owned()).send().await.expect("an answer")
+    request
+        .body(body.to_owned())
+        .send()
+        .await
+        .expect("an answer")
 }
 
 const TOML: (&str, &str) = ("content-type", "application/toml");
 const JSON: (&str, &str) = ("content-type", "application/json");
 
 fn tag(response: &reqwest::Response) -> String {
-    response.headers()["etag"].to_str().expect("text").to_owned()
+    response.headers()["etag"]
+        .to_str()
+        .expect("text")
+        .to_owned()
 }
 
 #[tokio::test]
@@ -40,13 +47,19 @@ async fn a_plant_has_revisions() {
     let same = put(&service, &[TOML], &comment).await;
     assert_eq!(same.status(), StatusCode::OK);
     assert_eq!(tag(&same), first_tag);
-    assert_eq!(same.json::<serde_json::Value>().await.expect("JSON")["revision"], 1);
+    assert_eq!(
+        same.json::<serde_json::Value>().await.expect("JSON")["revision"],
+        1
+    );
 
     let changed = PLANT.replace("Two streams", "Two cold streams");
     let second = put(&service, &[TOML], &changed).await;
     assert_eq!(second.status(), StatusCode::CREATED);
     assert_ne!(tag(&second), first_tag);
-    assert_eq!(second.json::<serde_json::Value>().await.expect("JSON")["revision"], 2);
+    assert_eq!(
+        second.json::<serde_json::Value>().await.expect("JSON")["revision"],
+        2
+    );
 
     let current = service.get_json("/v1/plants/mixer").await;
     assert_eq!(current["title"], "Two cold streams and a mixer");
@@ -66,18 +79,29 @@ async fn preconditions_guard_a_plant() {
     let service = Service::start();
     let absent = ("if-none-match", "*");
     let present = ("if-match", "*");
-    problem(put(&service, &[TOML, present], PLANT).await, StatusCode::PRECONDITION_FAILED).await;
+    problem(
+        put(&service, &[TOML, present], PLANT).await,
+        StatusCode::PRECONDITION_FAILED,
+    )
+    .await;
     let first = put(&service, &[TOML, absent], PLANT).await;
     assert_eq!(first.status(), StatusCode::CREATED);
     let first_tag = tag(&first);
-    problem(put(&service, &[TOML, absent], PLANT).await, StatusCode::PRECONDITION_FAILED).await;
+    problem(
+        put(&service, &[TOML, absent], PLANT).await,
+        StatusCode::PRECONDITION_FAILED,
+    )
+    .await;
 
     let changed = PLANT.replace("Two streams", "Cold streams");
     let guarded = put(&service, &[TOML, ("if-match", &first_tag)], &changed).await;
     assert_eq!(guarded.status(), StatusCode::CREATED);
     let late = put(&service, &[TOML, ("if-match", &first_tag)], PLANT).await;
     problem(late, StatusCode::PRECONDITION_FAILED).await;
-    assert_eq!(service.get_json("/v1/plants/mixer").await["title"], "Cold streams and a mixer");
+    assert_eq!(
+        service.get_json("/v1/plants/mixer").await["title"],
+        "Cold streams and a mixer"
+    );
 }
 
 #[tokio::test]
@@ -90,32 +114,62 @@ async fn a_plant_comes_back_as_json_and_as_sent() {
     let toml_tag = tag(&toml);
     assert_eq!(toml.text().await.expect("text"), PLANT);
 
-    let json = accept("application/json, */*;q=0.1").await.expect("an answer");
+    let json = accept("application/json, */*;q=0.1")
+        .await
+        .expect("an answer");
     assert_eq!(json.headers()["content-type"], "application/json");
     let json_tag = tag(&json);
     assert_ne!(json_tag, toml_tag, "one strong tag for two forms");
     let json = json.text().await.expect("text");
 
-    let unchanged = service.client.get(&address).header("if-none-match", &json_tag);
+    let unchanged = service
+        .client
+        .get(&address)
+        .header("if-none-match", &json_tag);
     let unchanged = unchanged.send().await.expect("an answer");
     assert_eq!(unchanged.status(), StatusCode::NOT_MODIFIED);
 
     let same = put(&service, &[JSON], &json).await;
-    assert_eq!(same.status(), StatusCode::OK, "the JSON form is the same plant");
-    problem(accept("image/png").await.expect("an answer"), StatusCode::NOT_ACCEPTABLE).await;
+    assert_eq!(
+        same.status(),
+        StatusCode::OK,
+        "the JSON form is the same plant"
+    );
+    problem(
+        accept("image/png").await.expect("an answer"),
+        StatusCode::NOT_ACCEPTABLE,
+    )
+    .await;
 }
 
 #[tokio::test]
 async fn every_fault_of_a_plant_file_is_told() {
     let service = Service::start();
-    let faulty = PLANT.replace("\"t/h\"", "\"furlong\"").replace("kind = \"mixer\"", "kind = \"blender\"");
-    let answer = problem(put(&service, &[TOML], &faulty).await, StatusCode::UNPROCESSABLE_ENTITY).await;
+    let faulty = PLANT
+        .replace("\"t/h\"", "\"furlong\"")
+        .replace("kind = \"mixer\"", "kind = \"blender\"");
+    let answer = problem(
+        put(&service, &[TOML], &faulty).await,
+        StatusCode::UNPROCESSABLE_ENTITY,
+    )
+    .await;
     let faults = answer["faults"].as_array().expect("faults");
-    let paths: Vec<&str> = faults.iter().filter_map(|fault| fault["path"].as_str()).collect();
-    for path in ["/tags/F-1/unit", "/tags/F-2/unit", "/tags/F-3/unit", "/equipment/mix/kind"] {
+    let paths: Vec<&str> = faults
+        .iter()
+        .filter_map(|fault| fault["path"].as_str())
+        .collect();
+    for path in [
+        "/tags/F-1/unit",
+        "/tags/F-2/unit",
+        "/tags/F-3/unit",
+        "/equipment/mix/kind",
+    ] {
         assert!(paths.contains(&path), "{path} is not among {paths:?}");
     }
-    let placed = faults.iter().find(|fault| fault["path"] == "/tags/F-1/unit").expect("a fault");
+    let placed = faults
+        .iter()
+        .find(|fault| fault["path"] == "/tags/F-1/unit")
+        .expect("a fault");
     assert_eq!(placed["line"], 14);
     assert!(!placed["what"].as_str().expect("text").is_empty());
     assert!(!placed["mend"].as_str().expect("text").is_empty());
@@ -126,7 +180,11 @@ async fn every_fault_of_a_plant_file_is_told() {
 async fn a_plant_has_the_name_of_its_address() {
     let service = Service::start();
     let renamed = PLANT.replace("plant = \"mixer\"", "plant = \"other\"");
-    let answer = problem(put(&service, &[TOML], &renamed).await, StatusCode::UNPROCESSABLE_ENTITY).await;
+    let answer = problem(
+        put(&service, &[TOML], &renamed).await,
+        StatusCode::UNPROCESSABLE_ENTITY,
+    )
+    .await;
     assert_eq!(answer["faults"][0]["path"], "/plant");
 }
 
@@ -137,7 +195,11 @@ async fn an_assessment_needs_no_batch() {
     assert_eq!(assessment["plant"], "mixer");
     assert_eq!(assessment["revision"], 1);
     assert_eq!(assessment["tags"].as_object().expect("tags").len(), 9);
-    problem(service.get("/v1/plants/nowhere/assessment").await, StatusCode::NOT_FOUND).await;
+    problem(
+        service.get("/v1/plants/nowhere/assessment").await,
+        StatusCode::NOT_FOUND,
+    )
+    .await;
 }
 
 #[tokio::test]
@@ -145,8 +207,15 @@ async fn a_list_of_plants_goes_on_by_its_link() {
     let service = Service::start();
     for name in ["c", "a", "b"] {
         let plant = PLANT.replace("plant = \"mixer\"", &format!("plant = \"{name}\""));
-        let request = service.client.put(service.url(&format!("/v1/plants/{name}")));
-        let answer = request.header(TOML.0, TOML.1).body(plant).send().await.expect("an answer");
+        let request = service
+            .client
+            .put(service.url(&format!("/v1/plants/{name}")));
+        let answer = request
+            .header(TOML.0, TOML.1)
+            .body(plant)
+            .send()
+            .await
+            .expect("an answer");
         assert_eq!(answer.status(), StatusCode::CREATED);
     }
     let mut next = Some("/v1/plants?limit=1".to_owned());
@@ -155,7 +224,12 @@ async fn a_list_of_plants_goes_on_by_its_link() {
         let answer = service.get(&path).await;
         next = next_link(&answer);
         let list: serde_json::Value = answer.json().await.expect("JSON");
-        names.push(list["plants"][0]["plant"].as_str().expect("a name").to_owned());
+        names.push(
+            list["plants"][0]["plant"]
+                .as_str()
+                .expect("a name")
+                .to_owned(),
+        );
     }
     assert_eq!(names, ["a", "b", "c"]);
 }
@@ -170,13 +244,22 @@ pub fn next_link(response: &reqwest::Response) -> Option<String> {
 #[tokio::test]
 async fn requests_have_ids() {
     let service = Service::start();
-    let made = service.get("/livez").await.headers()["x-request-id"].to_str().expect("text").to_owned();
+    let made = service.get("/livez").await.headers()["x-request-id"]
+        .to_str()
+        .expect("text")
+        .to_owned();
     let id: uuid::Uuid = made.parse().expect("a UUID");
     assert_eq!(id.get_version_num(), 7);
-    let given = service.client.get(service.url("/livez")).header("x-request-id", "shift-7.42");
+    let given = service
+        .client
+        .get(service.url("/livez"))
+        .header("x-request-id", "shift-7.42");
     let given = given.send().await.expect("an answer");
     assert_eq!(given.headers()["x-request-id"], "shift-7.42");
-    let unusable = service.client.get(service.url("/nowhere")).header("x-request-id", "a b\"");
+    let unusable = service
+        .client
+        .get(service.url("/nowhere"))
+        .header("x-request-id", "a b\"");
     let unusable = unusable.send().await.expect("an answer");
     assert_ne!(unusable.headers()["x-request-id"], "a b\"");
     problem(unusable, StatusCode::NOT_FOUND).await;
@@ -185,10 +268,18 @@ async fn requests_have_ids() {
 #[tokio::test]
 async fn what_is_not_there_and_what_is_not_done_are_problems() {
     let service = Service::with_plant().await;
-    for path in ["/", "/v1", "/v1/plants/mixer/nothing", "/v1/plants/nowhere", "/v1/plants/mixer/batches/x"] {
+    for path in [
+        "/",
+        "/v1",
+        "/v1/plants/mixer/nothing",
+        "/v1/plants/nowhere",
+        "/v1/plants/mixer/batches/x",
+    ] {
         problem(service.get(path).await, StatusCode::NOT_FOUND).await;
     }
-    let request = service.client.request(Method::DELETE, service.url("/v1/plants/mixer"));
+    let request = service
+        .client
+        .request(Method::DELETE, service.url("/v1/plants/mixer"));
     let answer = request.send().await.expect("an answer");
     let allow = answer.headers()["allow"].to_str().expect("text").to_owned();
     assert!(allow.contains("PUT") && allow.contains("GET"), "{allow}");
@@ -217,14 +308,21 @@ async fn an_orderly_end_finishes_what_has_begun() {
          expect: 100-continue\r\ncontent-length: {}\r\n\r\n",
         body.len()
     );
-    let mut stream = TcpStream::connect(service.address).await.expect("a connection");
+    let mut stream = TcpStream::connect(service.address)
+        .await
+        .expect("a connection");
     stream.write_all(head.as_bytes()).await.expect("written");
     let mut asked = [0; 25];
-    stream.read_exact(&mut asked).await.expect("asked to continue");
+    stream
+        .read_exact(&mut asked)
+        .await
+        .expect("asked to continue");
     let address = service.address;
     let ending = tokio::task::spawn_blocking(move || service.stop());
     let refusing = async { while TcpStream::connect(address).await.is_ok() {} };
-    tokio::time::timeout(Duration::from_secs(10), refusing).await.expect("nobody else is let in");
+    tokio::time::timeout(Duration::from_secs(10), refusing)
+        .await
+        .expect("nobody else is let in");
     stream.write_all(body.as_bytes()).await.expect("written");
     let mut answer = String::new();
     stream.read_to_string(&mut answer).await.expect("an answer");

@@ -23,7 +23,11 @@ fn run(directory: &Path, arguments: &[&str], input: &str) -> Output {
         .spawn()
         .expect("a process");
     // A program that has refused its arguments does not read its input.
-    let _ = child.stdin.take().expect("an input").write_all(input.as_bytes());
+    let _ = child
+        .stdin
+        .take()
+        .expect("an input")
+        .write_all(input.as_bytes());
     child.wait_with_output().expect("an end")
 }
 
@@ -35,8 +39,14 @@ fn files() -> tempfile::TempDir {
     write("plant.toml", PLANT);
     write("faulty.toml", &PLANT.replace("\"t/h\"", "\"furlong\""));
     write("batch.json", &batch("b", 0, 150.0));
-    write("faulty.json", &batch("b", 0, 150.0).replace(": 150}", ": NaN}"));
-    write("day.ndjson", &format!("{}\n\n{}\n", batch("b1", 0, 150.0), batch("b2", 1, 151.0)));
+    write(
+        "faulty.json",
+        &batch("b", 0, 150.0).replace(": 150}", ": NaN}"),
+    );
+    write(
+        "day.ndjson",
+        &format!("{}\n\n{}\n", batch("b1", 0, 150.0), batch("b2", 1, 151.0)),
+    );
     directory
 }
 
@@ -50,9 +60,19 @@ fn check_prints_an_assessment_or_every_fault() {
     let good = run(directory.path(), &["check", "plant.toml"], "");
     assert_eq!(good.status.code(), Some(0), "{}", text(&good.stderr));
     let shown = text(&good.stdout);
-    assert!(shown.contains("F-3") && shown.contains("degrees of freedom"), "{shown}");
-    assert!(shown.contains("not for protection or safety functions"), "{shown}");
-    let json = run(directory.path(), &["check", "plant.toml", "--format", "json"], "");
+    assert!(
+        shown.contains("F-3") && shown.contains("degrees of freedom"),
+        "{shown}"
+    );
+    assert!(
+        shown.contains("not for protection or safety functions"),
+        "{shown}"
+    );
+    let json = run(
+        directory.path(),
+        &["check", "plant.toml", "--format", "json"],
+        "",
+    );
     let assessment: serde_json::Value = serde_json::from_slice(&json.stdout).expect("JSON");
     assert_eq!(assessment["plant"], "mixer");
 
@@ -62,7 +82,11 @@ fn check_prints_an_assessment_or_every_fault() {
     for line in [14, 15, 16] {
         assert!(faults.contains(&format!("faulty.toml:{line}:")), "{faults}");
     }
-    let json = run(directory.path(), &["check", "faulty.toml", "--format", "json"], "");
+    let json = run(
+        directory.path(),
+        &["check", "faulty.toml", "--format", "json"],
+        "",
+    );
     let faults: serde_json::Value = serde_json::from_slice(&json.stdout).expect("JSON");
     assert_eq!(faults["faults"].as_array().expect("faults").len(), 3);
 }
@@ -70,7 +94,11 @@ fn check_prints_an_assessment_or_every_fault() {
 #[test]
 fn reconcile_prints_the_report() {
     let directory = files();
-    let json = run(directory.path(), &["reconcile", "plant.toml", "batch.json", "--format", "json"], "");
+    let json = run(
+        directory.path(),
+        &["reconcile", "plant.toml", "batch.json", "--format", "json"],
+        "",
+    );
     assert_eq!(json.status.code(), Some(0), "{}", text(&json.stderr));
     let report: serde_json::Value = serde_json::from_slice(&json.stdout).expect("JSON");
     assert_eq!(report["batch"], "b");
@@ -80,17 +108,33 @@ fn reconcile_prints_the_report() {
         &batch("b", 0, 150.0),
     );
     assert_eq!(piped.stdout, json.stdout);
-    let people = run(directory.path(), &["reconcile", "plant.toml", "batch.json"], "");
+    let people = run(
+        directory.path(),
+        &["reconcile", "plant.toml", "batch.json"],
+        "",
+    );
     let shown = text(&people.stdout);
-    assert!(shown.contains("Batch b of mixer") && shown.contains("F-3"), "{shown}");
-    assert!(shown.contains("not for protection or safety functions"), "{shown}");
+    assert!(
+        shown.contains("Batch b of mixer") && shown.contains("F-3"),
+        "{shown}"
+    );
+    assert!(
+        shown.contains("not for protection or safety functions"),
+        "{shown}"
+    );
 }
 
 #[test]
 fn reconcile_takes_a_stream() {
     let directory = files();
     for arguments in [
-        &["reconcile", "plant.toml", "day.ndjson", "--format", "ndjson"][..],
+        &[
+            "reconcile",
+            "plant.toml",
+            "day.ndjson",
+            "--format",
+            "ndjson",
+        ][..],
         &["reconcile", "plant.toml", "day.ndjson", "--format", "json"],
     ] {
         let output = run(directory.path(), arguments, "");
@@ -103,10 +147,22 @@ fn reconcile_takes_a_stream() {
         assert_eq!(names, ["b1", "b2"]);
     }
     let faulty = format!("{{}}\n{}\n", batch("b", 0, 150.0));
-    let output = run(directory.path(), &["reconcile", "plant.toml", "-", "--format", "ndjson"], &faulty);
+    let output = run(
+        directory.path(),
+        &["reconcile", "plant.toml", "-", "--format", "ndjson"],
+        &faulty,
+    );
     assert_eq!(output.status.code(), Some(1));
-    assert_eq!(text(&output.stdout).lines().count(), 1, "the good one is done");
-    assert!(text(&output.stderr).contains("line 1"), "{}", text(&output.stderr));
+    assert_eq!(
+        text(&output.stdout).lines().count(),
+        1,
+        "the good one is done"
+    );
+    assert!(
+        text(&output.stderr).contains("line 1"),
+        "{}",
+        text(&output.stderr)
+    );
 }
 
 #[test]
@@ -119,10 +175,24 @@ fn faults_and_trouble_have_their_exit_codes() {
         (&["weigh"], 2),
         (&["reconcile", "plant.toml", "nothing.json"], 3),
         (&["check", "batch.xml"], 3),
-        (&["serve", "--listen", "127.0.0.1:0", "--database", "no/such/directory/x.sqlite"], 3),
+        (
+            &[
+                "serve",
+                "--listen",
+                "127.0.0.1:0",
+                "--database",
+                "no/such/directory/x.sqlite",
+            ],
+            3,
+        ),
     ] {
         let output = run(directory.path(), arguments, "");
-        assert_eq!(output.status.code(), Some(code), "{arguments:?}: {}", text(&output.stderr));
+        assert_eq!(
+            output.status.code(),
+            Some(code),
+            "{arguments:?}: {}",
+            text(&output.stderr)
+        );
         assert!(!output.stderr.is_empty(), "{arguments:?}");
         assert!(output.stdout.is_empty(), "{arguments:?}");
     }
@@ -144,8 +214,10 @@ fn serve(directory: &Path) -> (Child, Lines<BufReader<ChildStderr>>, String) {
         .spawn()
         .expect("a process");
     let mut lines = BufReader::new(child.stderr.take().expect("a log")).lines();
-    let serving =
-        lines.by_ref().map(|line| line.expect("text")).find(|line| line.contains("\"serving\""));
+    let serving = lines
+        .by_ref()
+        .map(|line| line.expect("text"))
+        .find(|line| line.contains("\"serving\""));
     let line: serde_json::Value = serde_json::from_str(&serving.expect("a line")).expect("JSON");
     let address = line["address"].as_str().expect("an address").to_owned();
     (child, lines, address)
@@ -163,7 +235,11 @@ async fn a_killed_service_has_lost_nothing_that_it_acknowledged() {
     let (mut child, mut address) = start();
     let client = reqwest::Client::new();
     let put = client.put(format!("http://{address}/v1/plants/mixer"));
-    let put = put.header("content-type", "application/toml").body(PLANT).send().await;
+    let put = put
+        .header("content-type", "application/toml")
+        .body(PLANT)
+        .send()
+        .await;
     assert_eq!(put.expect("an answer").status(), 201);
     let mut acknowledged = Vec::new();
     for round in 0..3 {
@@ -195,14 +271,23 @@ async fn a_killed_service_has_lost_nothing_that_it_acknowledged() {
         let report = format!("http://{address}/v1/plants/mixer/batches/{name}");
         let asking = async {
             loop {
-                match client.get(&report).send().await.expect("an answer").status().as_u16() {
+                match client
+                    .get(&report)
+                    .send()
+                    .await
+                    .expect("an answer")
+                    .status()
+                    .as_u16()
+                {
                     200 => return,
                     202 => {}
                     other => panic!("{name}: {other}"),
                 }
             }
         };
-        tokio::time::timeout(Duration::from_secs(30), asking).await.expect("a report in time");
+        tokio::time::timeout(Duration::from_secs(30), asking)
+            .await
+            .expect("a report in time");
     }
     child.kill().expect("killed");
     child.wait().expect("an end");
@@ -219,7 +304,9 @@ fn signals_end_it_in_order() {
         let directory = tempfile::tempdir().expect("a directory");
         let (mut child, lines, address) = serve(directory.path());
         assert!(address.starts_with("127.0.0.1:"));
-        let killed = Command::new("kill").args(["-s", signal, &child.id().to_string()]).status();
+        let killed = Command::new("kill")
+            .args(["-s", signal, &child.id().to_string()])
+            .status();
         assert!(killed.expect("kill").success());
         let rest: Vec<String> = lines.map(|line| line.expect("text")).collect();
         assert_eq!(child.wait().expect("an end").code(), Some(0), "{rest:?}");

@@ -17,7 +17,10 @@ use std::time::Duration;
 async fn sqlite() -> (tempfile::TempDir, SqliteStore) {
     let directory = tempfile::tempdir().expect("a directory");
     let options = SqliteOptions::new(directory.path().join("test.sqlite"));
-    (directory, SqliteStore::open(options).await.expect("a store"))
+    (
+        directory,
+        SqliteStore::open(options).await.expect("a store"),
+    )
 }
 
 /// Runs a check on every kind of store there is.
@@ -77,7 +80,10 @@ fn report(ticket: &Ticket, minute: i64, value: f64, unit: &str) -> Report {
     let stream = StreamReport {
         mass_flow: quantity(value, "kg/s"),
         pressure: quantity(5.0, "bar"),
-        temperature: QuantityReport { value: None, ..quantity(20.0, "Cel") },
+        temperature: QuantityReport {
+            value: None,
+            ..quantity(20.0, "Cel")
+        },
         enthalpy: quantity(84.0, "kJ/kg"),
         phase: None,
     };
@@ -87,7 +93,11 @@ fn report(ticket: &Ticket, minute: i64, value: f64, unit: &str) -> Report {
         batch: ticket.batch.clone(),
         start: NOW + time::Duration::minutes(minute),
         end: NOW + time::Duration::minutes(minute + 1),
-        verdict: if value > 0.0 { Verdict::Consistent } else { Verdict::Inconsistent },
+        verdict: if value > 0.0 {
+            Verdict::Consistent
+        } else {
+            Verdict::Inconsistent
+        },
         reason: None,
         global_test: Some(GlobalTest {
             statistic: value,
@@ -116,22 +126,39 @@ async fn accepted(store: &dyn Store, incoming: Incoming) -> Ticket {
 #[tokio::test]
 async fn revisions_are_counted_and_kept() {
     on_every_store(async |store| {
-        let PutOutcome::Created(first) = store.put_plant(plant("p", "{}")).await.expect("put") else {
+        let PutOutcome::Created(first) = store.put_plant(plant("p", "{}")).await.expect("put")
+        else {
             panic!("not created");
         };
         assert_eq!(first.revision, 1);
         let again = store.put_plant(plant("p", "{}")).await.expect("put");
         assert_eq!(again, PutOutcome::Unchanged(first.clone()));
         let second = store.put_plant(plant("p", "{\"a\":1}")).await.expect("put");
-        assert!(matches!(&second, PutOutcome::Created(p) if p.revision == 2), "{second:?}");
+        assert!(
+            matches!(&second, PutOutcome::Created(p) if p.revision == 2),
+            "{second:?}"
+        );
         let back = store.put_plant(plant("p", "{}")).await.expect("put");
-        assert!(matches!(&back, PutOutcome::Created(p) if p.revision == 3), "{back:?}");
+        assert!(
+            matches!(&back, PutOutcome::Created(p) if p.revision == 3),
+            "{back:?}"
+        );
         assert_eq!(store.plant("p", Some(1)).await.expect("read"), Some(first));
-        assert_eq!(store.plant("p", None).await.expect("read").map(|p| p.revision), Some(3));
+        assert_eq!(
+            store
+                .plant("p", None)
+                .await
+                .expect("read")
+                .map(|p| p.revision),
+            Some(3)
+        );
         assert_eq!(store.plant("p", Some(4)).await.expect("read"), None);
         assert_eq!(store.plant("q", None).await.expect("read"), None);
         let guarded = |precondition| {
-            store.put_plant(NewPlant { precondition, ..plant("p", "{\"b\":1}") })
+            store.put_plant(NewPlant {
+                precondition,
+                ..plant("p", "{\"b\":1}")
+            })
         };
         for precondition in [
             Precondition::Absent,
@@ -143,7 +170,10 @@ async fn revisions_are_counted_and_kept() {
         }
         store.put_plant(plant("a", "{}")).await.expect("put");
         let lines = store.plants(None, 10).await.expect("a list");
-        assert_eq!(lines.iter().map(|l| l.name.as_str()).collect::<Vec<_>>(), ["a", "p"]);
+        assert_eq!(
+            lines.iter().map(|l| l.name.as_str()).collect::<Vec<_>>(),
+            ["a", "p"]
+        );
         assert_eq!(lines[1].revision, 3);
         let after = store.plants(Some("a"), 10).await.expect("a list");
         assert_eq!(after.len(), 1);
@@ -154,15 +184,25 @@ async fn revisions_are_counted_and_kept() {
 #[tokio::test]
 async fn a_name_is_one_batch() {
     on_every_store(async |store| {
-        assert_eq!(store.accept(incoming("p", "b", 0, 1)).await.expect("ok"), Acceptance::NoPlant);
+        assert_eq!(
+            store.accept(incoming("p", "b", 0, 1)).await.expect("ok"),
+            Acceptance::NoPlant
+        );
         for name in ["p", "q"] {
             store.put_plant(plant(name, "{}")).await.expect("put");
         }
         let ticket = accepted(store, incoming("p", "b", 0, 1)).await;
         store.put_plant(plant("p", "{\"a\":1}")).await.expect("put");
         let known = store.accept(incoming("p", "b", 0, 1)).await.expect("ok");
-        assert_eq!(known, Acceptance::Known(ticket.clone()), "with the revision of its time");
-        assert_eq!(store.accept(incoming("p", "b", 0, 2)).await.expect("ok"), Acceptance::Conflict);
+        assert_eq!(
+            known,
+            Acceptance::Known(ticket.clone()),
+            "with the revision of its time"
+        );
+        assert_eq!(
+            store.accept(incoming("p", "b", 0, 2)).await.expect("ok"),
+            Acceptance::Conflict
+        );
         accepted(store, incoming("q", "b", 0, 2)).await;
         let pending = store.batch("p", "b").await.expect("read");
         assert_eq!(pending, Some(Stored::Pending(ticket)));
@@ -176,8 +216,14 @@ async fn many_at_once_are_one() {
         store.put_plant(plant("p", "{}")).await.expect("put");
         let all = (0..64).map(|_| store.accept(incoming("p", "b", 0, 1)));
         let outcomes = futures::future::join_all(all).await;
-        let new = outcomes.iter().filter(|o| matches!(o, Ok(Acceptance::New(_)))).count();
-        let known = outcomes.iter().filter(|o| matches!(o, Ok(Acceptance::Known(_)))).count();
+        let new = outcomes
+            .iter()
+            .filter(|o| matches!(o, Ok(Acceptance::New(_))))
+            .count();
+        let known = outcomes
+            .iter()
+            .filter(|o| matches!(o, Ok(Acceptance::Known(_))))
+            .count();
         assert_eq!((new, known), (1, 63));
     })
     .await;
@@ -194,11 +240,18 @@ async fn results_come_back_bit_for_bit() {
         assert_eq!(unfinished[0].body, b"body of b");
         assert_eq!(unfinished[0].received, NOW);
         let first = Arc::new(report(&ticket, 0, 0.1 + 0.2, "t/h"));
-        store.finish(ticket.clone(), Arc::clone(&first)).await.expect("finished");
+        store
+            .finish(ticket.clone(), Arc::clone(&first))
+            .await
+            .expect("finished");
         let other = Arc::new(report(&ticket, 0, 7.0, "t/h"));
         store.finish(ticket, other).await.expect("finished");
         let read = store.batch("p", "b").await.expect("read");
-        assert_eq!(read, Some(Stored::Done(Box::new((*first).clone()))), "the first result stays");
+        assert_eq!(
+            read,
+            Some(Stored::Done(Box::new((*first).clone()))),
+            "the first result stays"
+        );
         assert_eq!(store.unfinished(0, 10).await.expect("read"), vec![]);
     })
     .await;
@@ -208,7 +261,12 @@ async fn results_come_back_bit_for_bit() {
 async fn lists_and_series_go_by_time() {
     on_every_store(async |store| {
         store.put_plant(plant("p", "{}")).await.expect("put");
-        for (minute, value, unit) in [(3, 3.0, "t/h"), (1, -1.0, "t/h"), (2, 2.0, "kg/s"), (4, 4.0, "t/h")] {
+        for (minute, value, unit) in [
+            (3, 3.0, "t/h"),
+            (1, -1.0, "t/h"),
+            (2, 2.0, "kg/s"),
+            (4, 4.0, "t/h"),
+        ] {
             let ticket = accepted(store, incoming("p", &format!("b{minute}"), minute, 1)).await;
             if minute != 4 {
                 let report = Arc::new(report(&ticket, minute, value, unit));
@@ -225,16 +283,25 @@ async fn lists_and_series_go_by_time() {
         };
         let first = store.batches(query(None, 3, None)).await.expect("a page");
         let names = |items: &[counterpoise::store::BatchLine]| {
-            items.iter().map(|line| line.batch.clone()).collect::<Vec<_>>()
+            items
+                .iter()
+                .map(|line| line.batch.clone())
+                .collect::<Vec<_>>()
         };
         assert_eq!(names(&first.items), ["b4", "b3", "b2"]);
         assert_eq!(first.items[0].verdict, None);
         assert_eq!(first.items[1].statistic, Some(3.0));
         assert_eq!(first.items[1].degrees_of_freedom, Some(2));
-        let second = store.batches(query(None, 3, first.next)).await.expect("a page");
+        let second = store
+            .batches(query(None, 3, first.next))
+            .await
+            .expect("a page");
         assert_eq!(names(&second.items), ["b1"]);
         assert_eq!(second.next, None);
-        let bad = store.batches(query(Some(Verdict::Inconsistent), 3, None)).await.expect("a page");
+        let bad = store
+            .batches(query(Some(Verdict::Inconsistent), 3, None))
+            .await
+            .expect("a page");
         assert_eq!(names(&bad.items), ["b1"]);
 
         let series = |limit, after| SeriesQuery {
@@ -251,9 +318,18 @@ async fn lists_and_series_go_by_time() {
             limit,
         };
         let page = store.series(series(2, None)).await.expect("a page");
-        assert_eq!(page.rows.iter().map(|r| r.batch.as_str()).collect::<Vec<_>>(), ["b1", "b2"]);
-        let columns: Vec<_> =
-            page.columns.iter().map(|c| (c.unit.as_deref(), c.values.clone())).collect();
+        assert_eq!(
+            page.rows
+                .iter()
+                .map(|r| r.batch.as_str())
+                .collect::<Vec<_>>(),
+            ["b1", "b2"]
+        );
+        let columns: Vec<_> = page
+            .columns
+            .iter()
+            .map(|c| (c.unit.as_deref(), c.values.clone()))
+            .collect();
         assert_eq!(
             columns,
             [
@@ -264,7 +340,11 @@ async fn lists_and_series_go_by_time() {
             ]
         );
         let rest = store.series(series(2, page.next)).await.expect("a page");
-        assert_eq!(rest.rows.len(), 1, "a batch without a result has no numbers");
+        assert_eq!(
+            rest.rows.len(),
+            1,
+            "a batch without a result has no numbers"
+        );
         assert_eq!(rest.columns[0].values, [Some(3.1)]);
         assert_eq!(rest.next, None);
     })
@@ -277,16 +357,27 @@ async fn what_was_accepted_is_finished_after_a_restart() {
     let database = directory.path().join("test.sqlite");
     let body = batch("left", 0, 150.0);
     {
-        let mut service = Service::with(Setup { database: Some(database.clone()), ..Setup::default() });
+        let mut service = Service::with(Setup {
+            database: Some(database.clone()),
+            ..Setup::default()
+        });
         service.put_plant().await;
         service.stop().expect("an orderly end");
     }
-    let store = SqliteStore::open(SqliteOptions::new(&database)).await.expect("a store");
-    let left = Incoming { body: body.clone().into_bytes(), ..incoming("mixer", "left", 0, 1) };
+    let store = SqliteStore::open(SqliteOptions::new(&database))
+        .await
+        .expect("a store");
+    let left = Incoming {
+        body: body.clone().into_bytes(),
+        ..incoming("mixer", "left", 0, 1)
+    };
     accepted(&store, left).await;
     store.close().await.expect("closed");
 
-    let setup = || Setup { database: Some(database.clone()), ..Setup::default() };
+    let setup = || Setup {
+        database: Some(database.clone()),
+        ..Setup::default()
+    };
     let service = Service::with(setup());
     let finished = service.report("left").await;
     drop(service);
@@ -300,7 +391,10 @@ async fn what_was_accepted_is_finished_after_a_restart() {
 /// Hinders the disk, looks at what the service says, and frees it.
 async fn hindered(hindrance: Hindrance, reason: &str) {
     let service = Service::with_plant().await;
-    assert_eq!(service.post_batch(batch("before", 0, 150.0)).await.status(), StatusCode::OK);
+    assert_eq!(
+        service.post_batch(batch("before", 0, 150.0)).await.status(),
+        StatusCode::OK
+    );
     let before = contents(&service.database).await;
     service.store.hinder(hindrance).await.expect("hindered");
     let mut refused = 0;
@@ -311,20 +405,36 @@ async fn hindered(hindrance: Hindrance, reason: &str) {
         }
         assert_eq!(answer.headers()["retry-after"], "1");
         let problem = problem(answer, StatusCode::SERVICE_UNAVAILABLE).await;
-        assert!(problem["detail"].as_str().expect("text").contains(reason), "{problem}");
+        assert!(
+            problem["detail"].as_str().expect("text").contains(reason),
+            "{problem}"
+        );
         refused = n;
         break;
     }
-    problem(service.get("/readyz").await, StatusCode::SERVICE_UNAVAILABLE).await;
+    problem(
+        service.get("/readyz").await,
+        StatusCode::SERVICE_UNAVAILABLE,
+    )
+    .await;
     let name = format!("h{refused}");
     let path = format!("/v1/plants/mixer/batches/{name}");
     let acknowledged = service.get(&path).await.status();
     let after = contents(&service.database).await;
-    assert!(before.iter().all(|row| row.starts_with("layouts") || after.contains(row)), "a row is gone");
+    assert!(
+        before
+            .iter()
+            .all(|row| row.starts_with("layouts") || after.contains(row)),
+        "a row is gone"
+    );
     if acknowledged == StatusCode::NOT_FOUND {
         assert!(!after.iter().any(|row| row.contains(&name)));
     }
-    service.store.hinder(Hindrance::default()).await.expect("freed");
+    service
+        .store
+        .hinder(Hindrance::default())
+        .await
+        .expect("freed");
     let mut health = service.store.health();
     let recovering = health.wait_for(|health| *health == Health::Ready);
     tokio::time::timeout(Duration::from_secs(10), recovering)
@@ -338,28 +448,54 @@ async fn hindered(hindrance: Hindrance, reason: &str) {
 
 #[tokio::test]
 async fn a_full_disk_is_said_and_recovered_from() {
-    hindered(Hindrance { max_pages: Some(1), ..Hindrance::default() }, "full").await;
+    hindered(
+        Hindrance {
+            max_pages: Some(1),
+            ..Hindrance::default()
+        },
+        "full",
+    )
+    .await;
 }
 
 #[tokio::test]
 async fn a_read_only_file_is_said_and_recovered_from() {
-    hindered(Hindrance { read_only: true, ..Hindrance::default() }, "read-only").await;
+    hindered(
+        Hindrance {
+            read_only: true,
+            ..Hindrance::default()
+        },
+        "read-only",
+    )
+    .await;
 }
 
 #[tokio::test]
 async fn a_locked_file_is_said_and_recovered_from() {
     let lock_timeout = Duration::from_millis(50);
-    let service = Service::with(Setup { lock_timeout, ..Setup::default() });
+    let service = Service::with(Setup {
+        lock_timeout,
+        ..Setup::default()
+    });
     service.put_plant().await;
     let options = sqlx::sqlite::SqliteConnectOptions::new().filename(&service.database);
     let mut other = options.connect().await.expect("a connection");
-    sqlx::query("BEGIN IMMEDIATE").execute(&mut other).await.expect("locked");
+    sqlx::query("BEGIN IMMEDIATE")
+        .execute(&mut other)
+        .await
+        .expect("locked");
     let before = contents(&service.database).await;
     let answer = service.post_batch(batch("b", 0, 150.0)).await;
     let problem = problem(answer, StatusCode::SERVICE_UNAVAILABLE).await;
-    assert!(problem["detail"].as_str().expect("text").contains("locked"), "{problem}");
+    assert!(
+        problem["detail"].as_str().expect("text").contains("locked"),
+        "{problem}"
+    );
     assert_eq!(contents(&service.database).await, before);
-    sqlx::query("ROLLBACK").execute(&mut other).await.expect("free");
+    sqlx::query("ROLLBACK")
+        .execute(&mut other)
+        .await
+        .expect("free");
     other.close().await.expect("closed");
     let answer = service.post_batch(batch("b", 0, 150.0)).await;
     assert_eq!(answer.status(), StatusCode::OK, "without a restart");
@@ -369,7 +505,10 @@ async fn a_locked_file_is_said_and_recovered_from() {
 async fn an_orderly_end_leaves_everything_in_the_main_file() {
     let directory = tempfile::tempdir().expect("a directory");
     let database = directory.path().join("test.sqlite");
-    let mut service = Service::with(Setup { database: Some(database.clone()), ..Setup::default() });
+    let mut service = Service::with(Setup {
+        database: Some(database.clone()),
+        ..Setup::default()
+    });
     service.put_plant().await;
     service.post_batch(batch("b", 0, 150.0)).await;
     service.stop().expect("an orderly end");
@@ -378,6 +517,9 @@ async fn an_orderly_end_leaves_everything_in_the_main_file() {
     let copy = directory.path().join("copy.sqlite");
     std::fs::copy(&database, &copy).expect("copied");
     let rows = contents(&copy).await;
-    assert!(rows.iter().any(|row| row.starts_with("results")), "{rows:?}");
+    assert!(
+        rows.iter().any(|row| row.starts_with("results")),
+        "{rows:?}"
+    );
     assert!(PLANT.contains("mixer") && rows.iter().any(|row| row.contains("mixer")));
 }

@@ -97,7 +97,12 @@ impl SqliteStore {
         let (jobs, queue) = mpsc::channel(options.queue);
         let (report_health, health) = watch::channel(Health::Ready);
         tokio::spawn(Writer::new(options, connection, queue, report_health).run());
-        Ok(SqliteStore { jobs, readers, health, layouts: Mutex::default() })
+        Ok(SqliteStore {
+            jobs,
+            readers,
+            health,
+            layouts: Mutex::default(),
+        })
     }
 
     /// Hinders the writer, or frees it again.
@@ -113,18 +118,20 @@ impl SqliteStore {
 
     /// Has the writer do some work, waiting for a place in its queue.
     async fn write<W: work::Work>(&self, work: W) -> Result<W::Output, StoreError> {
-        let (task, done) = Task::new(work);
+        let (task, done) = Task::queued(work);
         self.send(Message::Job(task)).await?;
         done.await.map_err(|_| gone())?
     }
 
     /// The same, refused where the queue is full.
     async fn write_now<W: work::Work>(&self, work: W) -> Result<W::Output, StoreError> {
-        let (task, done) = Task::new(work);
-        self.jobs.try_send(Message::Job(task)).map_err(|error| match error {
-            mpsc::error::TrySendError::Full(_) => StoreError::Overloaded,
-            mpsc::error::TrySendError::Closed(_) => gone(),
-        })?;
+        let (task, done) = Task::queued(work);
+        self.jobs
+            .try_send(Message::Job(task))
+            .map_err(|error| match error {
+                mpsc::error::TrySendError::Full(_) => StoreError::Overloaded,
+                mpsc::error::TrySendError::Closed(_) => gone(),
+            })?;
         done.await.map_err(|_| gone())?
     }
 }
@@ -154,7 +161,9 @@ impl Store for SqliteStore {
         async move {
             // Some 60 kB of JSON to be compressed: no work for an async thread.
             let prepared = tokio::task::spawn_blocking(move || Finish::new(&ticket, &report));
-            let work = prepared.await.map_err(|error| StoreError::Corrupt(error.to_string()))??;
+            let work = prepared
+                .await
+                .map_err(|error| StoreError::Corrupt(error.to_string()))??;
             self.write(work).await
         }
         .boxed()

@@ -4,9 +4,7 @@
 use super::fault::{corrupt, explain};
 use super::{Hindrance, SqliteOptions, sql};
 use crate::store::StoreError;
-use sqlx::sqlite::{
-    SqliteConnectOptions, SqliteConnection, SqliteJournalMode, SqliteSynchronous,
-};
+use sqlx::sqlite::{SqliteConnectOptions, SqliteConnection, SqliteJournalMode, SqliteSynchronous};
 use sqlx::{AssertSqlSafe, ConnectOptions};
 
 /// The oldest SQLite that is used: before it, a reset of the write-ahead log
@@ -43,10 +41,18 @@ pub(super) async fn first(options: &SqliteOptions) -> Result<SqliteConnection, S
     let mut connection = writer(options).connect().await.map_err(|e| explain(&e))?;
     check_version(&mut connection).await?;
     check_integrity(&mut connection).await?;
-    sqlx::migrate!("./migrations").run(&mut connection).await.map_err(|error| {
-        StoreError::Unusable(format!("the schema of {} cannot be brought up to date: {error}", options.path.display()))
-    })?;
-    prove_durable(&mut connection).await.map_err(|e| explain(&e))?;
+    sqlx::migrate!("./migrations")
+        .run(&mut connection)
+        .await
+        .map_err(|error| {
+            StoreError::Unusable(format!(
+                "the schema of {} cannot be brought up to date: {error}",
+                options.path.display()
+            ))
+        })?;
+    prove_durable(&mut connection)
+        .await
+        .map_err(|e| explain(&e))?;
     Ok(connection)
 }
 
@@ -70,8 +76,12 @@ pub(super) async fn hinder(
     let pages = hindrance.max_pages.unwrap_or(AS_MANY_AS_THERE_CAN_BE);
     let pages = format!("PRAGMA max_page_count = {pages}");
     let read_only = format!("PRAGMA query_only = {}", u8::from(hindrance.read_only));
-    sqlx::query(AssertSqlSafe(pages)).execute(&mut *connection).await?;
-    sqlx::query(AssertSqlSafe(read_only)).execute(&mut *connection).await?;
+    sqlx::query(AssertSqlSafe(pages))
+        .execute(&mut *connection)
+        .await?;
+    sqlx::query(AssertSqlSafe(read_only))
+        .execute(&mut *connection)
+        .await?;
     Ok(())
 }
 
@@ -91,7 +101,9 @@ async fn check_version(connection: &mut SqliteConnection) -> Result<(), StoreErr
 
 /// Whether a version text such as `3.51.3` is [`OLDEST_SQLITE`] or newer.
 pub(super) fn is_new_enough(version: &str) -> bool {
-    let mut parts = version.split('.').map(|part| part.parse::<u32>().unwrap_or(0));
+    let mut parts = version
+        .split('.')
+        .map(|part| part.parse::<u32>().unwrap_or(0));
     let mut next = || parts.next().unwrap_or(0);
     (next(), next(), next()) >= OLDEST_SQLITE
 }
@@ -110,7 +122,9 @@ async fn check_integrity(connection: &mut SqliteConnection) -> Result<(), StoreE
 /// A real write, fsynced, and everything in the log written back to the file.
 async fn prove_durable(connection: &mut SqliteConnection) -> Result<(), sqlx::Error> {
     sqlx::query(sql::BEGIN).execute(&mut *connection).await?;
-    sqlx::query(sql::COUNT_START).execute(&mut *connection).await?;
+    sqlx::query(sql::COUNT_START)
+        .execute(&mut *connection)
+        .await?;
     sqlx::query(sql::COMMIT).execute(&mut *connection).await?;
     checkpoint(connection).await
 }
@@ -118,8 +132,9 @@ async fn prove_durable(connection: &mut SqliteConnection) -> Result<(), sqlx::Er
 /// Writes the log back to the file. A reader in the way is no fault: what is in
 /// the log is durable.
 pub(super) async fn checkpoint(connection: &mut SqliteConnection) -> Result<(), sqlx::Error> {
-    let (busy, _, _): (i64, i64, i64) =
-        sqlx::query_as(sql::CHECKPOINT).fetch_one(connection).await?;
+    let (busy, _, _): (i64, i64, i64) = sqlx::query_as(sql::CHECKPOINT)
+        .fetch_one(connection)
+        .await?;
     if busy != 0 {
         tracing::info!("a reader kept the log from being written back completely");
     }

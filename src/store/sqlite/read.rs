@@ -8,11 +8,11 @@ use crate::store::{
     BatchLine, BatchQuery, Column, Cursor, Page, PlantLine, SeriesPage, SeriesQuery, SeriesRow,
     StoreError, Stored, StoredPlant, Ticket, Unfinished,
 };
+use ::time::OffsetDateTime;
 use sqlx::SqlitePool;
 use sqlx::sqlite::SqliteConnection;
 use std::collections::HashMap;
 use std::sync::{Arc, Mutex, PoisonError};
-use ::time::OffsetDateTime;
 
 /// Rows of numbers that are held in memory at once: some 5 MB.
 const SERIES_CHUNK: usize = 512;
@@ -37,8 +37,10 @@ pub(super) async fn current_plant(
     on: &mut SqliteConnection,
     name: &str,
 ) -> Result<Option<StoredPlant>, sqlx::Error> {
-    let row: Option<RevisionRow> =
-        sqlx::query_as(sql::CURRENT_REVISION).bind(name).fetch_optional(on).await?;
+    let row: Option<RevisionRow> = sqlx::query_as(sql::CURRENT_REVISION)
+        .bind(name)
+        .fetch_optional(on)
+        .await?;
     row.map(|row| revision_of(name, row))
         .transpose()
         .map_err(|error| sqlx::Error::Decode(Box::new(error)))
@@ -70,7 +72,12 @@ pub(super) async fn plants(
         .map_err(|e| explain(&e))?;
     rows.into_iter()
         .map(|(name, title, revision, created)| {
-            Ok(PlantLine { name, title, revision, created: time(created)? })
+            Ok(PlantLine {
+                name,
+                title,
+                revision,
+                created: time(created)?,
+            })
         })
         .collect()
 }
@@ -116,7 +123,12 @@ pub(super) async fn unfinished(
     rows.into_iter()
         .map(|(id, plant, batch, revision, received, body)| {
             Ok(Unfinished {
-                ticket: Ticket { id, plant, batch, revision },
+                ticket: Ticket {
+                    id,
+                    plant,
+                    batch,
+                    revision,
+                },
                 received: time(received)?,
                 body: zstd::decode_all(&body[..]).map_err(corrupt)?,
             })
@@ -124,14 +136,25 @@ pub(super) async fn unfinished(
         .collect()
 }
 
-type BatchRow =
-    (i64, String, i64, i64, u32, Option<String>, Option<f64>, Option<u32>);
+type BatchRow = (
+    i64,
+    String,
+    i64,
+    i64,
+    u32,
+    Option<String>,
+    Option<f64>,
+    Option<u32>,
+);
 
 pub(super) async fn batches(
     pool: &SqlitePool,
     query: BatchQuery,
 ) -> Result<Page<BatchLine>, StoreError> {
-    let after = query.after.unwrap_or(Cursor { start_ns: i64::MAX, id: i64::MAX });
+    let after = query.after.unwrap_or(Cursor {
+        start_ns: i64::MAX,
+        id: i64::MAX,
+    });
     let mut rows: Vec<BatchRow> = sqlx::query_as(sql::BATCHES)
         .bind(&query.plant)
         .bind(earliest(query.from))
@@ -145,22 +168,30 @@ pub(super) async fn batches(
         .map_err(|e| explain(&e))?;
     let more = rows.len() > query.limit;
     rows.truncate(query.limit);
-    let last = rows.last().map(|row| Cursor { start_ns: row.2, id: row.0 });
+    let last = rows.last().map(|row| Cursor {
+        start_ns: row.2,
+        id: row.0,
+    });
     let items = rows
         .into_iter()
-        .map(|(_, batch, start, end, revision, verdict_name, statistic, degrees_of_freedom)| {
-            Ok(BatchLine {
-                batch,
-                start: time(start)?,
-                end: time(end)?,
-                revision,
-                verdict: verdict_name.as_deref().map(verdict).transpose()?,
-                statistic,
-                degrees_of_freedom,
-            })
-        })
+        .map(
+            |(_, batch, start, end, revision, verdict_name, statistic, degrees_of_freedom)| {
+                Ok(BatchLine {
+                    batch,
+                    start: time(start)?,
+                    end: time(end)?,
+                    revision,
+                    verdict: verdict_name.as_deref().map(verdict).transpose()?,
+                    statistic,
+                    degrees_of_freedom,
+                })
+            },
+        )
         .collect::<Result<_, StoreError>>()?;
-    Ok(Page { items, next: last.filter(|_| more) })
+    Ok(Page {
+        items,
+        next: last.filter(|_| more),
+    })
 }
 
 type SeriesRowData = (i64, String, i64, i64, String, i64, Vec<u8>);
@@ -171,7 +202,10 @@ pub(super) async fn series(
     query: SeriesQuery,
 ) -> Result<SeriesPage, StoreError> {
     let mut table = Table::new(&query);
-    let mut after = query.after.unwrap_or(Cursor { start_ns: i64::MIN, id: 0 });
+    let mut after = query.after.unwrap_or(Cursor {
+        start_ns: i64::MIN,
+        id: 0,
+    });
     loop {
         // One row beyond the limit tells whether there are more.
         let wanted = (query.limit + 1 - table.rows.len()).min(SERIES_CHUNK);
@@ -190,7 +224,10 @@ pub(super) async fn series(
             if table.rows.len() == query.limit {
                 return Ok(table.finish(Some(after)));
             }
-            after = Cursor { start_ns: row.2, id: row.0 };
+            after = Cursor {
+                start_ns: row.2,
+                id: row.0,
+            };
             let layout = layout(pool, layouts, row.5).await?;
             table.add(row, &layout)?;
         }
@@ -211,7 +248,11 @@ struct Table<'q> {
 impl<'q> Table<'q> {
     fn new(query: &'q SeriesQuery) -> Self {
         let columns = query.selectors.iter().map(|_| Vec::new()).collect();
-        Table { query, rows: Vec::new(), columns }
+        Table {
+            query,
+            rows: Vec::new(),
+            columns,
+        }
     }
 
     fn add(&mut self, row: SeriesRowData, layout: &Layout) -> Result<(), StoreError> {
@@ -224,17 +265,28 @@ impl<'q> Table<'q> {
             verdict: verdict(&verdict_name)?,
         });
         for (selector, columns) in self.query.selectors.iter().zip(&mut self.columns) {
-            let Some(location) = layout.locate(selector, self.query.field) else { continue };
-            let known =
-                columns.iter().position(|column| column.unit.as_deref() == Some(location.unit));
+            let Some(location) = layout.locate(selector, self.query.field) else {
+                continue;
+            };
+            let known = columns
+                .iter()
+                .position(|column| column.unit.as_deref() == Some(location.unit));
             let column = known.unwrap_or_else(|| {
                 let unit = Some(location.unit.to_owned());
-                columns.push(Column { selector: selector.clone(), unit, values: Vec::new() });
+                columns.push(Column {
+                    selector: selector.clone(),
+                    unit,
+                    values: Vec::new(),
+                });
                 columns.len() - 1
             });
             let values = &mut columns[column].values;
             values.resize(place, None);
-            values.push(location.index.and_then(|index| numbers::read(&numbers, index)));
+            values.push(
+                location
+                    .index
+                    .and_then(|index| numbers::read(&numbers, index)),
+            );
         }
         Ok(())
     }
@@ -243,14 +295,22 @@ impl<'q> Table<'q> {
         let mut all = Vec::new();
         for (selector, mut columns) in self.query.selectors.iter().zip(self.columns) {
             if columns.is_empty() {
-                columns.push(Column { selector: selector.clone(), unit: None, values: Vec::new() });
+                columns.push(Column {
+                    selector: selector.clone(),
+                    unit: None,
+                    values: Vec::new(),
+                });
             }
             for column in &mut columns {
                 column.values.resize(self.rows.len(), None);
             }
             all.extend(columns);
         }
-        SeriesPage { rows: self.rows, columns: all, next }
+        SeriesPage {
+            rows: self.rows,
+            columns: all,
+            next,
+        }
     }
 }
 
@@ -260,7 +320,11 @@ async fn layout(
     id: i64,
 ) -> Result<Arc<Layout>, StoreError> {
     // The map stays whole whatever happened to a thread that held it.
-    let known = layouts.lock().unwrap_or_else(PoisonError::into_inner).get(&id).cloned();
+    let known = layouts
+        .lock()
+        .unwrap_or_else(PoisonError::into_inner)
+        .get(&id)
+        .cloned();
     if let Some(known) = known {
         return Ok(known);
     }
@@ -270,8 +334,13 @@ async fn layout(
         .await
         .map_err(|e| explain(&e))?;
     let channels = zstd::decode_all(&channels[..]).map_err(corrupt)?;
-    let read = Arc::new(Layout::new(serde_json::from_slice(&channels).map_err(corrupt)?));
-    layouts.lock().unwrap_or_else(PoisonError::into_inner).insert(id, Arc::clone(&read));
+    let read = Arc::new(Layout::new(
+        serde_json::from_slice(&channels).map_err(corrupt)?,
+    ));
+    layouts
+        .lock()
+        .unwrap_or_else(PoisonError::into_inner)
+        .insert(id, Arc::clone(&read));
     Ok(read)
 }
 

@@ -15,11 +15,17 @@ async fn fresh() -> (tempfile::TempDir, SqliteOptions, sqlx::SqliteConnection) {
 async fn every_statement_prepares() {
     let (_directory, _, mut connection) = fresh().await;
     for statement in sql::ALL {
-        let prepared = (&mut connection).prepare(AssertSqlSafe(*statement).into_sql_str()).await;
+        let prepared = (&mut connection)
+            .prepare(AssertSqlSafe(*statement).into_sql_str())
+            .await;
         assert!(prepared.is_ok(), "{statement}: {:?}", prepared.err());
     }
     let source = include_str!("sql.rs");
-    assert_eq!(source.matches("pub(super) const").count(), sql::ALL.len() + 1, "one is missing in ALL");
+    assert_eq!(
+        source.matches("pub(super) const").count(),
+        sql::ALL.len() + 1,
+        "one is missing in ALL"
+    );
 }
 
 #[tokio::test]
@@ -27,11 +33,16 @@ async fn a_commit_is_on_disk() {
     let (_directory, options, mut connection) = fresh().await;
     for reopened in [false, true] {
         if reopened {
-            connection = open::again(&options, Hindrance::default()).await.expect("a database");
+            connection = open::again(&options, Hindrance::default())
+                .await
+                .expect("a database");
         }
         let mut pragma = async |name: &str| -> String {
             let sql = AssertSqlSafe(format!("PRAGMA {name}"));
-            let row = sqlx::query(sql).fetch_one(&mut connection).await.expect("a value");
+            let row = sqlx::query(sql)
+                .fetch_one(&mut connection)
+                .await
+                .expect("a value");
             sqlx::Row::try_get_unchecked::<String, _>(&row, 0).expect("text")
         };
         assert_eq!(pragma("journal_mode").await, "wal");
@@ -46,23 +57,33 @@ async fn a_reader_cannot_write() {
     let mut reader = open::reader(&options).connect().await.expect("a reader");
     let written = sqlx::query(sql::COUNT_START).execute(&mut reader).await;
     let error = written.expect_err("a refusal");
-    assert!(matches!(fault::explain(&error), StoreError::Unavailable(_)), "{error}");
+    assert!(
+        matches!(fault::explain(&error), StoreError::Unavailable(_)),
+        "{error}"
+    );
 }
 
 #[tokio::test]
 async fn the_sqlite_in_this_binary_is_new_enough() {
     let (_directory, _, mut connection) = fresh().await;
-    let version: String =
-        sqlx::query_scalar(sql::SQLITE_VERSION).fetch_one(&mut connection).await.expect("a version");
+    let version: String = sqlx::query_scalar(sql::SQLITE_VERSION)
+        .fetch_one(&mut connection)
+        .await
+        .expect("a version");
     assert!(open::is_new_enough(&version), "{version}");
     assert_eq!(OLDEST_SQLITE, (3, 51, 3));
 }
 
 #[test]
 fn older_versions_are_told_apart() {
-    for (version, enough) in
-        [("3.51.2", false), ("3.51.3", true), ("3.52.0", true), ("3.9.9", false), ("4.0.0", true), ("", false)]
-    {
+    for (version, enough) in [
+        ("3.51.2", false),
+        ("3.51.3", true),
+        ("3.52.0", true),
+        ("3.9.9", false),
+        ("4.0.0", true),
+        ("", false),
+    ] {
         assert_eq!(open::is_new_enough(version), enough, "{version}");
     }
 }

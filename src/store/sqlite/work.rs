@@ -4,9 +4,7 @@ use super::fault::{corrupt, nanoseconds};
 use super::{read, sql};
 use crate::report::{Report, Verdict};
 use crate::store::numbers;
-use crate::store::{
-    Acceptance, Incoming, NewPlant, PutOutcome, StoreError, StoredPlant, Ticket,
-};
+use crate::store::{Acceptance, Incoming, NewPlant, PutOutcome, StoreError, StoredPlant, Ticket};
 use futures::FutureExt;
 use futures::future::BoxFuture;
 use sha2::{Digest, Sha256};
@@ -51,7 +49,10 @@ impl Work for PutPlant {
                 Some(current) => current.revision + 1,
                 None => 1,
             };
-            sqlx::query(sql::INSERT_PLANT).bind(&new.name).execute(&mut *on).await?;
+            sqlx::query(sql::INSERT_PLANT)
+                .bind(&new.name)
+                .execute(&mut *on)
+                .await?;
             sqlx::query(sql::INSERT_REVISION)
                 .bind(&new.name)
                 .bind(revision)
@@ -109,7 +110,9 @@ impl Work for Accept {
                 .bind(&incoming.plant)
                 .fetch_optional(&mut *on)
                 .await?;
-            let Some((plant, revision)) = plant else { return Ok(Acceptance::NoPlant) };
+            let Some((plant, revision)) = plant else {
+                return Ok(Acceptance::NoPlant);
+            };
             let known: Option<(i64, u32, Vec<u8>)> = sqlx::query_as(sql::KNOWN_BATCH)
                 .bind(plant)
                 .bind(&incoming.batch)
@@ -133,7 +136,10 @@ impl Work for Accept {
                 .bind(&self.body)
                 .fetch_one(&mut *on)
                 .await?;
-            sqlx::query(sql::INSERT_PENDING).bind(id).execute(&mut *on).await?;
+            sqlx::query(sql::INSERT_PENDING)
+                .bind(id)
+                .execute(&mut *on)
+                .await?;
             Ok(Acceptance::New(ticket(id, revision)))
         }
         .boxed()
@@ -203,7 +209,10 @@ impl Work for Finish {
                 .bind(&self.report)
                 .execute(&mut *on)
                 .await?;
-            sqlx::query(sql::DELETE_PENDING).bind(self.inbox_id).execute(on).await?;
+            sqlx::query(sql::DELETE_PENDING)
+                .bind(self.inbox_id)
+                .execute(on)
+                .await?;
             Ok(())
         }
         .boxed()
@@ -222,10 +231,15 @@ pub(super) fn verdict_name(verdict: Verdict) -> &'static str {
 
 /// The verdict of a name in the database.
 pub(super) fn verdict(name: &str) -> Result<Verdict, StoreError> {
-    [Verdict::Consistent, Verdict::Inconsistent, Verdict::NotRedundant, Verdict::NotConverged]
-        .into_iter()
-        .find(|&verdict| verdict_name(verdict) == name)
-        .ok_or_else(|| corrupt(format!("verdict {name}")))
+    [
+        Verdict::Consistent,
+        Verdict::Inconsistent,
+        Verdict::NotRedundant,
+        Verdict::NotConverged,
+    ]
+    .into_iter()
+    .find(|&verdict| verdict_name(verdict) == name)
+    .ok_or_else(|| corrupt(format!("verdict {name}")))
 }
 
 fn compress(bytes: &[u8]) -> Result<Vec<u8>, StoreError> {

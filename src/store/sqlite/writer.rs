@@ -5,9 +5,12 @@ use super::{Hindrance, SqliteOptions, fault, open, sql};
 use crate::store::{Health, StoreError};
 use futures::FutureExt;
 use futures::future::BoxFuture;
-use sqlx::sqlite::SqliteConnection;
 use sqlx::Connection;
+use sqlx::sqlite::SqliteConnection;
 use tokio::sync::{mpsc, oneshot, watch};
+
+/// What a caller gets after the commit.
+type Answer<T> = Result<T, StoreError>;
 
 /// What the writer is asked for.
 pub(super) enum Message {
@@ -18,7 +21,10 @@ pub(super) enum Message {
 
 /// Work of any kind with the way to its answer.
 pub(super) trait Job: Send {
-    fn run<'a>(&'a mut self, on: &'a mut SqliteConnection) -> BoxFuture<'a, Result<(), sqlx::Error>>;
+    fn run<'a>(
+        &'a mut self,
+        on: &'a mut SqliteConnection,
+    ) -> BoxFuture<'a, Result<(), sqlx::Error>>;
 
     /// Tells the caller what came of it, `error` where the transaction failed.
     fn answer(self: Box<Self>, error: Option<StoreError>);
@@ -28,18 +34,29 @@ pub(super) trait Job: Send {
 pub(super) struct Task<W: Work> {
     work: W,
     output: Option<W::Output>,
-    reply: oneshot::Sender<Result<W::Output, StoreError>>,
+    reply: oneshot::Sender<Answer<W::Output>>,
 }
 
 impl<W: Work> Task<W> {
-    pub fn new(work: W) -> (Box<dyn Job>, oneshot::Receiver<Result<W::Output, StoreError>>) {
+    /// The work as a job, and where its answer will arrive.
+    pub fn queued(work: W) -> (Box<dyn Job>, oneshot::Receiver<Answer<W::Output>>) {
         let (reply, done) = oneshot::channel();
-        (Box::new(Task { work, output: None, reply }), done)
+        (
+            Box::new(Task {
+                work,
+                output: None,
+                reply,
+            }),
+            done,
+        )
     }
 }
 
 impl<W: Work> Job for Task<W> {
-    fn run<'a>(&'a mut self, on: &'a mut SqliteConnection) -> BoxFuture<'a, Result<(), sqlx::Error>> {
+    fn run<'a>(
+        &'a mut self,
+        on: &'a mut SqliteConnection,
+    ) -> BoxFuture<'a, Result<(), sqlx::Error>> {
         async move {
             self.output = Some(self.work.run(on).await?);
             Ok(())
@@ -228,7 +245,9 @@ impl Writer {
     }
 
     async fn close(&mut self) -> Result<(), StoreError> {
-        let Some(mut connection) = self.connection.take() else { return Ok(()) };
+        let Some(mut connection) = self.connection.take() else {
+            return Ok(());
+        };
         let written = open::checkpoint(&mut connection).await;
         let closed = connection.close().await;
         written.and(closed).map_err(|error| fault::explain(&error))

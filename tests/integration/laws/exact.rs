@@ -3,8 +3,14 @@
 use super::workbench::{
     HEATER, batch, degrees_of_freedom, demo_truth, everyday, near_truth, read, reading, references, run, statistic, without,
 };
+use counterpoise::pipeline::{Compiled, reconcile};
 use counterpoise::plant::COVERAGE_FACTOR;
 use counterpoise::report::{Class, TagReport};
+
+/// Below this a redundancy is none that anybody could use (design 5).
+const NO_REDUNDANCY: f64 = 1e-3;
+/// Accuracy promised for uncertainties.
+const UNCERTAINTIES: f64 = 5e-3;
 
 /// The trace of a projector is its rank.
 #[test]
@@ -15,7 +21,7 @@ fn redundancies_sum_to_the_degrees_of_freedom() {
         let sum: f64 = used.filter_map(|tag| tag.redundancy).sum();
         let dof = degrees_of_freedom(&report) as f64;
         println!("{} {}: {sum} of {dof}", plant.name, batch.name);
-        assert!((sum - dof).abs() < 1e-6, "{} {}: {sum}, not {dof}", plant.name, batch.name);
+        assert!((sum - dof).abs() < NO_REDUNDANCY, "{} {}: {sum}, not {dof}", plant.name, batch.name);
     }
 }
 
@@ -27,14 +33,14 @@ fn assert_one_degree_of_freedom(file: &str, readings: &[(&str, f64)], tested: us
         report.tags.iter().filter_map(|(name, tag)| Some((name, tag.standardised_adjustment?))).collect();
     assert_eq!(standardised.len(), tested, "{standardised:?}");
     for (name, value) in standardised {
-        assert!((value.abs() - root).abs() < 1e-8 * root, "{name}: {value}, not {root}");
+        assert!((value.abs() - root).abs() < 1e-5 * root, "{name}: {value}, not {root}");
     }
     let balances = report.equipment.values();
     let imbalances = balances.flat_map(|e| e.imbalance.mass.values().chain(&e.imbalance.energy));
     let tested: Vec<f64> = imbalances.filter_map(|imbalance| imbalance.standardised).collect();
     assert!(!tested.is_empty());
     for value in tested {
-        assert!((value.abs() - root).abs() < 1e-6 * root, "imbalance {value}, not {root}");
+        assert!((value.abs() - root).abs() < 1e-5 * root, "imbalance {value}, not {root}");
     }
 }
 
@@ -102,15 +108,16 @@ fn in_sigma(tag: &TagReport) -> f64 {
 fn a_bias_in_exact_readings_makes_redundancy_times_its_square() {
     let (plant, truth) = demo_truth(0.9);
     let exact = near_truth(&plant, &truth, 0.0, 0);
+    let compiled = Compiled::new(plant.clone(), 1);
     let mut tested = 0;
     let mut worst: f64 = 0.0;
-    for tag in plant.tags.iter() {
+    for tag in &plant.tags {
         let mut biased = exact.clone();
         let value = reading(&mut biased, &tag.name).value.expect("a value");
         let sigma = tag.uncertainty.sigma(value).expect("a sigma").get();
         let bias = 0.05 * sigma;
         reading(&mut biased, &tag.name).value = Some(value + bias);
-        let report = run(&plant, &biased);
+        let report = reconcile(&compiled, &biased);
         let entry = &report.tags[&tag.name];
         let redundancy = entry.redundancy.expect("in use");
         let sigma = entry.uncertainty_measured.expect("in use") / COVERAGE_FACTOR;
@@ -159,7 +166,7 @@ fn a_deleted_tag_is_predicted_by_adjustment_over_redundancy() {
         // Variance of the prediction: sigma^2 (1 - redundancy) / redundancy.
         let spread = COVERAGE_FACTOR * sigma * ((1.0 - redundancy) / redundancy).sqrt();
         let found = deleted.uncertainty_reconciled.expect("observable");
-        assert!((found / spread - 1.0).abs() < 2e-3, "{}: {found}, not {spread}", tag.name);
+        assert!((found / spread - 1.0).abs() < UNCERTAINTIES, "{}: {found}, not {spread}", tag.name);
     }
     println!("predictions differ by up to {worst:e} of their spread");
 }

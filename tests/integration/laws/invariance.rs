@@ -13,10 +13,13 @@ use rand::SeedableRng;
 use rand::seq::SliceRandom;
 use rand_chacha::ChaCha8Rng;
 
-/// The same steps up to rounding.
+/// Values after the same steps, up to rounding.
 const ROUNDING: f64 = 1e-9;
-/// Another way to the same solution.
-const CONVERGENCE: f64 = 1e-6;
+/// Values after another way to the same solution: the step that ends a solve.
+const CONVERGENCE: f64 = 1e-7;
+/// Uncertainties: a tenth of the accuracy that is promised for them. They come
+/// from a matrix that is regularised, and see its rounding.
+const SPREADS: f64 = 5e-4;
 
 #[test]
 fn the_same_batch_gives_the_same_bytes() {
@@ -51,8 +54,7 @@ fn the_order_of_the_plant_file_changes_nothing() {
     for seed in 0..3 {
         let shuffled = run(&read(&shuffled(counterpoise::demo::plant_file(), seed)), &batch);
         let distance = Distance::between(&straight, &shuffled);
-        println!("order {seed}: {distance:?}");
-        assert!(distance.size < ROUNDING, "{distance:?}");
+        distance.assert_below(ROUNDING, SPREADS, &format!("order {seed}"));
         assert_eq!(degrees_of_freedom(&straight), degrees_of_freedom(&shuffled));
     }
 }
@@ -113,8 +115,7 @@ fn the_units_of_tags_change_nothing() {
             }
         }
         let distance = Distance::between(&run(&plant, &batch), &report);
-        println!("{} {}: {distance:?}", plant.name, batch.name);
-        assert!(distance.size < ROUNDING, "{} {}: {distance:?}", plant.name, batch.name);
+        distance.assert_below(ROUNDING, SPREADS, &format!("{} {}", plant.name, batch.name));
     }
 }
 
@@ -129,7 +130,7 @@ fn a_tag_split_into_two_is_one_more_degree_of_freedom() {
         let tag = split.tags.iter_mut().find(|tag| tag.name == name).expect("a tag");
         tag.uncertainty.of_reading *= std::f64::consts::SQRT_2;
         tag.uncertainty.constant *= std::f64::consts::SQRT_2;
-        tag.uncertainty.differential *= 2f64.sqrt();
+        tag.uncertainty.differential *= std::f64::consts::SQRT_2;
         let second = Tag { name: format!("{name}-B"), ..tag.clone() };
         let reading = batch.readings.iter().find(|r| r.tag == name).expect("a reading");
         readings.readings.push(Reading { tag: second.name.clone(), ..reading.clone() });
@@ -139,14 +140,13 @@ fn a_tag_split_into_two_is_one_more_degree_of_freedom() {
         let (first, second) = (&report.tags[name], &report.tags[&format!("{name}-B")]);
         assert_eq!(first.reconciled, second.reconciled);
         assert!((first.reconciled.expect("used") - whole.tags[name].reconciled.expect("used")).abs() < 1e-6);
-        // Half of the weight each: 1 - (1 - R) / 2 of it can be checked.
+        // Half of the weight each, the same variance left: R becomes (1 + R) / 2.
         let redundancy = whole.tags[name].redundancy.expect("used");
         let half = first.redundancy.expect("used");
-        assert!((half - (1.0 + redundancy) / 2.0).abs() < ROUNDING, "{name}: {half}");
+        assert!((half - (1.0 + redundancy) / 2.0).abs() < SPREADS, "{name}: {half}");
         report.tags.shift_remove(name);
         let distance = Distance::between(&report, &whole);
-        println!("{name}: {distance:?}");
-        assert!(distance.size < CONVERGENCE, "{name}: {distance:?}");
+        distance.assert_below(ROUNDING, SPREADS, name);
     }
 }
 
@@ -171,8 +171,7 @@ fn a_tag_that_nothing_checks_changes_nothing() {
     assert!((pressure - 0.06).abs() < 1e-6, "{pressure}");
     after.streams.shift_remove("gland-spill-low");
     let distance = Distance::between(&before, &after);
-    println!("{distance:?}");
-    assert!(distance.size < CONVERGENCE, "{distance:?}");
+    distance.assert_below(CONVERGENCE, SPREADS, "PT-999");
 }
 
 const PIPES: &str = r#"
@@ -218,8 +217,7 @@ fn a_relation_that_others_imply_changes_nothing() {
     }
     two.streams.shift_remove("left");
     let distance = Distance::between(&one, &two);
-    println!("{distance:?}");
-    assert!(distance.size < CONVERGENCE, "{distance:?}");
+    distance.assert_below(CONVERGENCE, SPREADS, "a pipe more");
     // A tee and a header in place of the pipes: the header repeats what the tee says.
     let loops = PIPES.replace("header-1 = { kind = \"header\" }", "header-1 = { kind = \"splitter\" }");
     let loops = super::workbench::without(&loops, &["second", "F-2", "T-2"]);
@@ -229,8 +227,7 @@ fn a_relation_that_others_imply_changes_nothing() {
     two.streams.shift_remove("left");
     two.equipment.shift_remove("header-1");
     let distance = Distance::between(&one, &two);
-    println!("{distance:?}");
-    assert!(distance.size < CONVERGENCE, "{distance:?}");
+    distance.assert_below(CONVERGENCE, SPREADS, "a tee and a header");
 }
 
 /// Reconciled values in the place of readings and of assumed values.
@@ -256,8 +253,8 @@ fn what_is_reconciled_stays_as_it_is() {
         let first = run(&plant, &batch);
         let (again, level) = reconciled(&plant, &batch);
         let second = run(&again, &level);
-        println!("{} {}: statistic {:e}", plant.name, batch.name, statistic(&second));
         assert!(statistic(&second) < 1e-9, "{} {}: {}", plant.name, batch.name, statistic(&second));
+        let mut largest = Distance::default();
         for (name, one) in &first.streams {
             let two = &second.streams[name];
             for (a, b) in [
@@ -266,14 +263,9 @@ fn what_is_reconciled_stays_as_it_is() {
                 (&one.temperature, &two.temperature),
                 (&one.enthalpy, &two.enthalpy),
             ] {
-                let mut distance = Distance { at: String::new(), size: 0.0 };
-                let (Some(a), Some(b)) = (a.value, b.value) else {
-                    assert_eq!(a.class, b.class, "{name}");
-                    continue;
-                };
-                distance.add(name, a, b, a.abs());
-                assert!(distance.size < CONVERGENCE, "{} {}: {distance:?}", plant.name, batch.name);
+                largest.value(name, a.value, b.value, a.value.unwrap_or(1.0).abs());
             }
         }
+        largest.assert_below(CONVERGENCE, SPREADS, &format!("{} {}", plant.name, batch.name));
     }
 }

@@ -83,6 +83,16 @@ pub fn run(plant: &Plant, batch: &Batch) -> Report {
     report
 }
 
+/// The same for a plant of the same structure as that of `known`, whose critical
+/// value then needs no second simulation.
+pub fn run_like(known: &Report, plant: &Plant, batch: &Batch) -> Report {
+    let compiled = Compiled::new(plant.clone(), 1);
+    compiled.recall(known.single_test.clone());
+    let report = reconcile(&compiled, batch);
+    assert!(report.global_test.is_some(), "{}: {:?}", plant.name, report.reason);
+    report
+}
+
 pub fn statistic(report: &Report) -> f64 {
     report.global_test.expect("converged").statistic
 }
@@ -136,22 +146,23 @@ pub fn everyday() -> Vec<(Plant, Batch)> {
     all
 }
 
-/// The largest distance between two reports and where it is.
-#[derive(Debug)]
+/// The largest distances between two reports, and where they are.
+#[derive(Debug, Default)]
 pub struct Distance {
-    pub at: String,
-    pub size: f64,
+    /// Of estimates: reconciled values in uncertainties of the reading, states
+    /// relative to their size, imbalances in their uncertainty.
+    pub values: (f64, String),
+    /// Of uncertainties, relative, and of redundancies.
+    pub spreads: (f64, String),
 }
 
 impl Distance {
-    /// What both reports name is compared: reconciled values of tags in
-    /// uncertainties of the reading, states relative to their size, imbalances
-    /// in their uncertainty, uncertainties relative to themselves. Classes,
-    /// phases and what is null have to be the same.
+    /// What both reports name is compared. Classes, phases and what is null
+    /// have to be the same.
     pub fn between(a: &Report, b: &Report) -> Distance {
-        let mut distance = Distance { at: "nowhere".to_owned(), size: 0.0 };
+        let mut distance = Distance::default();
         let (one, other) = (statistic(a), statistic(b));
-        distance.add("statistic", one, other, one.abs().max(1.0));
+        distance.value("statistic", Some(one), Some(other), one.abs().max(1.0));
         for (part, a, b) in [("tag", &a.tags, &b.tags), ("assumption", &a.assumptions, &b.assumptions)] {
             for (name, a) in a {
                 if let Some(b) = b.get(name) {
@@ -184,32 +195,30 @@ impl Distance {
         distance
     }
 
-    pub fn add(&mut self, at: &str, a: f64, b: f64, scale: f64) {
-        let size = if a == b { 0.0 } else { (a - b).abs() / scale };
-        if !(size <= self.size) {
-            *self = Distance { at: format!("{at}: {a} and {b}"), size };
-        }
+    /// Panics where values or spreads differ by more.
+    pub fn assert_below(&self, values: f64, spreads: f64, what: &str) {
+        println!("{what}: {self:?}");
+        assert!(self.values.0 < values && self.spreads.0 < spreads, "{what}: {self:?}");
     }
 
-    fn option(&mut self, at: &str, a: Option<f64>, b: Option<f64>, scale: f64) {
-        match (a, b) {
-            (Some(a), Some(b)) => self.add(at, a, b, scale),
-            _ => assert_eq!(a.is_some(), b.is_some(), "{at}: {a:?} and {b:?}"),
-        }
+    /// Adds an estimate.
+    pub fn value(&mut self, at: &str, a: Option<f64>, b: Option<f64>, scale: f64) {
+        enlarge(&mut self.values, at, a, b, scale);
+    }
+
+    /// Adds an uncertainty or redundancy.
+    pub fn spread(&mut self, at: &str, a: Option<f64>, b: Option<f64>, scale: f64) {
+        enlarge(&mut self.spreads, at, a, b, scale);
     }
 
     fn tag(&mut self, at: &str, a: &TagReport, b: &TagReport) {
         assert_eq!(a.class, b.class, "class of {at}");
         assert_eq!(a.reason, b.reason, "reason of {at}");
         let scale = a.uncertainty_measured.or(a.uncertainty_reconciled).unwrap_or(1.0);
-        self.option(&format!("{at} reconciled"), a.reconciled, b.reconciled, scale);
-        self.option(&format!("{at} adjustment"), a.adjustment, b.adjustment, scale);
-        self.option(&format!("{at} uncertainty"), a.uncertainty_reconciled, b.uncertainty_reconciled, scale);
-        self.option(&format!("{at} redundancy"), a.redundancy, b.redundancy, 1.0);
-        // Divided by the root of redundancy, rounding of the adjustment grows.
-        let root = a.redundancy.unwrap_or(1.0).max(1e-12).sqrt();
-        let (one, other) = (a.standardised_adjustment, b.standardised_adjustment);
-        self.option(&format!("{at} standardised"), one, other, 1.0 / root);
+        self.value(&format!("{at} reconciled"), a.reconciled, b.reconciled, scale);
+        self.value(&format!("{at} adjustment"), a.adjustment, b.adjustment, scale);
+        self.spread(&format!("{at} uncertainty"), a.uncertainty_reconciled, b.uncertainty_reconciled, scale);
+        self.spread(&format!("{at} redundancy"), a.redundancy, b.redundancy, 1.0);
     }
 
     fn quantity(&mut self, at: &str, a: Option<&QuantityReport>, b: Option<&QuantityReport>) {
@@ -219,13 +228,25 @@ impl Distance {
         };
         assert_eq!(a.class, b.class, "class of {at}");
         let (value, spread) = (a.value.unwrap_or(0.0).abs(), a.uncertainty.unwrap_or(0.0));
-        self.option(at, a.value, b.value, value.max(spread));
-        self.option(&format!("{at} uncertainty"), a.uncertainty, b.uncertainty, spread.max(1e-9 * value));
+        self.value(at, a.value, b.value, value.max(spread));
+        self.spread(at, a.uncertainty, b.uncertainty, spread);
     }
 
     fn imbalance(&mut self, at: &str, a: &Imbalance, b: &Imbalance) {
         let spread = a.uncertainty.unwrap_or(1.0);
-        self.option(&format!("{at} imbalance"), a.value, b.value, spread);
-        self.option(&format!("{at} imbalance uncertainty"), a.uncertainty, b.uncertainty, spread);
+        // An estimate that is a quotient with a variance below the line.
+        self.spread(&format!("{at} imbalance"), a.value, b.value, spread.max(a.value.unwrap_or(0.0).abs()));
+        self.spread(&format!("{at} imbalance"), a.uncertainty, b.uncertainty, spread);
+    }
+}
+
+fn enlarge(largest: &mut (f64, String), at: &str, a: Option<f64>, b: Option<f64>, scale: f64) {
+    let (Some(a), Some(b)) = (a, b) else {
+        assert_eq!(a.is_some(), b.is_some(), "{at}: {a:?} and {b:?}");
+        return;
+    };
+    let size = if a == b { 0.0 } else { (a - b).abs() / scale };
+    if size > largest.0 || size.is_nan() {
+        *largest = (size, format!("{at}: {a} and {b}"));
     }
 }
