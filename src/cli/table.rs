@@ -94,7 +94,8 @@ pub(super) fn number(value: f64) -> String {
     if value == 0.0 || !value.is_finite() {
         return value.to_string();
     }
-    let decimals = decimals(value.abs()) + 3;
+    // Between 0 and 12, so that the cast is exact.
+    let decimals = (4.0 - value.abs().log10().floor()).clamp(0.0, 12.0) as usize;
     let text = format!("{value:.decimals$}");
     match text.contains('.') {
         true => text.trim_end_matches('0').trim_end_matches('.').to_owned(),
@@ -120,6 +121,7 @@ mod tests {
         assert_eq!(pair(None, Some(1.0)), ["-", ""]);
         assert_eq!(number(0.000123456), "0.00012346");
         assert_eq!(number(250.0), "250");
+        assert_eq!(number(61054.963), "61055");
     }
 
     #[test]

@@ -143,10 +143,13 @@ fn tags(report: &Report, critical: Option<f64>) -> Table {
     table
 }
 
+/// With the digits of the uncertainty, and up to two more for a small one.
 fn adjustment(tag: &TagReport) -> String {
     match (tag.adjustment, tag.uncertainty_measured) {
         (Some(adjustment), Some(uncertainty)) if uncertainty > 0.0 => {
-            format!("{adjustment:+.*}", decimals(uncertainty))
+            let fewest = decimals(uncertainty);
+            let places = decimals(adjustment.abs()).clamp(fewest, fewest + 2);
+            format!("{adjustment:+.places$}")
         }
         (Some(adjustment), _) => number(adjustment),
         _ => "-".to_owned(),

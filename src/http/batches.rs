@@ -76,7 +76,7 @@ struct BatchItem {
 /// is on disk. The same name with the same content is answered as before.
 /// `Prefer: respond-async` answers as soon as the batch is on disk.
 #[utoipa::path(
-    post, path = "/v1/plants/{plant}/batches", tag = "batches",
+    post, path = "/v1/plants/{plant}/batches", operation_id = "post_batches", tag = "batches",
     params(
         ("plant" = String, Path, description = "Name of the plant", example = "tarn-mill"),
         ("Prefer" = Option<String>, Header, description = "`respond-async`: do not wait for the report"),
@@ -265,7 +265,7 @@ fn json(value: &impl Serialize) -> Result<Vec<u8>, Problem> {
 
 /// List the batches with their verdicts.
 #[utoipa::path(
-    get, path = "/v1/plants/{plant}/batches", tag = "batches",
+    get, path = "/v1/plants/{plant}/batches", operation_id = "list_batches", tag = "batches",
     params(
         ("plant" = String, Path, description = "Name of the plant", example = "tarn-mill"),
         ("from" = Option<String>, Query, description = "Periods that start at this time or later"),
@@ -326,7 +326,7 @@ fn item(line: BatchLine) -> BatchItem {
 
 /// Get the report of a batch.
 #[utoipa::path(
-    get, path = "/v1/plants/{plant}/batches/{batch}", tag = "batches",
+    get, path = "/v1/plants/{plant}/batches/{batch}", operation_id = "get_report", tag = "batches",
     params(
         ("plant" = String, Path, description = "Name of the plant", example = "tarn-mill"),
         ("batch" = String, Path, description = "The client's name for the batch, percent-encoded", example = "2031-04-02T10%3A05Z"),

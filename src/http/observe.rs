@@ -52,7 +52,8 @@ pub(super) async fn observe(State(app): State<App>, mut request: Request, next: 
     let started = Instant::now();
     let response = next.run(request).instrument(span.clone()).await;
     let mut response = error::finish(response, &id);
-    if response.status().is_client_error() && !was_read.load(Ordering::Relaxed) {
+    let refused = response.status().is_client_error() || response.status().is_server_error();
+    if refused && !was_read.load(Ordering::Relaxed) {
         // The connection ends with this answer, because the rest of the body
         // stands in the way of the next request; the client has to know.
         response

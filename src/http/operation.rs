@@ -17,7 +17,7 @@ pub(super) struct Status {
 
 /// Whether the process answers at all.
 #[utoipa::path(
-    get, path = "/livez", tag = "operation",
+    get, path = "/livez", operation_id = "live", tag = "operation",
     responses((status = 200, description = "It does", body = Status))
 )]
 pub(super) async fn live() -> Json<Status> {
@@ -26,7 +26,7 @@ pub(super) async fn live() -> Json<Status> {
 
 /// Whether it can take batches: not while its database takes no writes.
 #[utoipa::path(
-    get, path = "/readyz", tag = "operation",
+    get, path = "/readyz", operation_id = "ready", tag = "operation",
     responses(
         (status = 200, description = "It can", body = Status),
         (status = 503, description = "It cannot now", body = Problem, content_type = "application/problem+json"),

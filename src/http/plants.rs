@@ -63,7 +63,7 @@ struct PlantItem {
 /// the revision that was edited guards against overwriting somebody else's;
 /// `If-None-Match: *` takes the file only where there is no such plant yet.
 #[utoipa::path(
-    put, path = "/v1/plants/{plant}", tag = "plants",
+    put, path = "/v1/plants/{plant}", operation_id = "put_plant", tag = "plants",
     params(
         ("plant" = String, Path, description = "Name of the plant, as in the file", example = "tarn-mill"),
         ("If-Match" = Option<String>, Header, description = "Entity tag of the current revision"),
@@ -172,7 +172,7 @@ fn answer(status: StatusCode, stored: &StoredPlant, warnings: Vec<Fault>) -> Res
 ///
 /// As JSON, or as it was sent where that was TOML and `Accept` asks for it.
 #[utoipa::path(
-    get, path = "/v1/plants/{plant}", tag = "plants",
+    get, path = "/v1/plants/{plant}", operation_id = "get_plant", tag = "plants",
     params(
         ("plant" = String, Path, description = "Name of the plant", example = "tarn-mill"),
         ("revision" = Option<u32>, Query, description = "Number of the revision; the current one where it is left out"),
@@ -230,7 +230,7 @@ fn revision_of(uri: &Uri) -> Result<Option<u32>, Problem> {
 
 /// List the plants.
 #[utoipa::path(
-    get, path = "/v1/plants", tag = "plants",
+    get, path = "/v1/plants", operation_id = "list_plants", tag = "plants",
     params(
         ("limit" = Option<usize>, Query, description = "At most so many, 1 to 1000; 100 unless set"),
         ("cursor" = Option<String>, Query, description = "From the Link header of the answer before"),
@@ -269,7 +269,7 @@ pub(super) async fn list(State(app): State<App>, uri: Uri) -> Result<Response, P
 
 /// What the tags can and cannot determine, before any batch.
 #[utoipa::path(
-    get, path = "/v1/plants/{plant}/assessment", tag = "plants",
+    get, path = "/v1/plants/{plant}/assessment", operation_id = "assess_plant", tag = "plants",
     params(
         ("plant" = String, Path, description = "Name of the plant", example = "tarn-mill"),
         ("revision" = Option<u32>, Query, description = "Number of the revision; the current one where it is left out"),

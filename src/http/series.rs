@@ -76,7 +76,7 @@ struct Series {
 
 /// Numbers over time.
 #[utoipa::path(
-    get, path = "/v1/plants/{plant}/series", tag = "batches",
+    get, path = "/v1/plants/{plant}/series", operation_id = "get_series", tag = "batches",
     params(
         ("plant" = String, Path, description = "Name of the plant", example = "tarn-mill"),
         ("tag" = Option<Vec<String>>, Query, description = "A tag or assumption; may be repeated", example = json!(["FT-201"])),

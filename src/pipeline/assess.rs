@@ -132,7 +132,7 @@ fn assessed_tag(solution: &Solution, i: usize, unit: &Unit) -> AssessedTag {
     let redundancy = solution.redundancy(i);
     tag.class = class(solution.is_redundant(i), redundancy);
     tag.redundancy = Some(redundancy);
-    if let (true, Some(test)) = (solution.is_redundant(i), solution.single_test()) {
+    if let (Class::Redundant, Some(test)) = (tag.class, solution.single_test()) {
         let sigma = unit.difference_from_internal(measured.sigma.get());
         tag.detectable = Some(detectable_bias(test.critical_value, sigma, redundancy));
     }

@@ -65,7 +65,7 @@ fn entry(i: usize, unit: &Unit, readings: &Readings, solution: Option<&Solution>
             report.uncertainty_reconciled =
                 Some(COVERAGE_FACTOR * sigma * (1.0 - redundancy).max(0.0).sqrt());
             report.class = class(solution.is_redundant(i), redundancy);
-            if report.class != Class::NotRedundant {
+            if report.class == Class::Redundant {
                 report.standardised_adjustment = Some(adjustment / redundancy.sqrt());
                 let critical = solution.single_test().map(|test| test.critical_value);
                 report.detectable = critical.map(|c| detectable_bias(c, sigma, redundancy));

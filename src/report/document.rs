@@ -118,9 +118,10 @@ pub struct TagReport {
     pub uncertainty_reconciled: Option<f64>,
     /// Variance of the adjustment over variance of the reading, 0 to 1.
     pub redundancy: Option<f64>,
-    /// Adjustment over its own sigma.
+    /// Adjustment over its own sigma; of redundant tags only.
     pub standardised_adjustment: Option<f64>,
-    /// Smallest bias that the single test finds with 80 % power.
+    /// Smallest bias that the single test finds with 80 % power; of redundant
+    /// tags only.
     pub detectable: Option<f64>,
     /// Class.
     pub class: Class,

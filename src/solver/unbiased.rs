@@ -20,7 +20,7 @@ const MEASURED: f64 = 1e-4;
 /// Fraction of a variance that regularisation may take before it is taken out.
 const WEAK: f64 = 1e-5;
 /// Unknowns that it is taken out of one by one.
-const MOST_WEAK: usize = 64;
+const MOST_WEAK: usize = 256;
 /// Least part of a variance that regularisation must leave for this to be accurate.
 const LEAST_LEFT: f64 = 1e-4;
 

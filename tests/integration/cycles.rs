@@ -36,13 +36,36 @@ impl Given {
     /// Name, value and line in the plant file of the tag that reads it.
     fn tag(self) -> (String, f64, String) {
         let (letter, measures, of, unit, uncertainty, value) = match self {
-            Pressure(of, value) => ("P", "pressure", of, "MPa", "{ of-reading = \"0.01 %\" }", value),
-            Celsius(of, value) => ("T", "temperature", of, "Cel", "{ absolute = \"0.01 K\" }", value),
-            Flow(of, value) => ("F", "mass-flow", of, "kg/s", "{ of-reading = \"0.01 %\" }", value),
+            Pressure(of, value) => (
+                "P",
+                "pressure",
+                of,
+                "MPa",
+                "{ of-reading = \"0.01 %\" }",
+                value,
+            ),
+            Celsius(of, value) => (
+                "T",
+                "temperature",
+                of,
+                "Cel",
+                "{ absolute = \"0.01 K\" }",
+                value,
+            ),
+            Flow(of, value) => (
+                "F",
+                "mass-flow",
+                of,
+                "kg/s",
+                "{ of-reading = \"0.01 %\" }",
+                value,
+            ),
             Power(of, value) => ("W", "power", of, "kW", "{ of-reading = \"0.01 %\" }", value),
         };
         let name = format!("{letter}-{of}");
-        let line = format!("{name} = {{ measures = \"{measures}\", of = \"{of}\", unit = \"{unit}\", uncertainty = {uncertainty} }}\n");
+        let line = format!(
+            "{name} = {{ measures = \"{measures}\", of = \"{of}\", unit = \"{unit}\", uncertainty = {uncertainty} }}\n"
+        );
         (name, value, line)
     }
 }
@@ -50,15 +73,30 @@ impl Given {
 impl Cycle {
     /// A report that balances exactly.
     fn solve(&self) -> Report {
-        let tags: Vec<(String, f64, String)> = self.readings.iter().map(|given| given.tag()).collect();
+        let tags: Vec<(String, f64, String)> =
+            self.readings.iter().map(|given| given.tag()).collect();
         let lines: String = tags.iter().map(|tag| tag.2.as_str()).collect();
-        let Cycle { streams, equipment, assumptions, .. } = self;
+        let Cycle {
+            streams,
+            equipment,
+            assumptions,
+            ..
+        } = self;
         let file = format!(
             "plant = \"cycle\"\ntitle = \"A textbook's cycle\"\n[streams]\n{streams}\n[equipment]\n{equipment}\n[tags]\n{lines}\n[assumptions]\n{assumptions}\n"
         );
-        let plant = plant::read(&file, Format::Toml).unwrap_or_else(|faults| panic!("{faults}\n{file}")).plant;
-        let good = Quality { grade: Grade::Good, code: None };
-        let readings = tags.into_iter().map(|(tag, value, _)| Reading { tag, value: Some(value), quality: good });
+        let plant = plant::read(&file, Format::Toml)
+            .unwrap_or_else(|faults| panic!("{faults}\n{file}"))
+            .plant;
+        let good = Quality {
+            grade: Grade::Good,
+            code: None,
+        };
+        let readings = tags.into_iter().map(|(tag, value, _)| Reading {
+            tag,
+            value: Some(value),
+            quality: good,
+        });
         let batch = Batch {
             name: "given".to_owned(),
             start: datetime!(2026-03-18 00:00 UTC),
@@ -67,7 +105,11 @@ impl Cycle {
         };
         let report = reconcile(&Compiled::new(plant, 1), &batch);
         assert_ne!(report.verdict, Verdict::NotConverged, "{:?}", report.reason);
-        assert!(report.global_test.is_some_and(|test| test.statistic < 1e-6), "{:?}", report.global_test);
+        assert!(
+            report.global_test.is_some_and(|test| test.statistic < 1e-6),
+            "{:?}",
+            report.global_test
+        );
         report
     }
 }
@@ -81,23 +123,42 @@ fn enthalpy(report: &Report, stream: &str) -> f64 {
 }
 
 fn celsius(report: &Report, stream: &str) -> f64 {
-    report.streams[stream].temperature.value.expect("observable")
+    report.streams[stream]
+        .temperature
+        .value
+        .expect("observable")
 }
 
 fn work(report: &Report, machine: &str) -> f64 {
-    report.equipment[machine].work.as_ref().and_then(|work| work.value).expect("observable")
+    report.equipment[machine]
+        .work
+        .as_ref()
+        .and_then(|work| work.value)
+        .expect("observable")
 }
 
 /// Net work over heat taken up in the boiler.
 fn thermal_efficiency(report: &Report, turbines: &[&str], pumps: &[&str]) -> f64 {
-    let sum = |machines: &[&str]| machines.iter().map(|machine| work(report, machine)).sum::<f64>();
-    let heat = report.equipment["boiler"].heat.as_ref().and_then(|heat| heat.value).expect("observable");
+    let sum = |machines: &[&str]| {
+        machines
+            .iter()
+            .map(|machine| work(report, machine))
+            .sum::<f64>()
+    };
+    let heat = report.equipment["boiler"]
+        .heat
+        .as_ref()
+        .and_then(|heat| heat.value)
+        .expect("observable");
     (sum(turbines) - sum(pumps)) / heat
 }
 
 fn assert_near(what: &str, found: f64, published: f64, tolerance: f64) {
     println!("{what}: {found:.5}, published {published}");
-    assert!((found - published).abs() <= tolerance, "{what}: {found}, published {published}");
+    assert!(
+        (found - published).abs() <= tolerance,
+        "{what}: {found}, published {published}"
+    );
 }
 
 const RANKINE_STREAMS: &str = r#"
@@ -120,9 +181,12 @@ ideal-pump    = { value-of = "isentropic-efficiency", of = "pump", value = "100 
 /// Cengel and Boles, Thermodynamics, Examples 10-1 and 10-3. Figures from memory.
 #[test]
 fn ideal_rankine_cycles() {
-    for (pressure, temperature, condenser, published) in
-        [(3.0, 350.0, 0.075, 0.260), (3.0, 350.0, 0.010, 0.334), (3.0, 600.0, 0.010, 0.373), (15.0, 600.0, 0.010, 0.430)]
-    {
+    for (pressure, temperature, condenser, published) in [
+        (3.0, 350.0, 0.075, 0.260),
+        (3.0, 350.0, 0.010, 0.334),
+        (3.0, 600.0, 0.010, 0.373),
+        (15.0, 600.0, 0.010, 0.430),
+    ] {
         let cycle = Cycle {
             streams: RANKINE_STREAMS,
             equipment: RANKINE_EQUIPMENT,
@@ -138,7 +202,12 @@ fn ideal_rankine_cycles() {
         };
         let report = cycle.solve();
         let found = thermal_efficiency(&report, &["turbine"], &["pump"]);
-        assert_near(&format!("{pressure} MPa, {temperature} Cel, {condenser} MPa"), found, published, 0.001);
+        assert_near(
+            &format!("{pressure} MPa, {temperature} Cel, {condenser} MPa"),
+            found,
+            published,
+            0.001,
+        );
     }
 }
 
@@ -183,7 +252,12 @@ ideal-2     = { value-of = "isentropic-efficiency", of = "pump-2", value = "100 
     };
     let report = cycle.solve();
     assert_near("y", flow(&report, "bleed"), 0.227, 0.0005);
-    assert_near("efficiency", thermal_efficiency(&report, &["turbine"], &["pump-1", "pump-2"]), 0.463, 0.001);
+    assert_near(
+        "efficiency",
+        thermal_efficiency(&report, &["turbine"], &["pump-1", "pump-2"]),
+        0.463,
+        0.001,
+    );
 }
 
 /// The ideal reheat-regenerative cycle of Cengel and Boles, Thermodynamics,
@@ -255,7 +329,11 @@ ideal-3      = { value-of = "isentropic-efficiency", of = "pump-3", value = "100
     assert_near("y", flow(&report, "bleed-hp"), 0.17261, 0.0005);
     assert_near("z", flow(&report, "bleed-lp"), 0.13132, 0.0005);
     assert_near("h8", enthalpy(&report, "feed-5"), 1089.67, 0.5);
-    let efficiency = thermal_efficiency(&report, &["turbine-hp", "turbine-lp"], &["pump-1", "pump-2", "pump-3"]);
+    let efficiency = thermal_efficiency(
+        &report,
+        &["turbine-hp", "turbine-lp"],
+        &["pump-1", "pump-2", "pump-3"],
+    );
     assert_near("efficiency", efficiency, 0.4895, 0.001);
 }
 
@@ -278,34 +356,77 @@ fn terminal_differences_of_heaters() {
     let line = fluid::saturation(0.5).expect("in range");
     // kJ/kg of m3/kg times MPa.
     let pumped = line.liquid.h + 1e3 * line.liquid.v * (15.0 - 0.5);
-    let inlet = format!(r#"cold = {{ value-of = "enthalpy", of = "cold", value = "{pumped} kJ/kg", uncertainty = {{ absolute = "0.01 kJ/kg" }} }}"#);
+    let inlet = format!(
+        r#"cold = {{ value-of = "enthalpy", of = "cold", value = "{pumped} kJ/kg", uncertainty = {{ absolute = "0.01 kJ/kg" }} }}"#
+    );
     let outlet = fluid::saturation(4.0).expect("in range").t - 273.15;
-    let heater = |assumptions, readings| Cycle { streams: HEATER_STREAMS, equipment: HEATER_EQUIPMENT, assumptions, readings };
-    let report = heater(inlet, vec![
-        Flow("cold", 1.0),
-        Pressure("cold", 15.0),
-        Pressure("warm", 15.0),
-        Celsius("warm", outlet),
-        Pressure("steam", 4.0),
-        Celsius("steam", 380.0),
-    ])
+    let heater = |assumptions, readings| Cycle {
+        streams: HEATER_STREAMS,
+        equipment: HEATER_EQUIPMENT,
+        assumptions,
+        readings,
+    };
+    let report = heater(
+        inlet,
+        vec![
+            Flow("cold", 1.0),
+            Pressure("cold", 15.0),
+            Pressure("warm", 15.0),
+            Celsius("warm", outlet),
+            Pressure("steam", 4.0),
+            Celsius("steam", 380.0),
+        ],
+    )
     .solve();
-    assert_near("saturation", celsius(&report, "drain"), 250.357_519_124_065_56, 0.03);
-    assert_near("TTD", celsius(&report, "drain") - celsius(&report, "warm"), 0.0, 0.03);
-    assert_near("feedwater inlet", celsius(&report, "cold"), 153.439_774_430_527_68, 0.03);
-    assert_near("DCA", celsius(&report, "drain") - celsius(&report, "cold"), 96.917_744_693_537_88, 0.03);
-    let report = heater(String::new(), vec![
-        Flow("cold", 1.0),
-        Pressure("cold", 15.0),
-        Celsius("cold", 160.0),
-        Pressure("warm", 15.0),
-        Celsius("warm", 220.0),
-        Pressure("steam", 1.5),
-        Celsius("steam", 300.0),
-    ])
+    assert_near(
+        "saturation",
+        celsius(&report, "drain"),
+        250.357_519_124_065_56,
+        0.03,
+    );
+    assert_near(
+        "TTD",
+        celsius(&report, "drain") - celsius(&report, "warm"),
+        0.0,
+        0.03,
+    );
+    assert_near(
+        "feedwater inlet",
+        celsius(&report, "cold"),
+        153.439_774_430_527_68,
+        0.03,
+    );
+    assert_near(
+        "DCA",
+        celsius(&report, "drain") - celsius(&report, "cold"),
+        96.917_744_693_537_88,
+        0.03,
+    );
+    let report = heater(
+        String::new(),
+        vec![
+            Flow("cold", 1.0),
+            Pressure("cold", 15.0),
+            Celsius("cold", 160.0),
+            Pressure("warm", 15.0),
+            Celsius("warm", 220.0),
+            Pressure("steam", 1.5),
+            Celsius("steam", 300.0),
+        ],
+    )
     .solve();
-    assert_near("saturation", celsius(&report, "drain"), 198.295_242_882_414_13, 0.03);
-    assert_near("TTD", celsius(&report, "drain") - celsius(&report, "warm"), -21.704_757_117_585_87, 0.03);
+    assert_near(
+        "saturation",
+        celsius(&report, "drain"),
+        198.295_242_882_414_13,
+        0.03,
+    );
+    assert_near(
+        "TTD",
+        celsius(&report, "drain") - celsius(&report, "warm"),
+        -21.704_757_117_585_87,
+        0.03,
+    );
 }
 
 /// Cengel and Boles, Thermodynamics, Example 7-14: flow and efficiency of a
@@ -332,7 +453,10 @@ efficiency = { value-of = "isentropic-efficiency", of = "turbine", value = "90 %
     };
     let report = cycle.solve();
     let (h1, h2) = (enthalpy(&report, "inlet"), enthalpy(&report, "outlet"));
-    let efficiency = report.assumptions["efficiency"].reconciled.expect("observable") / 100.0;
+    let efficiency = report.assumptions["efficiency"]
+        .reconciled
+        .expect("observable")
+        / 100.0;
     assert_near("efficiency", efficiency, 0.667, 0.001);
     assert_near("flow", flow(&report, "inlet"), 3.64, 0.005);
     assert_near("h1", h1, 3231.7, 0.3);

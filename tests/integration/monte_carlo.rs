@@ -53,13 +53,16 @@ impl Tally {
     fn add(&mut self, plant: &Plant, truth: &Truth, report: &Report) {
         let Some(test) = report.global_test else {
             let reason = report.reason.clone().unwrap_or_default();
-            self.not_converged.push(format!("{}: {reason}", report.batch));
+            self.not_converged
+                .push(format!("{}: {reason}", report.batch));
             return;
         };
         self.degrees_of_freedom.push(test.degrees_of_freedom);
         self.statistics.push(test.statistic);
         self.p_values.push(test.p_value.expect("redundant"));
-        self.alarms += usize::from(largest_statistic(report) > report.single_test.as_ref().expect("tested").critical_value);
+        self.alarms += usize::from(
+            largest_statistic(report) > report.single_test.as_ref().expect("tested").critical_value,
+        );
         for s in 0..plant.streams.len() {
             self.stream(plant, truth, report, StreamId(s));
         }
@@ -87,14 +90,21 @@ impl Tally {
         let entry = &report.streams[name];
         let flow = truth.stream(plant, id).expect("a known stream");
         let line = fluid::saturation(flow.pressure).ok();
-        let distance = line.map(|l| (flow.enthalpy - l.liquid.h).abs().min((flow.enthalpy - l.vapour.h).abs()));
+        let distance = line.map(|l| {
+            (flow.enthalpy - l.liquid.h)
+                .abs()
+                .min((flow.enthalpy - l.vapour.h).abs())
+        });
         match entry.phase {
             None => {}
             Some(Phase::Open) => self.open_phases += 1,
             Some(phase) => {
                 let right = true_phase(flow.pressure, flow.enthalpy);
                 if phase != right {
-                    self.wrong_phases.push(format!("{} {name}: {phase:?}, really {right:?}", report.batch));
+                    self.wrong_phases.push(format!(
+                        "{} {name}: {phase:?}, really {right:?}",
+                        report.batch
+                    ));
                 }
             }
         }
@@ -170,10 +180,19 @@ impl Tally {
 /// imbalances.
 fn largest_statistic(report: &Report) -> f64 {
     let tags = report.tags.values().chain(report.assumptions.values());
-    let adjustments = tags.filter(|tag| tag.class == Class::Redundant).filter_map(|tag| tag.standardised_adjustment);
-    let balances = report.equipment.values().map(|equipment| &equipment.imbalance);
-    let imbalances = balances.flat_map(|i| i.mass.values().chain(&i.energy)).filter_map(|i| i.standardised);
-    adjustments.chain(imbalances).fold(0.0, |largest, statistic| largest.max(statistic.abs()))
+    let adjustments = tags
+        .filter(|tag| tag.class == Class::Redundant)
+        .filter_map(|tag| tag.standardised_adjustment);
+    let balances = report
+        .equipment
+        .values()
+        .map(|equipment| &equipment.imbalance);
+    let imbalances = balances
+        .flat_map(|i| i.mass.values().chain(&i.energy))
+        .filter_map(|i| i.standardised);
+    adjustments
+        .chain(imbalances)
+        .fold(0.0, |largest, statistic| largest.max(statistic.abs()))
 }
 
 /// Phase as a report calls it: what stands on the line is liquid or vapour.
@@ -205,7 +224,8 @@ fn batch(plant: &Plant, number: u64) -> (Batch, Truth) {
     };
     let assumed = Assumed::drawn(plant, &mut rng);
     let truth = demo::truth(&conditions, &assumed).expect("settles");
-    let readings = demo::readings(plant, &truth, &mut rng, |_| None).expect("every stream is known");
+    let readings =
+        demo::readings(plant, &truth, &mut rng, |_| None).expect("every stream is known");
     let batch = Batch {
         name: format!("batch {number}"),
         start: datetime!(2026-03-18 00:00 UTC),
@@ -226,7 +246,9 @@ fn tally(compiled: &Compiled) -> Tally {
         tally
     };
     std::thread::scope(|scope| {
-        let parts: Vec<_> = (0..THREADS).map(|first| scope.spawn(move || part(first))).collect();
+        let parts: Vec<_> = (0..THREADS)
+            .map(|first| scope.spawn(move || part(first)))
+            .collect();
         let mut whole = Tally::default();
         for part in parts {
             whole.merge(part.join().expect("no panic"));
@@ -246,7 +268,10 @@ fn kolmogorov_smirnov(sample: &[f64]) -> (f64, f64) {
         largest.max((i + 1) as f64 / n - p).max(p - i as f64 / n)
     });
     let lambda = (n.sqrt() + 0.12 + 0.11 / n.sqrt()) * distance;
-    let term = |j: i32| f64::from(if j % 2 == 1 { 2 } else { -2 }) * (-2.0 * f64::from(j * j) * lambda * lambda).exp();
+    let term = |j: i32| {
+        f64::from(if j % 2 == 1 { 2 } else { -2 })
+            * (-2.0 * f64::from(j * j) * lambda * lambda).exp()
+    };
     (distance, (1..=100).map(term).sum::<f64>().clamp(0.0, 1.0))
 }
 
@@ -254,22 +279,42 @@ fn kolmogorov_smirnov(sample: &[f64]) -> (f64, f64) {
 fn two_thousand_batches_have_the_statistics_that_are_promised() {
     let compiled = Compiled::new(demo::plant().expect("no faults"), 1);
     let tally = tally(&compiled);
-    assert!(tally.not_converged.is_empty(), "{}", tally.not_converged.join("\n"));
-    println!("open phases: {}; near saturation: {:?}", tally.open_phases, tally.near_saturation);
+    assert!(
+        tally.not_converged.is_empty(),
+        "{}",
+        tally.not_converged.join("\n")
+    );
+    println!(
+        "open phases: {}; near saturation: {:?}",
+        tally.open_phases, tally.near_saturation
+    );
     check_statistic(&tally);
     check_flows(&tally);
     check_intervals(&tally);
     let wrong = &tally.wrong_phases;
-    assert!(wrong.is_empty(), "{} wrong phases:\n{}", wrong.len(), wrong.join("\n"));
+    assert!(
+        wrong.is_empty(),
+        "{} wrong phases:\n{}",
+        wrong.len(),
+        wrong.join("\n")
+    );
 }
 
 fn check_statistic(tally: &Tally) {
     let n = tally.statistics.len() as f64;
     let dof = tally.degrees_of_freedom[0];
-    assert!(tally.degrees_of_freedom.iter().all(|&d| d == dof), "one class set, one number");
+    assert!(
+        tally.degrees_of_freedom.iter().all(|&d| d == dof),
+        "one class set, one number"
+    );
     let dof = dof as f64;
     let mean = tally.statistics.iter().sum::<f64>() / n;
-    let variance = tally.statistics.iter().map(|s| (s - mean).powi(2)).sum::<f64>() / (n - 1.0);
+    let variance = tally
+        .statistics
+        .iter()
+        .map(|s| (s - mean).powi(2))
+        .sum::<f64>()
+        / (n - 1.0);
     // Variance of a sample variance: (mu4 - sigma^4) / n, with chi-square's
     // fourth central moment mu4 = 12 dof (dof + 4).
     let error_of_mean = (2.0 * dof / n).sqrt();
@@ -277,28 +322,49 @@ fn check_statistic(tally: &Tally) {
     let (distance, p) = kolmogorov_smirnov(&tally.p_values);
     let rejected = tally.p_values.iter().filter(|p| **p < 0.05).count() as f64 / n;
     println!("{n} batches, {dof} degrees of freedom");
-    println!("statistic: mean {mean:.3} +- {error_of_mean:.3}, variance {variance:.2} (2 dof = {}) +- {error_of_variance:.2}", 2.0 * dof);
-    println!("p-values: KS distance {distance:.4}, p {p:.4}; {:.2} % below 0.05", 100.0 * rejected);
+    println!(
+        "statistic: mean {mean:.3} +- {error_of_mean:.3}, variance {variance:.2} (2 dof = {}) +- {error_of_variance:.2}",
+        2.0 * dof
+    );
+    println!(
+        "p-values: KS distance {distance:.4}, p {p:.4}; {:.2} % below 0.05",
+        100.0 * rejected
+    );
     // At 95 % confidence one batch in twenty; the critical value is simulated
     // with 10 000 draws, whose error counts too.
     let alarms = tally.alarms as f64 / n;
     let error_of_alarms = (0.05 * 0.95 * (1.0 / n + 1.0 / 10_000.0)).sqrt();
-    println!("single tests: {:.2} % of batches have an alarm, +- {:.2}", 100.0 * alarms, 100.0 * error_of_alarms);
+    println!(
+        "single tests: {:.2} % of batches have an alarm, +- {:.2}",
+        100.0 * alarms,
+        100.0 * error_of_alarms
+    );
     assert!((alarms - 0.05).abs() < 4.0 * error_of_alarms, "{alarms}");
     assert!((mean - dof).abs() < 4.0 * error_of_mean, "mean {mean}");
-    assert!((variance - 2.0 * dof).abs() < 4.0 * error_of_variance, "variance {variance}");
+    assert!(
+        (variance - 2.0 * dof).abs() < 4.0 * error_of_variance,
+        "variance {variance}"
+    );
     assert!(p > 0.001, "KS p {p}");
 }
 
 fn check_flows(tally: &Tally) {
     let n = tally.statistics.len() as f64;
     for (name, [measured, reconciled]) in &tally.flows {
-        println!("{name}: rms error {:.3} sigma measured, {:.3} reconciled", (measured / n).sqrt(), (reconciled / n).sqrt());
+        println!(
+            "{name}: rms error {:.3} sigma measured, {:.3} reconciled",
+            (measured / n).sqrt(),
+            (reconciled / n).sqrt()
+        );
         assert!(reconciled < measured, "{name}");
     }
     let sum = |part: usize| tally.flows.values().map(|sums| sums[part]).sum::<f64>();
     let rms = |part: usize| (sum(part) / n / tally.flows.len() as f64).sqrt();
-    println!("all flows: rms error {:.3} sigma measured, {:.3} reconciled", rms(0), rms(1));
+    println!(
+        "all flows: rms error {:.3} sigma measured, {:.3} reconciled",
+        rms(0),
+        rms(1)
+    );
 }
 
 fn check_intervals(tally: &Tally) {
@@ -313,13 +379,27 @@ fn check_intervals(tally: &Tally) {
             high = (name, coverage);
         }
         if !(0.93..=0.97).contains(&coverage) {
-            outside.push(format!("{name}: {:.2} % of {all}, rms error {:.3} sigma", 100.0 * coverage, (squares / all).sqrt()));
+            outside.push(format!(
+                "{name}: {:.2} % of {all}, rms error {:.3} sigma",
+                100.0 * coverage,
+                (squares / all).sqrt()
+            ));
         }
     }
     let sum = |part: usize| tally.intervals.values().map(|sums| sums[part]).sum::<f64>();
     let pooled = sum(0) / sum(1);
-    println!("95 % intervals of {} quantities: pooled {:.3} %", tally.intervals.len(), 100.0 * pooled);
-    println!("least {} {:.2} %, most {} {:.2} %", low.0, 100.0 * low.1, high.0, 100.0 * high.1);
+    println!(
+        "95 % intervals of {} quantities: pooled {:.3} %",
+        tally.intervals.len(),
+        100.0 * pooled
+    );
+    println!(
+        "least {} {:.2} %, most {} {:.2} %",
+        low.0,
+        100.0 * low.1,
+        high.0,
+        100.0 * high.1
+    );
     println!("outside 93 to 97 %: {outside:#?}");
     assert!((0.94..=0.96).contains(&pooled), "pooled coverage {pooled}");
     assert!(outside.is_empty(), "{}", outside.join("\n"));
@@ -335,15 +415,33 @@ fn the_fixture_day_converges_and_shows_its_drifting_meter() {
     for (number, item) in Day::new(&plant, DAY_SEED).enumerate() {
         let (batch, _) = item.expect("the day runs");
         let report = reconcile(&compiled, &batch);
-        assert_ne!(report.verdict, Verdict::NotConverged, "{}: {:?}", report.batch, report.reason);
+        assert_ne!(
+            report.verdict,
+            Verdict::NotConverged,
+            "{}: {:?}",
+            report.batch,
+            report.reason
+        );
         // The drift begins at ten o'clock.
-        let part = if number <= 120 { "before the drift" } else { "during the drift" };
-        *verdicts.entry(format!("{part}: {:?}", report.verdict)).or_default() += 1;
+        let part = if number <= 120 {
+            "before the drift"
+        } else {
+            "during the drift"
+        };
+        *verdicts
+            .entry(format!("{part}: {:?}", report.verdict))
+            .or_default() += 1;
         if number < LATE {
             continue;
         }
-        let standardised = report.tags.iter().filter_map(|(name, tag)| Some((name, tag.standardised_adjustment?.abs())));
-        let worst = standardised.clone().max_by(|a, b| a.1.total_cmp(&b.1)).expect("tested tags");
+        let standardised = report
+            .tags
+            .iter()
+            .filter_map(|(name, tag)| Some((name, tag.standardised_adjustment?.abs())));
+        let worst = standardised
+            .clone()
+            .max_by(|a, b| a.1.total_cmp(&b.1))
+            .expect("tested tags");
         leaders.push(worst.0.clone());
         for (name, size) in standardised {
             *sums.entry(name.clone()).or_default() += size;
@@ -356,11 +454,17 @@ fn the_fixture_day_converges_and_shows_its_drifting_meter() {
     assert_eq!(count, 24);
     for (name, sum) in &sums[..4] {
         let leads = leaders.iter().filter(|leader| *leader == name).count();
-        println!("{name}: standardised adjustment {:.2} on average, the largest in {leads} of {count}", sum / count as f64);
+        println!(
+            "{name}: standardised adjustment {:.2} on average, the largest in {leads} of {count}",
+            sum / count as f64
+        );
     }
     // A flow that is hardly checked moves with the one that drifts, and noise
     // can put it first in a batch; over the hours it does not.
     assert_eq!(sums[0].0, DRIFTING_TAG);
-    let leads = leaders.iter().filter(|leader| *leader == DRIFTING_TAG).count();
+    let leads = leaders
+        .iter()
+        .filter(|leader| *leader == DRIFTING_TAG)
+        .count();
     assert!(2 * leads > count, "{leaders:?}");
 }

@@ -21,10 +21,13 @@ fn every_route_is_described() {
     let document = document();
     assert_eq!(document["openapi"], "3.1.0");
     let mut operations = BTreeSet::new();
+    let mut ids = BTreeSet::new();
     for (path, methods) in document["paths"].as_object().expect("paths") {
         for (method, operation) in methods.as_object().expect("methods") {
             operations.insert(format!("{method} {path}"));
             assert!(operation["summary"].is_string(), "{method} {path}");
+            let id = operation["operationId"].as_str().expect("an id");
+            assert!(ids.insert(id.to_owned()), "{id} stands twice");
             let default = &operation["responses"]["default"]["content"];
             let has_problem = default["application/problem+json"]["schema"].is_object();
             assert!(has_problem || path.ends_with('z'), "{method} {path}");

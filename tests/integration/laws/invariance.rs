@@ -5,9 +5,12 @@
 //! steps shrink fast, so that two ways to the same solution end much closer
 //! than that; what takes the same steps ends within rounding.
 
-use super::workbench::{Distance, degrees_of_freedom, demo_truth, everyday, near_truth, read, run, statistic};
+use super::workbench::{
+    Distance, FERROW_BRIDGE, batch, degrees_of_freedom, demo_truth, everyday, levelled, near_truth,
+    read, references, run, statistic, without,
+};
 use counterpoise::pipeline::{Compiled, reconcile};
-use counterpoise::plant::{Batch, Plant, Quantity, Reading, StreamId, Tag, Unit};
+use counterpoise::plant::{Batch, Quantity, Reading, StreamId, Tag, Unit};
 use counterpoise::report::Class;
 use rand::SeedableRng;
 use rand::seq::SliceRandom;
@@ -25,11 +28,17 @@ const SPREADS: f64 = 5e-4;
 fn the_same_batch_gives_the_same_bytes() {
     for (plant, mut batch) in everyday() {
         let compiled = Compiled::new(plant.clone(), 1);
-        let text = |compiled: &Compiled, batch: &Batch| serde_json::to_string(&reconcile(compiled, batch)).expect("JSON");
+        let text = |compiled: &Compiled, batch: &Batch| {
+            serde_json::to_string(&reconcile(compiled, batch)).expect("JSON")
+        };
         let first = text(&compiled, &batch);
         assert_eq!(first, text(&compiled, &batch), "a second time");
         batch.readings.shuffle(&mut ChaCha8Rng::seed_from_u64(2));
-        assert_eq!(first, text(&Compiled::new(plant, 1), &batch), "compiled again, in another order");
+        assert_eq!(
+            first,
+            text(&Compiled::new(plant, 1), &batch),
+            "compiled again, in another order"
+        );
     }
 }
 
@@ -49,13 +58,23 @@ fn a_batch_is_not_changed_by_the_batch_before() {
 #[test]
 fn the_order_of_the_plant_file_changes_nothing() {
     let (plant, truth) = demo_truth(0.8);
-    let batch = near_truth(&plant, &truth, 1.0, 7);
-    let straight = run(&plant, &batch);
-    for seed in 0..3 {
-        let shuffled = run(&read(&shuffled(counterpoise::demo::plant_file(), seed)), &batch);
-        let distance = Distance::between(&straight, &shuffled);
-        distance.assert_below(ROUNDING, SPREADS, &format!("order {seed}"));
-        assert_eq!(degrees_of_freedom(&straight), degrees_of_freedom(&shuffled));
+    let demo = near_truth(&plant, &truth, 1.0, 7);
+    let other = references().remove(1).1.remove(0);
+    for (file, batch) in [
+        (counterpoise::demo::plant_file(), demo),
+        (FERROW_BRIDGE, other),
+    ] {
+        let straight = run(&read(file), &batch);
+        for seed in 0..3 {
+            let shuffled = run(&read(&shuffled(file, seed)), &batch);
+            let distance = Distance::between(&straight, &shuffled);
+            distance.assert_below(
+                ROUNDING,
+                SPREADS,
+                &format!("{} order {seed}", straight.plant),
+            );
+            assert_eq!(degrees_of_freedom(&straight), degrees_of_freedom(&shuffled));
+        }
     }
 }
 
@@ -69,7 +88,9 @@ fn shuffled(file: &str, seed: u64) -> String {
     for line in file.lines() {
         if line.starts_with('[') {
             section.shuffle(&mut rng);
-            section.drain(..).for_each(|entry| text += &format!("{entry}\n"));
+            section
+                .drain(..)
+                .for_each(|entry| text += &format!("{entry}\n"));
             in_section = true;
         }
         if in_section && line.contains(" = {") {
@@ -79,7 +100,9 @@ fn shuffled(file: &str, seed: u64) -> String {
         }
     }
     section.shuffle(&mut rng);
-    section.drain(..).for_each(|entry| text += &format!("{entry}\n"));
+    section
+        .drain(..)
+        .for_each(|entry| text += &format!("{entry}\n"));
     text
 }
 
@@ -91,9 +114,17 @@ fn the_units_of_tags_change_nothing() {
         let (mut other, mut converted) = (plant.clone(), batch.clone());
         for (n, tag) in other.tags.iter_mut().enumerate() {
             let factor = [0.37, 2.5, 0.453_592_37][n % 3];
-            let shift = if matches!(tag.quantity, Quantity::Temperature(_)) { 17.0 } else { 0.0 };
+            let shift = if matches!(tag.quantity, Quantity::Temperature(_)) {
+                17.0
+            } else {
+                0.0
+            };
             let old = tag.unit.clone();
-            tag.unit = Unit { symbol: "other".to_owned(), factor: old.factor * factor, offset: old.offset - shift };
+            tag.unit = Unit {
+                symbol: "other".to_owned(),
+                factor: old.factor * factor,
+                offset: old.offset - shift,
+            };
             let convert = |value: f64| tag.unit.from_internal(old.to_internal(value));
             tag.uncertainty.constant /= factor;
             tag.uncertainty.differential /= factor * factor;
@@ -110,7 +141,12 @@ fn the_units_of_tags_change_nothing() {
             let value = |v: f64| old.unit.from_internal(tag.unit.to_internal(v));
             let width = |v: f64| v * tag.unit.factor / old.unit.factor;
             entry.reconciled = entry.reconciled.map(value);
-            for field in [&mut entry.adjustment, &mut entry.uncertainty_measured, &mut entry.uncertainty_reconciled, &mut entry.detectable] {
+            for field in [
+                &mut entry.adjustment,
+                &mut entry.uncertainty_measured,
+                &mut entry.uncertainty_reconciled,
+                &mut entry.detectable,
+            ] {
                 *field = field.map(width);
             }
         }
@@ -127,23 +163,47 @@ fn a_tag_split_into_two_is_one_more_degree_of_freedom() {
     let whole = run(&plant, &batch);
     for name in ["FT-101", "PT-201", "TT-210", "ET-201", "TT-315"] {
         let (mut split, mut readings) = (plant.clone(), batch.clone());
-        let tag = split.tags.iter_mut().find(|tag| tag.name == name).expect("a tag");
+        let tag = split
+            .tags
+            .iter_mut()
+            .find(|tag| tag.name == name)
+            .expect("a tag");
         tag.uncertainty.of_reading *= std::f64::consts::SQRT_2;
         tag.uncertainty.constant *= std::f64::consts::SQRT_2;
         tag.uncertainty.differential *= std::f64::consts::SQRT_2;
-        let second = Tag { name: format!("{name}-B"), ..tag.clone() };
-        let reading = batch.readings.iter().find(|r| r.tag == name).expect("a reading");
-        readings.readings.push(Reading { tag: second.name.clone(), ..reading.clone() });
+        let second = Tag {
+            name: format!("{name}-B"),
+            ..tag.clone()
+        };
+        let reading = batch
+            .readings
+            .iter()
+            .find(|r| r.tag == name)
+            .expect("a reading");
+        readings.readings.push(Reading {
+            tag: second.name.clone(),
+            ..reading.clone()
+        });
         split.tags.push(second);
         let mut report = run(&split, &readings);
-        assert_eq!(degrees_of_freedom(&report), degrees_of_freedom(&whole) + 1, "{name}");
+        assert_eq!(
+            degrees_of_freedom(&report),
+            degrees_of_freedom(&whole) + 1,
+            "{name}"
+        );
         let (first, second) = (&report.tags[name], &report.tags[&format!("{name}-B")]);
         assert_eq!(first.reconciled, second.reconciled);
-        assert!((first.reconciled.expect("used") - whole.tags[name].reconciled.expect("used")).abs() < 1e-6);
+        assert!(
+            (first.reconciled.expect("used") - whole.tags[name].reconciled.expect("used")).abs()
+                < 1e-6
+        );
         // Half of the weight each, the same variance left: R becomes (1 + R) / 2.
         let redundancy = whole.tags[name].redundancy.expect("used");
         let half = first.redundancy.expect("used");
-        assert!((half - (1.0 + redundancy) / 2.0).abs() < SPREADS, "{name}: {half}");
+        assert!(
+            (half - (1.0 + redundancy) / 2.0).abs() < SPREADS,
+            "{name}: {half}"
+        );
         report.tags.shift_remove(name);
         let distance = Distance::between(&report, &whole);
         distance.assert_below(ROUNDING, SPREADS, name);
@@ -156,18 +216,44 @@ fn a_tag_that_nothing_checks_changes_nothing() {
     let mut batch = near_truth(&plant, &truth, 1.0, 9);
     let before = run(&plant, &batch);
     assert_eq!(before.streams["gland-spill-low"].pressure.value, None);
-    let like = plant.tags.iter().find(|tag| tag.name == "PT-211").expect("a tag").clone();
-    let stream = plant.streams.iter().position(|s| s.name == "gland-spill-low").expect("a stream");
-    let quantity = Quantity::Pressure(StreamId(stream), counterpoise::plant::PressureReference::Absolute);
-    plant.tags.push(Tag { name: "PT-999".to_owned(), quantity, ..like });
-    let reading = Reading { tag: "PT-999".to_owned(), value: Some(60.0), ..batch.readings[0].clone() };
+    let like = plant
+        .tags
+        .iter()
+        .find(|tag| tag.name == "PT-211")
+        .expect("a tag")
+        .clone();
+    let stream = plant
+        .streams
+        .iter()
+        .position(|s| s.name == "gland-spill-low")
+        .expect("a stream");
+    let quantity = Quantity::Pressure(
+        StreamId(stream),
+        counterpoise::plant::PressureReference::Absolute,
+    );
+    plant.tags.push(Tag {
+        name: "PT-999".to_owned(),
+        quantity,
+        ..like
+    });
+    let reading = Reading {
+        tag: "PT-999".to_owned(),
+        value: Some(60.0),
+        ..batch.readings[0].clone()
+    };
     batch.readings.push(reading);
     let mut after = run(&plant, &batch);
     assert_eq!(after.tags["PT-999"].class, Class::NotRedundant);
-    assert_eq!(after.tags["PT-999"].adjustment.map(|a| a.abs() < 1e-6), Some(true));
+    assert_eq!(
+        after.tags["PT-999"].adjustment.map(|a| a.abs() < 1e-6),
+        Some(true)
+    );
     assert_eq!(after.tags["PT-999"].standardised_adjustment, None);
     assert_eq!(degrees_of_freedom(&after), degrees_of_freedom(&before));
-    let pressure = after.streams["gland-spill-low"].pressure.value.expect("now it is known");
+    let pressure = after.streams["gland-spill-low"]
+        .pressure
+        .value
+        .expect("now it is known");
     assert!((pressure - 0.06).abs() < 1e-6, "{pressure}");
     after.streams.shift_remove("gland-spill-low");
     let distance = Distance::between(&before, &after);
@@ -204,25 +290,45 @@ T-3 = { measures = "temperature", of = "out",    unit = "Cel", uncertainty = { a
 /// header's outlets are implied by those of the second's inlets.
 #[test]
 fn a_relation_that_others_imply_changes_nothing() {
-    let readings = [("F-1", 100.0), ("F-2", 52.0), ("F-3", 150.0), ("P-1", 8.0), ("P-3", 8.1), ("T-1", 220.0), ("T-2", 300.0), ("T-3", 247.0)];
-    let batch = super::workbench::batch(readings);
-    let one = run(&read(&super::workbench::without(PIPES, &["right"])), &batch);
-    let mut two = run(&read(PIPES), &batch);
+    let readings = [
+        ("F-1", 100.0),
+        ("F-2", 52.0),
+        ("F-3", 150.0),
+        ("P-1", 8.0),
+        ("P-3", 8.1),
+        ("T-1", 220.0),
+        ("T-2", 300.0),
+        ("T-3", 247.0),
+    ];
+    let readings = batch(readings);
+    let one = run(&read(&without(PIPES, &["right"])), &readings);
+    let mut two = run(&read(PIPES), &readings);
     assert_eq!(degrees_of_freedom(&one), degrees_of_freedom(&two));
     for name in ["left", "right"] {
         assert_eq!(two.streams[name].mass_flow.value, None, "{name}");
-        let enthalpy = (two.streams[name].enthalpy.value, one.streams["left"].enthalpy.value);
-        let (Some(a), Some(b)) = enthalpy else { panic!("{name}: {enthalpy:?}") };
+        let enthalpy = (
+            two.streams[name].enthalpy.value,
+            one.streams["left"].enthalpy.value,
+        );
+        let (Some(a), Some(b)) = enthalpy else {
+            panic!("{name}: {enthalpy:?}")
+        };
         assert!((a / b - 1.0).abs() < CONVERGENCE, "{name}: {a}, not {b}");
     }
     two.streams.shift_remove("left");
     let distance = Distance::between(&one, &two);
     distance.assert_below(CONVERGENCE, SPREADS, "a pipe more");
     // A tee and a header in place of the pipes: the header repeats what the tee says.
-    let loops = PIPES.replace("header-1 = { kind = \"header\" }", "header-1 = { kind = \"splitter\" }");
-    let loops = super::workbench::without(&loops, &["second", "F-2", "T-2"]);
-    let single = super::workbench::without(&loops, &["right"]).replace("\"splitter\"", "\"header\"");
-    let (one, mut two) = (run(&read(&single), &batch), run(&read(&loops), &batch));
+    let loops = PIPES.replace(
+        "header-1 = { kind = \"header\" }",
+        "header-1 = { kind = \"splitter\" }",
+    );
+    let loops = without(&loops, &["second", "F-2", "T-2"]);
+    let single = without(&loops, &["right"]).replace("\"splitter\"", "\"header\"");
+    let (one, mut two) = (
+        run(&read(&single), &readings),
+        run(&read(&loops), &readings),
+    );
     assert_eq!(degrees_of_freedom(&one), degrees_of_freedom(&two));
     two.streams.shift_remove("left");
     two.equipment.shift_remove("header-1");
@@ -230,30 +336,19 @@ fn a_relation_that_others_imply_changes_nothing() {
     distance.assert_below(CONVERGENCE, SPREADS, "a tee and a header");
 }
 
-/// Reconciled values in the place of readings and of assumed values.
-fn reconciled(plant: &Plant, batch: &Batch) -> (Plant, Batch) {
-    let report = run(plant, batch);
-    let (mut plant, mut batch) = (plant.clone(), batch.clone());
-    for assumption in &mut plant.assumptions {
-        assumption.value = report.assumptions[&assumption.name].reconciled.expect("in use");
-    }
-    for reading in &mut batch.readings {
-        if let Some(tag) = report.tags.get(&reading.tag)
-            && tag.class != Class::Unused
-        {
-            reading.value = tag.reconciled;
-        }
-    }
-    (plant, batch)
-}
-
 #[test]
 fn what_is_reconciled_stays_as_it_is() {
     for (plant, batch) in everyday() {
         let first = run(&plant, &batch);
-        let (again, level) = reconciled(&plant, &batch);
+        let (again, level) = levelled(&plant, &batch);
         let second = run(&again, &level);
-        assert!(statistic(&second) < 1e-9, "{} {}: {}", plant.name, batch.name, statistic(&second));
+        assert!(
+            statistic(&second) < 1e-9,
+            "{} {}: {}",
+            plant.name,
+            batch.name,
+            statistic(&second)
+        );
         let mut largest = Distance::default();
         for (name, one) in &first.streams {
             let two = &second.streams[name];
@@ -266,6 +361,10 @@ fn what_is_reconciled_stays_as_it_is() {
                 largest.value(name, a.value, b.value, a.value.unwrap_or(1.0).abs());
             }
         }
-        largest.assert_below(CONVERGENCE, SPREADS, &format!("{} {}", plant.name, batch.name));
+        largest.assert_below(
+            CONVERGENCE,
+            SPREADS,
+            &format!("{} {}", plant.name, batch.name),
+        );
     }
 }

@@ -19,7 +19,8 @@ fn noisy(plant: &Plant, enthalpy: f64, seed: u64) -> Batch {
     let drain = fluid::saturation(0.2).expect("saturation");
     let cold = fluid::from_pt(1.5, 273.15 + 60.0).expect("water");
     let (flow, feed) = (10.0, 110.0);
-    let warm = fluid::from_ph(1.4, cold.h + flow * (steam.h - drain.liquid.h) / feed).expect("water");
+    let warm =
+        fluid::from_ph(1.4, cold.h + flow * (steam.h - drain.liquid.h) / feed).expect("water");
     let exact = [
         ("F-STEAM", 3.6 * flow),
         ("P-STEAM", 2.0),
@@ -35,9 +36,16 @@ fn noisy(plant: &Plant, enthalpy: f64, seed: u64) -> Batch {
     ];
     let mut rng = ChaCha8Rng::seed_from_u64(seed);
     batch(exact.map(|(name, value)| {
-        let tag = plant.tags.iter().find(|tag| tag.name == name).expect("a tag");
+        let tag = plant
+            .tags
+            .iter()
+            .find(|tag| tag.name == name)
+            .expect("a tag");
         let z: f64 = StandardNormal.sample(&mut rng);
-        (name, value + z * tag.uncertainty.sigma(value).expect("a sigma").get())
+        (
+            name,
+            value + z * tag.uncertainty.sigma(value).expect("a sigma").get(),
+        )
     }))
 }
 
@@ -49,8 +57,17 @@ fn count(enthalpy: f64, right: Phase) -> [u64; 3] {
     for seed in 0..SEEDS {
         let report = reconcile(&compiled, &noisy(&plant, enthalpy, seed));
         let phase = report.streams["steam"].phase.expect("observable");
-        counts[if phase == right { 0 } else if phase == Phase::Open { 1 } else { 2 }] += 1;
-        let said = report.remarks.iter().any(|r| r.contains("steam: the readings fit both sides"));
+        counts[if phase == right {
+            0
+        } else if phase == Phase::Open {
+            1
+        } else {
+            2
+        }] += 1;
+        let said = report
+            .remarks
+            .iter()
+            .any(|r| r.contains("steam: the readings fit both sides"));
         assert_eq!(said, phase == Phase::Open, "{:?}", report.remarks);
     }
     counts
@@ -74,7 +91,10 @@ fn steam_of_two_per_cent_moisture_is_wet_or_open() {
     let steam = fluid::from_px(0.2, 0.98).expect("steam");
     let [right, open, wrong] = count(steam.h, Phase::Wet);
     println!("x = 0.98: {right} wet, {open} open, {wrong} vapour");
-    assert!(right > SEEDS / 2 && wrong <= MOST_WRONG, "{right}, {open}, {wrong}");
+    assert!(
+        right > SEEDS / 2 && wrong <= MOST_WRONG,
+        "{right}, {open}, {wrong}"
+    );
 }
 
 /// The lowest objective over both sides, found by holding the enthalpy at every
@@ -82,7 +102,9 @@ fn steam_of_two_per_cent_moisture_is_wet_or_open() {
 #[test]
 fn no_enthalpy_fits_better_than_the_one_reported() {
     let plant = read(HEATER);
-    for (seed, enthalpy) in (0..12).flat_map(|seed| [2650.0, 2700.0, 2709.0, 2725.0].map(|h| (seed, h))) {
+    for (seed, enthalpy) in
+        (0..12).flat_map(|seed| [2650.0, 2700.0, 2709.0, 2725.0].map(|h| (seed, h)))
+    {
         let readings = noisy(&plant, enthalpy, seed);
         let report = run(&plant, &readings);
         let found = report.streams["steam"].enthalpy.value.expect("observable");
@@ -92,13 +114,23 @@ fn no_enthalpy_fits_better_than_the_one_reported() {
             there.assumptions.push(Assumption {
                 name: "held".to_owned(),
                 quantity: Quantity::Enthalpy(StreamId(0)),
-                unit: Unit { symbol: "kJ/kg".to_owned(), factor: 1.0, offset: 0.0 },
+                unit: Unit {
+                    symbol: "kJ/kg".to_owned(),
+                    factor: 1.0,
+                    offset: 0.0,
+                },
                 value: held,
-                uncertainty: Uncertainty { constant: 1e-3, ..Uncertainty::default() },
+                uncertainty: Uncertainty {
+                    constant: 1e-3,
+                    ..Uncertainty::default()
+                },
             });
             let other = statistic(&run(&there, &readings));
             let lowest = statistic(&report);
-            assert!(other > lowest - 1e-6 * lowest.max(1.0), "seed {seed}, {enthalpy}: {other} at {held}, {lowest} at {found}");
+            assert!(
+                other > lowest - 1e-6 * lowest.max(1.0),
+                "seed {seed}, {enthalpy}: {other} at {held}, {lowest} at {found}"
+            );
         }
     }
 }

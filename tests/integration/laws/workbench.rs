@@ -4,7 +4,7 @@ use counterpoise::demo::{self, Assumed, Conditions, Truth};
 use counterpoise::ingest;
 use counterpoise::pipeline::{Compiled, reconcile};
 use counterpoise::plant::{self, Batch, Format, Grade, Plant, Quality, Reading};
-use counterpoise::report::{Imbalance, QuantityReport, Report, TagReport};
+use counterpoise::report::{Class, Imbalance, QuantityReport, Report, TagReport};
 use rand::SeedableRng;
 use rand_chacha::ChaCha8Rng;
 use rand_distr::{Distribution, StandardNormal};
@@ -38,6 +38,9 @@ P-WARM  = { measures = "pressure",    of = "warm",  unit = "bar", uncertainty = 
 T-WARM  = { measures = "temperature", of = "warm",  unit = "Cel", uncertainty = { absolute = "0.3 K" } }
 "#;
 
+/// A reference plant: reheat, three heaters, an uncertain barometer.
+pub const FERROW_BRIDGE: &str = include_str!("../../reference/ferrow-bridge.toml");
+
 /// Parses a plant file that has no faults.
 pub fn read(file: &str) -> Plant {
     match plant::read(file, Format::Toml) {
@@ -57,7 +60,10 @@ pub fn without(file: &str, names: &[&str]) -> String {
 
 /// A batch of good readings.
 pub fn batch<N: Into<String>>(readings: impl IntoIterator<Item = (N, f64)>) -> Batch {
-    let good = Quality { grade: Grade::Good, code: None };
+    let good = Quality {
+        grade: Grade::Good,
+        code: None,
+    };
     let readings = readings.into_iter().map(|(tag, value)| Reading {
         tag: tag.into(),
         value: Some(value),
@@ -79,7 +85,12 @@ pub fn reading<'a>(batch: &'a mut Batch, tag: &str) -> &'a mut Reading {
 
 pub fn run(plant: &Plant, batch: &Batch) -> Report {
     let report = reconcile(&Compiled::new(plant.clone(), 1), batch);
-    assert!(report.global_test.is_some(), "{}: {:?}", plant.name, report.reason);
+    assert!(
+        report.global_test.is_some(),
+        "{}: {:?}",
+        plant.name,
+        report.reason
+    );
     report
 }
 
@@ -89,7 +100,12 @@ pub fn run_like(known: &Report, plant: &Plant, batch: &Batch) -> Report {
     let compiled = Compiled::new(plant.clone(), 1);
     compiled.recall(known.single_test.clone());
     let report = reconcile(&compiled, batch);
-    assert!(report.global_test.is_some(), "{}: {:?}", plant.name, report.reason);
+    assert!(
+        report.global_test.is_some(),
+        "{}: {:?}",
+        plant.name,
+        report.reason
+    );
     report
 }
 
@@ -113,7 +129,9 @@ pub fn demo_truth(load: f64) -> (Plant, Truth) {
 pub fn near_truth(plant: &Plant, truth: &Truth, scale: f64, seed: u64) -> Batch {
     let mut rng = ChaCha8Rng::seed_from_u64(seed);
     batch(plant.tags.iter().map(|tag| {
-        let exact = tag.unit.from_internal(truth.value(plant, tag.quantity).expect("a value"));
+        let exact = tag
+            .unit
+            .from_internal(truth.value(plant, tag.quantity).expect("a value"));
         let sigma = tag.uncertainty.sigma(exact).expect("a sigma").get();
         let z: f64 = StandardNormal.sample(&mut rng);
         (tag.name.clone(), exact + scale * sigma * z)
@@ -123,13 +141,24 @@ pub fn near_truth(plant: &Plant, truth: &Truth, scale: f64, seed: u64) -> Batch 
 /// The plants of the independent reference with all their batches.
 pub fn references() -> Vec<(Plant, Vec<Batch>)> {
     let files = [
-        (include_str!("../../reference/hazel-quay.toml"), include_str!("../../reference/hazel-quay.batches.ndjson")),
-        (include_str!("../../reference/ferrow-bridge.toml"), include_str!("../../reference/ferrow-bridge.batches.ndjson")),
-        (include_str!("../../reference/corrow-mill.toml"), include_str!("../../reference/corrow-mill.batches.ndjson")),
+        (
+            include_str!("../../reference/hazel-quay.toml"),
+            include_str!("../../reference/hazel-quay.batches.ndjson"),
+        ),
+        (
+            FERROW_BRIDGE,
+            include_str!("../../reference/ferrow-bridge.batches.ndjson"),
+        ),
+        (
+            include_str!("../../reference/corrow-mill.toml"),
+            include_str!("../../reference/corrow-mill.batches.ndjson"),
+        ),
     ];
     let now = datetime!(2090-01-01 0:00 UTC);
     let parse = |line: &str| ingest::parse(line.as_bytes(), now).expect("a batch").batch;
-    files.map(|(plant, batches)| (read(plant), batches.lines().map(parse).collect())).into()
+    files
+        .map(|(plant, batches)| (read(plant), batches.lines().map(parse).collect()))
+        .into()
 }
 
 /// The demonstration plant with noise and drawn assumptions, and every batch
@@ -144,6 +173,26 @@ pub fn everyday() -> Vec<(Plant, Batch)> {
         all.extend(batches.into_iter().map(|batch| (plant.clone(), batch)));
     }
     all
+}
+
+/// The plant and batch with reconciled values in the place of readings and of
+/// assumed values: exact, and at a solution.
+pub fn levelled(plant: &Plant, batch: &Batch) -> (Plant, Batch) {
+    let report = run(plant, batch);
+    let (mut plant, mut batch) = (plant.clone(), batch.clone());
+    for assumption in &mut plant.assumptions {
+        assumption.value = report.assumptions[&assumption.name]
+            .reconciled
+            .expect("in use");
+    }
+    for reading in &mut batch.readings {
+        if let Some(tag) = report.tags.get(&reading.tag)
+            && tag.class != Class::Unused
+        {
+            reading.value = tag.reconciled;
+        }
+    }
+    (plant, batch)
 }
 
 /// The largest distances between two reports, and where they are.
@@ -163,7 +212,10 @@ impl Distance {
         let mut distance = Distance::default();
         let (one, other) = (statistic(a), statistic(b));
         distance.value("statistic", Some(one), Some(other), one.abs().max(1.0));
-        for (part, a, b) in [("tag", &a.tags, &b.tags), ("assumption", &a.assumptions, &b.assumptions)] {
+        for (part, a, b) in [
+            ("tag", &a.tags, &b.tags),
+            ("assumption", &a.assumptions, &b.assumptions),
+        ] {
             for (name, a) in a {
                 if let Some(b) = b.get(name) {
                     distance.tag(&format!("{part} {name}"), a, b);
@@ -171,15 +223,35 @@ impl Distance {
             }
         }
         for (name, a) in &a.streams {
-            let Some(b) = b.streams.get(name) else { continue };
+            let Some(b) = b.streams.get(name) else {
+                continue;
+            };
             assert_eq!(a.phase, b.phase, "phase of {name}");
-            distance.quantity(&format!("{name} mass flow"), Some(&a.mass_flow), Some(&b.mass_flow));
-            distance.quantity(&format!("{name} pressure"), Some(&a.pressure), Some(&b.pressure));
-            distance.quantity(&format!("{name} temperature"), Some(&a.temperature), Some(&b.temperature));
-            distance.quantity(&format!("{name} enthalpy"), Some(&a.enthalpy), Some(&b.enthalpy));
+            distance.quantity(
+                &format!("{name} mass flow"),
+                Some(&a.mass_flow),
+                Some(&b.mass_flow),
+            );
+            distance.quantity(
+                &format!("{name} pressure"),
+                Some(&a.pressure),
+                Some(&b.pressure),
+            );
+            distance.quantity(
+                &format!("{name} temperature"),
+                Some(&a.temperature),
+                Some(&b.temperature),
+            );
+            distance.quantity(
+                &format!("{name} enthalpy"),
+                Some(&a.enthalpy),
+                Some(&b.enthalpy),
+            );
         }
         for (name, a) in &a.equipment {
-            let Some(b) = b.equipment.get(name) else { continue };
+            let Some(b) = b.equipment.get(name) else {
+                continue;
+            };
             distance.quantity(&format!("{name} heat"), a.heat.as_ref(), b.heat.as_ref());
             distance.quantity(&format!("{name} work"), a.work.as_ref(), b.work.as_ref());
             distance.quantity(&format!("{name} power"), a.power.as_ref(), b.power.as_ref());
@@ -198,7 +270,10 @@ impl Distance {
     /// Panics where values or spreads differ by more.
     pub fn assert_below(&self, values: f64, spreads: f64, what: &str) {
         println!("{what}: {self:?}");
-        assert!(self.values.0 < values && self.spreads.0 < spreads, "{what}: {self:?}");
+        assert!(
+            self.values.0 < values && self.spreads.0 < spreads,
+            "{what}: {self:?}"
+        );
     }
 
     /// Adds an estimate.
@@ -214,10 +289,28 @@ impl Distance {
     fn tag(&mut self, at: &str, a: &TagReport, b: &TagReport) {
         assert_eq!(a.class, b.class, "class of {at}");
         assert_eq!(a.reason, b.reason, "reason of {at}");
-        let scale = a.uncertainty_measured.or(a.uncertainty_reconciled).unwrap_or(1.0);
-        self.value(&format!("{at} reconciled"), a.reconciled, b.reconciled, scale);
-        self.value(&format!("{at} adjustment"), a.adjustment, b.adjustment, scale);
-        self.spread(&format!("{at} uncertainty"), a.uncertainty_reconciled, b.uncertainty_reconciled, scale);
+        let scale = a
+            .uncertainty_measured
+            .or(a.uncertainty_reconciled)
+            .unwrap_or(1.0);
+        self.value(
+            &format!("{at} reconciled"),
+            a.reconciled,
+            b.reconciled,
+            scale,
+        );
+        self.value(
+            &format!("{at} adjustment"),
+            a.adjustment,
+            b.adjustment,
+            scale,
+        );
+        self.spread(
+            &format!("{at} uncertainty"),
+            a.uncertainty_reconciled,
+            b.uncertainty_reconciled,
+            scale,
+        );
         self.spread(&format!("{at} redundancy"), a.redundancy, b.redundancy, 1.0);
     }
 
@@ -235,8 +328,18 @@ impl Distance {
     fn imbalance(&mut self, at: &str, a: &Imbalance, b: &Imbalance) {
         let spread = a.uncertainty.unwrap_or(1.0);
         // An estimate that is a quotient with a variance below the line.
-        self.spread(&format!("{at} imbalance"), a.value, b.value, spread.max(a.value.unwrap_or(0.0).abs()));
-        self.spread(&format!("{at} imbalance"), a.uncertainty, b.uncertainty, spread);
+        self.spread(
+            &format!("{at} imbalance"),
+            a.value,
+            b.value,
+            spread.max(a.value.unwrap_or(0.0).abs()),
+        );
+        self.spread(
+            &format!("{at} imbalance"),
+            a.uncertainty,
+            b.uncertainty,
+            spread,
+        );
     }
 }
 
