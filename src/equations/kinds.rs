@@ -282,7 +282,11 @@ fn table(kind: &Kind, own: OwnStates, layout: &Layout) -> Table {
         }
         Kind::Motor { drives } => {
             let mut terms: Vec<(usize, f64)> = gained(own.power).into_iter().collect();
-            terms.extend(work_of(&[*drives], layout).into_iter().map(|(j, c)| (j, -c)));
+            terms.extend(
+                work_of(&[*drives], layout)
+                    .into_iter()
+                    .map(|(j, c)| (j, -c)),
+            );
             power(terms, None, own.loss)
         }
     }
@@ -365,9 +369,14 @@ fn bounds(plant: &Plant, layout: &Layout) -> Vec<Relation> {
                 bounds.push(bound(role, Law::Saturated { stream, side, sign }));
             }
         }
-        if observes(&|q| matches!(*q, Quantity::Temperature(t) | Quantity::Subcooling(t) if t == s)) {
+        if observes(&|q| matches!(*q, Quantity::Temperature(t) | Quantity::Subcooling(t) if t == s))
+        {
             for side in [Side::Liquid, Side::Vapour] {
-                let law = Law::Saturated { stream: s, side, sign: 1.0 };
+                let law = Law::Saturated {
+                    stream: s,
+                    side,
+                    sign: 1.0,
+                };
                 bounds.push(Relation::new(None, Role::SideOfSaturation, law, layout));
             }
         }

@@ -26,13 +26,20 @@ pub struct Observation {
 #[derive(Clone, Copy, Debug, PartialEq)]
 enum Function {
     /// Sum of the row's states times these coefficients, plus a constant.
-    Linear { coefficients: [f64; 2], constant: f64 },
+    Linear {
+        coefficients: [f64; 2],
+        constant: f64,
+    },
     Temperature(StreamId),
     /// Temperature of a stream that a relation holds on the saturation line.
     SaturationTemperature(StreamId),
     Quality(StreamId),
     Subcooling(StreamId),
-    Efficiency { inlet: StreamId, outlet: StreamId, compression: bool },
+    Efficiency {
+        inlet: StreamId,
+        outlet: StreamId,
+        compression: bool,
+    },
 }
 
 /// Thermodynamic states at one point, for the streams that asked for one.
@@ -54,7 +61,11 @@ impl Observation {
             Self::function_of(quantity, equipment, barometer, on_saturation, layout);
         let (row, function) =
             row_and_function.unwrap_or_else(|| (Vec::new(), linear(0.0, 0.0, 0.0)));
-        Observation { quantity, row, function }
+        Observation {
+            quantity,
+            row,
+            function,
+        }
     }
 
     fn function_of(
@@ -104,7 +115,11 @@ impl Observation {
                     layout.p(outlet),
                     layout.h(outlet),
                 ];
-                let function = Function::Efficiency { inlet, outlet, compression };
+                let function = Function::Efficiency {
+                    inlet,
+                    outlet,
+                    compression,
+                };
                 Some((row, function))
             }
             Quantity::Power(e) => {
@@ -128,9 +143,9 @@ impl Observation {
     /// The stream whose saturated states the function needs.
     pub fn needs_saturation(&self) -> Option<StreamId> {
         match self.function {
-            Function::SaturationTemperature(s)
-            | Function::Quality(s)
-            | Function::Subcooling(s) => Some(s),
+            Function::SaturationTemperature(s) | Function::Quality(s) | Function::Subcooling(s) => {
+                Some(s)
+            }
             _ => None,
         }
     }
@@ -162,9 +177,16 @@ impl Observation {
     ) -> Result<f64, usize> {
         let blame = self.row.first().copied().unwrap_or_default();
         let state = |s: StreamId| states[s.0].ok_or(blame);
-        let saturation = || self.needs_saturation().and_then(|s| saturations[s.0]).ok_or(blame);
+        let saturation = || {
+            self.needs_saturation()
+                .and_then(|s| saturations[s.0])
+                .ok_or(blame)
+        };
         match self.function {
-            Function::Linear { coefficients, constant } => {
+            Function::Linear {
+                coefficients,
+                constant,
+            } => {
                 let mut sum = constant;
                 for (slot, &j) in self.row.iter().enumerate() {
                     sum += coefficients[slot] * x[j];
@@ -197,7 +219,11 @@ impl Observation {
                 values.copy_from_slice(&[saturation.t_p - state.t_p, -state.t_h]);
                 Ok(saturation.t - state.t)
             }
-            Function::Efficiency { inlet, outlet, compression } => {
+            Function::Efficiency {
+                inlet,
+                outlet,
+                compression,
+            } => {
                 let (from, to) = (state(inlet)?, state(outlet)?);
                 let ideal = fluid::from_ps(to.p, from.s).map_err(|_| blame)?;
                 let (actual, isentropic) = (from.h - to.h, from.h - ideal.h);

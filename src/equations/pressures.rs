@@ -157,9 +157,7 @@ fn carry(
                         changed = true;
                     }
                 }
-                Quantity::Temperature(s)
-                    if system.on_saturation[s.0].is_some() || condenses(s) =>
-                {
+                Quantity::Temperature(s) if system.on_saturation[s.0].is_some() || condenses(s) => {
                     let group = groups.of(s.0);
                     if let (None, Ok(saturation)) = (ln_p[group], fluid::saturation_t(value)) {
                         ln_p[group] = Some(saturation.p.ln());

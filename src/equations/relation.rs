@@ -123,12 +123,12 @@ impl Relation {
     pub fn needs_saturation(&self) -> Option<StreamId> {
         match &self.law {
             Law::Linear(_) => None,
-            Law::Energy { products, .. } => products.iter().find_map(|(_, carried, _)| {
-                match carried {
+            Law::Energy { products, .. } => {
+                products.iter().find_map(|(_, carried, _)| match carried {
                     Carried::Stream(_) => None,
                     Carried::SaturatedLiquid(s) => Some(*s),
-                }
-            }),
+                })
+            }
             Law::Saturated { stream, .. } => Some(*stream),
         }
     }

@@ -44,7 +44,9 @@ impl Start {
     /// Weights on the scaled states that keep them near the start.
     pub fn hold(&self, state_scale: &[f64]) -> Vec<f64> {
         let pairs = state_scale.iter().zip(&self.prior_sigma);
-        pairs.map(|(scale, sigma)| (scale / sigma).powi(2)).collect()
+        pairs
+            .map(|(scale, sigma)| (scale / sigma).powi(2))
+            .collect()
     }
 }
 
@@ -81,9 +83,17 @@ pub fn start(plant: &Plant, system: &System, measured: &[Option<Measured>]) -> S
         }
         x[p] = pressures.stream[s.0];
         x[h] = enthalpies[s.0];
-        let relative = if pressures.known[s.0] { GIVEN_PRESSURE } else { GUESSED_PRESSURE };
+        let relative = if pressures.known[s.0] {
+            GIVEN_PRESSURE
+        } else {
+            GUESSED_PRESSURE
+        };
         prior_sigma[p] = relative * x[p];
-        prior_sigma[h] = if given[s.0] { GIVEN_ENTHALPY } else { GUESSED_ENTHALPY };
+        prior_sigma[h] = if given[s.0] {
+            GIVEN_ENTHALPY
+        } else {
+            GUESSED_ENTHALPY
+        };
     }
     if let Some(b) = layout.barometer {
         x[b] = pressures.barometer;
@@ -189,7 +199,7 @@ impl<'a> Enthalpies<'a> {
     fn read(&mut self, wanted: impl Fn(usize) -> bool) {
         for s in 0..self.h.len() {
             if self.h[s].is_none() && wanted(s) {
-                self.h[s] = self.saturated(s).or_else(|| self.from_temperature(s));
+                self.h[s] = self.saturated(s).or_else(|| self.by_temperature(s));
             }
         }
         self.share();
@@ -201,7 +211,7 @@ impl<'a> Enthalpies<'a> {
             let before = self.h.clone();
             for s in 0..self.h.len() {
                 if self.h[s].is_none() {
-                    self.h[s] = self.from_equipment(s);
+                    self.h[s] = self.by_equipment(s);
                 }
             }
             self.share();
@@ -222,7 +232,7 @@ impl<'a> Enthalpies<'a> {
     }
 
     /// Enthalpy by temperature and pressure, on the side that they show.
-    fn from_temperature(&self, s: usize) -> Option<f64> {
+    fn by_temperature(&self, s: usize) -> Option<f64> {
         let (t, sigma) = self.temperature[s]?;
         let p = self.pressures.stream[s];
         let Ok(saturation) = fluid::saturation(p) else {
@@ -271,7 +281,7 @@ impl<'a> Enthalpies<'a> {
 
     /// Enthalpy from what enters the equipment that the stream leaves, or
     /// leaves the pump that it enters.
-    fn from_equipment(&self, s: usize) -> Option<f64> {
+    fn by_equipment(&self, s: usize) -> Option<f64> {
         let stream = &self.plant.streams[s];
         let leaving = stream.from.and_then(|e| self.leaving(e, s));
         leaving.or_else(|| stream.to.and_then(|e| self.entering(e, s)))
@@ -322,12 +332,16 @@ impl<'a> Enthalpies<'a> {
 
     /// The efficiency that the plant file states for the pump behind `inlet`.
     fn pump_efficiency(&self, inlet: StreamId) -> f64 {
-        let stated = self.plant.assumptions.iter().find_map(|a| match a.quantity {
-            Quantity::IsentropicEfficiency { inlet: from, .. } if from == inlet => {
-                Some(a.unit.to_internal(a.value))
-            }
-            _ => None,
-        });
+        let stated = self
+            .plant
+            .assumptions
+            .iter()
+            .find_map(|a| match a.quantity {
+                Quantity::IsentropicEfficiency { inlet: from, .. } if from == inlet => {
+                    Some(a.unit.to_internal(a.value))
+                }
+                _ => None,
+            });
         stated.unwrap_or(PUMP_EFFICIENCY).clamp(0.1, 1.0)
     }
 
@@ -372,15 +386,36 @@ fn hint_at(plant: &Plant, at: EquipmentId, s: StreamId) -> Hint {
         Kind::Turbine { outlets, .. } if outlets.contains(&s) => Hint::Expanded,
         Kind::Turbine { .. } => Hint::Vapour,
         Kind::ClosedHeater { steam, vent, .. } => {
-            if *steam == s || *vent == Some(s) { Hint::Vapour } else { Hint::Liquid }
+            if *steam == s || *vent == Some(s) {
+                Hint::Vapour
+            } else {
+                Hint::Liquid
+            }
         }
         Kind::OpenHeater { outlet, vent, .. } => {
-            if *vent == Some(s) { Hint::Vapour } else { liquid_if(*outlet == s) }
+            if *vent == Some(s) {
+                Hint::Vapour
+            } else {
+                liquid_if(*outlet == s)
+            }
         }
-        Kind::Condenser { condensate, cooling, vent, .. } => {
-            if *vent == Some(s) { Hint::Vapour } else { liquid_if(*condensate == s || pair(cooling)) }
+        Kind::Condenser {
+            condensate,
+            cooling,
+            vent,
+            ..
+        } => {
+            if *vent == Some(s) {
+                Hint::Vapour
+            } else {
+                liquid_if(*condensate == s || pair(cooling))
+            }
         }
-        Kind::Boiler { water_in, water_out, reheats } => {
+        Kind::Boiler {
+            water_in,
+            water_out,
+            reheats,
+        } => {
             if water_in.contains(&s) {
                 Hint::Liquid
             } else if water_out.first() == Some(&s) || reheats.iter().any(|(_, out)| *out == s) {

@@ -83,7 +83,13 @@ impl System {
         let observations: Vec<Observation> = quantities
             .chain(stated)
             .map(|q| {
-                Observation::new(q, &plant.equipment, plant.barometer, &on_saturation, &layout)
+                Observation::new(
+                    q,
+                    &plant.equipment,
+                    plant.barometer,
+                    &on_saturation,
+                    &layout,
+                )
             })
             .collect();
         let rows = |lists: Vec<&[usize]>| Rows::from_lists(&lists);
@@ -99,9 +105,13 @@ impl System {
                 .collect(),
         };
         let mut needs_saturation = vec![false; plant.streams.len()];
-        let by_relations = relations.iter().filter(|r| r.role != Role::SideOfSaturation);
+        let by_relations = relations
+            .iter()
+            .filter(|r| r.role != Role::SideOfSaturation);
         let by_relations = by_relations.filter_map(Relation::needs_saturation);
-        let by_tags = observations.iter().filter_map(Observation::needs_saturation);
+        let by_tags = observations
+            .iter()
+            .filter_map(Observation::needs_saturation);
         by_relations
             .chain(by_tags)
             .for_each(|s| needs_saturation[s.0] = true);
@@ -263,7 +273,11 @@ impl<'a> Case<'a> {
         streams
             .map(|s| {
                 let needed = self.system.needs_saturation[s.0] || self.modes.get(s).is_some();
-                if needed { self.system.saturation(s, x) } else { None }
+                if needed {
+                    self.system.saturation(s, x)
+                } else {
+                    None
+                }
             })
             .collect()
     }
@@ -333,8 +347,18 @@ impl Problem for Case<'_> {
         for s in (0..layout.streams()).map(StreamId) {
             let (p, h) = (layout.p(s), layout.h(s));
             let (low, high) = pressure_range(x[p]);
-            bend(x[p], &mut step[p], low.max(LOWEST_PRESSURE), high.min(HIGHEST_PRESSURE));
-            bend(x[h], &mut step[h], x[h] - ENTHALPY_STEP, x[h] + ENTHALPY_STEP);
+            bend(
+                x[p],
+                &mut step[p],
+                low.max(LOWEST_PRESSURE),
+                high.min(HIGHEST_PRESSURE),
+            );
+            bend(
+                x[h],
+                &mut step[h],
+                x[h] - ENTHALPY_STEP,
+                x[h] + ENTHALPY_STEP,
+            );
             let (new_p, new_h) = (x[p] + step[p], x[h] + step[h]);
             let inside = new_h > COLD_SLOPE * new_p + COLD && new_h < HOT;
             if !inside && let Ok((low, high)) = fluid::enthalpy_range(new_p) {

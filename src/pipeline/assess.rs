@@ -26,8 +26,10 @@ const PART_OF_RANGE: f64 = 0.7;
 pub fn assess(compiled: &Compiled) -> Assessment {
     let found = operating_point(compiled);
     let operating_point = match &found {
-        Ok(_) => "normal readings of the plant file, and what they predict for the tags without one"
-            .to_owned(),
+        Ok(_) => {
+            "normal readings of the plant file, and what they predict for the tags without one"
+                .to_owned()
+        }
         Err(reason) => format!("none was found: {reason}"),
     };
     let plant = compiled.plant();
@@ -62,7 +64,9 @@ pub fn assess(compiled: &Compiled) -> Assessment {
     }
     for (a, assumption) in plant.assumptions.iter().enumerate() {
         let entry = assessed_tag(&solution, plant.tags.len() + a, &assumption.unit);
-        assessment.assumptions.insert(assumption.name.clone(), entry);
+        assessment
+            .assumptions
+            .insert(assumption.name.clone(), entry);
     }
     for (s, stream) in plant.streams.iter().enumerate() {
         let entry = assessed_stream(compiled, &solution, StreamId(s));

@@ -45,7 +45,11 @@ impl ClassKey {
     /// A short name of the key: the first 16 hexadecimal digits of its SHA-256.
     pub fn name(&self) -> String {
         let digest = Sha256::digest(&self.0);
-        digest.iter().take(8).map(|byte| format!("{byte:02x}")).collect()
+        digest
+            .iter()
+            .take(8)
+            .map(|byte| format!("{byte:02x}"))
+            .collect()
     }
 }
 
@@ -146,7 +150,10 @@ fn single_test(
         .collect();
     let mut redundancy = DMatrix::zeros(used.len(), used.len());
     let mut multipliers = DMatrix::zeros(balances.len(), used.len());
-    let (no_states, no_relations) = (vec![0.0; structure.states], vec![0.0; structure.relations.len()]);
+    let (no_states, no_relations) = (
+        vec![0.0; structure.states],
+        vec![0.0; structure.relations.len()],
+    );
     let mut error = vec![0.0; structure.observations.len()];
     for (column, &i) in used.iter().enumerate() {
         error[i] = 1.0;

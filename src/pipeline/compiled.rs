@@ -74,7 +74,11 @@ impl Compiled {
         key: ClassKey,
         make: impl FnOnce() -> ClassSet,
     ) -> Arc<ClassSet> {
-        let lock = || self.class_sets.lock().unwrap_or_else(PoisonError::into_inner);
+        let lock = || {
+            self.class_sets
+                .lock()
+                .unwrap_or_else(PoisonError::into_inner)
+        };
         if let Some(known) = lock().get(&key) {
             return Arc::clone(known);
         }

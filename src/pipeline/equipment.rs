@@ -44,7 +44,13 @@ fn entry(
         work: of_state("kW", own.work),
         power: of_state("kW", own.power),
         loss: loss.or_else(|| if kind.has_loss() { zero("kW") } else { None }),
-        holdup_change: holdup.or_else(|| if kind.has_holdup() { zero("kg/s") } else { None }),
+        holdup_change: holdup.or_else(|| {
+            if kind.has_holdup() {
+                zero("kg/s")
+            } else {
+                None
+            }
+        }),
         imbalance: imbalances(compiled, solution, id),
     }
 }

@@ -25,7 +25,9 @@ impl<'a> Solution<'a> {
         let multipliers = covariance.multipliers();
         let system = compiled.system();
         let streams = (0..system.layout.streams()).map(StreamId);
-        let states = streams.map(|s| system.state(s, &found.outcome.x).ok()).collect();
+        let states = streams
+            .map(|s| system.state(s, &found.outcome.x).ok())
+            .collect();
         Solution {
             found,
             class_set,
@@ -146,9 +148,15 @@ impl<'a> Solution<'a> {
             .filter(|(_, active)| **active)
         {
             let relation = &system.relations[k];
-            let stream = relation.row.iter().find_map(|&j| system.layout.stream_of(j));
+            let stream = relation
+                .row
+                .iter()
+                .find_map(|&j| system.layout.stream_of(j));
             if let (Some(s), Role::Bound(what)) = (stream, &relation.role) {
-                remarks.push(format!("{}: the bound \"{what}\" is active", stream_name(s)));
+                remarks.push(format!(
+                    "{}: the bound \"{what}\" is active",
+                    stream_name(s)
+                ));
             }
         }
         for &s in &self.found.open {

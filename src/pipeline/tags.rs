@@ -28,7 +28,12 @@ pub fn assumptions(
     let first = compiled.plant().tags.len();
     let assumptions = compiled.plant().assumptions.iter().enumerate();
     assumptions
-        .map(|(i, a)| (a.name.clone(), entry(first + i, &a.unit, readings, solution)))
+        .map(|(i, a)| {
+            (
+                a.name.clone(),
+                entry(first + i, &a.unit, readings, solution),
+            )
+        })
         .collect()
 }
 

@@ -203,7 +203,6 @@ pub enum PressureReference {
     Vacuum,
 }
 
-
 /// What a tag measures or an assumption states.
 #[derive(Clone, Copy, Debug, PartialEq)]
 pub enum Quantity {

@@ -8,8 +8,8 @@
 mod assessment;
 mod document;
 
-pub use assessment::{Assessment, AssessedQuantity, AssessedStream, AssessedTag};
+pub use assessment::{AssessedQuantity, AssessedStream, AssessedTag, Assessment};
 pub use document::{
-    Class, EquipmentReport, GlobalTest, Imbalance, Imbalances, Observability, Phase, QuantityReport,
-    Report, SingleTest, StreamReport, TagReport, Verdict,
+    Class, EquipmentReport, GlobalTest, Imbalance, Imbalances, Observability, Phase,
+    QuantityReport, Report, SingleTest, StreamReport, TagReport, Verdict,
 };

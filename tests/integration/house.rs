@@ -9,11 +9,19 @@ use std::path::{Path, PathBuf};
 /// What each module may import; the same table stands in DEVELOPERS.md.
 const IMPORTS: &[(&str, &[&str])] = &[
     ("main", &["cli", "config", "server", "store", "telemetry"]),
-    ("cli", &["config", "demo", "ingest", "pipeline", "plant", "report", "server"]),
+    (
+        "cli",
+        &[
+            "config", "demo", "ingest", "pipeline", "plant", "report", "server",
+        ],
+    ),
     ("config", &["server", "store", "telemetry"]),
     ("server", &["http", "store"]),
     ("http", &["ingest", "pipeline", "plant", "report", "store"]),
-    ("pipeline", &["diagnosis", "equations", "plant", "report", "solver"]),
+    (
+        "pipeline",
+        &["diagnosis", "equations", "plant", "report", "solver"],
+    ),
     ("store", &["plant", "report"]),
     ("report", &["plant"]),
     ("diagnosis", &["fluid", "plant", "solver"]),
@@ -43,7 +51,10 @@ fn sources() -> Vec<(PathBuf, String)> {
         }
     }
     let mut sources = Vec::new();
-    walk(&Path::new(env!("CARGO_MANIFEST_DIR")).join("src"), &mut sources);
+    walk(
+        &Path::new(env!("CARGO_MANIFEST_DIR")).join("src"),
+        &mut sources,
+    );
     sources
 }
 
@@ -56,12 +67,21 @@ fn module_of(path: &Path) -> String {
 
 /// Modules named after `crate::` (or, in main, `counterpoise::`) in code.
 fn imported(text: &str) -> Vec<String> {
-    let code = text.lines().filter(|line| !line.trim_start().starts_with("//"));
+    let code = text
+        .lines()
+        .filter(|line| !line.trim_start().starts_with("//"));
     code.flat_map(|line| {
         line.match_indices("crate::")
             .map(|(at, found)| &line[at + found.len()..])
-            .chain(line.match_indices("counterpoise::").map(|(at, found)| &line[at + found.len()..]))
-            .map(|rest| rest.chars().take_while(|c| c.is_alphanumeric() || *c == '_').collect())
+            .chain(
+                line.match_indices("counterpoise::")
+                    .map(|(at, found)| &line[at + found.len()..]),
+            )
+            .map(|rest| {
+                rest.chars()
+                    .take_while(|c| c.is_alphanumeric() || *c == '_')
+                    .collect()
+            })
             .collect::<Vec<String>>()
     })
     .filter(|name: &String| IMPORTS.iter().any(|(module, _)| module == name))
@@ -89,7 +109,11 @@ fn modules_import_only_what_the_table_allows() {
         }
     }
     assert!(seen > 50, "the scan found hardly any import: {seen}");
-    assert!(wrong.is_empty(), "not in the import table:\n{}", wrong.join("\n"));
+    assert!(
+        wrong.is_empty(),
+        "not in the import table:\n{}",
+        wrong.join("\n")
+    );
 }
 
 #[test]
@@ -102,7 +126,10 @@ fn the_table_has_no_circle() {
                 .any(|&next| next == to || reaches(table, next, to, depth + 1))
     }
     for (module, _) in IMPORTS {
-        assert!(!reaches(&table, module, module, 0), "{module} imports itself in a circle");
+        assert!(
+            !reaches(&table, module, module, 0),
+            "{module} imports itself in a circle"
+        );
     }
 }
 
@@ -110,7 +137,11 @@ fn the_table_has_no_circle() {
 fn the_table_is_the_one_in_the_developers_map() {
     let map = include_str!("../../DEVELOPERS.md");
     for (module, imports) in IMPORTS {
-        let names = if imports.is_empty() { "nothing of ours".to_owned() } else { imports.join(", ") };
+        let names = if imports.is_empty() {
+            "nothing of ours".to_owned()
+        } else {
+            imports.join(", ")
+        };
         let row = format!("| {module} | {names} |");
         assert!(map.contains(&row), "DEVELOPERS.md lacks the row: {row}");
     }
@@ -120,10 +151,18 @@ fn the_table_is_the_one_in_the_developers_map() {
 fn sql_and_status_codes_have_one_home() {
     for (path, text) in sources() {
         if module_of(&path) != "store" {
-            assert!(!text.contains("sqlx"), "sqlx outside the store: {}", path.display());
+            assert!(
+                !text.contains("sqlx"),
+                "sqlx outside the store: {}",
+                path.display()
+            );
         }
         let home = path.ends_with("http/error.rs") || module_of(&path) == "http";
-        assert!(home || !text.contains("StatusCode::"), "a status code outside http: {}", path.display());
+        assert!(
+            home || !text.contains("StatusCode::"),
+            "a status code outside http: {}",
+            path.display()
+        );
     }
 }
 
@@ -140,6 +179,10 @@ fn files_are_small_enough_to_read() {
             .count();
         let lines = text.lines().count() - numbers;
         assert!(lines <= 500, "{}: {lines} lines", path.display());
-        assert!(text.starts_with("//!"), "{} does not say what it is for", path.display());
+        assert!(
+            text.starts_with("//!"),
+            "{} does not say what it is for",
+            path.display()
+        );
     }
 }

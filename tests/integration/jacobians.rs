@@ -84,7 +84,12 @@ fn difference(f: &dyn Fn(&[f64]) -> Option<f64>, x: &[f64], j: usize, step: f64)
 }
 
 /// The worst disagreement of a row, or why there is none to measure.
-fn check(f: &dyn Fn(&[f64]) -> Option<f64>, x: &[f64], row: &[usize], exact: &[f64]) -> Option<f64> {
+fn check(
+    f: &dyn Fn(&[f64]) -> Option<f64>,
+    x: &[f64],
+    row: &[usize],
+    exact: &[f64],
+) -> Option<f64> {
     let size = |j: usize| x[j].abs().max(1e-3);
     let largest = row
         .iter()
@@ -145,11 +150,18 @@ fn relations_and_measurements_have_exact_jacobians() {
                     continue;
                 };
                 let at: Vec<f64> = observation.row.iter().map(|&j| x[j]).collect();
-                assert!(worst < TOLERANCE, "{:?} at {at:?}: {worst:e}", observation.quantity);
+                assert!(
+                    worst < TOLERANCE,
+                    "{:?} at {at:?}: {worst:e}",
+                    observation.quantity
+                );
                 checked += 1;
             }
         }
     }
     assert!(checked > 100_000, "{checked}");
-    assert!(without_value < checked / 100, "{without_value} of {checked} had no value");
+    assert!(
+        without_value < checked / 100,
+        "{without_value} of {checked} had no value"
+    );
 }

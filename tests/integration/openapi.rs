@@ -9,10 +9,31 @@ fn document() -> Value {
     serde_json::from_str(&text).expect("JSON")
 }
 
+/// The interface without its words: those may be mended without a new look.
+fn wordless(mut value: Value) -> Value {
+    match &mut value {
+        Value::Object(members) => {
+            members.retain(|key, member| !(member.is_string() && WORDS.contains(&key.as_str())));
+            for member in members.values_mut() {
+                *member = wordless(member.take());
+            }
+        }
+        Value::Array(items) => {
+            for item in items {
+                *item = wordless(item.take());
+            }
+        }
+        _ => {}
+    }
+    value
+}
+
+const WORDS: [&str; 2] = ["description", "summary"];
+
 #[test]
-fn it_is_the_document_that_was_looked_at() {
+fn it_is_the_interface_that_was_looked_at() {
     insta::with_settings!({ prepend_module_to_snapshot => false, sort_maps => true }, {
-        insta::assert_json_snapshot!("openapi", document());
+        insta::assert_json_snapshot!("openapi", wordless(document()));
     });
 }
 

@@ -48,12 +48,24 @@ impl Differences {
                 self.number(&path(field), &ours[field], &theirs[field], VALUES, near);
             }
             for field in ["uncertainty_reconciled", "redundancy"] {
-                self.number(&path(field), &ours[field], &theirs[field], UNCERTAINTIES, 1e-7);
+                self.number(
+                    &path(field),
+                    &ours[field],
+                    &theirs[field],
+                    UNCERTAINTIES,
+                    1e-7,
+                );
             }
             // The reference has one for hardly redundant tags too, where ours has none.
             if theirs["class"] != "hardly-redundant" {
                 let field = "standardised_adjustment";
-                self.number(&path(field), &ours[field], &theirs[field], UNCERTAINTIES, 1e-4);
+                self.number(
+                    &path(field),
+                    &ours[field],
+                    &theirs[field],
+                    UNCERTAINTIES,
+                    1e-4,
+                );
             }
         }
     }
@@ -61,9 +73,21 @@ impl Differences {
     fn quantity(&mut self, path: &str, ours: &Value, theirs: &Value, absolute: f64) {
         self.exact(&format!("{path}.class"), &ours["class"], &theirs["class"]);
         let path = |field: &str| format!("{path}.{field}");
-        self.number(&path("value"), &ours["value"], &theirs["value"], VALUES, absolute);
+        self.number(
+            &path("value"),
+            &ours["value"],
+            &theirs["value"],
+            VALUES,
+            absolute,
+        );
         let field = "uncertainty";
-        self.number(&path(field), &ours[field], &theirs[field], UNCERTAINTIES, 1e-9);
+        self.number(
+            &path(field),
+            &ours[field],
+            &theirs[field],
+            UNCERTAINTIES,
+            1e-9,
+        );
     }
 
     fn equipment(&mut self, ours: &Value, theirs: &Value) {
@@ -91,7 +115,9 @@ impl Differences {
 fn imbalances<'a>(ours: &'a Value, theirs: &'a Value) -> Vec<(String, &'a Value, &'a Value)> {
     let mut pairs = vec![("energy".to_owned(), &ours["energy"], &theirs["energy"])];
     let sides = |imbalance: &'a Value| -> Vec<(&'a String, &'a Value)> {
-        imbalance["mass"].as_object().map_or_else(Vec::new, |sides| sides.iter().collect())
+        imbalance["mass"]
+            .as_object()
+            .map_or_else(Vec::new, |sides| sides.iter().collect())
     };
     let (a, b) = (sides(ours), sides(theirs));
     if let ([(_, one)], [(_, other)]) = (&a[..], &b[..]) {
@@ -114,12 +140,20 @@ fn compare(plant: &str, batches: &str, expected: &str) {
         let theirs: Value = serde_json::from_str(expected).unwrap();
         let mut differences = Differences(Vec::new());
         differences.exact("verdict", &ours["verdict"], &theirs["verdict"]);
-        for (field, tolerance) in [("statistic", 1e-6), ("critical_value", 1e-6), ("p_value", 1e-5)] {
+        for (field, tolerance) in [
+            ("statistic", 1e-6),
+            ("critical_value", 1e-6),
+            ("p_value", 1e-5),
+        ] {
             let (a, b) = (&ours["global_test"][field], &theirs["global_test"][field]);
             differences.number(field, a, b, tolerance, 1e-9);
         }
         let field = "degrees_of_freedom";
-        differences.exact(field, &ours["global_test"][field], &theirs["global_test"][field]);
+        differences.exact(
+            field,
+            &ours["global_test"][field],
+            &theirs["global_test"][field],
+        );
         differences.tags("tags", &ours, &theirs);
         differences.tags("assumptions", &ours, &theirs);
         for (name, theirs) in theirs["streams"].as_object().unwrap() {
@@ -130,12 +164,23 @@ fn compare(plant: &str, batches: &str, expected: &str) {
                 ("enthalpy", 1e-5),
             ] {
                 let path = format!("streams.{name}.{field}");
-                differences.quantity(&path, &ours["streams"][name][field], &theirs[field], absolute);
+                differences.quantity(
+                    &path,
+                    &ours["streams"][name][field],
+                    &theirs[field],
+                    absolute,
+                );
             }
         }
         differences.equipment(&ours, &theirs);
         let found = differences.0;
-        assert!(found.is_empty(), "{} {}:\n{}", ours["plant"], ours["batch"], found.join("\n"));
+        assert!(
+            found.is_empty(),
+            "{} {}:\n{}",
+            ours["plant"],
+            ours["batch"],
+            found.join("\n")
+        );
     }
 }
 
