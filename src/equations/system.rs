@@ -16,6 +16,8 @@ use crate::solver::{Evaluation, Outside, Problem, Rows, Structure};
 /// Pressures a state may take: those at which water can be liquid, MPa.
 const LOWEST_PRESSURE: f64 = fluid::MIN_SATURATION_PRESSURE;
 const HIGHEST_PRESSURE: f64 = fluid::MAX_PRESSURE;
+/// What is smaller than this part of the largest flow is nearly zero.
+const SMALL: f64 = 1e-3;
 /// Largest change of pressure in one step, as a factor.
 const PRESSURE_STEP: f64 = 2.0;
 /// Largest change of a pump's rise of enthalpy in one step, as a factor.
@@ -61,8 +63,45 @@ pub struct Case<'a> {
     system: &'a System,
     measured: Vec<Option<Measured>>,
     modes: Modes,
-    state_scale: Vec<f64>,
-    relation_scale: Vec<f64>,
+    scales: Scales,
+}
+
+/// Typical sizes: of each state's uncertainty and of each relation's terms.
+#[derive(Clone, Debug)]
+struct Scales {
+    state: Vec<f64>,
+    relation: Vec<f64>,
+}
+
+impl Scales {
+    /// A state's scale is its instrument's sigma or one per cent of its size,
+    /// whichever is less; what is nearly zero gets a small part of the plant's
+    /// typical size.
+    fn at(system: &System, measured: &[Option<Measured>], x: &[f64]) -> Self {
+        let layout = &system.layout;
+        let flows = (0..layout.streams()).map(|s| x[layout.m(StreamId(s))].abs());
+        let largest_flow = flows.fold(1e-3, f64::max);
+        let floors = Floors {
+            flow: SMALL * largest_flow,
+            pressure: 1e-3,
+            enthalpy: 1000.0,
+            energy: SMALL * 1000.0 * largest_flow,
+        };
+        let mut state: Vec<f64> = (0..layout.len())
+            .map(|j| match layout.kind(j) {
+                StateKind::Enthalpy => 5.0,
+                _ => 0.01 * x[j].abs().max(floors.of(layout, j)),
+            })
+            .collect();
+        for (observation, value) in system.observations.iter().zip(measured) {
+            if let (&[j], Some(measured)) = (&observation.row[..], value) {
+                state[j] = state[j].min(measured.sigma.get());
+            }
+        }
+        let relations = system.relations.iter();
+        let relation = relations.map(|r| r.size(layout, x, &floors)).collect();
+        Scales { state, relation }
+    }
 }
 
 impl System {
@@ -186,36 +225,21 @@ impl<'a> Case<'a> {
         modes: Modes,
         at: &[f64],
     ) -> Self {
-        let layout = &system.layout;
-        let typical_flow = (0..layout.streams())
-            .map(|s| at[layout.m(StreamId(s))].abs())
-            .fold(1e-3, f64::max);
-        let floors = Floors {
-            flow: 0.05 * typical_flow,
-            pressure: 1e-3,
-            enthalpy: 1000.0,
-            energy: 50.0 * typical_flow,
-        };
-        let mut state_scale: Vec<f64> = (0..layout.len())
-            .map(|j| match layout.kind(j) {
-                StateKind::Pressure => 0.01 * at[j].abs().max(1e-3),
-                StateKind::Enthalpy => 5.0,
-                _ => 0.01 * at[j].abs().max(floors.of(layout, j)),
-            })
-            .collect();
-        for (observation, value) in system.observations.iter().zip(&measured) {
-            if let (&[j], Some(measured)) = (&observation.row[..], value) {
-                state_scale[j] = state_scale[j].min(measured.sigma.get());
-            }
-        }
-        let relations = system.relations.iter();
-        let relation_scale = relations.map(|r| r.size(layout, at, &floors)).collect();
+        let scales = Scales::at(system, &measured, at);
         Case {
             system,
             measured,
             modes,
-            state_scale,
-            relation_scale,
+            scales,
+        }
+    }
+
+    /// The same batch with scales taken from another state. Variances come out
+    /// best where each state's scale is within some hundred times its sigma.
+    pub fn rescaled(self, at: &[f64]) -> Self {
+        Case {
+            scales: Scales::at(self.system, &self.measured, at),
+            ..self
         }
     }
 
@@ -332,11 +356,11 @@ impl Problem for Case<'_> {
     }
 
     fn state_scale(&self) -> &[f64] {
-        &self.state_scale
+        &self.scales.state
     }
 
     fn relation_scale(&self) -> &[f64] {
-        &self.relation_scale
+        &self.scales.relation
     }
 
     /// Bends a step so that pressures stay positive and change by a factor of

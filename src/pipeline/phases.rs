@@ -105,7 +105,7 @@ pub fn settle<'a>(compiled: &Compiled, mut case: Case<'a>, mut best: Outcome) ->
         }
     }
     Found {
-        case,
+        case: case.rescaled(&best.x),
         outcome: best,
         open,
     }

@@ -20,7 +20,7 @@ impl Default for Options {
     fn default() -> Self {
         Options {
             tolerance_relation: 1e-10,
-            tolerance_step: 1e-7,
+            tolerance_step: 1e-9,
             max_iterations: 100,
             hold: None,
         }

@@ -1,6 +1,7 @@
 //! The tests that look at the whole from outside, in one binary.
 
 mod batches;
+mod cycles;
 mod demo_truth;
 mod fluid;
 mod harness;

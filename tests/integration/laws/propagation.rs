@@ -90,7 +90,7 @@ fn assert_propagated(plant: &Plant, batch: &Batch) {
         let propagated = COVERAGE_FACTOR * variance.sqrt();
         let difference = width / propagated - 1.0;
         worst = worst.max(difference.abs());
-        if !(difference.abs() < AGREEMENT) {
+        if difference.is_nan() || difference.abs() >= AGREEMENT {
             wrong.push(format!("{name}: {width}, propagated {propagated}"));
         }
     }

@@ -198,10 +198,11 @@ pub fn levelled(plant: &Plant, batch: &Batch) -> (Plant, Batch) {
 /// The largest distances between two reports, and where they are.
 #[derive(Debug, Default)]
 pub struct Distance {
-    /// Of estimates: reconciled values in uncertainties of the reading, states
-    /// relative to their size, imbalances in their uncertainty.
+    /// Of estimates, relative to their size, or to their uncertainty where that
+    /// is larger.
     pub values: (f64, String),
-    /// Of uncertainties, relative, and of redundancies.
+    /// Of uncertainties, relative; of redundancies; of imbalances, which are
+    /// quotients with a variance, in their uncertainty.
     pub spreads: (f64, String),
 }
 
@@ -289,10 +290,11 @@ impl Distance {
     fn tag(&mut self, at: &str, a: &TagReport, b: &TagReport) {
         assert_eq!(a.class, b.class, "class of {at}");
         assert_eq!(a.reason, b.reason, "reason of {at}");
-        let scale = a
+        let spread = a
             .uncertainty_measured
             .or(a.uncertainty_reconciled)
             .unwrap_or(1.0);
+        let scale = spread.max(a.reconciled.unwrap_or(0.0).abs());
         self.value(
             &format!("{at} reconciled"),
             a.reconciled,
@@ -309,7 +311,7 @@ impl Distance {
             &format!("{at} uncertainty"),
             a.uncertainty_reconciled,
             b.uncertainty_reconciled,
-            scale,
+            spread,
         );
         self.spread(&format!("{at} redundancy"), a.redundancy, b.redundancy, 1.0);
     }
