@@ -61,6 +61,18 @@ CREATE TABLE results (
     report             BLOB    NOT NULL  -- JSON
 ) STRICT;
 
+-- Critical values of the single tests, each worked out at the first batch of its
+-- class set and kept, so that every later batch and every replay of the revision
+-- is held against the same.
+CREATE TABLE critical_values (
+    plant_id  INTEGER NOT NULL REFERENCES plants (id),
+    revision  INTEGER NOT NULL,
+    class_set TEXT    NOT NULL,
+    test      TEXT    NOT NULL, -- JSON
+    PRIMARY KEY (plant_id, revision, class_set),
+    FOREIGN KEY (plant_id, revision) REFERENCES revisions (plant_id, revision)
+) STRICT;
+
 -- One row, rewritten at every start: proves that this file takes a durable write.
 CREATE TABLE starts (
     id    INTEGER PRIMARY KEY CHECK (id = 1),

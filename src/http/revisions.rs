@@ -4,6 +4,7 @@ use super::engine::{compute, no_plant};
 use super::error::{Kind, Problem};
 use crate::pipeline::Compiled;
 use crate::plant::{self, Fault, Format};
+use crate::report::SingleTest;
 use crate::store::{Store, StoredPlant};
 use std::collections::{HashMap, HashSet};
 use std::sync::{Arc, Mutex, MutexGuard, PoisonError};
@@ -90,7 +91,8 @@ impl Revisions {
                 Some(stored) => stored,
                 None => self.stored(plant, Some(number)).await?,
             };
-            compute(move || compile(&stored)).await?
+            let known = self.store.critical_values(plant, number).await?;
+            compute(move || compile(&stored, known)).await?
         };
         slot.get_or_try_init(load).await.cloned()
     }
@@ -127,7 +129,7 @@ pub(super) fn format_of(media_type: &str) -> Option<Format> {
     }
 }
 
-fn compile(stored: &StoredPlant) -> Result<Arc<Revision>, Problem> {
+fn compile(stored: &StoredPlant, known: Vec<SingleTest>) -> Result<Arc<Revision>, Problem> {
     let unreadable = |detail: String| {
         tracing::error!(
             plant = stored.name,
@@ -144,8 +146,10 @@ fn compile(stored: &StoredPlant) -> Result<Arc<Revision>, Problem> {
         .ok_or_else(|| unreadable(format!("media type {}", stored.media_type)))?;
     let file =
         plant::read(&stored.source, format).map_err(|faults| unreadable(faults.to_string()))?;
+    let compiled = Compiled::new(file.plant, stored.revision);
+    compiled.recall(known);
     Ok(Arc::new(Revision {
-        compiled: Compiled::new(file.plant, stored.revision),
+        compiled,
         warnings: file.warnings,
     }))
 }

@@ -52,7 +52,7 @@ pub fn assess(compiled: &Compiled) -> Assessment {
     let Ok(found) = found else {
         return assessment;
     };
-    let class_set = class_set::of(compiled, &found);
+    let class_set = class_set::apart(compiled, &found);
     let solution = Solution::new(compiled, &found, &class_set);
     let classes = solution.classes();
     assessment.relations = classes.relations_independent;

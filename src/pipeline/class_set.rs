@@ -79,18 +79,39 @@ pub struct ClassSet {
 }
 
 /// The class set of a solution; worked out where it is met for the first time.
+///
+/// Rank and classes are the same all over a class set, and so is an
+/// unobservable direction that is one state. A direction of several states
+/// turns with the solution, so it is worked out at each.
 pub fn of(compiled: &Compiled, found: &Found) -> Arc<ClassSet> {
     let key = ClassKey::new(compiled, found);
     let name = key.name();
-    compiled.class_set(key, || {
-        let classes = classes(found);
-        let covariance = covariance(compiled, found, &classes);
-        let single_test = single_test(compiled, found, &covariance, &classes, &name);
-        ClassSet {
-            classes,
-            single_test,
-        }
+    let known = compiled.class_set(key, || made_at(compiled, found, &name));
+    let mut directions = known.classes.unobservable_basis().iter();
+    if directions.all(|direction| direction.len() == 1) {
+        return known;
+    }
+    Arc::new(ClassSet {
+        classes: classes(found),
+        single_test: known.single_test.clone(),
     })
+}
+
+/// The class set of a solution that is no batch: nothing is remembered of it, so
+/// that no batch's report depends on who asked for an assessment before.
+pub fn apart(compiled: &Compiled, found: &Found) -> ClassSet {
+    let name = ClassKey::new(compiled, found).name();
+    made_at(compiled, found, &name)
+}
+
+fn made_at(compiled: &Compiled, found: &Found, name: &str) -> ClassSet {
+    let classes = classes(found);
+    let covariance = covariance(compiled, found, &classes);
+    let single_test = single_test(compiled, found, &covariance, &classes, name);
+    ClassSet {
+        classes,
+        single_test,
+    }
 }
 
 /// Variances at a solution.

@@ -16,7 +16,7 @@ pub use types::{
     Stored, StoredPlant, Ticket, Unfinished,
 };
 
-use crate::report::Report;
+use crate::report::{Report, SingleTest};
 use futures::future::BoxFuture;
 use std::sync::Arc;
 use tokio::sync::watch;
@@ -32,6 +32,10 @@ pub trait Store: Send + Sync + 'static {
 
     /// One revision of a plant, the current one where none is named.
     fn plant<'a>(&'a self, name: &'a str, revision: Option<u32>) -> Reply<'a, Option<StoredPlant>>;
+
+    /// Critical values of the single tests that results of a revision were held
+    /// against: kept with a result, the first of each class set.
+    fn critical_values<'a>(&'a self, name: &'a str, revision: u32) -> Reply<'a, Vec<SingleTest>>;
 
     /// Plants in the order of their names, after the one named.
     fn plants<'a>(&'a self, after: Option<&'a str>, limit: usize) -> Reply<'a, Vec<PlantLine>>;

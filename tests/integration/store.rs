@@ -2,7 +2,8 @@
 
 use crate::harness::NOW;
 use counterpoise::report::{
-    Class, GlobalTest, Observability, QuantityReport, Report, StreamReport, TagReport, Verdict,
+    Class, GlobalTest, Observability, QuantityReport, Report, SingleTest, StreamReport, TagReport,
+    Verdict,
 };
 use counterpoise::store::{
     Acceptance, BatchQuery, Field, Incoming, NewPlant, Precondition, PutOutcome, Selector,
@@ -117,6 +118,37 @@ pub async fn accepted(store: &dyn Store, incoming: Incoming) -> Ticket {
         Acceptance::New(ticket) => ticket,
         other => panic!("{other:?}"),
     }
+}
+
+#[tokio::test]
+async fn the_first_critical_value_of_a_class_set_stands() {
+    on_every_store(async |store| {
+        store.put_plant(plant("p", "{}")).await.expect("put");
+        let test = |class_set: &str, critical_value| SingleTest {
+            critical_value,
+            method: "simulated".to_owned(),
+            statistics: 7,
+            class_set: class_set.to_owned(),
+        };
+        let told = [test("one", 3.1), test("one", 3.2), test("two", 3.3)];
+        for (minute, told) in (0..).zip(told) {
+            let name = format!("batch {minute}");
+            let ticket = accepted(store, incoming("p", &name, minute, 1)).await;
+            let report = Report {
+                single_test: Some(told),
+                ..report(&ticket, minute, 1.0, "kg/s")
+            };
+            store
+                .finish(ticket, Arc::new(report))
+                .await
+                .expect("finished");
+        }
+        let mut kept = store.critical_values("p", 1).await.expect("read");
+        kept.sort_by(|a, b| a.class_set.cmp(&b.class_set));
+        assert_eq!(kept, [test("one", 3.1), test("two", 3.3)]);
+        assert_eq!(store.critical_values("p", 2).await.expect("read"), []);
+    })
+    .await;
 }
 
 #[tokio::test]

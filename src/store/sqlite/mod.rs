@@ -22,7 +22,7 @@ use super::{
     Acceptance, BatchLine, BatchQuery, Health, Incoming, NewPlant, Page, PlantLine, PutOutcome,
     Reply, SeriesPage, SeriesQuery, Store, StoreError, Stored, StoredPlant, Ticket, Unfinished,
 };
-use crate::report::Report;
+use crate::report::{Report, SingleTest};
 use futures::FutureExt;
 use sqlx::SqlitePool;
 use sqlx::sqlite::SqlitePoolOptions;
@@ -147,6 +147,10 @@ impl Store for SqliteStore {
 
     fn plant<'a>(&'a self, name: &'a str, revision: Option<u32>) -> Reply<'a, Option<StoredPlant>> {
         read::plant(&self.readers, name, revision).boxed()
+    }
+
+    fn critical_values<'a>(&'a self, name: &'a str, revision: u32) -> Reply<'a, Vec<SingleTest>> {
+        read::critical_values(&self.readers, name, revision).boxed()
     }
 
     fn plants<'a>(&'a self, after: Option<&'a str>, limit: usize) -> Reply<'a, Vec<PlantLine>> {

@@ -3,6 +3,7 @@
 use super::fault::{corrupt, explain, nanoseconds, time};
 use super::sql;
 use super::work::{hex, verdict, verdict_name};
+use crate::report::SingleTest;
 use crate::store::numbers::{self, Layout};
 use crate::store::{
     BatchLine, BatchQuery, Column, Cursor, Page, PlantLine, SeriesPage, SeriesQuery, SeriesRow,
@@ -57,6 +58,22 @@ pub(super) async fn plant(
     };
     let row: Option<RevisionRow> = query.fetch_optional(pool).await.map_err(|e| explain(&e))?;
     row.map(|row| revision_of(name, row)).transpose()
+}
+
+/// Critical values that reports of a revision were held against.
+pub(super) async fn critical_values(
+    pool: &SqlitePool,
+    name: &str,
+    revision: u32,
+) -> Result<Vec<SingleTest>, StoreError> {
+    let rows: Vec<String> = sqlx::query_scalar(sql::CRITICAL_VALUES)
+        .bind(name)
+        .bind(revision)
+        .fetch_all(pool)
+        .await
+        .map_err(|e| explain(&e))?;
+    let tests = rows.iter().map(|json| serde_json::from_str(json));
+    tests.collect::<Result<_, _>>().map_err(corrupt)
 }
 
 pub(super) async fn plants(

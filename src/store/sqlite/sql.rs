@@ -66,6 +66,16 @@ pub(super) const INSERT_RESULT: &str = "
     VALUES (?1, ?2, ?3, ?4, ?5, ?6, ?7)
     ON CONFLICT (inbox_id) DO NOTHING";
 
+pub(super) const INSERT_CRITICAL_VALUE: &str = "
+    INSERT INTO critical_values (plant_id, revision, class_set, test)
+    SELECT plant_id, revision, ?2, ?3 FROM inbox WHERE id = ?1
+    ON CONFLICT DO NOTHING";
+
+pub(super) const CRITICAL_VALUES: &str = "
+    SELECT c.test
+    FROM critical_values c JOIN plants p ON p.id = c.plant_id
+    WHERE p.name = ?1 AND c.revision = ?2";
+
 pub(super) const ONE_BATCH: &str = "
     SELECT i.id, i.revision, r.report
     FROM inbox i JOIN plants p ON p.id = i.plant_id
@@ -119,6 +129,8 @@ pub(super) const ALL: &[&str] = &[
     INSERT_LAYOUT,
     READ_LAYOUT,
     INSERT_RESULT,
+    INSERT_CRITICAL_VALUE,
+    CRITICAL_VALUES,
     ONE_BATCH,
     UNFINISHED,
     BATCHES,

@@ -156,6 +156,8 @@ pub(super) struct Finish {
     channels: Vec<u8>,
     numbers: Vec<u8>,
     report: Vec<u8>,
+    /// Class set, and the test as JSON.
+    single_test: Option<(String, String)>,
 }
 
 impl Finish {
@@ -163,7 +165,12 @@ impl Finish {
         let encoded = numbers::encode(report);
         let channels = serde_json::to_vec(&encoded.channels).map_err(corrupt)?;
         let test = report.global_test.as_ref();
+        let single_test = report.single_test.as_ref().map(|test| {
+            let json = serde_json::to_string(test).map_err(corrupt)?;
+            Ok((test.class_set.clone(), json))
+        });
         Ok(Finish {
+            single_test: single_test.transpose()?,
             inbox_id: ticket.id,
             verdict: verdict_name(report.verdict),
             statistic: test.map(|test| test.statistic),
@@ -209,6 +216,14 @@ impl Work for Finish {
                 .bind(&self.report)
                 .execute(&mut *on)
                 .await?;
+            if let Some((class_set, test)) = &self.single_test {
+                sqlx::query(sql::INSERT_CRITICAL_VALUE)
+                    .bind(self.inbox_id)
+                    .bind(class_set)
+                    .bind(test)
+                    .execute(&mut *on)
+                    .await?;
+            }
             sqlx::query(sql::DELETE_PENDING)
                 .bind(self.inbox_id)
                 .execute(on)
