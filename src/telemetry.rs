@@ -1,7 +1,7 @@
 //! The log: one line per event on standard error, as text or JSON.
 
 use clap::ValueEnum;
-use std::io;
+use std::io::{self, IsTerminal};
 use tracing_subscriber::EnvFilter;
 
 /// Form of the log.
@@ -27,6 +27,7 @@ pub fn start(format: LogFormat, filter: &str) -> anyhow::Result<()> {
     let builder = tracing_subscriber::fmt()
         .with_env_filter(filter)
         .with_writer(io::stderr)
+        .with_ansi(io::stderr().is_terminal())
         .log_internal_errors(false);
     let started = match format {
         LogFormat::Text => builder.with_target(false).try_init(),

@@ -4,6 +4,7 @@
 use super::summary::Summary;
 use super::table::{Table, fixed};
 use crate::config::{Bounds, Config, Log};
+use crate::demo;
 use crate::report::{Assessment, Report};
 use anyhow::{Context, bail, ensure};
 use clap::Args;
@@ -12,9 +13,6 @@ use indicatif::{ProgressBar, ProgressStyle};
 use reqwest::{Client, Response};
 use std::net::{Ipv4Addr, SocketAddr, TcpListener};
 use std::path::PathBuf;
-
-/// The demo plant.
-const PLANT: &str = include_str!("../../fixtures/demo/plant.toml");
 
 /// Its day of batches, one per line.
 const BATCHES: &str = include_str!("../../fixtures/demo/batches.ndjson");
@@ -101,20 +99,16 @@ pub async fn demo(demo: &Demo, address: SocketAddr) -> anyhow::Result<()> {
 }
 
 async fn put_plant(client: &Client, base: &str) -> anyhow::Result<String> {
-    let plant: toml::Table = toml::from_str(PLANT).context("the demo plant")?;
-    let name = plant
-        .get("plant")
-        .and_then(toml::Value::as_str)
-        .context("the demo plant's name")?;
+    let name = demo::plant()?.name;
     let request = client
         .put(format!("{base}/v1/plants/{name}"))
         .header("content-type", "application/toml")
-        .body(PLANT);
+        .body(demo::plant_file());
     let _: serde_json::Value = fetch(request.send().await?)
         .await
         .context("the demo plant")?;
     println!("An invented plant: {base}/v1/plants/{name}");
-    Ok(name.to_owned())
+    Ok(name)
 }
 
 async fn post_all(

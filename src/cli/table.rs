@@ -75,11 +75,21 @@ pub(super) fn pair(value: Option<f64>, uncertainty: Option<f64>) -> [String; 2] 
         Some(uncertainty) if uncertainty > 0.0 && uncertainty.is_finite() => {
             let decimals = decimals(uncertainty);
             [
-                format!("{value:.decimals$}"),
+                plain_zero(format!("{value:.decimals$}")),
                 format!("{uncertainty:.decimals$}"),
             ]
         }
         _ => [number(value), String::new()],
+    }
+}
+
+/// A number that rounds to zero has no sign.
+pub(super) fn plain_zero(text: String) -> String {
+    let digits = text.trim_start_matches(['+', '-']);
+    if digits.chars().all(|c| c == '0' || c == '.') {
+        digits.to_owned()
+    } else {
+        text
     }
 }
 
@@ -105,7 +115,10 @@ pub(super) fn number(value: f64) -> String {
 
 /// An optional number with fixed decimals.
 pub(super) fn fixed(value: Option<f64>, decimals: usize) -> String {
-    value.map_or_else(|| "-".to_owned(), |value| format!("{value:.decimals$}"))
+    value.map_or_else(
+        || "-".to_owned(),
+        |value| plain_zero(format!("{value:.decimals$}")),
+    )
 }
 
 #[cfg(test)]
@@ -119,6 +132,8 @@ mod tests {
         assert_eq!(shown(371.23456, 0.034567), "371.235 0.035");
         assert_eq!(shown(3712.3456, 345.0), "3712 345");
         assert_eq!(pair(None, Some(1.0)), ["-", ""]);
+        assert_eq!(fixed(Some(-0.004), 2), "0.00");
+        assert_eq!(fixed(Some(-0.006), 2), "-0.01");
         assert_eq!(number(0.000123456), "0.00012346");
         assert_eq!(number(250.0), "250");
         assert_eq!(number(61054.963), "61055");

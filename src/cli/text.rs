@@ -1,7 +1,7 @@
 //! A report for people.
 
 use super::CAUTION;
-use super::table::{Table, decimals, fixed, number, pair};
+use super::table::{Table, decimals, fixed, number, pair, plain_zero};
 use crate::report::{
     Class, GlobalTest, Imbalance, Phase, QuantityReport, Report, TagReport, Verdict,
 };
@@ -149,7 +149,7 @@ fn adjustment(tag: &TagReport) -> String {
         (Some(adjustment), Some(uncertainty)) if uncertainty > 0.0 => {
             let fewest = decimals(uncertainty);
             let places = decimals(adjustment.abs()).clamp(fewest, fewest + 2);
-            format!("{adjustment:+.places$}")
+            plain_zero(format!("{adjustment:+.places$}"))
         }
         (Some(adjustment), _) => number(adjustment),
         _ => "-".to_owned(),

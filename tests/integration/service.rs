@@ -1,6 +1,6 @@
 //! Plants, and the service as a whole.
 
-use crate::harness::{PLANT, Service, batch, problem};
+use crate::harness::{PLANT, Service, Setup, batch, problem};
 use reqwest::{Method, StatusCode};
 use std::time::Duration;
 use tokio::io::{AsyncReadExt, AsyncWriteExt};
@@ -329,4 +329,47 @@ async fn an_orderly_end_finishes_what_has_begun() {
     assert!(answer.starts_with("HTTP/1.1 200 "), "{answer}");
     assert!(answer.contains("\"batch\":\"last\""), "{answer}");
     ending.await.expect("no panic").expect("an orderly end");
+}
+
+/// The critical value of a class set is worked out at its first batch. A later
+/// batch solved after a restart, when that batch is long past, is held against
+/// the same, and so is every number of its report the same.
+#[tokio::test]
+async fn a_report_is_the_same_bit_for_bit_after_a_restart() {
+    let directory = tempfile::tempdir().expect("a directory");
+    let setup = |name: &str| Setup {
+        database: Some(directory.path().join(name)),
+        ..Setup::default()
+    };
+    let second = |report: &serde_json::Value| {
+        let mut report = report.clone();
+        report["batch"] = serde_json::Value::Null;
+        report
+    };
+    let mut service = Service::with(setup("one.sqlite"));
+    service.put_plant().await;
+    service.post_batch(batch("first", 0, 150.3)).await;
+    service.get("/v1/plants/mixer/assessment").await;
+    service.post_batch(batch("before", 1, 149.0)).await;
+    let before = service.report("before").await;
+    service.stop().expect("ended in order");
+
+    let service = Service::with(setup("one.sqlite"));
+    service.post_batch(batch("after", 1, 149.0)).await;
+    let after = service.report("after").await;
+    assert_eq!(second(&before), second(&after));
+
+    // Without the first batch the critical value is that of the second.
+    let other = Service::with(setup("two.sqlite"));
+    other.put_plant().await;
+    other.post_batch(batch("alone", 1, 149.0)).await;
+    let alone = other.report("alone").await;
+    assert_eq!(
+        alone["tags"]["F-3"]["reconciled"],
+        before["tags"]["F-3"]["reconciled"]
+    );
+    assert_ne!(
+        alone["single_test"]["critical_value"], before["single_test"]["critical_value"],
+        "the simulation is at the first batch, so this test would show a lost value"
+    );
 }
