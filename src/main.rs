@@ -22,6 +22,9 @@ fn main() -> ExitCode {
         Command::MakeDemoFixture { out } => cli::make_demo_fixture(&out),
     };
     outcome.unwrap_or_else(|error| {
+        if error.is::<cli::Unread>() {
+            return ExitCode::SUCCESS;
+        }
         eprintln!("error: {error:#}");
         ExitCode::from(cli::EXIT_TROUBLE)
     })

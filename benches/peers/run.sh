@@ -9,7 +9,7 @@ work=${PEERS_WORK:-$root/target/peers}
 mkdir -p "$work"
 if [ ! -x "$work/venv/bin/python" ]; then
     python3 -m venv "$work/venv"
-    "$work/venv/bin/pip" install --quiet numpy scipy casadi
+    "$work/venv/bin/pip" install --quiet numpy==2.4.6 scipy==1.17.1 casadi==3.8.2
 fi
 files=()
 for n in $sizes; do
@@ -19,7 +19,7 @@ for n in $sizes; do
         files+=("$file")
     done
 done
-binary=$(cd "$root" && cargo bench --bench peers --no-run --message-format=json 2>/dev/null |
+binary=$(cd "$root" && cargo bench --bench peers --no-run --message-format=json-render-diagnostics |
     "$work/venv/bin/python" -c 'import json, sys
 for line in sys.stdin:
     message = json.loads(line)

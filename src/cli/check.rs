@@ -2,6 +2,7 @@
 
 use super::CAUTION;
 use super::input::{self, Read, Show};
+use super::output::print;
 use super::table::{Table, fixed, number};
 use super::text::class_name;
 use crate::pipeline::{self, Compiled};
@@ -39,7 +40,7 @@ pub fn check(arguments: &Check) -> anyhow::Result<ExitCode> {
     match input::plant_file(&arguments.plant_file, show)? {
         Read::Faulty(faults) => {
             if json {
-                println!("{}", serde_json::json!({ "faults": faults }));
+                print(format!("{}\n", serde_json::json!({ "faults": faults })))?;
             }
             Ok(input::faulty())
         }
@@ -50,9 +51,9 @@ pub fn check(arguments: &Check) -> anyhow::Result<ExitCode> {
                 .warnings
                 .extend(file.warnings.iter().map(ToString::to_string));
             if json {
-                println!("{}", serde_json::to_string_pretty(&assessment)?);
+                print(serde_json::to_string_pretty(&assessment)? + "\n")?;
             } else {
-                print!("{}", describe(&title, &assessment));
+                print(describe(&title, &assessment))?;
             }
             Ok(ExitCode::SUCCESS)
         }
@@ -66,15 +67,35 @@ pub(super) fn describe(title: &str, assessment: &Assessment) -> String {
     let _ = writeln!(
         text,
         "{title} ({}), at {}\n\n\
-         {} states, {} independent relations, {} observations: {} degrees of freedom, {} unobservable directions\n",
+         {}, {}, {}: {}, {}\n",
         assessment.plant,
         assessment.operating_point,
-        assessment.states,
-        assessment.relations,
-        assessment.observations,
-        assessment.degrees_of_freedom,
-        assessment.unobservable_directions,
+        counted(assessment.states, "state", "states"),
+        counted(
+            assessment.relations,
+            "independent relation",
+            "independent relations"
+        ),
+        counted(assessment.observations, "observation", "observations"),
+        counted(
+            assessment.degrees_of_freedom,
+            "degree of freedom",
+            "degrees of freedom"
+        ),
+        counted(
+            assessment.unobservable_directions,
+            "unobservable direction",
+            "unobservable directions"
+        ),
     );
+    if assessment.tags.is_empty() {
+        let _ = writeln!(
+            text,
+            "Nothing could be assessed: {}\n\n{CAUTION}",
+            assessment.operating_point
+        );
+        return text;
+    }
     let mut table = Table::new(&[
         "<tag or assumption",
         "<class",
@@ -134,17 +155,90 @@ pub(super) fn describe(title: &str, assessment: &Assessment) -> String {
         }
         text.push('\n');
     }
-    let unchecked: Vec<&str> = assessment
+    let of_class = |class: Class| {
+        let tags = assessment.tags.iter().filter(|(_, tag)| tag.class == class);
+        let names: Vec<&str> = tags.map(|(name, _)| name.as_str()).collect();
+        names.join(", ")
+    };
+    let unchecked = of_class(Class::NotRedundant);
+    let hardly = of_class(Class::HardlyRedundant);
+    if !unchecked.is_empty() {
+        let _ = writeln!(text, "Tags that nothing checks: {unchecked}");
+    }
+    if !hardly.is_empty() {
+        let _ = writeln!(
+            text,
+            "Tags checked so weakly that no error of believable size would show: {hardly}"
+        );
+    }
+    if assessment
         .tags
-        .iter()
-        .filter(|(_, tag)| matches!(tag.class, Class::NotRedundant | Class::HardlyRedundant))
-        .map(|(name, _)| name.as_str())
-        .collect();
-    if unchecked.is_empty() {
+        .values()
+        .all(|tag| tag.class == Class::Redundant)
+    {
         let _ = writeln!(text, "Every tag is checked by others.");
-    } else {
-        let _ = writeln!(text, "Tags that nothing checks: {}", unchecked.join(", "));
     }
     let _ = writeln!(text, "\n{CAUTION}");
     text
+}
+
+/// "1 state", "2 states".
+fn counted(number: usize, one: &str, many: &str) -> String {
+    format!("{number} {}", if number == 1 { one } else { many })
+}
+
+#[cfg(test)]
+mod tests {
+    use super::*;
+    use crate::report::AssessedTag;
+
+    fn assessed(classes: &[(&str, Class)]) -> String {
+        let tags = classes.iter().map(|(name, class)| {
+            let tag = AssessedTag {
+                class: *class,
+                redundancy: None,
+                detectable: None,
+                unit: "t/h".to_owned(),
+            };
+            ((*name).to_owned(), tag)
+        });
+        let assessment = Assessment {
+            plant: "mill".to_owned(),
+            revision: 1,
+            operating_point: "none found".to_owned(),
+            states: 1,
+            relations: 2,
+            observations: 3,
+            unobservable_directions: 0,
+            degrees_of_freedom: 1,
+            tags: tags.collect(),
+            assumptions: Default::default(),
+            streams: Default::default(),
+            unobservable: Vec::new(),
+            warnings: Vec::new(),
+        };
+        describe("Mill", &assessment)
+    }
+
+    #[test]
+    fn without_tags_nothing_is_claimed() {
+        let text = assessed(&[]);
+        assert!(text.contains("Nothing could be assessed: none found"));
+        assert!(!text.contains("very"), "{text}");
+    }
+
+    #[test]
+    fn each_class_has_its_own_heading() {
+        let text = assessed(&[
+            ("A", Class::NotRedundant),
+            ("B", Class::HardlyRedundant),
+            ("C", Class::Redundant),
+        ]);
+        assert!(text.contains("nothing checks: A\n"), "{text}");
+        assert!(text.contains("would show: B\n"), "{text}");
+        assert!(!text.contains("Every tag"), "{text}");
+        assert!(text.contains(": 1 degree of freedom, 0 unobservable directions"));
+        assert!(text.contains("1 state, 2 independent relations"));
+        assert!(assessed(&[("C", Class::Redundant)]).contains("Every tag is checked"));
+    }
 }

@@ -1,6 +1,7 @@
 //! `demo`: the demo plant served, its day of batches posted over HTTP, and what
 //! came out of it.
 
+use super::output::print;
 use super::summary::Summary;
 use super::table::{Table, fixed};
 use crate::config::{Bounds, Config, Log};
@@ -90,10 +91,10 @@ pub async fn demo(demo: &Demo, address: SocketAddr) -> anyhow::Result<()> {
             .await?,
     )
     .await?;
-    print!("{}", Summary::new(&reports, &assessment));
-    println!("{}", examples(&base, &name, &reports));
+    print(Summary::new(&reports, &assessment).to_string())?;
+    print(examples(&base, &name, &reports) + "\n")?;
     if !demo.exit {
-        println!("Serving until Ctrl-C.");
+        print("Serving until Ctrl-C.\n")?;
     }
     Ok(())
 }
@@ -107,7 +108,7 @@ async fn put_plant(client: &Client, base: &str) -> anyhow::Result<String> {
     let _: serde_json::Value = fetch(request.send().await?)
         .await
         .context("the demo plant")?;
-    println!("An invented plant: {base}/v1/plants/{name}");
+    print(format!("An invented plant: {base}/v1/plants/{name}\n"))?;
     Ok(name)
 }
 

@@ -2,11 +2,13 @@
 //!
 //! Exit codes: 0, done, whatever the verdict; 1, the plant file or a batch has
 //! faults; 2, the command line itself (from `clap`); 3, anything else, such as
-//! a file that cannot be read.
+//! a file that cannot be read. A reader that closes our output early, as `head`
+//! does, ends the work with 0.
 
 mod check;
 mod demo;
 mod input;
+mod output;
 mod reconcile;
 mod summary;
 mod table;
@@ -14,6 +16,7 @@ mod text;
 
 pub use check::{Check, check};
 pub use demo::{Demo, demo};
+pub use output::Unread;
 pub use reconcile::{Reconcile, reconcile};
 
 use crate::config::Config;
@@ -82,6 +85,6 @@ pub fn make_demo_fixture(out: &Path) -> anyhow::Result<ExitCode> {
 ///
 /// Where it cannot be written.
 pub fn openapi() -> anyhow::Result<ExitCode> {
-    println!("{}", crate::server::openapi()?);
+    output::print(crate::server::openapi()? + "\n")?;
     Ok(ExitCode::SUCCESS)
 }

@@ -1,15 +1,17 @@
 //! `reconcile`: batches from a file, reports to standard output.
 
 use super::input::{self, Read as PlantRead, Show};
+use super::output::print;
 use super::text;
 use crate::ingest::{self, Refusal};
 use crate::pipeline::{self, Compiled};
 use crate::plant;
 use crate::report::Report;
+use crate::server::Problem;
 use anyhow::Context;
 use clap::{Args, ValueEnum};
 use std::fs::File;
-use std::io::{self, BufRead, BufReader, Read, Write};
+use std::io::{self, BufRead, BufReader, Read};
 use std::path::{Path, PathBuf};
 use std::process::ExitCode;
 use time::OffsetDateTime;
@@ -40,7 +42,8 @@ enum ReconcileFormat {
     Text,
     /// The report, exactly.
     Json,
-    /// Batches one per line in, reports one per line out.
+    /// Batches one per line in, reports one per line out; a problem where a
+    /// line is no batch.
     Ndjson,
 }
 
@@ -59,9 +62,8 @@ pub fn reconcile(arguments: &Reconcile) -> anyhow::Result<ExitCode> {
     let name = arguments.batch_file.display().to_string();
     let mut source = open(&arguments.batch_file)?;
     let many = arguments.format == ReconcileFormat::Ndjson || is_stream(&arguments.batch_file);
-    let mut output = io::stdout().lock();
     if many {
-        lines(&plant, source, &name, arguments.format, &mut output)
+        lines(&plant, source, &name, arguments.format)
     } else {
         let mut body = Vec::new();
         source
@@ -69,12 +71,10 @@ pub fn reconcile(arguments: &Reconcile) -> anyhow::Result<ExitCode> {
             .with_context(|| name.clone())?;
         match one(&plant, &body) {
             Ok(report) => {
-                match arguments.format {
-                    ReconcileFormat::Text => {
-                        output.write_all(text::describe(&report).as_bytes())?
-                    }
-                    _ => writeln!(output, "{}", serde_json::to_string_pretty(&report)?)?,
-                }
+                print(match arguments.format {
+                    ReconcileFormat::Text => text::describe(&report),
+                    _ => serde_json::to_string_pretty(&report)? + "\n",
+                })?;
                 Ok(ExitCode::SUCCESS)
             }
             Err(refusal) => {
@@ -107,7 +107,6 @@ fn lines(
     source: Box<dyn BufRead>,
     name: &str,
     format: ReconcileFormat,
-    output: &mut impl Write,
 ) -> anyhow::Result<ExitCode> {
     let mut all_read = true;
     for (index, line) in source.split(b'\n').enumerate() {
@@ -117,16 +116,21 @@ fn lines(
         }
         match one(plant, &line) {
             Ok(report) if format == ReconcileFormat::Text => {
-                writeln!(output, "{}", text::describe(&report))?;
+                print(text::describe(&report) + "\n")?;
             }
-            Ok(report) => writeln!(output, "{}", serde_json::to_string(&report)?)?,
+            Ok(report) => print(serde_json::to_string(&report)? + "\n")?,
             Err(refusal) => {
                 all_read = false;
                 let name = format!("{name} (line {})", index + 1);
                 show(&refusal, &String::from_utf8_lossy(&line), &name);
+                if format != ReconcileFormat::Text {
+                    // In the place of the report, as the service answers.
+                    let mut problem = Problem::from(refusal).on_line(index + 1).document();
+                    problem.push(b'\n');
+                    print(problem)?;
+                }
             }
         }
-        output.flush()?;
     }
     Ok(if all_read {
         ExitCode::SUCCESS

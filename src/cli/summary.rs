@@ -190,7 +190,8 @@ impl<'r> Summary<'r> {
                 )?;
             }
         }
-        if self.assessment.unobservable.is_empty() {
+        // Without tags in it nothing could be assessed.
+        if self.assessment.unobservable.is_empty() && !self.assessment.tags.is_empty() {
             writeln!(f, "Every quantity is observable.")?;
         }
         for quantity in &self.assessment.unobservable {

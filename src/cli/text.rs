@@ -95,9 +95,13 @@ fn verdict_line(report: &Report) -> String {
         ..
     }) = &report.global_test
     {
+        let noun = match degrees_of_freedom {
+            1 => "degree",
+            _ => "degrees",
+        };
         let _ = write!(
             line,
-            ": {statistic:.1} on {degrees_of_freedom} degrees of freedom"
+            ": {statistic:.1} on {degrees_of_freedom} {noun} of freedom"
         );
         if let (Some(critical), Some(p)) = (critical_value, p_value) {
             let _ = write!(line, " (critical {critical:.1}, p = {p:.3})");

@@ -41,15 +41,16 @@ pub struct Miss {
 }
 
 impl Miss {
-    /// From a multiplier and its variance; `None` where nothing checks the
-    /// balance. `scale` is a typical size of the balance's terms: a miss that
-    /// is uncertain by ten thousand times that is not checked.
-    pub fn new(multiplier: f64, variance: f64, scale: f64) -> Option<Self> {
-        let sigma = 1.0 / variance.sqrt();
-        (sigma.is_finite() && sigma < 1e4 * scale).then(|| Miss {
-            value: multiplier / variance,
-            sigma,
-            standardised: multiplier * sigma,
+    /// From a multiplier and its variance; `None` where the variance is zero:
+    /// nothing checks the balance, and its multiplier is zero whatever is read.
+    pub fn new(multiplier: f64, variance: f64) -> Option<Self> {
+        (variance > 0.0).then(|| {
+            let sigma = 1.0 / variance.sqrt();
+            Miss {
+                value: multiplier / variance,
+                sigma,
+                standardised: multiplier * sigma,
+            }
         })
     }
 }

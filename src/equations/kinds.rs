@@ -22,7 +22,8 @@ enum EnergyBalance {
     /// Over all sides, with these linear terms and this enthalpy of the holdup.
     Whole {
         linear: Vec<(usize, f64)>,
-        holdup_of: Option<Carried>,
+        /// Enthalpies that the holdup has the mean of.
+        holdup_of: Vec<Carried>,
     },
     /// No streams: these terms sum to zero.
     Power(Vec<(usize, f64)>),
@@ -80,8 +81,13 @@ fn of_equipment(id: EquipmentId, equipment: &Equipment, layout: &Layout) -> Vec<
                     products.push((layout.m(s), Carried::Stream(s), -1.0));
                 }
             }
-            if let (Some(state), Some(carried)) = (own.holdup, holdup_of) {
-                products.push((state, carried, -1.0));
+            if let Some(state) = own.holdup {
+                let share = 1.0 / holdup_of.len() as f64;
+                products.extend(
+                    holdup_of
+                        .into_iter()
+                        .map(|carried| (state, carried, -share)),
+                );
             }
             relations.push(relation(Role::Energy, Law::Energy { products, linear }));
         }
@@ -126,7 +132,7 @@ fn table(kind: &Kind, own: OwnStates, layout: &Layout) -> Table {
     match kind {
         Kind::Mixer { inlets, outlet } => Table {
             sides: vec![through("flow", inlets, &[*outlet])],
-            energy: whole(vec![lost(own.loss)], None),
+            energy: whole(vec![lost(own.loss)], Vec::new()),
             conditions: Vec::new(),
         },
         Kind::Splitter { inlet, outlets } => Table {
@@ -158,7 +164,7 @@ fn table(kind: &Kind, own: OwnStates, layout: &Layout) -> Table {
             }
             Table {
                 sides: vec![through("flow", inlets, outlets)],
-                energy: whole(vec![lost(own.loss)], None),
+                energy: whole(vec![lost(own.loss)], Vec::new()),
                 conditions,
             }
         }
@@ -169,12 +175,12 @@ fn table(kind: &Kind, own: OwnStates, layout: &Layout) -> Table {
         },
         Kind::Pump { inlet, outlet } => Table {
             sides: vec![through("flow", &[*inlet], &[*outlet])],
-            energy: whole(vec![gained(own.work)], None),
+            energy: whole(vec![gained(own.work)], Vec::new()),
             conditions: Vec::new(),
         },
         Kind::Turbine { inlets, outlets } => Table {
             sides: vec![through("flow", inlets, outlets)],
-            energy: whole(vec![lost(own.work), lost(own.loss)], None),
+            energy: whole(vec![lost(own.work), lost(own.loss)], Vec::new()),
             conditions: Vec::new(),
         },
         Kind::ClosedHeater {
@@ -198,7 +204,7 @@ fn table(kind: &Kind, own: OwnStates, layout: &Layout) -> Table {
                     through("steam", &inlets, &with_vent(*drain_out, *vent)),
                     through("tube", &[*tube_in], &[*tube_out]),
                 ],
-                energy: whole(vec![lost(own.loss)], None),
+                energy: whole(vec![lost(own.loss)], Vec::new()),
                 conditions,
             }
         }
@@ -209,7 +215,7 @@ fn table(kind: &Kind, own: OwnStates, layout: &Layout) -> Table {
             outlet_saturated,
         } => Table {
             sides: vec![through("flow", inlets, &with_vent(*outlet, *vent))],
-            energy: whole(vec![lost(own.loss)], Some(Carried::Stream(*outlet))),
+            energy: whole(vec![lost(own.loss)], vec![Carried::Stream(*outlet)]),
             conditions: vessel(*outlet, *outlet_saturated, *vent),
         },
         Kind::Condenser {
@@ -227,7 +233,7 @@ fn table(kind: &Kind, own: OwnStates, layout: &Layout) -> Table {
                 sides,
                 energy: whole(
                     vec![lost(own.heat), lost(own.loss)],
-                    Some(Carried::Stream(*condensate)),
+                    vec![Carried::Stream(*condensate)],
                 ),
                 conditions: vessel(*condensate, *condensate_saturated, *vent),
             }
@@ -248,7 +254,7 @@ fn table(kind: &Kind, own: OwnStates, layout: &Layout) -> Table {
             };
             Table {
                 sides,
-                energy: whole(vec![heat, lost(own.loss)], None),
+                energy: whole(vec![heat, lost(own.loss)], Vec::new()),
                 conditions: Vec::new(),
             }
         }
@@ -265,8 +271,11 @@ fn table(kind: &Kind, own: OwnStates, layout: &Layout) -> Table {
             Table {
                 sides,
                 energy: whole(
-                    vec![gained(own.heat), lost(own.loss)],
-                    Some(Carried::SaturatedLiquid(water_out[0])),
+                    vec![gained(own.heat)],
+                    water_out
+                        .iter()
+                        .map(|&s| Carried::SaturatedLiquid(s))
+                        .collect(),
                 ),
                 conditions: Vec::new(),
             }

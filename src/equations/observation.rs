@@ -140,6 +140,14 @@ impl Observation {
         }
     }
 
+    /// The state that is observed by itself, if it is.
+    pub fn state(&self) -> Option<usize> {
+        match (&self.function, &self.row[..]) {
+            (Function::Linear { .. }, &[j]) => Some(j),
+            _ => None,
+        }
+    }
+
     /// The stream whose saturated states the function needs.
     pub fn needs_saturation(&self) -> Option<StreamId> {
         match self.function {

@@ -14,6 +14,11 @@ use crate::plant::{Barometer, Kind, Plant, PressureReference, Quantity, StreamId
 const STANDARD_ATMOSPHERE: f64 = 0.101_325;
 /// Where nothing tells: MPa.
 const ANYWHERE: f64 = 1.0;
+/// Standard uncertainties of a guess, relative: at least, where it is read;
+/// carried over a drop or from saturation; smoothed.
+const GIVEN: f64 = 0.01;
+const CARRIED: f64 = 0.03;
+const GUESSED: f64 = 0.3;
 /// Most sweeps of the smoothing; it converges geometrically.
 const SWEEPS: usize = 200;
 /// Change of ln p at which the smoothing ends: a guess needs no more.
@@ -25,12 +30,20 @@ pub struct Pressures {
     pub stream: Vec<f64>,
     /// Whether readings or exact relations give it (or the guess is smoothed).
     pub known: Vec<bool>,
+    /// How far the guess may be off, as a standard uncertainty, MPa.
+    pub sigma: Vec<f64>,
     /// Atmospheric pressure, MPa.
     pub barometer: f64,
 }
 
 /// Guesses the pressures of a plant.
-pub fn guess(plant: &Plant, system: &System, measured: &[Option<Measured>]) -> Pressures {
+/// Those that are smoothed come out `factor` times as high.
+pub fn guess(
+    plant: &Plant,
+    system: &System,
+    measured: &[Option<Measured>],
+    factor: f64,
+) -> Pressures {
     let barometer = barometer(plant, system, measured);
     let mut groups = Groups::new(plant.streams.len());
     for relation in &system.relations {
@@ -43,16 +56,31 @@ pub fn guess(plant: &Plant, system: &System, measured: &[Option<Measured>]) -> P
     }
     let n = plant.streams.len();
     let mut ln_p: Vec<Option<f64>> = vec![None; n];
-    read(system, measured, barometer, &mut groups, &mut ln_p);
+    let read_sigma = read(system, measured, barometer, &mut groups, &mut ln_p);
     carry(plant, system, measured, &mut groups, &mut ln_p);
     let known: Vec<bool> = (0..n).map(|s| ln_p[groups.of(s)].is_some()).collect();
     smooth(plant, &mut groups, &mut ln_p);
-    let stream = (0..n)
-        .map(|s| ln_p[groups.of(s)].map_or(ANYWHERE, f64::exp))
+    let stream: Vec<f64> = (0..n)
+        .map(|s| {
+            let p = ln_p[groups.of(s)].map_or(ANYWHERE, f64::exp);
+            if known[s] {
+                p
+            } else {
+                (factor * p).clamp(7e-4, 90.0)
+            }
+        })
+        .collect();
+    let sigma = (0..n)
+        .map(|s| match (read_sigma[groups.of(s)], known[s]) {
+            (Some(sigma), _) => sigma.max(GIVEN * stream[s]),
+            (None, true) => CARRIED * stream[s],
+            (None, false) => GUESSED * stream[s],
+        })
         .collect();
     Pressures {
         stream,
         known,
+        sigma,
         barometer,
     }
 }
@@ -93,14 +121,15 @@ fn barometer(plant: &Plant, system: &System, measured: &[Option<Measured>]) -> f
         .unwrap_or(STANDARD_ATMOSPHERE)
 }
 
-/// Groups take the weighted mean of their pressure readings.
+/// Groups take the weighted mean of their pressure readings; its sigma by
+/// group, MPa.
 fn read(
     system: &System,
     measured: &[Option<Measured>],
     barometer: f64,
     groups: &mut Groups,
     ln_p: &mut [Option<f64>],
-) {
+) -> Vec<Option<f64>> {
     let mut sums = vec![(0.0, 0.0); ln_p.len()];
     for (observation, measured) in system.observations.iter().zip(measured) {
         let (Quantity::Pressure(s, reference), Some(m)) = (observation.quantity, measured) else {
@@ -115,12 +144,16 @@ fn read(
         let sum = &mut sums[groups.of(s.0)];
         *sum = (sum.0 + weight * p, sum.1 + weight);
     }
-    for (group, (sum, weight)) in sums.into_iter().enumerate() {
+    for (group, &(sum, weight)) in sums.iter().enumerate() {
         if weight > 0.0 {
             // A vacuum can read below nothing; the state cannot.
             ln_p[group] = Some((sum / weight).clamp(7e-4, 99.0).ln());
         }
     }
+    let sigmas = sums
+        .iter()
+        .map(|(_, weight)| (*weight > 0.0).then(|| weight.powf(-0.5)));
+    sigmas.collect()
 }
 
 /// Carries pressures over assumed drops and from saturation temperatures.

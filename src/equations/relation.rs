@@ -119,17 +119,20 @@ impl Relation {
         Relation { of, role, law, row }
     }
 
-    /// The stream whose saturated states the relation needs.
-    pub fn needs_saturation(&self) -> Option<StreamId> {
+    /// The streams whose saturated states the relation needs.
+    pub fn needs_saturation(&self) -> Vec<StreamId> {
         match &self.law {
-            Law::Linear(_) => None,
+            Law::Linear(_) => Vec::new(),
             Law::Energy { products, .. } => {
-                products.iter().find_map(|(_, carried, _)| match carried {
-                    Carried::Stream(_) => None,
-                    Carried::SaturatedLiquid(s) => Some(*s),
-                })
+                let carried = products.iter().map(|(_, carried, _)| carried);
+                carried
+                    .filter_map(|carried| match carried {
+                        Carried::Stream(_) => None,
+                        Carried::SaturatedLiquid(s) => Some(*s),
+                    })
+                    .collect()
             }
-            Law::Saturated { stream, .. } => Some(*stream),
+            Law::Saturated { stream, .. } => vec![*stream],
         }
     }
 

@@ -27,9 +27,13 @@ const OUTSIDE_TEMPERATURE: f64 = 293.15;
 /// Prior sigma of enthalpies: given by a reading or saturation, or guessed, kJ/kg.
 const GIVEN_ENTHALPY: f64 = 10.0;
 const GUESSED_ENTHALPY: f64 = 200.0;
-/// Prior sigma of pressures, relative: given or smoothed.
-const GIVEN_PRESSURE: f64 = 0.01;
-const GUESSED_PRESSURE: f64 = 0.2;
+/// Prior sigma of the atmospheric pressure, relative.
+const ATMOSPHERE: f64 = 0.01;
+
+/// Prior sigma of a flow that is read, relative: its balances know better.
+const GIVEN_FLOW: f64 = 0.3;
+/// A flow that nothing tells, as a part of the largest.
+const GUESSED_FLOW: f64 = 0.1;
 
 /// Where the solver starts.
 #[derive(Clone, Debug)]
@@ -38,6 +42,8 @@ pub struct Start {
     pub x: Vec<f64>,
     /// Prior sigma of each state in its own unit; infinite where there is none.
     pub prior_sigma: Vec<f64>,
+    /// Some pressure is neither read nor carried over, but smoothed.
+    pub guesses_pressures: bool,
 }
 
 impl Start {
@@ -61,14 +67,17 @@ enum Hint {
 }
 
 /// Finds the start for one batch.
-pub fn start(plant: &Plant, system: &System, measured: &[Option<Measured>]) -> Start {
-    let pressures = pressures::guess(plant, system, measured);
+///
+/// Pressures that are only guessed are taken `factor` times as high: another
+/// factor is another start, where the first leads nowhere.
+pub fn start(plant: &Plant, system: &System, measured: &[Option<Measured>], factor: f64) -> Start {
+    let pressures = pressures::guess(plant, system, measured, factor);
     let (enthalpies, given) = Enthalpies::new(plant, system, measured, &pressures).guess();
     let layout = &system.layout;
     let mut x = vec![0.0; layout.len()];
     let mut prior_sigma = vec![f64::INFINITY; layout.len()];
     for (observation, measured) in system.observations.iter().zip(measured) {
-        if let (&[j], Some(measured)) = (&observation.row[..], measured) {
+        if let (Some(j), Some(measured)) = (observation.state(), measured) {
             x[j] = measured.value;
         }
     }
@@ -79,16 +88,14 @@ pub fn start(plant: &Plant, system: &System, measured: &[Option<Measured>]) -> S
     for s in (0..layout.streams()).map(StreamId) {
         let (m, p, h) = (layout.m(s), layout.p(s), layout.h(s));
         if x[m] <= 0.0 {
-            x[m] = 0.1 * typical_flow;
+            x[m] = GUESSED_FLOW * typical_flow;
+            prior_sigma[m] = x[m];
+        } else {
+            prior_sigma[m] = GIVEN_FLOW * x[m];
         }
         x[p] = pressures.stream[s.0];
         x[h] = enthalpies[s.0];
-        let relative = if pressures.known[s.0] {
-            GIVEN_PRESSURE
-        } else {
-            GUESSED_PRESSURE
-        };
-        prior_sigma[p] = relative * x[p];
+        prior_sigma[p] = pressures.sigma[s.0];
         prior_sigma[h] = if given[s.0] {
             GIVEN_ENTHALPY
         } else {
@@ -97,9 +104,14 @@ pub fn start(plant: &Plant, system: &System, measured: &[Option<Measured>]) -> S
     }
     if let Some(b) = layout.barometer {
         x[b] = pressures.barometer;
-        prior_sigma[b] = GIVEN_PRESSURE * x[b];
+        prior_sigma[b] = ATMOSPHERE * x[b];
     }
-    Start { x, prior_sigma }
+    let guesses_pressures = pressures.known.contains(&false);
+    Start {
+        x,
+        prior_sigma,
+        guesses_pressures,
+    }
 }
 
 /// The guess of enthalpies in progress.
@@ -156,16 +168,24 @@ impl<'a> Enthalpies<'a> {
     /// Enthalpies, and which of them readings or saturation give.
     fn guess(mut self) -> (Vec<f64>, Vec<bool>) {
         let n = self.h.len();
+        // What tells the enthalpy itself comes first, then temperatures that
+        // tell the side of saturation; the others only where nothing else does.
         // A pump warms the water by less than a thermometer resolves, so what it
         // delivers is worked out from what it draws, and read only failing that.
         let pumped = self.pumped();
-        self.read(|s| !pumped[s]);
+        self.read(|guess, s| guess.saturated(s));
+        self.read(|guess, s| {
+            guess
+                .by_temperature(s)
+                .filter(|_| !pumped[s] && !guess.doubtful(s))
+        });
         let mut given: Vec<bool> = self.h.iter().map(Option::is_some).collect();
+        self.read(|guess, s| guess.by_hinted_temperature(s).filter(|_| !pumped[s]));
         self.carry_on();
-        self.read(|_| true);
+        self.read(|guess, s| guess.by_temperature(s));
         self.carry_on();
         for (s, given) in given.iter_mut().enumerate() {
-            *given |= pumped[s] && self.temperature[s].is_some();
+            *given |= self.temperature[s].is_some();
         }
         let enthalpies = (0..n)
             .map(|s| {
@@ -194,12 +214,11 @@ impl<'a> Enthalpies<'a> {
         marks.h.iter().map(Option::is_some).collect()
     }
 
-    /// Takes enthalpies from saturation and temperatures, for the streams that
-    /// `wanted` names and that have none yet.
-    fn read(&mut self, wanted: impl Fn(usize) -> bool) {
+    /// Takes enthalpies from `source` for the streams that have none yet.
+    fn read(&mut self, source: impl Fn(&Self, usize) -> Option<f64>) {
         for s in 0..self.h.len() {
-            if self.h[s].is_none() && wanted(s) {
-                self.h[s] = self.saturated(s).or_else(|| self.by_temperature(s));
+            if self.h[s].is_none() {
+                self.h[s] = source(self, s);
             }
         }
         self.share();
@@ -231,28 +250,51 @@ impl<'a> Enthalpies<'a> {
         })
     }
 
+    /// Whether temperature and pressure leave the side of saturation open.
+    fn doubtful(&self, s: usize) -> bool {
+        let Some((t, sigma)) = self.temperature[s] else {
+            return false;
+        };
+        let Ok(at) = fluid::saturation(self.pressures.stream[s]) else {
+            return false;
+        };
+        let sigma = sigma.hypot(at.t_p * self.pressures.sigma[s]);
+        (t - at.t).abs() <= (NEAR_SIGMA * sigma).max(NEAR_KELVIN)
+    }
+
+    /// Enthalpy by temperature on the side that the ports tell, if they do.
+    fn by_hinted_temperature(&self, s: usize) -> Option<f64> {
+        match self.hint[s] {
+            Hint::Liquid => self.on_side(s, Side::Liquid),
+            Hint::Vapour => self.on_side(s, Side::Vapour),
+            // Wet or barely superheated: the temperature says nothing of it.
+            Hint::Expanded | Hint::Nothing => None,
+        }
+    }
+
     /// Enthalpy by temperature and pressure, on the side that they show.
     fn by_temperature(&self, s: usize) -> Option<f64> {
-        let (t, sigma) = self.temperature[s]?;
+        let (t, _) = self.temperature[s]?;
         let p = self.pressures.stream[s];
+        match fluid::saturation_temperature(p) {
+            Ok(saturated) if t > saturated => self.on_side(s, Side::Vapour),
+            Ok(_) => self.on_side(s, Side::Liquid),
+            Err(_) => fluid::from_pt(p, t).ok().map(|state| state.h),
+        }
+    }
+
+    /// Enthalpy by temperature, no further than the saturation line.
+    fn on_side(&self, s: usize, side: Side) -> Option<f64> {
+        let (t, _) = self.temperature[s]?;
+        let p = self.pressures.stream[s];
+        let state = || fluid::from_pt(p, t).ok().map(|state| state.h);
         let Ok(saturation) = fluid::saturation(p) else {
-            return fluid::from_pt(p, t).ok().map(|state| state.h);
-        };
-        let superheat = t - saturation.t;
-        let near = superheat.abs() <= (NEAR_SIGMA * sigma).max(NEAR_KELVIN);
-        let doubtful = near || !self.pressures.known[s];
-        let side = match self.hint[s] {
-            Hint::Liquid if doubtful => Side::Liquid,
-            Hint::Vapour if doubtful => Side::Vapour,
-            // Wet or barely superheated: the temperature says nothing of it.
-            Hint::Expanded if near => return None,
-            _ if superheat > 0.0 => Side::Vapour,
-            _ => Side::Liquid,
+            return state();
         };
         match side {
-            Side::Vapour if superheat <= 0.0 => Some(saturation.vapour.h),
-            Side::Liquid if superheat >= 0.0 => Some(saturation.liquid.h),
-            _ => fluid::from_pt(p, t).ok().map(|state| state.h),
+            Side::Vapour if t <= saturation.t => Some(saturation.vapour.h),
+            Side::Liquid if t >= saturation.t => Some(saturation.liquid.h),
+            _ => state(),
         }
     }
 
@@ -418,7 +460,7 @@ fn hint_at(plant: &Plant, at: EquipmentId, s: StreamId) -> Hint {
         } => {
             if water_in.contains(&s) {
                 Hint::Liquid
-            } else if water_out.first() == Some(&s) || reheats.iter().any(|(_, out)| *out == s) {
+            } else if water_out[..] == [s] || reheats.iter().any(|(_, out)| *out == s) {
                 Hint::Vapour
             } else {
                 Hint::Nothing

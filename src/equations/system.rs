@@ -42,6 +42,8 @@ pub struct System {
     pub observations: Vec<Observation>,
     /// Streams that a relation holds on the saturation line.
     pub on_saturation: Vec<Option<Side>>,
+    /// Streams that "equal enthalpy" relations join, each in one chain.
+    pub chains: Vec<Vec<StreamId>>,
     /// Sparsity, for the solver.
     pub structure: Structure,
     /// Streams whose saturated states a relation or tag always needs.
@@ -94,7 +96,7 @@ impl Scales {
             })
             .collect();
         for (observation, value) in system.observations.iter().zip(measured) {
-            if let (&[j], Some(measured)) = (&observation.row[..], value) {
+            if let (Some(j), Some(measured)) = (observation.state(), value) {
                 state[j] = state[j].min(measured.sigma.get());
             }
         }
@@ -147,18 +149,20 @@ impl System {
         let by_relations = relations
             .iter()
             .filter(|r| r.role != Role::SideOfSaturation);
-        let by_relations = by_relations.filter_map(Relation::needs_saturation);
+        let by_relations = by_relations.flat_map(Relation::needs_saturation);
         let by_tags = observations
             .iter()
             .filter_map(Observation::needs_saturation);
         by_relations
             .chain(by_tags)
             .for_each(|s| needs_saturation[s.0] = true);
+        let chains = chains(&relations, &layout);
         System {
             layout,
             relations,
             observations,
             on_saturation,
+            chains,
             structure,
             needs_saturation,
         }
@@ -188,7 +192,7 @@ impl System {
     pub fn residual(&self, k: usize, x: &[f64]) -> Option<(f64, Vec<f64>)> {
         let relation = &self.relations[k];
         let mut saturations = vec![None; self.layout.streams()];
-        if let Some(s) = relation.needs_saturation() {
+        for s in relation.needs_saturation() {
             saturations[s.0] = self.saturation(s, x);
         }
         let mut gradient = vec![0.0; relation.row.len()];
@@ -289,6 +293,28 @@ impl<'a> Case<'a> {
             }
         }
         Ok(states)
+    }
+
+    /// The part of a step that no pump's rise of enthalpy changes by more than a
+    /// factor: its efficiency has a pole at no rise, and a step across it leads
+    /// to a false minimum. The whole step is shortened, so that it stays a
+    /// direction of descent.
+    fn rise_limit(&self, x: &[f64], step: &[f64]) -> f64 {
+        let layout = &self.system.layout;
+        let observations = self.system.observations.iter().zip(&self.measured);
+        let pumps = observations.filter(|(_, measured)| measured.is_some());
+        let mut part = 1.0_f64;
+        for (from, to) in pumps.filter_map(|(observation, _)| observation.compression()) {
+            let (from, to) = (layout.h(from), layout.h(to));
+            let (rise, change) = (x[to] - x[from], step[to] - step[from]);
+            let growth = change / rise;
+            if growth > RISE_STEP - 1.0 {
+                part = part.min((RISE_STEP - 1.0) / growth);
+            } else if growth < 1.0 / RISE_STEP - 1.0 {
+                part = part.min((1.0 / RISE_STEP - 1.0) / growth);
+            }
+        }
+        part
     }
 
     /// Saturated states of the streams that relations, tags or modes need.
@@ -393,16 +419,9 @@ impl Problem for Case<'_> {
             let (low, high) = pressure_range(x[b]);
             bend(x[b], &mut step[b], low, high);
         }
-        for (observation, measured) in self.system.observations.iter().zip(&self.measured) {
-            if let (Some((from, to)), Some(_)) = (observation.compression(), measured) {
-                // The efficiency of a pump has a pole at no rise of enthalpy,
-                // and a step across it leads to a false minimum.
-                let (from, to) = (layout.h(from), layout.h(to));
-                let rise = x[to] - x[from];
-                let new_from = x[from] + step[from];
-                let (least, most) = (new_from + rise / RISE_STEP, new_from + rise * RISE_STEP);
-                bend(x[to], &mut step[to], least.min(most), least.max(most));
-            }
+        let shortened = self.rise_limit(x, step);
+        if shortened < 1.0 {
+            step.iter_mut().for_each(|s| *s *= shortened);
         }
     }
 }
@@ -416,4 +435,26 @@ fn bend(from: f64, step: &mut f64, low: f64, high: f64) {
     } else if to > high {
         *step = high - from;
     }
+}
+
+/// Streams joined by "equal enthalpy" relations, in the order of their first
+/// members; a stream that none joins is a chain of its own.
+fn chains(relations: &[Relation], layout: &Layout) -> Vec<Vec<StreamId>> {
+    let mut chain_of: Vec<usize> = (0..layout.streams()).collect();
+    let equal = Role::Condition("equal enthalpy");
+    for relation in relations.iter().filter(|r| r.role == equal) {
+        let ends: Vec<usize> = relation.row.iter().map(|&j| chain_of[j / 3]).collect();
+        let least = ends.iter().copied().min().unwrap_or_default();
+        for chain in &mut chain_of {
+            if ends.contains(chain) {
+                *chain = least;
+            }
+        }
+    }
+    let mut chains = vec![Vec::new(); layout.streams()];
+    for (s, &chain) in chain_of.iter().enumerate() {
+        chains[chain].push(StreamId(s));
+    }
+    chains.retain(|chain| !chain.is_empty());
+    chains
 }

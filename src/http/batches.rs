@@ -4,12 +4,12 @@ use super::body::{self, Permit, media_type};
 use super::error::{Kind, Problem};
 use super::headers::{encode, next_link, prefers_async, value};
 use super::observe::RequestId;
-use super::params::{Params, cursor_text, with_cursor};
+use super::params::{Address, Params, cursor_text, with_cursor};
 use super::{App, shapes};
 use crate::report::{Report, Verdict};
 use crate::store::{BatchLine, BatchQuery, Stored};
 use axum::body::{Body, Bytes};
-use axum::extract::{Path, Request, State};
+use axum::extract::{Request, State};
 use axum::http::{HeaderName, StatusCode, Uri, header};
 use axum::response::{IntoResponse, Response};
 use axum::{Extension, Json};
@@ -38,7 +38,7 @@ pub(super) struct Pending {
     #[schema(example = "accepted")]
     status: &'static str,
     /// Where its report will be.
-    #[schema(example = "/v1/plants/tarn-mill/batches/2031-04-02T10%3A05Z")]
+    #[schema(example = "/v1/plants/tarn-mill/batches/2026-03-17T10%3A05Z")]
     location: String,
 }
 
@@ -102,7 +102,7 @@ struct BatchItem {
 )]
 pub(super) async fn post(
     State(app): State<App>,
-    Path(plant): Path<String>,
+    Address(plant): Address<String>,
     Extension(id): Extension<RequestId>,
     permit: Permit,
     request: Request,
@@ -200,7 +200,7 @@ fn many(
     // Later work holds the permit too, until the last line is finished.
     let permit = Arc::new(permit);
     let plant: Arc<str> = plant.into();
-    let answers = futures::stream::iter(lines(&body)).map(move |(number, line)| {
+    let answers = futures::stream::iter(lines(body)).map(move |(number, line)| {
         let (app, plant, permit, id) = (
             app.clone(),
             Arc::clone(&plant),
@@ -226,13 +226,18 @@ fn many(
     (status, [(header::CONTENT_TYPE, NDJSON)], body).into_response()
 }
 
-/// Lines that are not blank, with their numbers from 1.
-fn lines(body: &Bytes) -> Vec<(usize, Bytes)> {
-    let lines = body.split(|&byte| byte == b'\n').map(<[u8]>::trim_ascii);
-    let numbered = lines.enumerate().filter(|(_, line)| !line.is_empty());
-    numbered
-        .map(|(index, line)| (index + 1, body.slice_ref(line)))
-        .collect()
+/// Lines that are not blank, with their numbers from 1, one at a time: a list of
+/// them would be many times as large as a body of nothing but short lines.
+fn lines(mut rest: Bytes) -> impl Iterator<Item = (usize, Bytes)> + Send {
+    let lines = std::iter::from_fn(move || {
+        if rest.is_empty() {
+            return None;
+        }
+        let end = rest.iter().position(|&byte| byte == b'\n');
+        let line = rest.split_to(end.map_or(rest.len(), |end| end + 1));
+        Some(line.slice_ref(line.trim_ascii()))
+    });
+    (1..).zip(lines).filter(|(_, line)| !line.is_empty())
 }
 
 async fn line_now(app: &App, plant: &str, line: Bytes) -> Result<Vec<u8>, Problem> {
@@ -282,7 +287,7 @@ fn json(value: &impl Serialize) -> Result<Vec<u8>, Problem> {
 )]
 pub(super) async fn list(
     State(app): State<App>,
-    Path(plant): Path<String>,
+    Address(plant): Address<String>,
     uri: Uri,
 ) -> Result<Response, Problem> {
     let mut params = Params::new(&uri);
@@ -329,7 +334,7 @@ fn item(line: BatchLine) -> BatchItem {
     get, path = "/v1/plants/{plant}/batches/{batch}", operation_id = "get_report", tag = "batches",
     params(
         ("plant" = String, Path, description = "Name of the plant", example = "tarn-mill"),
-        ("batch" = String, Path, description = "The client's name for the batch, percent-encoded", example = "2031-04-02T10%3A05Z"),
+        ("batch" = String, Path, description = "The client's name for the batch, percent-encoded", example = "2026-03-17T10%3A05Z"),
     ),
     responses(
         (status = 200, description = "The report", body = Report),
@@ -340,7 +345,7 @@ fn item(line: BatchLine) -> BatchItem {
 )]
 pub(super) async fn get(
     State(app): State<App>,
-    Path((plant, batch)): Path<(String, String)>,
+    Address((plant, batch)): Address<(String, String)>,
     uri: Uri,
 ) -> Result<Response, Problem> {
     Params::new(&uri).finish()?;

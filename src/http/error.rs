@@ -164,7 +164,7 @@ pub struct Problem {
     /// What is wrong this time.
     #[schema(value_type = String, example = "1 fault in the batch")]
     detail: Box<str>,
-    /// Id of the request, as in its `x-request-id`.
+    /// Id of the request, as in its `x-request-id`; empty where there was none.
     #[schema(value_type = String, example = "0195f3a8-6c1e-7d0a-9f53-2b8c4e1f7a60")]
     instance: Box<str>,
     /// Every fault of the content.

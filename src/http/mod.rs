@@ -128,7 +128,11 @@ impl App {
 /// All routes.
 pub fn router(app: App) -> axum::Router {
     let (routes, document) = openapi::routes().split_for_parts();
-    let docs = utoipa_swagger_ui::SwaggerUi::new("/docs").url("/openapi.json", document);
+    // Its badge would have another host read the document.
+    let no_badge = utoipa_swagger_ui::Config::default().validator_url("none");
+    let docs = utoipa_swagger_ui::SwaggerUi::new("/docs")
+        .config(no_badge)
+        .url("/openapi.json", document);
     // A strong entity tag names one exact sequence of bytes, so what carries
     // one is sent as it is.
     let untagged = |_, _, headers: &axum::http::HeaderMap, _: &axum::http::Extensions| {

@@ -1,10 +1,13 @@
-//! Query parameters: unknown ones refused, repeated ones allowed where they
+//! Names in the path, and query parameters: unknown ones refused, repeated ones allowed where they
 //! mean something, every fault at once.
 
 use super::error::{Kind, Problem, count};
 use crate::plant::{Fault, Severity};
 use crate::store::Cursor;
+use axum::extract::{FromRequestParts, Path};
 use axum::http::Uri;
+use axum::http::request::Parts;
+use serde::de::DeserializeOwned;
 use std::str::FromStr;
 use time::format_description::well_known::Rfc3339;
 use time::{OffsetDateTime, UtcOffset};
@@ -13,6 +16,27 @@ use time::{OffsetDateTime, UtcOffset};
 pub(super) struct Params {
     pairs: Vec<(String, String)>,
     faults: Vec<Fault>,
+}
+
+/// The names in the path of a request, decoded.
+pub(super) struct Address<T>(pub T);
+
+impl<T, S> FromRequestParts<S> for Address<T>
+where
+    T: DeserializeOwned + Send,
+    S: Send + Sync,
+{
+    type Rejection = Problem;
+
+    async fn from_request_parts(parts: &mut Parts, state: &S) -> Result<Self, Problem> {
+        match Path::from_request_parts(parts, state).await {
+            Ok(Path(names)) => Ok(Address(names)),
+            Err(_) => Err(Problem::new(
+                Kind::BadParameter,
+                "a name in the address is not UTF-8, percent-encoded",
+            )),
+        }
+    }
 }
 
 impl Params {
@@ -27,7 +51,8 @@ impl Params {
         }
     }
 
-    fn fault(&mut self, name: &str, what: impl Into<String>, mend: impl Into<String>) {
+    /// Notes what is wrong with a parameter.
+    pub fn fault(&mut self, name: &str, what: impl Into<String>, mend: impl Into<String>) {
         self.faults.push(Fault {
             severity: Severity::Error,
             path: format!("?{name}"),
@@ -81,7 +106,7 @@ impl Params {
     pub fn time(&mut self, name: &str) -> Option<OffsetDateTime> {
         // An unencoded plus sign of an offset arrives as a space.
         let mend =
-            "write it as in RFC 3339: 2031-04-02T10:05:00Z, or with %2B for the + of an offset";
+            "write it as in RFC 3339: 2026-03-17T10:05:00Z, or with %2B for the + of an offset";
         self.choose(name, mend, |text| {
             let time = OffsetDateTime::parse(&text.replace(' ', "+"), &Rfc3339).ok()?;
             Some(time.to_offset(UtcOffset::UTC))

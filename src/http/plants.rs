@@ -5,13 +5,13 @@ use super::body::{self, Permit, media_type};
 use super::engine::compute;
 use super::error::{Kind, Problem, count};
 use super::headers::{accepted, encode, entity_tag, has_already, next_link, precondition, value};
-use super::params::{Params, with_cursor};
+use super::params::{Address, Params, with_cursor};
 use super::revisions::{JSON, TOML, format_of};
 use crate::plant::{self, Fault, PlantFile, Severity};
 use crate::report::Assessment;
 use crate::store::{NewPlant, PutOutcome, StoredPlant};
 use axum::Json;
-use axum::extract::{Path, Request, State};
+use axum::extract::{Request, State};
 use axum::http::{HeaderMap, StatusCode, Uri, header};
 use axum::response::{IntoResponse, Response};
 use serde::Serialize;
@@ -83,7 +83,7 @@ struct PlantItem {
 )]
 pub(super) async fn put(
     State(app): State<App>,
-    Path(name): Path<String>,
+    Address(name): Address<String>,
     _permit: Permit,
     request: Request,
 ) -> Result<Response, Problem> {
@@ -189,7 +189,7 @@ fn answer(status: StatusCode, stored: &StoredPlant, warnings: Vec<Fault>) -> Res
 )]
 pub(super) async fn get(
     State(app): State<App>,
-    Path(name): Path<String>,
+    Address(name): Address<String>,
     uri: Uri,
     headers: HeaderMap,
 ) -> Result<Response, Problem> {
@@ -282,7 +282,7 @@ pub(super) async fn list(State(app): State<App>, uri: Uri) -> Result<Response, P
 )]
 pub(super) async fn assessment(
     State(app): State<App>,
-    Path(name): Path<String>,
+    Address(name): Address<String>,
     uri: Uri,
 ) -> Result<Json<Assessment>, Problem> {
     let revision = app

@@ -3,12 +3,12 @@
 use super::App;
 use super::error::{Kind, Problem};
 use super::headers::{accepted, next_link, value};
-use super::params::{Params, cursor_text, with_cursor};
+use super::params::{Address, Params, cursor_text, with_cursor};
 use super::revisions::JSON;
 use crate::report::Verdict;
 use crate::store::{Column, Field, Selector, SeriesPage, SeriesQuery};
 use axum::Json;
-use axum::extract::{Path, State};
+use axum::extract::State;
 use axum::http::{HeaderMap, Uri, header};
 use axum::response::{IntoResponse, Response};
 use serde::Serialize;
@@ -30,6 +30,23 @@ const FIELDS: [(&str, Field); 7] = [
     ("uncertainty-measured", Field::UncertaintyMeasured),
     ("redundancy", Field::Redundancy),
     ("standardised", Field::Standardised),
+];
+
+/// Quantities of a stream.
+const STREAM: &[&str] = &["mass_flow", "pressure", "temperature", "enthalpy"];
+
+/// Stands for the name of a side.
+const SIDE: &str = "SIDE";
+
+/// Quantities of a piece of equipment.
+const EQUIPMENT: &[&str] = &[
+    "heat",
+    "work",
+    "power",
+    "loss",
+    "holdup_change",
+    "imbalance.energy",
+    "imbalance.mass.SIDE",
 ];
 
 /// Numbers over time: as many values in each series as there are batches.
@@ -92,7 +109,7 @@ struct Series {
     responses(
         (status = 200, description = "The earliest period first", headers(("Link" = String, description = "rel=\"next\": where it goes on")), content(
             (SeriesDocument = "application/json"),
-            (String = "text/csv", example = "batch,start,end,verdict,FT-201 [t/h]\n2031-04-02T10:05Z,2031-04-02T10:00:00Z,2031-04-02T10:05:00Z,consistent,371.2\n"),
+            (String = "text/csv", example = "batch,start,end,verdict,FT-201 [t/h]\n2026-03-17T10:05Z,2026-03-17T10:00:00Z,2026-03-17T10:05:00Z,consistent,371.2\n"),
         )),
         (status = 404, description = "There is no such plant, tag or quantity", body = Problem, content_type = "application/problem+json"),
         (status = "default", description = "Any other problem", body = Problem, content_type = "application/problem+json"),
@@ -100,7 +117,7 @@ struct Series {
 )]
 pub(super) async fn get(
     State(app): State<App>,
-    Path(plant): Path<String>,
+    Address(plant): Address<String>,
     uri: Uri,
     headers: HeaderMap,
 ) -> Result<Response, Problem> {
@@ -138,8 +155,18 @@ type Reading = (SeriesQuery, &'static str, Option<&'static str>);
 fn read(uri: &Uri, plant: String) -> Result<Reading, Problem> {
     let mut params = Params::new(uri);
     let mut selectors: Vec<Selector> = params.all("tag").into_iter().map(Selector::Tag).collect();
-    for name in ["stream", "equipment"] {
-        selectors.extend(params.all(name).into_iter().map(Selector::Quantity));
+    for (owner, quantities) in [("stream", STREAM), ("equipment", EQUIPMENT)] {
+        for name in params.all(owner) {
+            if !is_quantity(&name, quantities) {
+                let what = format!("\"{name}\" names no quantity of {owner}");
+                let mend = format!(
+                    "write NAME.QUANTITY, the quantity one of {}",
+                    quantities.join(", ")
+                );
+                params.fault(owner, what, mend);
+            }
+            selectors.push(Selector::Quantity(name));
+        }
     }
     let names: Vec<&str> = FIELDS.iter().map(|(name, _)| *name).collect();
     let mend = format!("one of {}", names.join(", "));
@@ -170,6 +197,22 @@ fn read(uri: &Uri, plant: String) -> Result<Reading, Problem> {
     Err(Problem::new(Kind::BadParameter, detail))
 }
 
+/// Whether a name ends in one of some quantities; no stream and no equipment
+/// has a dot in its own name.
+fn is_quantity(name: &str, quantities: &[&str]) -> bool {
+    let Some((_, quantity)) = name.split_once('.') else {
+        return false;
+    };
+    quantities
+        .iter()
+        .any(|known| match known.strip_suffix(SIDE) {
+            Some(prefix) => quantity
+                .strip_prefix(prefix)
+                .is_some_and(|side| !side.is_empty()),
+            None => quantity == *known,
+        })
+}
+
 /// Refuses names that no report and no plant file has.
 fn unknown(columns: &[Column], plant: &crate::plant::Plant) -> Result<(), Problem> {
     let is_known = |column: &Column| {
@@ -184,8 +227,11 @@ fn unknown(columns: &[Column], plant: &crate::plant::Plant) -> Result<(), Proble
                 }
                 Selector::Quantity(name) => {
                     let of = name.split('.').next().unwrap_or_default();
-                    plant.streams.iter().any(|stream| stream.name == of)
-                        || plant.equipment.iter().any(|equipment| equipment.name == of)
+                    if is_quantity(name, STREAM) {
+                        plant.streams.iter().any(|stream| stream.name == of)
+                    } else {
+                        plant.equipment.iter().any(|equipment| equipment.name == of)
+                    }
                 }
             }
     };

@@ -10,9 +10,9 @@ use utoipa::ToSchema;
 /// A batch: the readings of one period.
 #[derive(Deserialize, ToSchema)]
 #[schema(example = json!({
-    "batch": "2031-04-02T10:05Z",
-    "start": "2031-04-02T10:00:00Z",
-    "end": "2031-04-02T10:05:00Z",
+    "batch": "2026-03-17T10:05Z",
+    "start": "2026-03-17T10:00:00Z",
+    "end": "2026-03-17T10:05:00Z",
     "readings": [
         {"tag": "FT-201", "value": 371.2, "quality": "good"},
         {"tag": "TT-201", "value": null, "quality": "bad"},

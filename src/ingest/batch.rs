@@ -2,7 +2,8 @@
 
 use super::LONGEST_NAME;
 use super::digest;
-use super::json::{self, Faults, Member, Node, Path, Value, shorten};
+use super::faults::{Faults, Path};
+use super::json::{self, Member, Node, Value, shorten};
 use crate::plant::{Batch, Fault, Grade, Quality, Reading};
 use std::collections::HashMap;
 use time::format_description::well_known::Rfc3339;
@@ -35,8 +36,9 @@ pub struct Refusal {
 ///
 /// # Errors
 ///
-/// Every fault of the body at once, each with its JSON pointer, line and
-/// column.
+/// Every fault of the body at once, in the order of the text, each with its JSON
+/// pointer, line and column; of a crowd of them the first thousand that were
+/// found, and one without a place that counts the others.
 pub fn parse(body: &[u8], now: OffsetDateTime) -> Result<Parsed, Refusal> {
     let source = match std::str::from_utf8(body) {
         Ok(source) => source,
@@ -46,7 +48,7 @@ pub fn parse(body: &[u8], now: OffsetDateTime) -> Result<Parsed, Refusal> {
     let Ok(root) = json::read(source, &mut faults) else {
         return Err(Refusal {
             syntax: true,
-            faults: faults.found,
+            faults: faults.finish(),
         });
     };
     let mut reader = Reader {
@@ -55,10 +57,10 @@ pub fn parse(body: &[u8], now: OffsetDateTime) -> Result<Parsed, Refusal> {
     };
     let draft = reader.batch(&root);
     match draft {
-        Some(draft) if reader.faults.found.is_empty() => Ok(draft.finish()),
+        Some(draft) if reader.faults.is_empty() => Ok(draft.finish()),
         _ => Err(Refusal {
             syntax: reader.faults.syntax,
-            faults: reader.faults.found,
+            faults: reader.faults.finish(),
         }),
     }
 }
@@ -75,7 +77,7 @@ fn not_utf8(body: &[u8], valid: usize) -> Refusal {
     );
     Refusal {
         syntax: true,
-        faults: faults.found,
+        faults: faults.finish(),
     }
 }
 
@@ -134,14 +136,14 @@ impl<'a> Reader<'a> {
                 "batch",
                 "the name of the batch, unique in its plant",
             )
-            .and_then(|node| self.name(&Path::Key(&path, "batch"), node));
+            .and_then(|node| self.batch_name(&Path::Key(&path, "batch"), node));
         let start = self
             .required(
                 &path,
                 root,
                 members,
                 "start",
-                "the start of the period, as 2031-04-02T10:00:00Z",
+                "the start of the period, as 2026-03-17T10:00:00Z",
             )
             .and_then(|node| {
                 self.time(&Path::Key(&path, "start"), node)
@@ -153,7 +155,7 @@ impl<'a> Reader<'a> {
                 root,
                 members,
                 "end",
-                "the end of the period, as 2031-04-02T10:05:00Z",
+                "the end of the period, as 2026-03-17T10:05:00Z",
             )
             .and_then(|node| {
                 self.time(&Path::Key(&path, "end"), node)
@@ -314,7 +316,7 @@ impl<'a> Reader<'a> {
                     code: Some(code),
                 }),
                 Err(_) => {
-                    let what = format!("{text} is no status code of 32 bits");
+                    let what = format!("{} is no status code of 32 bits", shorten(text));
                     self.faults.add(path, node.offset, what, MEND);
                     None
                 }
@@ -330,7 +332,7 @@ impl<'a> Reader<'a> {
 
     fn time(&mut self, path: &Path<'_>, node: &Node<'a>) -> Option<OffsetDateTime> {
         const MEND: &str =
-            "write it as in RFC 3339, with seconds and offset: 2031-04-02T10:05:00+02:00";
+            "write it as in RFC 3339, with seconds and offset: 2026-03-17T10:05:00+02:00";
         let Value::String(text) = &node.value else {
             self.wrong_type(path, node, "a time", MEND);
             return None;
@@ -358,6 +360,19 @@ impl<'a> Reader<'a> {
             return None;
         }
         Some(time)
+    }
+
+    /// A name that can stand in the address of the report.
+    fn batch_name(&mut self, path: &Path<'_>, node: &Node<'a>) -> Option<String> {
+        let name = self.name(path, node)?;
+        // Clients resolve such a segment away, encoded or not (RFC 3986, 6.2.2.3).
+        if matches!(name.as_str(), "." | "..") {
+            let what = format!("\"{name}\" cannot stand in an address");
+            self.faults
+                .add(path, node.offset, what, "give the batch another name");
+            return None;
+        }
+        Some(name)
     }
 
     fn name(&mut self, path: &Path<'_>, node: &Node<'a>) -> Option<String> {

@@ -85,6 +85,57 @@ fn every_fault_is_told_at_once() {
     );
 }
 
+/// One line, and as many lines as faults: neither may cost more than a walk
+/// through the text, nor an answer larger than some hundred kilobytes.
+#[test]
+fn a_crowd_of_faults_is_answered_in_bounded_size() {
+    let items = 1_000_000;
+    for separator in [",", ",\n"] {
+        let body = with_readings(&format!("[1{}]", format!("{separator}1").repeat(items - 1)));
+        let refusal = parse(body.as_bytes(), NOW).expect_err("a refusal");
+        assert_eq!(refusal.faults.len(), 1001);
+        let size: usize = refusal
+            .faults
+            .iter()
+            .map(|f| f.path.len() + f.what.len() + f.mend.len())
+            .sum();
+        assert!(size < 200_000, "{size} bytes");
+        assert_eq!(refusal.faults[999].path, "/readings/999");
+        let first = body.find("[1").expect("a list") + 1;
+        let place = (refusal.faults[999].line, refusal.faults[999].column);
+        let expected = match separator {
+            "," => (1, first + 1 + 2 * 999),
+            _ => (1000, 1),
+        };
+        assert_eq!(place, (Some(expected.0), Some(expected.1)));
+        let last = &refusal.faults[1000];
+        assert!(last.what.contains("999000 more"), "{}", last.what);
+    }
+}
+
+#[test]
+fn a_long_key_does_not_swell_every_fault_below_it() {
+    let body = format!(
+        "{{\"{}\": [{}1]}}",
+        "k".repeat(1 << 20),
+        "NaN, ".repeat(2000)
+    );
+    let refusal = parse(body.as_bytes(), NOW).expect_err("a refusal");
+    assert!(refusal.syntax);
+    assert_eq!(refusal.faults.len(), 1001);
+    assert!(refusal.faults.iter().all(|fault| fault.path.len() < 220));
+}
+
+#[test]
+fn a_name_that_no_address_can_hold_is_refused() {
+    for name in [".", ".."] {
+        let body = with_readings("[]").replace("\"b\"", &format!("\"{name}\""));
+        assert_eq!(paths(&body), ["/batch"], "{name}");
+    }
+    let body = with_readings("[]").replace("\"b\"", "\"...\"");
+    assert!(parse(body.as_bytes(), NOW).is_ok());
+}
+
 #[test]
 fn what_is_missing_is_named() {
     assert_eq!(paths("{}"), ["/batch", "/start", "/end", "/readings"]);

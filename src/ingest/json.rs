@@ -6,7 +6,7 @@
 //! the text means anything.
 
 use super::DEEPEST_NESTING;
-use crate::plant::{Fault, Severity};
+use super::faults::{Faults, Path};
 use std::borrow::Cow;
 use std::collections::HashSet;
 
@@ -39,77 +39,6 @@ pub(super) struct Member<'a> {
     pub offset: usize,
     pub key: Cow<'a, str>,
     pub node: Node<'a>,
-}
-
-/// A JSON pointer (RFC 6901), as a list that grows towards the root.
-#[derive(Clone, Copy)]
-pub(super) enum Path<'p> {
-    Root,
-    Key(&'p Path<'p>, &'p str),
-    Index(&'p Path<'p>, usize),
-}
-
-impl Path<'_> {
-    pub fn pointer(&self) -> String {
-        match self {
-            Path::Root => String::new(),
-            Path::Key(parent, key) => {
-                let key = key.replace('~', "~0").replace('/', "~1");
-                format!("{}/{key}", parent.pointer())
-            }
-            Path::Index(parent, index) => format!("{}/{index}", parent.pointer()),
-        }
-    }
-}
-
-/// Collects faults and turns offsets into lines and columns.
-pub(super) struct Faults<'a> {
-    source: &'a str,
-    pub found: Vec<Fault>,
-    /// Some of them are faults of the JSON itself.
-    pub syntax: bool,
-}
-
-impl<'a> Faults<'a> {
-    pub fn new(source: &'a str) -> Self {
-        Faults {
-            source,
-            found: Vec::new(),
-            syntax: false,
-        }
-    }
-
-    pub fn add(
-        &mut self,
-        path: &Path<'_>,
-        offset: usize,
-        what: impl Into<String>,
-        mend: impl Into<String>,
-    ) {
-        let before = &self.source[..offset];
-        let line_start = before.rfind('\n').map_or(0, |newline| newline + 1);
-        let line = before.matches('\n').count() + 1;
-        let column = before[line_start..].chars().count() + 1;
-        self.found.push(Fault {
-            severity: Severity::Error,
-            path: path.pointer(),
-            line: Some(line),
-            column: Some(column),
-            what: what.into(),
-            mend: mend.into(),
-        });
-    }
-
-    fn add_syntax(
-        &mut self,
-        path: &Path<'_>,
-        offset: usize,
-        what: impl Into<String>,
-        mend: impl Into<String>,
-    ) {
-        self.syntax = true;
-        self.add(path, offset, what, mend);
-    }
 }
 
 /// Broken syntax: noted, and nothing after it can be read.
@@ -234,7 +163,7 @@ impl<'a> Reader<'a, '_> {
                 self.faults.add(
                     &Path::Key(path, &key),
                     offset,
-                    format!("the key \"{key}\" stands twice in one object"),
+                    format!("the key \"{}\" stands twice in one object", shorten(&key)),
                     "leave one of the two out",
                 );
             }
@@ -310,7 +239,10 @@ impl<'a> Reader<'a, '_> {
             self.faults.add(
                 path,
                 offset,
-                format!("the number {text} is beyond the range of a double"),
+                format!(
+                    "the number {} is beyond the range of a double",
+                    shorten(text)
+                ),
                 "send null with quality \"bad\" where there is no value",
             );
             return Ok(Value::Faulty);

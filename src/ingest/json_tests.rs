@@ -6,7 +6,7 @@ fn faults(source: &str) -> Vec<(String, String)> {
     let mut faults = Faults::new(source);
     let _ = read(source, &mut faults);
     faults
-        .found
+        .finish()
         .into_iter()
         .map(|fault| (fault.path, fault.what))
         .collect()
@@ -84,6 +84,6 @@ fn places_are_lines_and_columns_in_characters() {
     let source = "{\n  \"\u{e9}\": 1, NaN";
     let mut notes = Faults::new(source);
     let _ = read(source, &mut notes);
-    let fault = &notes.found[0];
+    let fault = &notes.finish()[0];
     assert_eq!((fault.line, fault.column), (Some(2), Some(11)));
 }

@@ -12,6 +12,7 @@
 
 mod batch;
 mod digest;
+mod faults;
 mod json;
 
 pub use batch::{FUTURE_ALLOWANCE, Parsed, Refusal, parse};

@@ -12,7 +12,7 @@ use super::solution::Solution;
 use super::tags::class;
 use crate::diagnosis::detectable_bias;
 use crate::equations::{Measured, StateKind, start};
-use crate::plant::{Sigma, StreamId, Uncertainty, Unit};
+use crate::plant::{Quantity, Sigma, StreamId, Uncertainty, Unit};
 use crate::report::{
     AssessedQuantity, AssessedStream, AssessedTag, Assessment, Class, Observability,
 };
@@ -22,17 +22,20 @@ use std::collections::BTreeSet;
 /// Part of its range that a tag without a normal reading is taken to read.
 const PART_OF_RANGE: f64 = 0.7;
 
+/// Factor on the sigma of readings that are only guessed.
+const LOOSE: f64 = 10.0;
+
 /// What the tags can and cannot determine.
 pub fn assess(compiled: &Compiled) -> Assessment {
-    let found = operating_point(compiled);
-    let operating_point = match &found {
-        Ok(_) => {
-            "normal readings of the plant file, and what they predict for the tags without one"
-                .to_owned()
-        }
-        Err(reason) => format!("none was found: {reason}"),
-    };
+    let (found, trouble) = operating_point(compiled);
     let plant = compiled.plant();
+    let guessed: Vec<&str> = plant
+        .tags
+        .iter()
+        .filter(|tag| tag.normal.is_none())
+        .map(|tag| tag.name.as_str())
+        .collect();
+    let operating_point = in_words(&guessed, trouble.as_deref());
     let system = compiled.system();
     let mut assessment = Assessment {
         plant: plant.name.clone(),
@@ -48,9 +51,6 @@ pub fn assess(compiled: &Compiled) -> Assessment {
         streams: IndexMap::new(),
         unobservable: Vec::new(),
         warnings: Vec::new(),
-    };
-    let Ok(found) = found else {
-        return assessment;
     };
     let class_set = class_set::apart(compiled, &found);
     let solution = Solution::new(compiled, &found, &class_set);
@@ -76,43 +76,86 @@ pub fn assess(compiled: &Compiled) -> Assessment {
     assessment
 }
 
-/// Solves the plant at its normal readings; tags without one then read what
-/// the solution predicts for them.
-fn operating_point(compiled: &Compiled) -> Result<Found<'_>, String> {
+/// Solves the plant at its normal readings.
+///
+/// A tag without one reads at first, loosely, what the start predicts for it,
+/// and then what the solution does. Where no solution is found the start itself
+/// serves: rank is the same at almost every point.
+fn operating_point(compiled: &Compiled) -> (Found<'_>, Option<String>) {
     let plant = compiled.plant();
     let system = compiled.system();
     let assumptions = plant
         .assumptions
         .iter()
         .map(|a| measured(&a.unit, a.value, &a.uncertainty));
-    let mut known: Vec<Option<Measured>> = plant
+    let known: Vec<Option<Measured>> = plant
         .tags
         .iter()
         .map(|tag| {
             let of_range = |(low, high): (f64, f64)| low + PART_OF_RANGE * (high - low);
-            let reading = tag.normal.or_else(|| tag.range.map(of_range))?;
+            // The range of a thermometer says little of what it reads.
+            let reads_in_range = !matches!(tag.quantity, Quantity::Temperature(_));
+            let range = tag.range.filter(|_| reads_in_range);
+            let reading = tag.normal.or_else(|| range.map(of_range))?;
             measured(&tag.unit, reading, &tag.uncertainty)
         })
         .chain(assumptions)
         .collect();
-    let found = attempt(compiled, &known);
-    let x = match &found {
-        Ok(found) => found.outcome.x.clone(),
-        Err(_) => start(plant, system, &known).x,
+    let started = start(plant, system, &known, 1.0).x;
+    let loosely = complete(compiled, &known, &started, LOOSE);
+    let x = match attempt(compiled, &loosely) {
+        Ok(found) => found.outcome.x,
+        Err(_) => started,
     };
-    let complete = known[..plant.tags.len()].iter().all(Option::is_some);
-    if complete && let Ok(found) = found {
-        return Ok(found);
+    // What was not stated now reads what the solution says.
+    let exactly = complete(compiled, &known, &x, 1.0);
+    match attempt(compiled, &exactly) {
+        Ok(found) => (found, None),
+        Err(reason) => (Found::unsolved(compiled, exactly, &x), Some(reason)),
     }
-    for (i, tag) in plant.tags.iter().enumerate() {
-        if (known[i].is_none() || found.is_err())
-            && let Some((value, _)) = system.predict(i, &x)
-        {
-            let reading = tag.unit.from_internal(value);
-            known[i] = measured(&tag.unit, reading, &tag.uncertainty);
+}
+
+/// Readings of all tags: the known ones, and what `x` predicts for the others
+/// with `widened` times their sigma.
+fn complete(
+    compiled: &Compiled,
+    known: &[Option<Measured>],
+    x: &[f64],
+    widened: f64,
+) -> Vec<Option<Measured>> {
+    let mut readings = known.to_vec();
+    for (i, tag) in compiled.plant().tags.iter().enumerate() {
+        if readings[i].is_some() {
+            continue;
         }
+        let predicted = compiled.system().predict(i, x);
+        let reading = predicted.map(|(value, _)| tag.unit.from_internal(value));
+        readings[i] = reading
+            .and_then(|reading| measured(&tag.unit, reading, &tag.uncertainty))
+            .and_then(|m| {
+                Some(Measured {
+                    sigma: Sigma::new(m.sigma.get() * widened)?,
+                    ..m
+                })
+            });
     }
-    attempt(compiled, &known)
+    readings
+}
+
+/// The operating point for people.
+fn in_words(guessed: &[&str], trouble: Option<&str>) -> String {
+    if let Some(reason) = trouble {
+        return format!(
+            "a rough guess, since no solution was found ({reason}): classes hold, redundancies and detectable errors are rough; `normal` readings of the tags would help"
+        );
+    }
+    match guessed {
+        [] => "the normal readings of the plant file".to_owned(),
+        _ => format!(
+            "the normal readings of the plant file, and for {} without one a guess from their range or from the others: redundancies are rough there",
+            guessed.join(", ")
+        ),
+    }
 }
 
 fn measured(unit: &Unit, reading: f64, uncertainty: &Uncertainty) -> Option<Measured> {
@@ -145,15 +188,16 @@ fn assessed_tag(solution: &Solution, i: usize, unit: &Unit) -> AssessedTag {
 
 fn assessed_stream(compiled: &Compiled, solution: &Solution, s: StreamId) -> AssessedStream {
     let layout = &compiled.system().layout;
-    let of = |gradient: &[(usize, f64)]| match solution.is_observable(gradient) {
+    let class = |observable| match observable {
         true => Observability::Observable,
         false => Observability::Unobservable,
     };
+    let state = |j: usize| class(solution.is_observable(&[(j, 1.0)]));
     AssessedStream {
-        mass_flow: of(&[(layout.m(s), 1.0)]),
-        pressure: of(&[(layout.p(s), 1.0)]),
-        temperature: of(&solution.temperature(s).1),
-        enthalpy: of(&[(layout.h(s), 1.0)]),
+        mass_flow: state(layout.m(s)),
+        pressure: state(layout.p(s)),
+        temperature: class(solution.temperature(s).is_some()),
+        enthalpy: state(layout.h(s)),
     }
 }
 
@@ -178,7 +222,7 @@ fn unobservable(compiled: &Compiled, solution: &Solution) -> Vec<AssessedQuantit
             } else {
                 let more = if others > together.len() { " and others" } else { "" };
                 format!(
-                    "it can move together with {}{more} without any tag or balance noticing; a tag for one of them would determine it",
+                    "it can move together with {}{more} without any tag or balance noticing; a tag for one of them would take away one of these freedoms",
                     together.join(", ")
                 )
             };

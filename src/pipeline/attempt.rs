@@ -2,13 +2,21 @@
 //! saturation line where the first may be a false minimum.
 
 use super::compiled::Compiled;
-use super::phases;
+use super::phases::{self, Intervals};
 use crate::equations::{Case, Measured, Modes, Relation, Role, Start, start};
-use crate::plant::StreamId;
-use crate::solver::{Hold, Options, Outcome, Problem, Reason, Status, solve};
+use crate::plant::{Sigma, StreamId};
+use crate::solver::{Evaluation, Hold, Options, Outcome, Problem, Reason, Status, solve};
 
 /// Steps in which the start is held, one attempt after another.
-const HELD_STEPS: [usize; 3] = [2, 6, 0];
+const HELD_STEPS: [usize; 4] = [2, 6, 0, 40];
+
+/// Factors on pressures that the start only guesses, one attempt after another.
+const PRESSURE_FACTORS: [f64; 3] = [1.0, 8.0, 0.125];
+
+/// Factor on the sigma of a normal reading that stands in for a missing one.
+const LOOSE: f64 = 10.0;
+/// Standard deviations above the mean that an objective is not believed at.
+const INCREDIBLE: f64 = 5.0;
 
 /// A converged solution.
 pub struct Found<'a> {
@@ -20,6 +28,37 @@ pub struct Found<'a> {
     pub open: Vec<StreamId>,
 }
 
+impl<'a> Found<'a> {
+    /// No solution, but a point at which rank can be told.
+    pub fn unsolved(compiled: &'a Compiled, measured: Vec<Option<Measured>>, x: &[f64]) -> Self {
+        let system = compiled.system();
+        let modes = Modes::none(system.layout.streams());
+        let case = Case::new(system, measured, modes, x);
+        let mut evaluation = Evaluation::for_structure(&system.structure);
+        // Outside the range of the properties the rows stay zero: nothing is known.
+        if case.evaluate(x, &mut evaluation).is_err() {
+            evaluation = Evaluation::for_structure(&system.structure);
+        }
+        let outcome = Outcome {
+            status: Status::NotConverged(Reason::Stalled),
+            x: x.to_vec(),
+            multipliers: vec![0.0; system.relations.len()],
+            objective: 0.0,
+            evaluation,
+            active_bounds: vec![false; system.structure.bounds.len()],
+            iterations: 0,
+            factorisations: 0,
+            worst_relation: None,
+            worst_residual_scaled: 0.0,
+        };
+        Found {
+            case,
+            outcome,
+            open: Vec::new(),
+        }
+    }
+}
+
 /// Solves a batch.
 ///
 /// # Errors
@@ -28,28 +67,104 @@ pub fn attempt<'a>(
     compiled: &'a Compiled,
     measured: &[Option<Measured>],
 ) -> Result<Found<'a>, String> {
+    let believable = believable(compiled, measured);
+    let guide = guide(compiled, measured);
+    let mut best: Option<Found> = None;
+    let mut first_reason = None;
+    for factor in PRESSURE_FACTORS {
+        let start = start(compiled.plant(), compiled.system(), &guide, factor);
+        for held in HELD_STEPS {
+            match attempt_from(compiled, measured, &start, held) {
+                Ok(found) if found.outcome.objective <= believable => return Ok(found),
+                Ok(found) => {
+                    let lower = |best: &Found| found.outcome.objective < best.outcome.objective;
+                    if best.as_ref().is_none_or(lower) {
+                        best = Some(found);
+                    }
+                }
+                Err(reason) => {
+                    first_reason.get_or_insert(reason);
+                }
+            }
+        }
+        if !start.guesses_pressures {
+            break;
+        }
+    }
+    best.ok_or_else(|| first_reason.unwrap_or_default())
+}
+
+/// What the start goes by: the readings and, for tags that have none, their
+/// normal reading where the plant file states one, loosely. The solution does
+/// not see it.
+fn guide(compiled: &Compiled, measured: &[Option<Measured>]) -> Vec<Option<Measured>> {
+    let mut guide = measured.to_vec();
+    for (slot, tag) in guide.iter_mut().zip(&compiled.plant().tags) {
+        if slot.is_none()
+            && let Some(normal) = tag.normal
+            && let Some(sigma) = tag.uncertainty.sigma(normal)
+        {
+            let sigma = LOOSE * tag.unit.difference_to_internal(sigma.get());
+            let value = tag.unit.to_internal(normal);
+            *slot = Sigma::new(sigma).map(|sigma| Measured { value, sigma });
+        }
+    }
+    guide
+}
+
+/// The largest objective that is believed at once: far above what chi-square
+/// gives by chance. Beyond it either a reading is grossly wrong or the solution
+/// is a false minimum, and other starts are tried before the first is believed.
+/// Never more degrees of freedom than observations and relations beyond the
+/// states, unobservable directions aside.
+fn believable(compiled: &Compiled, measured: &[Option<Measured>]) -> f64 {
+    let structure = &compiled.system().structure;
+    let used = measured.iter().flatten().count();
+    let relations = structure.relations.len() - structure.bounds.len();
+    let degrees = (used + relations).saturating_sub(structure.states).max(1) as f64;
+    degrees + INCREDIBLE * (2.0 * degrees).sqrt() + INCREDIBLE.powi(2)
+}
+
+fn attempt_from<'a>(
+    compiled: &'a Compiled,
+    measured: &[Option<Measured>],
+    start: &Start,
+    held: usize,
+) -> Result<Found<'a>, String> {
     let system = compiled.system();
-    let start = start(compiled.plant(), system, measured);
     let plain = Modes::none(system.layout.streams());
     let plain = Case::new(system, measured.to_vec(), plain, &start.x);
+    let doubts = Intervals::of(&plain, &start.x, None);
     let mut modes = plain.modes().clone();
-    phases::doubtful(&plain, &start.x, &mut modes);
+    for chain in &doubts {
+        chain.put(chain.at(system, &start.x), &mut modes);
+    }
     let case = plain.with_modes(modes);
-    let mut reason = String::new();
-    for held in HELD_STEPS {
-        let outcome = solve(
-            &case,
-            compiled.symbolic(),
-            &start.x,
-            &options(&case, &start, held),
-        );
-        match outcome.status {
-            Status::Converged => return Ok(phases::settle(compiled, case, outcome)),
-            Status::NotConverged(why) if reason.is_empty() => {
-                reason = in_words(compiled, &outcome, why);
+    let try_from = |case: &Case<'a>, x: &[f64]| {
+        solve(case, compiled.symbolic(), x, &options(case, start, held))
+    };
+    let outcome = try_from(&case, &start.x);
+    let reason = match outcome.status {
+        Status::Converged => return Ok(phases::settle(compiled, case, outcome)),
+        Status::NotConverged(why) => in_words(compiled, &outcome, why),
+    };
+    // The side that the readings show may be the wrong one.
+    let mut best: Option<(Case, Outcome)> = None;
+    for chain in &doubts {
+        let shown = chain.at(system, &start.x);
+        for n in chain.all().filter(|&n| n != shown && chain.allows(n)) {
+            let mut modes = case.modes().clone();
+            chain.put(n, &mut modes);
+            let case = case.with_modes(modes);
+            let outcome = try_from(&case, &chain.start(system, n, &start.x));
+            let lower = |(_, best): &(_, Outcome)| outcome.objective < best.objective;
+            if outcome.status == Status::Converged && best.as_ref().is_none_or(lower) {
+                best = Some((case, outcome));
             }
-            Status::NotConverged(_) => {}
         }
+    }
+    if let Some((case, outcome)) = best {
+        return Ok(phases::settle(compiled, case, outcome));
     }
     Err(reason)
 }

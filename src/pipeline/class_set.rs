@@ -163,10 +163,8 @@ fn single_test(
     let balances: Vec<usize> = (0..structure.relations.len())
         .filter(|&k| {
             let role = &found.case.system().relations[k].role;
-            let variance = covariance.multiplier_variance(k);
-            let scale = found.case.relation_scale()[k];
             matches!(role, Role::Mass { .. } | Role::Energy)
-                && Miss::new(0.0, variance, scale).is_some()
+                && Miss::new(0.0, covariance.multiplier_variance(k)).is_some()
         })
         .collect();
     let mut redundancy = DMatrix::zeros(used.len(), used.len());

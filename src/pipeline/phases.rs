@@ -4,22 +4,29 @@
 //! hold a false minimum with perfect residuals. A stream whose temperature lies
 //! within 4 sigma of saturation is therefore solved on one side at a time
 //! ([`Mode`]), beginning with the side that the readings show; where it is near
-//! at the solution, or wet with a temperature that disagrees, the other side is
+//! at the solution, or its temperature disagrees there, the other side is
 //! solved too and the lower objective kept. Where the two do not differ
-//! significantly (chi-square with one degree of freedom) the phase is open.
+//! significantly (chi-square with one degree of freedom at 95 %) the phase is
+//! open.
+//!
+//! Streams of one enthalpy (valves, splitters) change sides together. The
+//! saturation enthalpies of a chain's doubtful members cut the h axis into
+//! intervals ([`Intervals`]); in each of them every member has one mode, and
+//! the search goes from interval to neighbouring interval.
 
 use super::attempt::Found;
 use super::compiled::Compiled;
 use crate::equations::{Case, Law, Measured, Mode, Modes, Role, System};
 use crate::plant::{Quantity, StreamId};
-use crate::solver::{Options, Outcome, Status, solve};
+use crate::solver::{Options, Outcome, Problem, Status, solve};
 
 /// A temperature this near saturation, in sigma, does not tell the side.
 const NEAR: f64 = 4.0;
-/// A wet stream's temperature adjustment that is suspicious, in sigma. Lower
+/// A temperature adjustment that is suspicious, in sigma. Lower
 /// than any critical value: a needless second solve costs time only.
 const SUSPICIOUS: f64 = 2.0;
-/// Chi-square with one degree of freedom at 95 %.
+/// Chi-square with one degree of freedom at 95 %, whatever the plant's
+/// confidence is: the design's rule for an open phase.
 const SIGNIFICANT: f64 = 3.841_459;
 /// Improvement of the objective that is more than rounding.
 const LOWER: f64 = 1e-7;
@@ -28,81 +35,229 @@ const LOWER: f64 = 1e-7;
 const COARSE: f64 = 1e-2;
 /// Enthalpy that no wet steam reaches, kJ/kg: IF97 has 2803.3 at 3 MPa at most.
 const NEVER_WET: f64 = 2804.0;
+/// Superheat that no error of pressure makes up for, K.
+const FAR: f64 = 40.0;
 /// How far a stream starts on the other side, kJ/kg.
 const ACROSS: f64 = 5.0;
 
-/// Gives a mode to every stream whose temperature does not tell its side at
-/// `x`: the side that `x` has it on.
-pub fn doubtful(case: &Case, x: &[f64], modes: &mut Modes) {
-    let system = case.system();
-    for (i, observation) in system.observations.iter().enumerate() {
-        if let (Quantity::Temperature(s), Some(measured)) =
-            (observation.quantity, case.measured()[i])
-            && system.on_saturation[s.0].is_none()
-            && modes.get(s).is_none()
-            && may_be_near(system, s, measured, x)
-            && let Some(saturation) = system.saturation(s, x)
-        {
+/// Where the enthalpy of a chain of streams can lie: between neighbouring
+/// saturation enthalpies of its doubtful members.
+pub struct Intervals {
+    members: Vec<StreamId>,
+    /// (saturated liquid, saturated vapour) of each doubtful member, kJ/kg.
+    doubtful: Vec<(StreamId, f64, f64)>,
+    /// Ends of the intervals, ascending; the first and last are open.
+    cuts: Vec<f64>,
+    /// Enthalpies that the members whose side is plain leave open.
+    allowed: (f64, f64),
+}
+
+impl Intervals {
+    /// The chains that have a doubtful member at `x`; `residuals` are those of
+    /// the observations there, where it is a solution.
+    pub fn of(case: &Case, x: &[f64], residuals: Option<&[f64]>) -> Vec<Intervals> {
+        let chains = case.system().chains.iter();
+        chains
+            .filter_map(|chain| Self::of_chain(case, x, residuals, chain))
+            .collect()
+    }
+
+    fn of_chain(
+        case: &Case,
+        x: &[f64],
+        residuals: Option<&[f64]>,
+        chain: &[StreamId],
+    ) -> Option<Intervals> {
+        let system = case.system();
+        let mut intervals = Intervals {
+            members: chain.to_vec(),
+            doubtful: Vec::new(),
+            cuts: Vec::new(),
+            allowed: (f64::NEG_INFINITY, f64::INFINITY),
+        };
+        // A relation holds the whole chain at one enthalpy: nothing to choose.
+        if chain.iter().any(|s| system.on_saturation[s.0].is_some()) {
+            return None;
+        }
+        for &(i, s, measured) in &thermometers(case, chain) {
+            let plain = !may_be_near(case, s, measured, x);
+            let Some(at) = system.saturation(s, x).filter(|_| !plain) else {
+                continue;
+            };
             let h = x[system.layout.h(s)];
-            let mode = mode_at(h, saturation.liquid.h, saturation.vapour.h);
-            let near = (measured.value - saturation.t).abs() < NEAR * measured.sigma.get();
-            if near || mode == Mode::Wet {
-                modes.set(s, mode);
+            let (liquid, vapour) = (at.liquid.h, at.vapour.h);
+            let near = measured.is_some_and(|m| {
+                near(case, s, m, at.t, at.t_p)
+                    || residuals.is_some_and(|r| disagrees_near(m, at.t, r[i]))
+            });
+            if measured.is_none() {
+                // Subcooling is stated of liquid.
+                intervals.doubtful.push((s, liquid, vapour));
+                intervals.allowed.1 = intervals.allowed.1.min(liquid);
+            } else if near || (h > liquid && h < vapour) {
+                intervals.doubtful.push((s, liquid, vapour));
+            } else if h <= liquid {
+                intervals.allowed.1 = intervals.allowed.1.min(liquid);
+            } else {
+                intervals.allowed.0 = intervals.allowed.0.max(vapour);
             }
         }
+        let ends = intervals
+            .doubtful
+            .iter()
+            .flat_map(|&(_, liquid, vapour)| [liquid, vapour]);
+        intervals.cuts = ends.collect();
+        intervals.cuts.sort_by(f64::total_cmp);
+        intervals.cuts.dedup();
+        (!intervals.doubtful.is_empty()).then_some(intervals)
     }
+
+    /// Number of the interval that `x` has the chain in.
+    pub fn at(&self, system: &System, x: &[f64]) -> usize {
+        let h = x[system.layout.h(self.members[0])];
+        let allowed = h.clamp(self.allowed.0, self.allowed.1);
+        // On the upper end of what is allowed it belongs below.
+        self.cuts.iter().filter(|&&cut| cut < allowed).count()
+    }
+
+    /// Numbers of all intervals.
+    pub fn all(&self) -> std::ops::RangeInclusive<usize> {
+        0..=self.cuts.len()
+    }
+
+    /// Whether the members whose side is plain can be in interval `n`.
+    pub fn allows(&self, n: usize) -> bool {
+        let (low, high) = self.ends(n);
+        low < self.allowed.1 && high > self.allowed.0
+    }
+
+    /// Puts the modes of interval `n` on its doubtful members.
+    pub fn put(&self, n: usize, modes: &mut Modes) {
+        let (low, high) = self.ends(n);
+        for &(s, liquid, vapour) in &self.doubtful {
+            let mode = if high <= liquid {
+                Mode::Liquid
+            } else if low >= vapour {
+                Mode::Vapour
+            } else {
+                Mode::Wet
+            };
+            modes.set(s, mode);
+        }
+    }
+
+    /// `x` with the chain in interval `n`, near the end that it comes from.
+    pub fn start(&self, system: &System, n: usize, x: &[f64]) -> Vec<f64> {
+        let (low, high) = self.ends(n);
+        let across = ACROSS.min(0.5 * (high - low));
+        let from = x[system.layout.h(self.members[0])];
+        let h = if from <= low {
+            low + across
+        } else {
+            high - across
+        };
+        let mut start = x.to_vec();
+        for &s in &self.members {
+            start[system.layout.h(s)] = h;
+        }
+        start
+    }
+
+    fn ends(&self, n: usize) -> (f64, f64) {
+        let low = n
+            .checked_sub(1)
+            .map_or(f64::NEG_INFINITY, |below| self.cuts[below]);
+        let high = self.cuts.get(n).copied().unwrap_or(f64::INFINITY);
+        (low, high)
+    }
+}
+
+/// Streams of a chain with a temperature (and what it reads) or a subcooling in
+/// use.
+fn thermometers(case: &Case, chain: &[StreamId]) -> Vec<(usize, StreamId, Option<Measured>)> {
+    let observations = case
+        .system()
+        .observations
+        .iter()
+        .zip(case.measured())
+        .enumerate();
+    observations
+        .filter_map(
+            |(i, (observation, measured))| match (observation.quantity, measured) {
+                (Quantity::Temperature(s), Some(measured)) => Some((i, s, Some(*measured))),
+                (Quantity::Subcooling(s), Some(_)) => Some((i, s, None)),
+                _ => None,
+            },
+        )
+        .filter(|(_, s, _)| chain.contains(s))
+        .collect()
+}
+
+/// Whether a temperature is so near saturation that it does not tell the side:
+/// the pressure that saturation is taken at is uncertain too.
+fn near(case: &Case, s: StreamId, measured: Measured, saturated: f64, slope: f64) -> bool {
+    let pressure = case.state_scale()[case.system().layout.p(s)];
+    let sigma = measured.sigma.get().hypot(slope * pressure);
+    (measured.value - saturated).abs() < NEAR * sigma
+}
+
+/// Whether a temperature disagrees and is not plainly on its side: at a false
+/// minimum the pressure is off too, and with it saturation.
+fn disagrees_near(measured: Measured, saturated: f64, residual: f64) -> bool {
+    residual.abs() > SUSPICIOUS && (measured.value - saturated).abs() < FAR
 }
 
 /// Whether it pays to work out the saturated states: not for steam that is
 /// plainly superheated.
-fn may_be_near(system: &System, s: StreamId, measured: Measured, x: &[f64]) -> bool {
+fn may_be_near(case: &Case, s: StreamId, measured: Option<Measured>, x: &[f64]) -> bool {
+    let system = case.system();
     let saturated = system.saturation_temperature(s, x).unwrap_or(f64::INFINITY);
-    x[system.layout.h(s)] < NEVER_WET
-        || (measured.value - saturated).abs() < NEAR * measured.sigma.get()
-}
-
-fn mode_at(h: f64, liquid: f64, vapour: f64) -> Mode {
-    if h <= liquid {
-        Mode::Liquid
-    } else if h >= vapour {
-        Mode::Vapour
-    } else {
-        Mode::Wet
-    }
+    let far = |m: Measured| m.value - saturated > FAR.max(2.0 * NEAR * m.sigma.get());
+    x[system.layout.h(s)] < NEVER_WET || !measured.is_some_and(far)
 }
 
 /// The best of the solutions on either side.
 pub fn settle<'a>(compiled: &Compiled, mut case: Case<'a>, mut best: Outcome) -> Found<'a> {
     let system = compiled.system();
-    let mut modes = case.modes().clone();
-    doubtful(&case, &best.x, &mut modes);
-    case = case.with_modes(modes);
     let mut open = Vec::new();
-    let mut settled: Vec<StreamId> = Vec::new();
-    for (i, observation) in system.observations.iter().enumerate() {
-        let Quantity::Temperature(s) = observation.quantity else {
-            continue;
-        };
-        if settled.contains(&s) || !worth_trying(&case, s, i, &best) {
-            continue;
+    for intervals in Intervals::of(&case, &best.x, Some(&best.evaluation.r)) {
+        let mut current = intervals.at(system, &best.x);
+        let mut modes = case.modes().clone();
+        intervals.put(current, &mut modes);
+        case = case.with_modes(modes);
+        let mut tried = vec![current];
+        let mut fits_too = Vec::new();
+        while worth_trying(&case, &intervals, &best) {
+            let neighbours = [current.checked_sub(1), Some(current + 1)];
+            let next = neighbours.into_iter().flatten().find(|n| {
+                intervals.all().contains(n) && !tried.contains(n) && intervals.allows(*n)
+            });
+            let Some(next) = next else {
+                break;
+            };
+            tried.push(next);
+            let mut modes = case.modes().clone();
+            intervals.put(next, &mut modes);
+            let other_case = case.with_modes(modes);
+            let start = intervals.start(system, next, &best.x);
+            let Some(other) = explore(compiled, &other_case, &start, best.objective) else {
+                continue;
+            };
+            let difference = other.objective - best.objective;
+            let apart =
+                !on_the_line(system, &intervals, &best) && !on_the_line(system, &intervals, &other);
+            if difference < -SIGNIFICANT {
+                fits_too.clear();
+            } else if apart {
+                let differs = |s: &StreamId| case.modes().get(*s) != other_case.modes().get(*s);
+                let members = intervals.doubtful.iter().map(|&(s, ..)| s);
+                fits_too.extend(members.filter(differs));
+            }
+            if difference < -LOWER {
+                (best, case, current) = (other, other_case, next);
+            }
         }
-        let together = equal_state(system, s);
-        let Some((other_case, start)) = other_side(&case, &together, s, &best) else {
-            continue;
-        };
-        settled.extend(together);
-        let Some(other) = explore(compiled, &other_case, &start, best.objective) else {
-            continue;
-        };
-        let difference = other.objective - best.objective;
-        let apart = !on_the_line(system, s, &best) && !on_the_line(system, s, &other);
-        if difference.abs() < SIGNIFICANT && apart {
-            open.push(s);
-        }
-        if difference < -LOWER {
-            best = other;
-            case = other_case;
-        }
+        open.extend(fits_too);
     }
     Found {
         case: case.rescaled(&best.x),
@@ -134,88 +289,31 @@ fn explore(
     converged(&first.x, &Options::default())
 }
 
-/// Whether the other side may fit better: the temperature is near saturation,
-/// the stream is held at the line, or it is wet and its temperature disagrees.
-fn worth_trying(case: &Case, s: StreamId, observation: usize, best: &Outcome) -> bool {
+/// Whether another side may fit better: a temperature is near saturation, the
+/// chain is held at the line, or a member's temperature disagrees.
+fn worth_trying(case: &Case, intervals: &Intervals, best: &Outcome) -> bool {
     let system = case.system();
-    let (Some(mode), Some(measured), Some(saturation)) = (
-        case.modes().get(s),
-        case.measured()[observation],
-        system.saturation(s, &best.x),
-    ) else {
-        return false;
+    let disagrees = |(i, measured): (usize, &Option<Measured>)| {
+        let Quantity::Temperature(s) = system.observations[i].quantity else {
+            return false;
+        };
+        let (Some(measured), Some(at)) = (*measured, system.saturation(s, &best.x)) else {
+            return false;
+        };
+        intervals.members.contains(&s)
+            && (near(case, s, measured, at.t, at.t_p)
+                || disagrees_near(measured, at.t, best.evaluation.r[i]))
     };
-    let near = (measured.value - saturation.t).abs() < NEAR * measured.sigma.get();
-    let disagrees = best.evaluation.r[observation].abs() > SUSPICIOUS;
-    near || on_the_line(system, s, best) || (mode == Mode::Wet && disagrees)
+    on_the_line(system, intervals, best) || case.measured().iter().enumerate().any(disagrees)
 }
 
-/// The problem with `together` on the other side of the line that `s` is
-/// nearest to, and a start there.
-fn other_side<'a>(
-    case: &Case<'a>,
-    together: &[StreamId],
-    s: StreamId,
-    best: &Outcome,
-) -> Option<(Case<'a>, Vec<f64>)> {
-    let system = case.system();
-    let saturation = system.saturation(s, &best.x)?;
-    let (liquid, vapour) = (saturation.liquid.h, saturation.vapour.h);
-    let h = best.x[system.layout.h(s)];
-    let nearer_vapour = h > 0.5 * (liquid + vapour);
-    let (mode, h) = match (case.modes().get(s)?, nearer_vapour) {
-        (Mode::Wet, true) => (Mode::Vapour, vapour + ACROSS),
-        (Mode::Wet, false) => (Mode::Liquid, liquid - ACROSS),
-        (Mode::Vapour, _) => (Mode::Wet, vapour - ACROSS),
-        (Mode::Liquid, _) => (Mode::Wet, liquid + ACROSS),
-    };
-    let mut modes = case.modes().clone();
-    let mut start = best.x.clone();
-    for &stream in together {
-        if modes.get(stream).is_some() {
-            modes.set(stream, mode);
-        }
-        start[system.layout.h(stream)] = h;
-    }
-    Some((case.with_modes(modes), start))
-}
-
-/// Whether a bound holds the stream at the saturation line.
-fn on_the_line(system: &System, s: StreamId, outcome: &Outcome) -> bool {
+/// Whether a bound holds a member of the chain at the saturation line.
+fn on_the_line(system: &System, intervals: &Intervals, outcome: &Outcome) -> bool {
     let bounds = system.structure.bounds.iter().zip(&outcome.active_bounds);
     bounds.filter(|(_, active)| **active).any(|(&k, _)| {
         let relation = &system.relations[k];
-        let of_stream = matches!(&relation.law, Law::Saturated { stream, .. } if *stream == s);
-        relation.role == Role::SideOfSaturation && of_stream
+        let of_chain = matches!(&relation.law,
+            Law::Saturated { stream, .. } if intervals.members.contains(stream));
+        relation.role == Role::SideOfSaturation && of_chain
     })
-}
-
-/// `s` and every stream that relations hold at its pressure and enthalpy, as
-/// those of a splitter or of a well-mixed header are.
-fn equal_state(system: &System, s: StreamId) -> Vec<StreamId> {
-    let mut members = vec![s];
-    let mut next = 0;
-    while next < members.len() {
-        let of = members[next];
-        next += 1;
-        let by_enthalpy = partners(system, "equal enthalpy", system.layout.h(of));
-        let by_pressure = partners(system, "equal pressure", system.layout.p(of));
-        for stream in by_enthalpy {
-            if by_pressure.contains(&stream) && !members.contains(&stream) {
-                members.push(stream);
-            }
-        }
-    }
-    members
-}
-
-/// Streams that share a condition on state `j`.
-fn partners(system: &System, condition: &'static str, j: usize) -> Vec<StreamId> {
-    let relations = system.relations.iter();
-    relations
-        .filter(|relation| relation.role == Role::Condition(condition))
-        .filter(|relation| relation.row.contains(&j))
-        .flat_map(|relation| &relation.row)
-        .filter_map(|&state| system.layout.stream_of(state))
-        .collect()
 }

@@ -5,9 +5,9 @@ use super::class_set::{self, ClassSet};
 use super::compiled::Compiled;
 use crate::diagnosis::Miss;
 use crate::equations::{Measured, Role, State, System};
-use crate::plant::StreamId;
+use crate::plant::{Quantity, StreamId};
 use crate::report::SingleTest;
-use crate::solver::{Classes, Covariance, Problem};
+use crate::solver::{Classes, Covariance};
 
 /// A solution, ready to be asked.
 pub struct Solution<'a> {
@@ -107,15 +107,23 @@ impl<'a> Solution<'a> {
         Some((value, self.uncertainty(&gradient)?))
     }
 
-    /// Temperature of a stream, K, and its gradient.
-    pub fn temperature(&self, s: StreamId) -> (f64, Vec<(usize, f64)>) {
-        let layout = &self.system().layout;
-        if let Some(state) = self.state(s) {
-            let gradient = vec![(layout.p(s), state.t_p), (layout.h(s), state.t_h)];
-            (state.t, gradient)
-        } else {
-            (f64::NAN, vec![(layout.p(s), 1.0), (layout.h(s), 1.0)])
-        }
+    /// Temperature of a stream and its sigma, K; `None` where it is
+    /// unobservable. Where nothing determines the enthalpy, the phase at which
+    /// the solver happens to stand says nothing of the temperature: then only
+    /// a thermometer on the stream itself does.
+    pub fn temperature(&self, s: StreamId) -> Option<(f64, f64)> {
+        let system = self.system();
+        let h = system.layout.h(s);
+        let known = self.is_observable(&[(h, 1.0)]) || self.has_thermometer(s);
+        let state = self.state(s).filter(|_| known)?;
+        let gradient = [(system.layout.p(s), state.t_p), (h, state.t_h)];
+        Some((state.t, self.uncertainty(&gradient)?))
+    }
+
+    fn has_thermometer(&self, s: StreamId) -> bool {
+        let observations = self.system().observations.iter();
+        let mut used = observations.zip(self.found.case.measured());
+        used.any(|(o, m)| m.is_some() && o.quantity == Quantity::Temperature(s))
     }
 
     /// Thermodynamic state of a stream.
@@ -130,11 +138,7 @@ impl<'a> Solution<'a> {
 
     /// What balance `k` would miss; `None` where nothing checks it.
     pub fn miss(&self, k: usize) -> Option<Miss> {
-        Miss::new(
-            self.multipliers[k],
-            self.covariance.multiplier_variance(k),
-            self.found.case.relation_scale()[k],
-        )
+        Miss::new(self.multipliers[k], self.covariance.multiplier_variance(k))
     }
 
     /// What a person should see: bounds that are active, phases that are open.

@@ -29,36 +29,25 @@ pub fn streams(compiled: &Compiled, solution: &Solution) -> IndexMap<String, Str
 fn entry(compiled: &Compiled, solution: &Solution, s: StreamId) -> StreamReport {
     let layout = &compiled.system().layout;
     let (m, p, h) = (layout.m(s), layout.p(s), layout.h(s));
-    let of_state = |j: usize, unit| quantity(solution, solution.x()[j], &[(j, 1.0)], unit);
-    let (temperature, gradient) = solution.temperature(s);
+    let state = |j: usize| Some((solution.x()[j], solution.uncertainty(&[(j, 1.0)])?));
     StreamReport {
-        mass_flow: of_state(m, ReportUnit("kg/s", 1.0, 0.0)),
-        pressure: of_state(p, ReportUnit("bar", BAR, 0.0)),
+        mass_flow: quantity(state(m), ReportUnit("kg/s", 1.0, 0.0)),
+        pressure: quantity(state(p), ReportUnit("bar", BAR, 0.0)),
         temperature: quantity(
-            solution,
-            temperature,
-            &gradient,
+            solution.temperature(s),
             ReportUnit("Cel", 1.0, ZERO_CELSIUS),
         ),
-        enthalpy: of_state(h, ReportUnit("kJ/kg", 1.0, 0.0)),
+        enthalpy: quantity(state(h), ReportUnit("kJ/kg", 1.0, 0.0)),
         phase: phase(solution, s, p, h),
     }
 }
 
-/// A quantity that depends on the states by `gradient`.
-fn quantity(
-    solution: &Solution,
-    value: f64,
-    gradient: &[(usize, f64)],
-    unit: ReportUnit,
-) -> QuantityReport {
+/// A quantity in a unit of the report, from its value and sigma in internal
+/// units.
+fn quantity(value_and_sigma: Option<(f64, f64)>, unit: ReportUnit) -> QuantityReport {
     let ReportUnit(symbol, factor, zero) = unit;
-    report(
-        symbol,
-        solution
-            .uncertainty(gradient)
-            .map(|sigma| ((value - zero) / factor, sigma / factor)),
-    )
+    let converted = value_and_sigma.map(|(value, sigma)| ((value - zero) / factor, sigma / factor));
+    report(symbol, converted)
 }
 
 /// A quantity from its value and sigma; `None` where it is unobservable.

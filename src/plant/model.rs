@@ -256,7 +256,8 @@ pub struct Tag {
     pub range: Option<(f64, f64)>,
     /// Uncertainty of its readings.
     pub uncertainty: Uncertainty,
-    /// Reading at normal operation, in its unit: used by the assessment only.
+    /// Reading at normal operation, in its unit: for the assessment, and for
+    /// where a solve starts when the tag is missing.
     pub normal: Option<f64>,
 }
 

@@ -189,7 +189,8 @@ pub struct StreamReport {
 pub struct EquipmentReport {
     /// Kind, as in the plant file.
     pub kind: String,
-    /// Heat taken up (boiler) or rejected (condenser, one-sided exchanger).
+    /// Heat taken up (boiler, lone cold side of an exchanger) or given away
+    /// (condenser without cooling streams, lone hot side).
     #[serde(default, skip_serializing_if = "Option::is_none")]
     pub heat: Option<QuantityReport>,
     /// Shaft work.

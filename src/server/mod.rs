@@ -30,7 +30,7 @@ use tokio_util::sync::CancellationToken;
 use tokio_util::task::TaskTracker;
 use tower::ServiceExt;
 
-pub use crate::http::{Limits, SystemClock, SystemEntropy};
+pub use crate::http::{Limits, Problem, SystemClock, SystemEntropy};
 
 /// How long a closed connection is read from, so that the client gets the
 /// answer to a body that it was still sending.

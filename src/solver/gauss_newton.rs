@@ -39,6 +39,9 @@ const STATIONARY: f64 = 1e-9;
 /// Second derivatives that make the matrix indefinite are taken in part, each
 /// time this fraction of the last, and then not at all.
 const CURVATURE_FRACTIONS: [f64; 3] = [1.0, 0.5, 0.2];
+/// A fresh step below this many sigma along which nothing improves, with the
+/// relations holding, is rounding: the point is the solution.
+const ROUNDING: f64 = 1e-6;
 /// A step below this many sigma that shrinks is taken without asking the filter.
 const LOCAL: f64 = 1.0;
 
@@ -175,6 +178,9 @@ impl<'a, P: Problem + ?Sized> Run<'a, P> {
                 }
             }
             Search::Full | Search::Shortened => self.last_size = None,
+            Search::Failed(_) if fresh && self.here.feasible && size <= ROUNDING => {
+                return Ok(true);
+            }
             Search::Failed(outside) => self.recover(fresh, outside)?,
         }
         Ok(false)

@@ -225,6 +225,38 @@ async fn a_list_has_the_latest_first_and_goes_on_by_its_link() {
 }
 
 #[tokio::test]
+async fn a_series_of_no_quantity_is_refused() {
+    let service = Service::with_plant().await;
+    service.post_batch(batch("b", 0, 150.0)).await;
+    for query in [
+        "stream=both",
+        "stream=both.colour",
+        "stream=both.heat",
+        "stream=both.mass_flow.x",
+        "equipment=mix",
+        "equipment=mix.pressure",
+        "equipment=mix.imbalance.mass.",
+    ] {
+        let path = format!("/v1/plants/mixer/series?{query}");
+        let answer = problem(service.get(&path).await, StatusCode::BAD_REQUEST).await;
+        let fault = &answer["faults"][0];
+        let (owner, quantity) = match query.split_once('=') {
+            Some(("stream", _)) => ("?stream", "mass_flow, pressure, temperature, enthalpy"),
+            _ => ("?equipment", "imbalance.mass.SIDE"),
+        };
+        assert_eq!(fault["path"], owner, "{query}");
+        assert!(fault["mend"].as_str().expect("text").contains(quantity));
+    }
+    for query in ["stream=mix.pressure", "equipment=both.heat"] {
+        let path = format!("/v1/plants/mixer/series?{query}");
+        problem(service.get(&path).await, StatusCode::NOT_FOUND).await;
+    }
+    service
+        .get_json("/v1/plants/mixer/series?equipment=mix.imbalance.energy")
+        .await;
+}
+
+#[tokio::test]
 async fn series_are_what_the_reports_say() {
     let service = Service::with_plant().await;
     fifty(&service).await;

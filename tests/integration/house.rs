@@ -34,8 +34,9 @@ const IMPORTS: &[(&str, &[&str])] = &[
     ("solver", &[]),
 ];
 
-fn sources() -> Vec<(PathBuf, String)> {
-    fn walk(folder: &Path, into: &mut Vec<(PathBuf, String)>) {
+/// Every file of some folders, in order.
+fn files(folders: &[&str]) -> Vec<PathBuf> {
+    fn walk(folder: &Path, into: &mut Vec<PathBuf>) {
         let mut entries: Vec<PathBuf> = fs::read_dir(folder)
             .unwrap()
             .map(|entry| entry.unwrap().path())
@@ -44,18 +45,35 @@ fn sources() -> Vec<(PathBuf, String)> {
         for path in entries {
             if path.is_dir() {
                 walk(&path, into);
-            } else if path.extension().is_some_and(|e| e == "rs") {
-                let text = fs::read_to_string(&path).unwrap();
-                into.push((path, text));
+            } else {
+                into.push(path);
             }
         }
     }
-    let mut sources = Vec::new();
-    walk(
-        &Path::new(env!("CARGO_MANIFEST_DIR")).join("src"),
-        &mut sources,
-    );
-    sources
+    let mut files = Vec::new();
+    for folder in folders {
+        let folder = Path::new(env!("CARGO_MANIFEST_DIR")).join(folder);
+        // A folder without files is none to a version control.
+        if folder.exists() {
+            walk(&folder, &mut files);
+        }
+    }
+    files
+}
+
+fn rust_files(folders: &[&str]) -> Vec<(PathBuf, String)> {
+    let files = files(folders).into_iter();
+    files
+        .filter(|path| path.extension().is_some_and(|e| e == "rs"))
+        .map(|path| {
+            let text = fs::read_to_string(&path).unwrap();
+            (path, text)
+        })
+        .collect()
+}
+
+fn sources() -> Vec<(PathBuf, String)> {
+    rust_files(&["src"])
 }
 
 /// The module a file belongs to: its first folder or its own name.
@@ -65,27 +83,61 @@ fn module_of(path: &Path) -> String {
     first.to_str().unwrap().trim_end_matches(".rs").to_owned()
 }
 
-/// Modules named after `crate::` (or, in main, `counterpoise::`) in code.
+/// Modules named after `crate::` (or, in main, `counterpoise::`) in code, alone
+/// or in braces.
 fn imported(text: &str) -> Vec<String> {
-    let code = text
+    let code: String = text
         .lines()
-        .filter(|line| !line.trim_start().starts_with("//"));
-    code.flat_map(|line| {
-        line.match_indices("crate::")
-            .map(|(at, found)| &line[at + found.len()..])
-            .chain(
-                line.match_indices("counterpoise::")
-                    .map(|(at, found)| &line[at + found.len()..]),
-            )
-            .map(|rest| {
-                rest.chars()
-                    .take_while(|c| c.is_alphanumeric() || *c == '_')
-                    .collect()
-            })
-            .collect::<Vec<String>>()
-    })
-    .filter(|name: &String| IMPORTS.iter().any(|(module, _)| module == name))
-    .collect()
+        .filter(|line| !line.trim_start().starts_with("//"))
+        .flat_map(|line| [line, "\n"])
+        .collect();
+    let mut names = Vec::new();
+    for prefix in ["crate::", "counterpoise::"] {
+        for (at, found) in code.match_indices(prefix) {
+            let rest = &code[at + found.len()..];
+            match rest.strip_prefix('{') {
+                Some(group) => names.extend(heads(group)),
+                None => names.push(word(rest)),
+            }
+        }
+    }
+    names.retain(|name| IMPORTS.iter().any(|(module, _)| module == name));
+    names
+}
+
+fn word(text: &str) -> String {
+    text.chars()
+        .take_while(|c| c.is_alphanumeric() || *c == '_')
+        .collect()
+}
+
+/// The first name of each path in a brace that has been opened.
+fn heads(group: &str) -> Vec<String> {
+    let mut heads = Vec::new();
+    let mut depth = 0;
+    let mut starts = true;
+    for (at, c) in group.char_indices() {
+        match c {
+            '{' => depth += 1,
+            '}' if depth == 0 => break,
+            '}' => depth -= 1,
+            ',' if depth == 0 => starts = true,
+            c if starts && !c.is_whitespace() => {
+                heads.push(word(&group[at..]));
+                starts = false;
+            }
+            _ => {}
+        }
+    }
+    heads
+}
+
+#[test]
+fn imports_are_seen_in_braces_too() {
+    let text = "use crate::{\n    plant::{Batch, fluid},\n    store,\n};\nuse crate::solver::X;\n// crate::http\n";
+    let mut found = imported(text);
+    found.sort();
+    assert_eq!(found, ["plant", "solver", "store"]);
 }
 
 #[test]
@@ -157,9 +209,18 @@ fn sql_and_status_codes_have_one_home() {
                 path.display()
             );
         }
-        let home = path.ends_with("http/error.rs") || module_of(&path) == "http";
+        // Handlers name the codes of success; those of problems are in
+        // `http/error.rs`.
+        let is_problem = ["BAD_", "NOT_FOUND", "UNPROCESSABLE", "CONFLICT", "INTERNAL"]
+            .iter()
+            .any(|code| text.contains(&format!("StatusCode::{code}")));
         assert!(
-            home || !text.contains("StatusCode::"),
+            path.ends_with("http/error.rs") || !is_problem,
+            "the status code of a problem outside http/error.rs: {}",
+            path.display()
+        );
+        assert!(
+            module_of(&path) == "http" || !text.contains("StatusCode::"),
             "a status code outside http: {}",
             path.display()
         );
@@ -168,7 +229,7 @@ fn sql_and_status_codes_have_one_home() {
 
 #[test]
 fn files_are_small_enough_to_read() {
-    for (path, text) in sources() {
+    for (path, text) in rust_files(&["src", "tests", "benches"]) {
         // Tables of published coefficients are as long as the publication.
         let numbers = text
             .lines()
@@ -185,4 +246,38 @@ fn files_are_small_enough_to_read() {
             path.display()
         );
     }
+}
+
+/// A snapshot, a fixture or a script that was made on one machine must not name
+/// its folders.
+#[test]
+fn no_file_names_the_folders_of_a_machine() {
+    // Put together, so that this file does not hold them.
+    let needles = ["work", "tmp", "home", "root"].map(|folder| format!("/{folder}/"));
+    let folders = [
+        "src",
+        "tests",
+        "benches",
+        "fixtures",
+        "deploy",
+        "migrations",
+    ];
+    let mut looked_at = 0;
+    let mut wrong = Vec::new();
+    for path in files(&folders) {
+        let Ok(text) = fs::read_to_string(&path) else {
+            continue;
+        };
+        looked_at += 1;
+        for (number, line) in text.lines().enumerate() {
+            if needles.iter().any(|needle| line.contains(needle)) {
+                wrong.push(format!("{}:{}", path.display(), number + 1));
+            }
+        }
+    }
+    assert!(
+        looked_at > 200,
+        "the scan found hardly any file: {looked_at}"
+    );
+    assert!(wrong.is_empty(), "{}", wrong.join("\n"));
 }

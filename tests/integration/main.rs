@@ -15,6 +15,7 @@ mod openapi;
 mod plant_files;
 mod published_networks;
 mod reference;
+mod robustness;
 mod service;
 mod service_process;
 mod store;

@@ -297,6 +297,32 @@ async fn the_page_of_routes_needs_no_other_host() {
     assert_eq!(script.status(), StatusCode::OK);
     let document = service.get_json("/openapi.json").await;
     assert_eq!(document["openapi"], "3.1.0");
+    let configuration = service.get("/docs/swagger-initializer.js").await;
+    assert_eq!(configuration.status(), StatusCode::OK);
+    let configuration = configuration.text().await.expect("text");
+    assert!(configuration.contains("/openapi.json"), "{configuration}");
+    // Unset, the page would load a badge from a validator elsewhere.
+    let no_badge = configuration
+        .replace(' ', "")
+        .contains("\"validatorUrl\":\"none\"");
+    assert!(no_badge, "{configuration}");
+    for scheme in ["http://", "https://"] {
+        assert!(!configuration.contains(scheme), "{configuration}");
+    }
+}
+
+#[tokio::test]
+async fn an_address_that_is_no_text_is_a_bad_parameter() {
+    let service = Service::with_plant().await;
+    for path in [
+        "/v1/plants/%ff",
+        "/v1/plants/%ff/assessment",
+        "/v1/plants/%ff/series?tag=F-3",
+        "/v1/plants/mixer/batches/%ff",
+    ] {
+        let answer = problem(service.get(path).await, StatusCode::BAD_REQUEST).await;
+        assert_eq!(answer["type"], "urn:counterpoise:problem:bad-parameter");
+    }
 }
 
 #[tokio::test]

@@ -153,16 +153,42 @@ fn reconcile_takes_a_stream() {
         &faulty,
     );
     assert_eq!(output.status.code(), Some(1));
-    assert_eq!(
-        text(&output.stdout).lines().count(),
-        1,
-        "the good one is done"
-    );
+    let lines: Vec<serde_json::Value> = text(&output.stdout)
+        .lines()
+        .map(|line| serde_json::from_str(line).expect("JSON"))
+        .collect();
+    assert_eq!(lines.len(), 2, "line n out is line n in");
+    assert_eq!(lines[0]["type"], "urn:counterpoise:problem:unacceptable");
+    assert_eq!(lines[0]["faults"][0]["line"], 1);
+    assert_eq!(lines[1]["batch"], "b", "the good one is done");
     assert!(
         text(&output.stderr).contains("line 1"),
         "{}",
         text(&output.stderr)
     );
+}
+
+/// As with `| head`: who has seen enough is told of no fault.
+#[test]
+fn a_reader_that_goes_away_ends_it_quietly() {
+    let directory = files();
+    for arguments in [
+        &["check", "plant.toml"][..],
+        &["reconcile", "plant.toml", "day.ndjson"],
+        &["openapi"],
+    ] {
+        let mut child = program()
+            .args(arguments)
+            .current_dir(directory.path())
+            .stdout(Stdio::piped())
+            .stderr(Stdio::piped())
+            .spawn()
+            .expect("a process");
+        drop(child.stdout.take());
+        let output = child.wait_with_output().expect("an end");
+        assert_eq!(output.status.code(), Some(0), "{arguments:?}");
+        assert_eq!(text(&output.stderr), "", "{arguments:?}");
+    }
 }
 
 #[test]

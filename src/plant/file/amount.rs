@@ -20,9 +20,21 @@ impl Amount {
 
 /// Reads a quantity of a dimension.
 pub(super) fn amount(at: &At<'_>, dimension: Dimension, cx: &mut Context<'_>) -> Option<Amount> {
-    let example = format!("\"1 {}\"", dimension.common()[0]);
+    let (value, unit) = parts(at, dimension.common()[0], cx)?;
+    match dimension.unit(unit) {
+        Ok(unit) => Some(Amount { value, unit }),
+        Err(fault) => {
+            cx.error(&at.place, fault.what, fault.mend);
+            None
+        }
+    }
+}
+
+/// A number and the text of its unit, whatever that measures.
+pub(super) fn parts<'n>(at: &At<'n>, common: &str, cx: &mut Context<'_>) -> Option<(f64, &'n str)> {
+    let example = format!("\"1 {common}\"");
     if let Content::Number(x) = &at.node.value {
-        let written = format!("\"{x} {}\"", dimension.common()[0]);
+        let written = format!("\"{x} {common}\"");
         cx.error(
             &at.place,
             "a number without a unit",
@@ -55,25 +67,23 @@ pub(super) fn amount(at: &At<'_>, dimension: Dimension, cx: &mut Context<'_>) ->
         return None;
     }
     if unit.is_empty() {
-        let mend = format!(
-            "write the unit too, such as \"{number} {}\"",
-            dimension.common()[0]
-        );
+        let mend = format!("write the unit too, such as \"{number} {common}\"");
         cx.error(&at.place, format!("`{text}` has no unit"), mend);
         return None;
     }
-    match dimension.unit(unit) {
-        Ok(unit) => Some(Amount { value, unit }),
-        Err(fault) => {
-            cx.error(&at.place, fault.what, fault.mend);
-            None
-        }
-    }
+    Some((value, unit))
 }
 
 /// A fraction: `"1 %"`.
 pub(super) fn fraction(at: &At<'_>, cx: &mut Context<'_>) -> Option<f64> {
-    amount(at, Dimension::Fraction, cx).map(|a| a.internal())
+    let amount = amount(at, Dimension::Fraction, cx)?;
+    // 0.01 is no double and 100 is: "95 %" is 95 / 100, the double nearest 0.95.
+    let per = (1.0 / amount.unit.factor).round();
+    Some(if 1.0 / per == amount.unit.factor {
+        amount.value / per
+    } else {
+        amount.internal()
+    })
 }
 
 /// Splits off the longest number that a text starts with.

@@ -1,15 +1,16 @@
 //! Assumptions: values from design data.
 
-use super::amount::amount;
+use super::amount::{amount, parts};
 use super::equipment::EquipmentDraft;
 use super::kinds::{Direction, KINDS};
 use super::network::{End, MAX_MEMBERS, Network, description};
 use super::reader::{At, Context, Fields, Shape, check_name, quoted};
 use super::sides::{efficiency, pressure_drop};
-use super::tags::{self, BAROMETER, MEASUREMENTS, dimension_of, reference};
+use super::tags::{self, BAROMETER, MEASUREMENTS, TagDraft, dimension_of, reference};
 use super::targets::{self, Target};
 use super::terms::{Span, Subject, uncertainty};
 use crate::plant::{Assumption, Dimension, EquipmentId, PressureReference, Quantity, StreamId};
+use std::collections::HashSet;
 
 /// An assumption as read.
 pub(super) struct AssumptionDraft<'n> {
@@ -51,6 +52,7 @@ const EXAMPLE: &str = "{ value-of = \"heat-loss\", of = \"heater-6\", value = \"
 pub(super) fn read<'n>(
     root: &Fields<'n>,
     network: &Network<'_>,
+    tags: &[TagDraft<'_>],
     cx: &mut Context<'_>,
 ) -> Vec<AssumptionDraft<'n>> {
     let Some(at) = root.get("assumptions") else {
@@ -61,6 +63,11 @@ pub(super) fn read<'n>(
         let what = format!("[assumptions] has {} members", members.len());
         cx.error(&at.key, what, format!("at most {MAX_MEMBERS} are possible"));
         return Vec::new();
+    }
+    let taken: HashSet<&str> = tags.iter().map(|tag| tag.name.as_str()).collect();
+    for (name, at) in members.iter().filter(|(name, _)| taken.contains(name)) {
+        let what = format!("`{name}` is a tag already: a series of it would be one of the two");
+        cx.error(&at.key, what, "give the assumption another name");
     }
     let drafts = members.into_iter();
     drafts
@@ -94,6 +101,7 @@ fn assumption<'n>(
     };
     description(&fields, cx);
     let Some(statement) = statement(&fields, cx) else {
+        shape(&fields, cx);
         return draft;
     };
     let reference = reference(&fields, Some(statement), cx);
@@ -128,10 +136,9 @@ fn assumption<'n>(
         Some(value)
     });
     let subject = Subject {
-        dimension,
+        dimension: Some(dimension),
         unit: value.as_ref().map(|v| &v.unit),
         span: Span::Impossible,
-        is_flow: false,
     };
     let uncertainty = uncertainty(&fields, &subject, cx);
     if cx.findings.errors() > faults_before {
@@ -156,6 +163,19 @@ fn assumption<'n>(
         });
     }
     draft
+}
+
+/// Looks at the value and the uncertainty of nobody knows what.
+fn shape(fields: &Fields<'_>, cx: &mut Context<'_>) {
+    if let Some(at) = fields.require("value", cx, "write value = \"1 bar\"") {
+        parts(&at, "bar", cx);
+    }
+    let subject = Subject {
+        dimension: None,
+        unit: None,
+        span: Span::Impossible,
+    };
+    uncertainty(fields, &subject, cx);
 }
 
 fn statement<'n>(fields: &Fields<'n>, cx: &mut Context<'_>) -> Option<&'n str> {

@@ -83,6 +83,12 @@ impl<'n> Heading<'n> {
         if let BarometerDraft::Tag(name, place) = &self.barometer {
             check_tag(name, place, tags, cx);
         }
+        if let BarometerDraft::Assumed(_) = &self.barometer {
+            for tag in tags.iter().filter(|t| t.name == BAROMETER) {
+                let what = "`barometer` is the assumption that the plant's barometer makes";
+                cx.error(&tag.at.key, what, "give the tag another name");
+            }
+        }
         for tag in tags.iter().filter(|t| t.is_barometer) {
             self.check_barometer_tag(tag, cx);
         }
@@ -264,10 +270,9 @@ fn barometer<'n>(root: &Fields<'n>, cx: &mut Context<'_>) -> BarometerDraft<'n> 
         return BarometerDraft::Exact(value.internal());
     }
     let subject = Subject {
-        dimension: Dimension::Pressure,
+        dimension: Some(Dimension::Pressure),
         unit: value.as_ref().map(|v| &v.unit),
         span: Span::Impossible,
-        is_flow: false,
     };
     let uncertainty = uncertainty(&fields, &subject, cx);
     match (value, uncertainty) {

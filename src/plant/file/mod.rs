@@ -115,7 +115,7 @@ fn plant(root: &Node, cx: &mut Context<'_>) -> Option<Plant> {
     let network = Network::read(&root, cx);
     let kinds = joints::kinds(&network, cx);
     let tags = tags::read(&root, &network, cx);
-    let assumptions = assumptions::read(&root, &network, cx);
+    let assumptions = assumptions::read(&root, &network, &tags, cx);
     heading.check_references(&tags, &assumptions, cx);
     structure::check(&network, &kinds, &tags, &assumptions, cx);
     warnings::losses(&network, &assumptions, cx);

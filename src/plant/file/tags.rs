@@ -143,9 +143,9 @@ fn tag<'n>(name: String, at: At<'n>, network: &Network<'_>, cx: &mut Context<'_>
         None => Target::Unclear(None),
     };
     draft.touches = quantity.touches();
-    let Some(dimension) = dimension else {
-        return draft;
-    };
+    if measures.is_none() {
+        whereabouts(&fields, network, cx);
+    }
     let unit = unit(&fields, dimension, cx);
     let is_absolute = measures == Some("pressure") && reference == PressureReference::Absolute;
     let range = range(&fields, dimension, unit.as_ref(), is_absolute, cx);
@@ -158,7 +158,6 @@ fn tag<'n>(name: String, at: At<'n>, network: &Network<'_>, cx: &mut Context<'_>
             Range::Absent => Span::Absent,
             Range::Unclear => Span::Unclear,
         },
-        is_flow: dimension == Dimension::MassFlow,
     };
     let uncertainty = uncertainty(&fields, &subject, cx);
     if cx.findings.errors() > faults_before {
@@ -240,11 +239,42 @@ pub(super) fn reference(
     }
 }
 
-fn unit(fields: &Fields<'_>, dimension: Dimension, cx: &mut Context<'_>) -> Option<Unit> {
-    let common = dimension.common();
+/// Looks at an `of` of which nobody knows what is measured there.
+fn whereabouts(fields: &Fields<'_>, network: &Network<'_>, cx: &mut Context<'_>) {
+    let Some(at) = fields.get("of") else {
+        return;
+    };
+    let Some(name) = at.string(cx, "the name of a stream, such as \"live-steam\"") else {
+        return;
+    };
+    let machine = name.split_once('.').map_or(name, |(machine, _)| machine);
+    let is_known = name == BAROMETER
+        || network.stream_id(name).is_some()
+        || network.equipment_id(machine).is_some();
+    if !is_known {
+        let names = network.stream_names().chain(network.equipment_names());
+        let mend = cx.did_you_mean(name, names, || {
+            "name a stream, or for power a machine".to_owned()
+        });
+        let what = format!("there is no stream or equipment `{name}`");
+        cx.error(&at.place, what, mend);
+    }
+}
+
+/// Reads the unit; where its dimension is unclear, one of any tag will do.
+fn unit(fields: &Fields<'_>, dimension: Option<Dimension>, cx: &mut Context<'_>) -> Option<Unit> {
+    let common = dimension.unwrap_or(Dimension::MassFlow).common();
     let mend = format!("write unit = \"{}\" or another that fits", common[0]);
     let at = fields.require("unit", cx, &mend)?;
     let text = at.string(cx, &format!("\"{}\"", common[0]))?;
+    let Some(dimension) = dimension else {
+        let mut dimensions = MEASUREMENTS.iter().filter_map(|m| dimension_of(m));
+        if !dimensions.any(|dimension| dimension.unit(text).is_ok()) {
+            let what = format!("nothing that a tag measures has the unit `{text}`");
+            cx.error(&at.place, what, mend);
+        }
+        return None;
+    };
     match dimension.unit(text) {
         Ok(unit) => Some(unit),
         Err(fault) => {
@@ -262,7 +292,7 @@ enum Range {
 
 fn range(
     fields: &Fields<'_>,
-    dimension: Dimension,
+    dimension: Option<Dimension>,
     unit: Option<&Unit>,
     is_absolute_pressure: bool,
     cx: &mut Context<'_>,
@@ -296,7 +326,7 @@ fn range(
         return Range::Unclear;
     }
     let below_zero = |unit: &Unit| unit.to_internal(low) < -1e-9 * unit.factor;
-    let absolute_scale = is_absolute_pressure || dimension == Dimension::Temperature;
+    let absolute_scale = is_absolute_pressure || dimension == Some(Dimension::Temperature);
     if absolute_scale && unit.is_some_and(below_zero) {
         let (what, mend) = if is_absolute_pressure {
             (

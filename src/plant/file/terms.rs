@@ -1,18 +1,17 @@
 //! The terms of an uncertainty.
 
-use super::amount::{amount, fraction};
+use super::amount::{amount, fraction, parts};
 use super::reader::{At, Context, Fields, Shape};
 use crate::plant::{Dimension, Uncertainty, Unit};
 
 /// What an uncertainty belongs to.
 pub(super) struct Subject<'a> {
-    pub dimension: Dimension,
+    /// `None` where it is unclear: only the shape of terms is checked.
+    pub dimension: Option<Dimension>,
     /// `None` where the unit is faulty: terms are checked and not converted.
     pub unit: Option<&'a Unit>,
     /// Upper minus lower end of the range.
     pub span: Span,
-    /// A mass flow, which square-root extraction may have made.
-    pub is_flow: bool,
 }
 
 /// The span of a range.
@@ -54,25 +53,34 @@ pub(super) fn uncertainty(
     let mut out = Uncertainty::default();
     let mut of_range = 0.0;
     let mut absolute = 0.0;
+    // Whatever the unit and the range come to.
+    let mut is_zero = true;
     for key in ["of-reading", "of-value"] {
         if let Some(term) = terms.get(key).filter(|_| shape.keys.contains(&key)) {
             out.of_reading += of_reading(&term, subject, cx).unwrap_or(0.0);
+            is_zero &= out.of_reading == 0.0;
         }
     }
-    if let Some(term) = terms.get("of-range").filter(|_| !is_assumption) {
-        of_range = of_span(&term, subject, cx).map_or(0.0, |(share, span)| share * span);
+    if let Some(term) = terms.get("of-range").filter(|_| !is_assumption)
+        && let Some((share, span)) = of_span(&term, subject, cx)
+    {
+        is_zero &= share == 0.0;
+        of_range = share * span.unwrap_or(0.0);
     }
     if let Some(term) = terms.get("absolute") {
-        let difference = amount(&term, subject.dimension.of_difference(), cx);
-        if let (Some(d), Some(unit)) = (difference, subject.unit) {
-            let d_internal = d.unit.difference_to_internal(d.value);
-            absolute = unit.difference_from_internal(not_negative(&term, d_internal, cx));
-        }
+        let stated = stated(&term, subject, cx).unwrap_or(0.0);
+        is_zero &= stated == 0.0;
+        absolute = subject
+            .unit
+            .map_or(0.0, |unit| unit.difference_from_internal(stated));
     }
     if let Some(term) = terms.get("of-differential-span").filter(|_| !is_assumption) {
-        if subject.is_flow {
-            let read = of_span(&term, subject, cx);
-            out.differential = read.map_or(0.0, |(share, span)| 0.5 * share * span * span);
+        // Only square-root extraction makes such a term.
+        if matches!(subject.dimension, Some(Dimension::MassFlow) | None) {
+            if let Some((share, span)) = of_span(&term, subject, cx) {
+                is_zero &= share == 0.0;
+                out.differential = span.map_or(0.0, |span| 0.5 * share * span * span);
+            }
         } else {
             let what = "`of-differential-span` belongs to flows by square-root extraction only";
             cx.error(&term.key, what, "use `of-range`");
@@ -83,7 +91,7 @@ pub(super) fn uncertainty(
         return None;
     }
     let known = subject.unit.is_some() && subject.span != Span::Unclear;
-    if known && out == Uncertainty::default() {
+    if is_zero || (known && out == Uncertainty::default()) {
         let what = "the uncertainty is zero";
         cx.error(
             &at.place,
@@ -105,11 +113,28 @@ pub(super) fn uncertainty(
 }
 
 fn example(subject: &Subject<'_>) -> String {
-    let unit = match subject.dimension {
-        Dimension::Temperature | Dimension::TemperatureDifference => "K",
-        other => other.common()[0],
+    format!("{{ absolute = \"1 {}\" }}", common(subject))
+}
+
+/// A unit of differences, for messages.
+fn common(subject: &Subject<'_>) -> &'static str {
+    match subject.dimension {
+        Some(Dimension::Temperature | Dimension::TemperatureDifference) => "K",
+        Some(other) => other.common()[0],
+        None => "bar",
+    }
+}
+
+/// An absolute term in the internal unit; as written where that is unclear.
+fn stated(at: &At<'_>, subject: &Subject<'_>, cx: &mut Context<'_>) -> Option<f64> {
+    let stated = match subject.dimension {
+        Some(dimension) => {
+            let difference = amount(at, dimension.of_difference(), cx)?;
+            difference.unit.difference_to_internal(difference.value)
+        }
+        None => parts(at, common(subject), cx)?.0,
     };
-    format!("{{ absolute = \"1 {unit}\" }}")
+    Some(not_negative(at, stated, cx))
 }
 
 fn not_negative(at: &At<'_>, x: f64, cx: &mut Context<'_>) -> f64 {
@@ -142,13 +167,13 @@ fn of_reading(at: &At<'_>, subject: &Subject<'_>, cx: &mut Context<'_>) -> Optio
     Some(share)
 }
 
-/// A share of the span, with the span.
-fn of_span(at: &At<'_>, subject: &Subject<'_>, cx: &mut Context<'_>) -> Option<(f64, f64)> {
+/// A share of the span, with the span where it is clear.
+fn of_span(at: &At<'_>, subject: &Subject<'_>, cx: &mut Context<'_>) -> Option<(f64, Option<f64>)> {
     let share = fraction(at, cx)?;
     let share = not_negative(at, share, cx);
     match subject.span {
-        Span::Known(span) => Some((share, span)),
-        Span::Unclear | Span::Impossible => None,
+        Span::Known(span) => Some((share, Some(span))),
+        Span::Unclear | Span::Impossible => Some((share, None)),
         Span::Absent => {
             let what = "a share of the range, and the tag has no `range`";
             cx.error(

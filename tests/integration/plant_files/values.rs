@@ -3,6 +3,7 @@
 
 use counterpoise::plant::{Barometer, Format, Quantity, StreamId, read};
 
+use super::GOOD;
 use super::cases::{case, check};
 
 #[test]
@@ -110,6 +111,87 @@ fn ranges_and_uncertainties() {
 - unit = "K", uncertainty = { absolute = "0.2 K" }
 + unit = "K", uncertainty = { of-reading = "0.1 %" }"#,
     );
+}
+
+#[test]
+fn one_fault_does_not_hide_others() {
+    check(
+        r#"
+# The unit is faulty, and so is the uncertainty whatever the unit.
+- unit = "Cel", uncertainty = { absolute = "1.5 K" }
++ unit = "bar", uncertainty = {}
+! /tags/TT-201/unit | "bar" | not a unit of temperature | `Cel`
+! /tags/TT-201/uncertainty | {} | the uncertainty is zero | absolute
+
+- range = [0, 400], uncertainty = { of-reading = "1 %", of-range = "0.2 %" }
++ range = [400, 0], uncertainty = { of-range = "0 %" }
+! /tags/FT-201/range | [400, 0] | negative span | [0, 400]
+! /tags/FT-201/uncertainty | { | the uncertainty is zero | absolute
+
+- value = "25 kW", uncertainty = { absolute = "40 kW" }
++ value = "25 bar", uncertainty = {}
+! /assumptions/heater-6-loss/value | "25 bar" | not a unit of power | `kW`
+! /assumptions/heater-6-loss/uncertainty | {} | the uncertainty is zero | absolute
+
+# A term that is not zero is no fault because the unit is one.
+- unit = "t/h", range = [0, 400]
++ unit = "bar", range = [0, 400]
+! /tags/FT-201/unit | "bar" | not a unit of mass flow | `kg/s`
+
+# Nobody knows what is measured, and the rest is looked at all the same.
+- measures = "mass-flow", of = "live-steam", unit = "t/h", range = [0, 400], uncertainty = { of-reading = "1 %", of-range = "0.2 %" }, normal = 350
++ measures = "mass-flw", of = "live-steem", unit = "furlong", range = [400, 0], uncertainty = { absolute = 3 }, normal = "x"
+! /tags/FT-201/measures | "mass-flw" | there is no quantity | did you mean `mass-flow`
+! /tags/FT-201/of | "live-steem" | no stream or equipment | did you mean `live-steam`
+! /tags/FT-201/unit | "furlong" | nothing that a tag measures | kg/s
+! /tags/FT-201/range | [400, 0] | negative span | [0, 400]
+! /tags/FT-201/uncertainty/absolute | 3 | without a unit | string
+! /tags/FT-201/normal | "x" | a number is needed | 350
+
+- measures = "mass-flow", of = "live-steam", unit = "t/h", range = [0, 400], uncertainty = { of-reading = "1 %", of-range = "0.2 %" }, normal = 350
++ measures = "mass-flw", of = "live-steam", unit = "t/h", range = [0, 400], uncertainty = { of-differential-span = "1 %", absolute = "1 t/h" }
+! /tags/FT-201/measures | "mass-flw" | there is no quantity | did you mean `mass-flow`
+
+- measures = "mass-flow", of = "live-steam", unit = "t/h", range = [0, 400], uncertainty = { of-reading = "1 %", of-range = "0.2 %" }, normal = 350
++ measures = "mass-flw", of = "live-steam"
+! /tags/FT-201 | FT-201 | `unit` is missing | kg/s
+! /tags/FT-201 | FT-201 | `uncertainty` is missing | 95 %
+! /tags/FT-201/measures | "mass-flw" | there is no quantity | did you mean `mass-flow`
+
+- value-of = "heat-loss", of = "heater-6", value = "25 kW", uncertainty = { absolute = "40 kW" }
++ value-of = "heat-los", of = "heater-6", value = 25, uncertainty = {}
+! /assumptions/heater-6-loss/value-of | "heat-los" | there is no quantity | did you mean `heat-loss`
+! /assumptions/heater-6-loss/value | 25 | without a unit | string
+! /assumptions/heater-6-loss/uncertainty | {} | the uncertainty is zero | absolute"#,
+    );
+}
+
+#[test]
+fn a_tag_and_an_assumption_have_two_names() {
+    check(
+        r#"
+- holdup = {
++ FT-202 = {
+! /assumptions/FT-202 | FT-202 | `FT-202` is a tag already | another name
+
+- PT-203 = {
++ barometer = {
+! /tags/barometer | barometer | the plant's barometer makes | another name"#,
+    );
+}
+
+#[test]
+fn percent_come_out_as_the_nearest_double() {
+    for (text, value) in [
+        ("95 %", 0.95),
+        ("99 %", 0.99),
+        ("97.5 %", 0.975),
+        ("0.95 1", 0.95),
+    ] {
+        let file = format!("confidence = \"{text}\"\n{GOOD}");
+        let plant = read(&file, Format::Toml).unwrap().plant;
+        assert_eq!(plant.confidence.to_bits(), f64::to_bits(value), "{text}");
+    }
 }
 
 #[test]
