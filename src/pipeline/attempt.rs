@@ -134,7 +134,7 @@ fn attempt_from<'a>(
     let system = compiled.system();
     let plain = Modes::none(system.layout.streams());
     let plain = Case::new(system, measured.to_vec(), plain, &start.x);
-    let doubts = Intervals::of(&plain, &start.x, None);
+    let doubts = Intervals::of(&plain, &start.x);
     let mut modes = plain.modes().clone();
     for chain in &doubts {
         chain.put(chain.at(system, &start.x), &mut modes);

@@ -4,15 +4,14 @@
 //! hold a false minimum with perfect residuals. A stream whose temperature lies
 //! within 4 sigma of saturation is therefore solved on one side at a time
 //! ([`Mode`]), beginning with the side that the readings show; where it is near
-//! at the solution, or its temperature disagrees there, the other side is
+//! at the solution, or wet with a temperature that disagrees, the other side is
 //! solved too and the lower objective kept. Where the two do not differ
 //! significantly (chi-square with one degree of freedom at 95 %) the phase is
 //! open.
 //!
 //! Streams of one enthalpy (valves, splitters) change sides together. The
 //! saturation enthalpies of a chain's doubtful members cut the h axis into
-//! intervals ([`Intervals`]); in each of them every member has one mode, and
-//! the search goes from interval to neighbouring interval.
+//! intervals ([`Intervals`]), and in each of them every member has one mode.
 
 use super::attempt::Found;
 use super::compiled::Compiled;
@@ -33,10 +32,14 @@ const LOWER: f64 = 1e-7;
 /// Last step of a coarse solve, in sigma: the objective is then right to about
 /// its square.
 const COARSE: f64 = 1e-2;
+/// Steps of a coarse solve: one that starts next door needs few.
+const COARSE_STEPS: usize = 30;
 /// Enthalpy that no wet steam reaches, kJ/kg: IF97 has 2803.3 at 3 MPa at most.
 const NEVER_WET: f64 = 2804.0;
 /// Superheat that no error of pressure makes up for, K.
 const FAR: f64 = 40.0;
+/// Saturation enthalpies this close are of one pressure, kJ/kg.
+const SAME: f64 = 1e-3;
 /// How far a stream starts on the other side, kJ/kg.
 const ACROSS: f64 = 5.0;
 
@@ -53,21 +56,15 @@ pub struct Intervals {
 }
 
 impl Intervals {
-    /// The chains that have a doubtful member at `x`; `residuals` are those of
-    /// the observations there, where it is a solution.
-    pub fn of(case: &Case, x: &[f64], residuals: Option<&[f64]>) -> Vec<Intervals> {
+    /// The chains that have a doubtful member at `x`.
+    pub fn of(case: &Case, x: &[f64]) -> Vec<Intervals> {
         let chains = case.system().chains.iter();
         chains
-            .filter_map(|chain| Self::of_chain(case, x, residuals, chain))
+            .filter_map(|chain| Self::of_chain(case, x, chain))
             .collect()
     }
 
-    fn of_chain(
-        case: &Case,
-        x: &[f64],
-        residuals: Option<&[f64]>,
-        chain: &[StreamId],
-    ) -> Option<Intervals> {
+    fn of_chain(case: &Case, x: &[f64], chain: &[StreamId]) -> Option<Intervals> {
         let system = case.system();
         let mut intervals = Intervals {
             members: chain.to_vec(),
@@ -79,17 +76,14 @@ impl Intervals {
         if chain.iter().any(|s| system.on_saturation[s.0].is_some()) {
             return None;
         }
-        for &(i, s, measured) in &thermometers(case, chain) {
+        for &(s, measured) in &thermometers(case, chain) {
             let plain = !may_be_near(case, s, measured, x);
             let Some(at) = system.saturation(s, x).filter(|_| !plain) else {
                 continue;
             };
             let h = x[system.layout.h(s)];
             let (liquid, vapour) = (at.liquid.h, at.vapour.h);
-            let near = measured.is_some_and(|m| {
-                near(case, s, m, at.t, at.t_p)
-                    || residuals.is_some_and(|r| disagrees_near(m, at.t, r[i]))
-            });
+            let near = measured.is_some_and(|m| near(case, s, m, at.t, at.t_p));
             if measured.is_none() {
                 // Subcooling is stated of liquid.
                 intervals.doubtful.push((s, liquid, vapour));
@@ -108,7 +102,7 @@ impl Intervals {
             .flat_map(|&(_, liquid, vapour)| [liquid, vapour]);
         intervals.cuts = ends.collect();
         intervals.cuts.sort_by(f64::total_cmp);
-        intervals.cuts.dedup();
+        intervals.cuts.dedup_by(|a, b| (*a - *b).abs() < SAME);
         (!intervals.doubtful.is_empty()).then_some(intervals)
     }
 
@@ -129,6 +123,20 @@ impl Intervals {
     pub fn allows(&self, n: usize) -> bool {
         let (low, high) = self.ends(n);
         low < self.allowed.1 && high > self.allowed.0
+    }
+
+    /// Whether interval `next` may fit better than `current`. Of one saturation
+    /// pressure it is the nearer neighbour: wet steam does not become liquid for
+    /// a temperature near saturation. Of several (a valve) it is any, since the
+    /// way from one that fits to another can lead through one that does not.
+    fn is_worth(&self, system: &System, current: usize, next: usize, x: &[f64]) -> bool {
+        if self.cuts.len() > 2 {
+            return true;
+        }
+        let (low, high) = self.ends(current);
+        let h = x[system.layout.h(self.members[0])];
+        let (below, above) = (h - low, high - h);
+        (next + 1 == current && below <= above) || (next == current + 1 && above <= below)
     }
 
     /// Puts the modes of interval `n` on its doubtful members.
@@ -174,22 +182,17 @@ impl Intervals {
 
 /// Streams of a chain with a temperature (and what it reads) or a subcooling in
 /// use.
-fn thermometers(case: &Case, chain: &[StreamId]) -> Vec<(usize, StreamId, Option<Measured>)> {
-    let observations = case
-        .system()
-        .observations
-        .iter()
-        .zip(case.measured())
-        .enumerate();
+fn thermometers(case: &Case, chain: &[StreamId]) -> Vec<(StreamId, Option<Measured>)> {
+    let observations = case.system().observations.iter().zip(case.measured());
     observations
         .filter_map(
-            |(i, (observation, measured))| match (observation.quantity, measured) {
-                (Quantity::Temperature(s), Some(measured)) => Some((i, s, Some(*measured))),
-                (Quantity::Subcooling(s), Some(_)) => Some((i, s, None)),
+            |(observation, measured)| match (observation.quantity, measured) {
+                (Quantity::Temperature(s), Some(measured)) => Some((s, Some(*measured))),
+                (Quantity::Subcooling(s), Some(_)) => Some((s, None)),
                 _ => None,
             },
         )
-        .filter(|(_, s, _)| chain.contains(s))
+        .filter(|(s, _)| chain.contains(s))
         .collect()
 }
 
@@ -199,12 +202,6 @@ fn near(case: &Case, s: StreamId, measured: Measured, saturated: f64, slope: f64
     let pressure = case.state_scale()[case.system().layout.p(s)];
     let sigma = measured.sigma.get().hypot(slope * pressure);
     (measured.value - saturated).abs() < NEAR * sigma
-}
-
-/// Whether a temperature disagrees and is not plainly on its side: at a false
-/// minimum the pressure is off too, and with it saturation.
-fn disagrees_near(measured: Measured, saturated: f64, residual: f64) -> bool {
-    residual.abs() > SUSPICIOUS && (measured.value - saturated).abs() < FAR
 }
 
 /// Whether it pays to work out the saturated states: not for steam that is
@@ -220,7 +217,7 @@ fn may_be_near(case: &Case, s: StreamId, measured: Option<Measured>, x: &[f64]) 
 pub fn settle<'a>(compiled: &Compiled, mut case: Case<'a>, mut best: Outcome) -> Found<'a> {
     let system = compiled.system();
     let mut open = Vec::new();
-    for intervals in Intervals::of(&case, &best.x, Some(&best.evaluation.r)) {
+    for intervals in Intervals::of(&case, &best.x) {
         let mut current = intervals.at(system, &best.x);
         let mut modes = case.modes().clone();
         intervals.put(current, &mut modes);
@@ -228,9 +225,9 @@ pub fn settle<'a>(compiled: &Compiled, mut case: Case<'a>, mut best: Outcome) ->
         let mut tried = vec![current];
         let mut fits_too = Vec::new();
         while worth_trying(&case, &intervals, &best) {
-            let neighbours = [current.checked_sub(1), Some(current + 1)];
-            let next = neighbours.into_iter().flatten().find(|n| {
-                intervals.all().contains(n) && !tried.contains(n) && intervals.allows(*n)
+            let next = intervals.all().find(|&n| {
+                let open = !tried.contains(&n) && intervals.allows(n);
+                open && intervals.is_worth(system, current, n, &best.x)
             });
             let Some(next) = next else {
                 break;
@@ -276,6 +273,7 @@ fn explore(
 ) -> Option<Outcome> {
     let coarse = Options {
         tolerance_step: COARSE,
+        max_iterations: COARSE_STEPS,
         ..Options::default()
     };
     let converged = |start: &[f64], options: &Options| {
@@ -290,19 +288,20 @@ fn explore(
 }
 
 /// Whether another side may fit better: a temperature is near saturation, the
-/// chain is held at the line, or a member's temperature disagrees.
+/// chain is held at the line, or a wet member's temperature disagrees.
 fn worth_trying(case: &Case, intervals: &Intervals, best: &Outcome) -> bool {
     let system = case.system();
     let disagrees = |(i, measured): (usize, &Option<Measured>)| {
         let Quantity::Temperature(s) = system.observations[i].quantity else {
             return false;
         };
-        let (Some(measured), Some(at)) = (*measured, system.saturation(s, &best.x)) else {
+        let (Some(measured), Some(mode)) = (*measured, case.modes().get(s)) else {
             return false;
         };
-        intervals.members.contains(&s)
-            && (near(case, s, measured, at.t, at.t_p)
-                || disagrees_near(measured, at.t, best.evaluation.r[i]))
+        let at = system.saturation(s, &best.x);
+        let near = || at.is_some_and(|at| near(case, s, measured, at.t, at.t_p));
+        let suspicious = mode == Mode::Wet && best.evaluation.r[i].abs() > SUSPICIOUS;
+        intervals.members.contains(&s) && (suspicious || near())
     };
     on_the_line(system, intervals, best) || case.measured().iter().enumerate().any(disagrees)
 }

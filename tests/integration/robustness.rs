@@ -133,7 +133,9 @@ fn liquid_that_flashes_in_a_valve_is_found() {
         println!("flash from {t} Cel: {:.1} % rejected", 100.0 * share);
         assert!(share < 0.09, "{share}");
         for report in reports {
-            assert_eq!(report.streams["b"].phase, Some(Phase::Wet));
+            // A reading of pressure far off can leave it open; wrong it may not be.
+            let phase = report.streams["b"].phase;
+            assert!(matches!(phase, Some(Phase::Wet | Phase::Open)), "{phase:?}");
             assert_ne!(report.streams["a"].phase, Some(Phase::Vapour));
         }
     }
