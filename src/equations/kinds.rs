@@ -9,10 +9,10 @@ use super::relation::{Carried, Law, Relation, Role, Side};
 use crate::plant::{Equipment, EquipmentId, Kind, Plant, Quantity, StreamId};
 
 /// One side of a piece of equipment: what conserves mass by itself.
-struct Balanced {
-    name: String,
-    inlets: Vec<StreamId>,
-    outlets: Vec<StreamId>,
+pub(super) struct Balanced {
+    pub(super) name: String,
+    pub(super) inlets: Vec<StreamId>,
+    pub(super) outlets: Vec<StreamId>,
 }
 
 /// How a kind's energy is conserved.
@@ -43,14 +43,27 @@ enum Condition {
     Saturated(StreamId, Side),
 }
 
+/// The condition on a stream whose valve is closed.
+pub const NORMALLY_CLOSED: &str = "normally closed";
+
 /// Every relation of the plant, bounds last.
 pub fn relations(plant: &Plant, layout: &Layout) -> Vec<Relation> {
     let mut relations = Vec::new();
     for (e, equipment) in plant.equipment.iter().enumerate() {
         relations.extend(of_equipment(EquipmentId(e), equipment, layout));
     }
+    for (s, _) in (plant.streams.iter().enumerate()).filter(|(_, s)| s.normally_closed) {
+        let law = Law::Linear(vec![(layout.m(StreamId(s)), 1.0)]);
+        let role = Role::Condition(NORMALLY_CLOSED);
+        relations.push(Relation::new(None, role, law, layout));
+    }
     relations.extend(bounds(plant, layout));
     relations
+}
+
+/// The sides of a kind that conserve mass each.
+pub(super) fn sides(kind: &Kind, layout: &Layout) -> Vec<Balanced> {
+    table(kind, OwnStates::default(), layout).sides
 }
 
 fn of_equipment(id: EquipmentId, equipment: &Equipment, layout: &Layout) -> Vec<Relation> {

@@ -106,6 +106,12 @@ impl Layout {
         }
     }
 
+    /// Adds a state behind the others.
+    pub(super) fn add(&mut self, kind: StateKind) -> usize {
+        self.kinds.push(kind);
+        self.kinds.len() - 1
+    }
+
     /// Number of states.
     pub fn len(&self) -> usize {
         self.kinds.len()

@@ -6,6 +6,7 @@
 //! nothing of how the problem is solved: [`Case`] hands residuals and exact
 //! sparse Jacobians to the solver.
 
+mod hypothesis;
 mod kinds;
 mod layout;
 mod modes;
@@ -15,6 +16,7 @@ mod relation;
 mod start;
 mod system;
 
+pub use hypothesis::{Blame, Hypothesis, hypotheses};
 pub use layout::{Layout, OwnStates, StateKind};
 pub use modes::{Mode, Modes};
 pub use observation::Observation;

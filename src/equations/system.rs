@@ -111,6 +111,11 @@ impl System {
     pub fn new(plant: &Plant) -> Self {
         let layout = Layout::new(plant);
         let relations = kinds::relations(plant, &layout);
+        Self::of(plant, layout, relations)
+    }
+
+    /// The system of these relations between the states of a layout.
+    pub(super) fn of(plant: &Plant, layout: Layout, relations: Vec<Relation>) -> Self {
         let mut on_saturation = vec![None; plant.streams.len()];
         for relation in &relations {
             if let (Role::Condition(_), Law::Saturated { stream, side, .. }) =
@@ -198,6 +203,15 @@ impl System {
         let mut gradient = vec![0.0; relation.row.len()];
         let value = relation.evaluate(&self.layout, x, &saturations, &mut gradient);
         Some((value.ok()?, gradient))
+    }
+
+    /// Whether nothing can flow in a stream: its valve is closed, and no
+    /// hypothesis lets it pass.
+    pub fn is_closed(&self, stream: StreamId) -> bool {
+        let flow = [self.layout.m(stream)];
+        let closed = Role::Condition(kinds::NORMALLY_CLOSED);
+        let mut relations = self.relations.iter();
+        relations.any(|r| r.role == closed && r.row == flow)
     }
 
     /// Saturated states at a stream's pressure; `None` above the critical

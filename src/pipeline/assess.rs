@@ -8,9 +8,10 @@
 use super::attempt::{Found, attempt};
 use super::class_set;
 use super::compiled::Compiled;
+use super::hypotheses::limits;
 use super::solution::Solution;
 use super::tags::class;
-use crate::diagnosis::detectable_bias;
+use crate::diagnosis::detectable;
 use crate::equations::{Measured, StateKind, start};
 use crate::plant::{Quantity, Sigma, StreamId, Uncertainty, Unit};
 use crate::report::{
@@ -48,6 +49,7 @@ pub fn assess(compiled: &Compiled) -> Assessment {
         degrees_of_freedom: 0,
         tags: IndexMap::new(),
         assumptions: IndexMap::new(),
+        limits: Vec::new(),
         streams: IndexMap::new(),
         unobservable: Vec::new(),
         warnings: Vec::new(),
@@ -72,6 +74,10 @@ pub fn assess(compiled: &Compiled) -> Assessment {
         let entry = assessed_stream(compiled, &solution, StreamId(s));
         assessment.streams.insert(stream.name.clone(), entry);
     }
+    let critical = solution.single_test().map(|test| test.critical_value);
+    assessment.limits = limits(compiled, &solution, critical);
+    // The operating point is no batch: nothing is held against anything.
+    (assessment.limits.iter_mut()).for_each(|limit| limit.standardised = None);
     assessment.unobservable = unobservable(compiled, &solution);
     assessment
 }
@@ -181,7 +187,7 @@ fn assessed_tag(solution: &Solution, i: usize, unit: &Unit) -> AssessedTag {
     tag.redundancy = Some(redundancy);
     if let (Class::Redundant, Some(test)) = (tag.class, solution.single_test()) {
         let sigma = unit.difference_from_internal(measured.sigma.get());
-        tag.detectable = Some(detectable_bias(test.critical_value, sigma, redundancy));
+        tag.detectable = Some(detectable(test.critical_value, sigma / redundancy.sqrt()));
     }
     tag
 }

@@ -4,8 +4,10 @@
 
 use super::attempt::Found;
 use super::compiled::Compiled;
-use crate::diagnosis::{Critical, HARDLY_REDUNDANT, Method, Miss, critical_value};
-use crate::equations::{Role, System};
+use super::hypotheses::testable;
+use super::solution::{Shift, Solution};
+use crate::diagnosis::{Critical, Method, critical_value};
+use crate::equations::{Hypothesis, System};
 use crate::plant::StreamId;
 use crate::report::SingleTest;
 use crate::solver::{Classes, Covariance, Problem, classify};
@@ -16,6 +18,10 @@ use std::sync::Arc;
 /// A flow below this part of the largest is zero: its stream's enthalpy drops
 /// out of every energy balance.
 const ZERO_FLOW: f64 = 1e-7;
+
+/// Which statistics a critical value is the largest of: values that an earlier
+/// edition kept are not held against this one's.
+const EDITION: u32 = 2;
 
 /// Enthalpy this close to the saturation line is on it, kJ/kg.
 const ON_THE_LINE: f64 = 1e-5;
@@ -42,14 +48,14 @@ impl ClassKey {
         ClassKey(key)
     }
 
-    /// A short name of the key: the first 16 hexadecimal digits of its SHA-256.
+    /// A short name of the key: the edition of the tests and the first 16
+    /// hexadecimal digits of its SHA-256.
     pub fn name(&self) -> String {
         let digest = Sha256::digest(&self.0);
-        digest
-            .iter()
-            .take(8)
+        let digits: String = (digest.iter().take(8))
             .map(|byte| format!("{byte:02x}"))
-            .collect()
+            .collect();
+        format!("{EDITION}-{digits}")
     }
 }
 
@@ -73,7 +79,7 @@ fn on_the_line(h: f64, line: f64) -> bool {
 /// Classes and critical value of one class set.
 pub struct ClassSet {
     /// Rank, degrees of freedom, observability and redundancy.
-    pub classes: Classes,
+    pub classes: Arc<Classes>,
     /// Critical value; `None` where nothing is tested.
     pub single_test: Option<SingleTest>,
 }
@@ -87,14 +93,34 @@ pub fn of(compiled: &Compiled, found: &Found) -> Arc<ClassSet> {
     let key = ClassKey::new(compiled, found);
     let name = key.name();
     let known = compiled.class_set(key, || made_at(compiled, found, &name));
-    let mut directions = known.classes.unobservable_basis().iter();
-    if directions.all(|direction| direction.len() == 1) {
-        return known;
+    if turns(&known.classes) {
+        return Arc::new(ClassSet {
+            classes: Arc::new(classes(found)),
+            single_test: known.single_test.clone(),
+        });
     }
-    Arc::new(ClassSet {
-        classes: classes(found),
-        single_test: known.single_test.clone(),
-    })
+    known
+}
+
+/// The classes of a solution with suspects in, and the test of the batch without
+/// them, which they are held against.
+pub fn with_test(compiled: &Compiled, found: &Found, test: &SingleTest) -> ClassSet {
+    let key = ClassKey::new(compiled, found);
+    let known = compiled.classes(key, || classes(found));
+    let classes = if turns(&known) {
+        Arc::new(classes(found))
+    } else {
+        known
+    };
+    ClassSet {
+        classes,
+        single_test: Some(test.clone()),
+    }
+}
+
+fn turns(classes: &Classes) -> bool {
+    let mut directions = classes.unobservable_basis().iter();
+    directions.any(|direction| direction.len() > 1)
 }
 
 /// The class set of a solution that is no batch: nothing is remembered of it, so
@@ -105,12 +131,14 @@ pub fn apart(compiled: &Compiled, found: &Found) -> ClassSet {
 }
 
 fn made_at(compiled: &Compiled, found: &Found, name: &str) -> ClassSet {
-    let classes = classes(found);
-    let covariance = covariance(compiled, found, &classes);
-    let single_test = single_test(compiled, found, &covariance, &classes, name);
+    let untested = ClassSet {
+        classes: Arc::new(classes(found)),
+        single_test: None,
+    };
+    let single_test = single_test(compiled, found, &untested, name);
     ClassSet {
-        classes,
         single_test,
+        ..untested
     }
 }
 
@@ -142,51 +170,43 @@ fn classes(found: &Found) -> Classes {
     )
 }
 
-/// The critical value of the single tests at a solution, by simulation.
+/// The critical value of the largest statistic of all hypotheses at a solution,
+/// by simulation.
 fn single_test(
     compiled: &Compiled,
     found: &Found,
-    covariance: &Covariance,
-    classes: &Classes,
+    untested: &ClassSet,
     class_set: &str,
 ) -> Option<SingleTest> {
     if let Some(known) = compiled.recalled(class_set) {
         return Some(known);
     }
+    let solution = Solution::new(compiled, found, untested);
     let structure = &found.case.system().structure;
     let used: Vec<usize> = (0..structure.observations.len())
-        .filter(|&i| found.case.measured()[i].is_some() && classes.redundant[i])
+        .filter(|&i| found.case.measured()[i].is_some() && solution.is_redundant(i))
         .collect();
-    let tested: Vec<usize> = (0..used.len())
-        .filter(|&n| covariance.redundancy(used[n]) >= HARDLY_REDUNDANT)
+    let tested: Vec<&Hypothesis> = (compiled.hypotheses().iter())
+        .filter(|hypothesis| testable(&solution, hypothesis).is_ok())
         .collect();
-    let balances: Vec<usize> = (0..structure.relations.len())
-        .filter(|&k| {
-            let role = &found.case.system().relations[k].role;
-            matches!(role, Role::Mass { .. } | Role::Energy)
-                && Miss::new(0.0, covariance.multiplier_variance(k)).is_some()
-        })
-        .collect();
+    let shifts: Vec<Shift> = tested.iter().map(|h| solution.shift(h)).collect();
     let mut redundancy = DMatrix::zeros(used.len(), used.len());
-    let mut multipliers = DMatrix::zeros(balances.len(), used.len());
-    let (no_states, no_relations) = (
-        vec![0.0; structure.states],
-        vec![0.0; structure.relations.len()],
-    );
+    let mut rows = DMatrix::zeros(tested.len(), used.len());
     let mut error = vec![0.0; structure.observations.len()];
     for (column, &i) in used.iter().enumerate() {
         error[i] = 1.0;
-        let response = covariance.column(&no_states, &no_relations, &error);
+        let response = solution.covariance().column(&[], &[], &error);
         error[i] = 0.0;
         for (row, &other) in used.iter().enumerate() {
             redundancy[(row, column)] = response.residuals[other];
         }
-        for (row, &k) in balances.iter().enumerate() {
-            multipliers[(row, column)] = response.multipliers[k];
+        for (row, shift) in shifts.iter().enumerate() {
+            rows[(row, column)] = shift.numerator(&response.residuals, &response.multipliers);
         }
     }
+    let one_sided: Vec<bool> = tested.iter().map(|h| h.one_sided).collect();
     let confidence = compiled.plant().confidence;
-    let critical = critical_value(&redundancy, &multipliers, &tested, confidence)?;
+    let critical = critical_value(&redundancy, &rows, &one_sided, confidence)?;
     Some(in_report(critical, class_set))
 }
 
@@ -200,5 +220,6 @@ fn in_report(critical: Critical, class_set: &str) -> SingleTest {
         .to_owned(),
         statistics: critical.statistics,
         class_set: class_set.to_owned(),
+        group_distance: critical.group_distance,
     }
 }

@@ -1,36 +1,58 @@
 //! A plant revision, compiled once and reused for every batch.
 
 use super::class_set::{ClassKey, ClassSet};
-use crate::equations::System;
+use crate::equations::{Hypothesis, System, hypotheses};
 use crate::plant::Plant;
 use crate::report::SingleTest;
-use crate::solver::Symbolic;
+use crate::solver::{Classes, Symbolic};
 use std::collections::HashMap;
 use std::sync::{Arc, Mutex, PoisonError};
+
+/// Variants that are kept: a suspect that stays is met in every batch.
+const VARIANTS_KEPT: usize = 128;
 
 /// A plant revision: topology, equations and symbolic factorisation, and the
 /// classes of every set of phases met so far.
 pub struct Compiled {
-    plant: Plant,
+    plant: Arc<Plant>,
     revision: u32,
     system: System,
     symbolic: Symbolic,
+    hypotheses: Arc<[Hypothesis]>,
+    classes: Mutex<HashMap<ClassKey, Arc<Classes>>>,
     class_sets: Mutex<HashMap<ClassKey, Arc<ClassSet>>>,
     recalled: Mutex<HashMap<String, SingleTest>>,
+    variants: Mutex<HashMap<Vec<usize>, Arc<Variant>>>,
+}
+
+/// A plant in which some hypotheses hold, each with a state of its own behind
+/// the others.
+pub struct Variant {
+    /// The plant with the states of the hypotheses.
+    pub compiled: Compiled,
+    /// Hypotheses with their states.
+    pub states: Vec<(usize, usize)>,
 }
 
 impl Compiled {
     /// Compiles a plant.
     pub fn new(plant: Plant, revision: u32) -> Self {
         let system = System::new(&plant);
-        let symbolic = Symbolic::new(&system.structure);
+        let hypotheses = hypotheses(&plant, &system).into();
+        Self::of(Arc::new(plant), revision, system, hypotheses)
+    }
+
+    fn of(plant: Arc<Plant>, revision: u32, system: System, hypotheses: Arc<[Hypothesis]>) -> Self {
         Compiled {
+            symbolic: Symbolic::new(&system.structure),
             plant,
             revision,
             system,
-            symbolic,
+            hypotheses,
+            classes: Mutex::default(),
             class_sets: Mutex::default(),
             recalled: Mutex::default(),
+            variants: Mutex::default(),
         }
     }
 
@@ -62,6 +84,37 @@ impl Compiled {
         &self.symbolic
     }
 
+    /// Every hypothesis.
+    pub(super) fn hypotheses(&self) -> &[Hypothesis] {
+        &self.hypotheses
+    }
+
+    /// The plant with these hypotheses, which blame relations, as unknowns. What
+    /// it is does not depend on whether it was kept.
+    pub(super) fn variant(&self, suspects: &[usize]) -> Arc<Variant> {
+        let lock = || {
+            let variants = self.variants.lock();
+            variants.unwrap_or_else(PoisonError::into_inner)
+        };
+        if let Some(known) = lock().get(suspects) {
+            return Arc::clone(known);
+        }
+        let named: Vec<&Hypothesis> = suspects.iter().map(|&h| &self.hypotheses[h]).collect();
+        let (system, states) = self.system.with(&self.plant, &named);
+        let (plant, all) = (Arc::clone(&self.plant), Arc::clone(&self.hypotheses));
+        let states = suspects.iter().zip(states);
+        let made = Arc::new(Variant {
+            compiled: Self::of(plant, self.revision, system, all),
+            states: states.filter_map(|(&h, j)| Some((h, j?))).collect(),
+        });
+        let mut variants = lock();
+        if variants.len() >= VARIANTS_KEPT {
+            variants.clear();
+        }
+        variants.insert(suspects.to_vec(), Arc::clone(&made));
+        made
+    }
+
     pub(super) fn recalled(&self, class_set: &str) -> Option<SingleTest> {
         let recalled = self.recalled.lock().unwrap_or_else(PoisonError::into_inner);
         recalled.get(class_set).cloned()
@@ -79,6 +132,16 @@ impl Compiled {
                 .lock()
                 .unwrap_or_else(PoisonError::into_inner)
         };
+        if let Some(known) = lock().get(&key) {
+            return Arc::clone(known);
+        }
+        let made = Arc::new(make());
+        Arc::clone(lock().entry(key).or_insert(made))
+    }
+
+    /// The classes of a key, likewise.
+    pub(super) fn classes(&self, key: ClassKey, make: impl FnOnce() -> Classes) -> Arc<Classes> {
+        let lock = || self.classes.lock().unwrap_or_else(PoisonError::into_inner);
         if let Some(known) = lock().get(&key) {
             return Arc::clone(known);
         }

@@ -9,20 +9,29 @@
 
 mod assess;
 mod attempt;
+mod checks;
 mod class_set;
 mod compiled;
 mod equipment;
+mod hypotheses;
+mod influence;
 mod phases;
 mod readings;
+mod robust;
+mod search;
 mod solution;
 mod streams;
+mod suspects;
 mod tags;
+mod trial;
 
 pub use assess::assess;
 pub use compiled::Compiled;
+pub use influence::{NoInfluences, influences};
+pub use suspects::suppose;
 
 use crate::diagnosis::{chi_square_quantile, chi_square_tail};
-use crate::plant::Batch;
+use crate::plant::{Batch, ByHand};
 use crate::report::{GlobalTest, Report, Verdict};
 use indexmap::IndexMap;
 use readings::Readings;
@@ -30,7 +39,12 @@ use solution::Solution;
 
 /// Reconciles one batch.
 pub fn reconcile(compiled: &Compiled, batch: &Batch) -> Report {
-    let readings = Readings::new(compiled.plant(), batch);
+    reconcile_with(compiled, batch, &[])
+}
+
+/// Reconciles one batch with what was decided by hand about its tags.
+pub fn reconcile_with(compiled: &Compiled, batch: &Batch, by_hand: &[ByHand]) -> Report {
+    let readings = Readings::new(compiled.plant(), batch, by_hand);
     let mut report = empty_report(compiled, batch, &readings);
     let found = match attempt::attempt(compiled, &readings.measured) {
         Ok(found) => found,
@@ -52,6 +66,9 @@ pub fn reconcile(compiled: &Compiled, batch: &Batch) -> Report {
     report.streams = streams::streams(compiled, &solution);
     report.equipment = equipment::equipment(compiled, &solution);
     report.remarks.extend(solution.remarks(compiled));
+    let critical = report.single_test.as_ref().map(|test| test.critical_value);
+    report.limits = hypotheses::limits(compiled, &solution, critical);
+    suspects::name(compiled, &readings, &found, &solution, &mut report);
     report
 }
 
@@ -70,6 +87,11 @@ fn empty_report(compiled: &Compiled, batch: &Batch, readings: &Readings) -> Repo
         assumptions: IndexMap::new(),
         streams: IndexMap::new(),
         equipment: IndexMap::new(),
+        suspects: Vec::new(),
+        suspects_remarks: Vec::new(),
+        after_suspects: None,
+        limits: Vec::new(),
+        by_hand: readings.by_hand.clone(),
         ignored_tags: readings.ignored.clone(),
         remarks: readings.remarks.clone(),
     }

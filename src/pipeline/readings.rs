@@ -1,11 +1,13 @@
 //! From a batch's readings to measured values with their sigma.
 
 use crate::equations::Measured;
-use crate::plant::{Batch, Grade, Plant, Quantity, Reading, Sigma};
+use crate::plant::{Action, Batch, ByHand, Grade, Plant, Quantity, Reading, Sigma};
+use crate::report::ByHandReport;
 use std::collections::HashMap;
 
 /// What a batch says, tag by tag in the order of the plant file, assumptions
 /// behind them.
+#[derive(Clone)]
 pub struct Readings {
     /// Value in internal units and its sigma; `None` where not used.
     pub measured: Vec<Option<Measured>>,
@@ -19,6 +21,8 @@ pub struct Readings {
     pub ignored: Vec<String>,
     /// What a person should see.
     pub remarks: Vec<String>,
+    /// Decisions that hold for this batch.
+    pub by_hand: Vec<ByHandReport>,
 }
 
 /// One tag's part.
@@ -30,8 +34,9 @@ struct Resolved {
 }
 
 impl Readings {
-    /// Resolves the readings of a batch.
-    pub fn new(plant: &Plant, batch: &Batch) -> Self {
+    /// Resolves the readings of a batch, with the decisions by hand that cover
+    /// it.
+    pub fn new(plant: &Plant, batch: &Batch, by_hand: &[ByHand]) -> Self {
         let by_tag: HashMap<&str, &Reading> =
             batch.readings.iter().map(|r| (r.tag.as_str(), r)).collect();
         let mut readings = Readings::empty();
@@ -42,6 +47,13 @@ impl Readings {
                     tag.uncertainty.sigma(value)
                 }),
             };
+            let resolved = by_hand
+                .iter()
+                .filter(|decision| decision.tag == tag.name && decision.covers(batch))
+                .fold(resolved, |resolved, decision| {
+                    readings.by_hand.push(in_report(decision));
+                    resolved.decided(decision)
+                });
             if let (true, Quantity::MassFlow(_), Some(value)) =
                 (resolved.used, tag.quantity, resolved.value)
                 && value < 0.0
@@ -80,6 +92,7 @@ impl Readings {
             reasons: Vec::new(),
             ignored: Vec::new(),
             remarks: Vec::new(),
+            by_hand: Vec::new(),
         }
     }
 
@@ -113,6 +126,29 @@ impl Resolved {
             sigma: None,
             used: false,
             reason: Some(reason.to_owned()),
+        }
+    }
+
+    /// The same after a decision by hand.
+    fn decided(self, decision: &ByHand) -> Self {
+        let (reason, by) = (&decision.reason, &decision.by);
+        match decision.action {
+            Action::OutOfService => Resolved {
+                used: false,
+                reason: Some(format!("out of service by hand: {reason} ({by})")),
+                ..self
+            },
+            Action::Offset(offset) => {
+                let told = format!("{offset} added by hand: {reason} ({by})");
+                let reason = self
+                    .reason
+                    .map_or_else(|| told.clone(), |earlier| format!("{earlier}; {told}"));
+                Resolved {
+                    value: self.value.map(|value| value + offset),
+                    reason: Some(reason),
+                    ..self
+                }
+            }
         }
     }
 
@@ -153,5 +189,20 @@ impl Resolved {
             used: true,
             reason: None,
         }
+    }
+}
+
+fn in_report(decision: &ByHand) -> ByHandReport {
+    let (action, offset) = match decision.action {
+        Action::OutOfService => ("out-of-service", None),
+        Action::Offset(offset) => ("offset", Some(offset)),
+    };
+    ByHandReport {
+        id: decision.id,
+        tag: decision.tag.clone(),
+        action: action.to_owned(),
+        offset,
+        reason: decision.reason.clone(),
+        by: decision.by.clone(),
     }
 }

@@ -3,11 +3,11 @@
 use super::attempt::Found;
 use super::class_set::{self, ClassSet};
 use super::compiled::Compiled;
-use crate::diagnosis::Miss;
-use crate::equations::{Measured, Role, State, System};
+use crate::diagnosis::{Evidence, Miss};
+use crate::equations::{Hypothesis, Layout, Measured, Role, State, System};
 use crate::plant::{Quantity, StreamId};
 use crate::report::SingleTest;
-use crate::solver::{Classes, Covariance};
+use crate::solver::{Classes, Column, Covariance, Problem};
 
 /// A solution, ready to be asked.
 pub struct Solution<'a> {
@@ -16,6 +16,22 @@ pub struct Solution<'a> {
     covariance: Covariance<'a>,
     multipliers: Vec<f64>,
     states: Vec<Option<State>>,
+}
+
+/// What one unit of a hypothesis shifts: readings by w (in sigma), relations by
+/// phi.
+pub struct Shift {
+    reading: Option<(usize, f64)>,
+    relations: Vec<(usize, f64)>,
+}
+
+impl Shift {
+    /// The numerator w'r - phi'lambda of the hypothesis' statistic.
+    pub fn numerator(&self, residuals: &[f64], multipliers: &[f64]) -> f64 {
+        let reading = self.reading.map_or(0.0, |(i, w)| w * residuals[i]);
+        let relations = self.relations.iter();
+        reading - relations.map(|&(k, phi)| phi * multipliers[k]).sum::<f64>()
+    }
 }
 
 impl<'a> Solution<'a> {
@@ -55,6 +71,11 @@ impl<'a> Solution<'a> {
     /// What observation `i` reads, internal units.
     pub fn measured(&self, i: usize) -> Option<Measured> {
         self.found.case.measured()[i]
+    }
+
+    /// Where each state stands.
+    pub fn layout(&self) -> &'a Layout {
+        &self.system().layout
     }
 
     /// Degrees of freedom.
@@ -100,11 +121,16 @@ impl<'a> Solution<'a> {
     /// What observation `i` should read and the sigma of that, in internal
     /// units; `None` where it is unobservable.
     pub fn predict(&self, i: usize) -> Option<(f64, f64)> {
+        let (value, gradient) = self.prediction(i)?;
+        Some((value, self.uncertainty(&gradient)?))
+    }
+
+    /// What observation `i` should read, with its gradient by the states.
+    pub fn prediction(&self, i: usize) -> Option<(f64, Vec<(usize, f64)>)> {
         let system = self.system();
         let (value, slopes) = system.predict(i, self.x())?;
         let row = system.observations[i].row.iter().copied();
-        let gradient: Vec<(usize, f64)> = row.zip(slopes).collect();
-        Some((value, self.uncertainty(&gradient)?))
+        Some((value, row.zip(slopes).collect()))
     }
 
     /// Temperature of a stream and its sigma, K; `None` where it is
@@ -139,6 +165,74 @@ impl<'a> Solution<'a> {
     /// What balance `k` would miss; `None` where nothing checks it.
     pub fn miss(&self, k: usize) -> Option<Miss> {
         Miss::new(self.multipliers[k], self.covariance.multiplier_variance(k))
+    }
+
+    /// What one unit of a hypothesis shifts; a reading that is not in use shifts
+    /// nothing.
+    pub fn shift(&self, hypothesis: &Hypothesis) -> Shift {
+        let reading = hypothesis.observation().and_then(|i| {
+            let measured = self.measured(i)?;
+            Some((i, 1.0 / measured.sigma.get()))
+        });
+        Shift {
+            reading,
+            relations: hypothesis.rows(&self.system().layout, self.x()),
+        }
+    }
+
+    /// What the solution says of a hypothesis, in internal units; `None` where
+    /// nothing of it shows.
+    pub fn evidence(&self, hypothesis: &Hypothesis) -> Option<Evidence> {
+        let shift = self.shift(hypothesis);
+        let residuals = &self.found.outcome.evaluation.r;
+        let numerator = shift.numerator(residuals, &self.multipliers);
+        let variance = match shift.reading {
+            Some((i, w)) => w * w * self.redundancy(i),
+            None => self
+                .covariance
+                .multiplier_combination_variance(&shift.relations),
+        };
+        Evidence::new(numerator, variance)
+    }
+
+    /// How the solution would have come out otherwise, had one unit of a
+    /// hypothesis not been there: the change that it makes, to first order.
+    pub fn response(&self, hypothesis: &Hypothesis) -> Column {
+        let shift = self.shift(hypothesis);
+        let structure = &self.system().structure;
+        let mut readings = vec![0.0; structure.observations.len()];
+        if let Some((i, w)) = shift.reading {
+            readings[i] = w;
+        }
+        let mut relations = vec![0.0; structure.relations.len()];
+        for &(k, phi) in &shift.relations {
+            relations[k] = phi;
+        }
+        self.covariance.column(&[], &relations, &readings)
+    }
+
+    /// Variances and responses.
+    pub fn covariance(&self) -> &Covariance<'a> {
+        &self.covariance
+    }
+
+    /// Whether nothing checks any of these relations.
+    pub fn is_unchecked(&self, relations: &[(usize, f64)]) -> bool {
+        let checked = &self.class_set.classes.relation_checked;
+        relations.iter().all(|&(k, _)| !checked[k])
+    }
+
+    /// Whether an enthalpy enters a balance of energy that something checks.
+    pub fn checks_energy_of(&self, h: usize) -> bool {
+        let checked = &self.class_set.classes.relation_checked;
+        let relations = self.system().relations.iter().zip(checked);
+        let mut energy = relations.filter(|(relation, _)| relation.role == Role::Energy);
+        energy.any(|(relation, &checked)| checked && relation.row.contains(&h))
+    }
+
+    /// A typical size of the terms of relation `k`.
+    pub fn relation_scale(&self, k: usize) -> f64 {
+        self.found.case.relation_scale()[k]
     }
 
     /// What a person should see: bounds that are active, phases that are open.

@@ -8,9 +8,9 @@ use crate::report::{Observability, Phase, QuantityReport, StreamReport};
 use indexmap::IndexMap;
 
 /// 0 Cel in K.
-const ZERO_CELSIUS: f64 = 273.15;
+pub const ZERO_CELSIUS: f64 = 273.15;
 /// bar in MPa.
-const BAR: f64 = 0.1;
+pub const BAR: f64 = 0.1;
 /// A quality this close to 0 or 1 is saturated liquid or vapour: the line
 /// itself, up to rounding.
 const ON_THE_LINE: f64 = 1e-6;
@@ -30,8 +30,14 @@ fn entry(compiled: &Compiled, solution: &Solution, s: StreamId) -> StreamReport 
     let layout = &compiled.system().layout;
     let (m, p, h) = (layout.m(s), layout.p(s), layout.h(s));
     let state = |j: usize| Some((solution.x()[j], solution.uncertainty(&[(j, 1.0)])?));
+    // Behind a closed valve nothing flows by the plant file, and that is certain.
+    let flow = if compiled.system().is_closed(s) {
+        Some((0.0, 0.0))
+    } else {
+        state(m)
+    };
     StreamReport {
-        mass_flow: quantity(state(m), ReportUnit("kg/s", 1.0, 0.0)),
+        mass_flow: quantity(flow, ReportUnit("kg/s", 1.0, 0.0)),
         pressure: quantity(state(p), ReportUnit("bar", BAR, 0.0)),
         temperature: quantity(
             solution.temperature(s),

@@ -3,7 +3,7 @@
 use super::compiled::Compiled;
 use super::readings::Readings;
 use super::solution::Solution;
-use crate::diagnosis::{HARDLY_REDUNDANT, detectable_bias};
+use crate::diagnosis::{HARDLY_REDUNDANT, detectable};
 use crate::plant::{COVERAGE_FACTOR, Unit};
 use crate::report::{Class, TagReport};
 use indexmap::IndexMap;
@@ -73,7 +73,7 @@ fn entry(i: usize, unit: &Unit, readings: &Readings, solution: Option<&Solution>
             if report.class == Class::Redundant {
                 report.standardised_adjustment = Some(adjustment / redundancy.sqrt());
                 let critical = solution.single_test().map(|test| test.critical_value);
-                report.detectable = critical.map(|c| detectable_bias(c, sigma, redundancy));
+                report.detectable = critical.map(|c| detectable(c, sigma / redundancy.sqrt()));
             }
         }
         _ => {

@@ -6,15 +6,20 @@
 //! MPa (absolute), K, kJ/kg, kJ/(kg K) and kW wherever a field does not say
 //! otherwise; [`Unit`] converts to and from the units of tags.
 
+mod alarms;
 mod batch;
+mod by_hand;
 mod dimension;
 mod file;
 mod kind;
 mod model;
+mod portable;
 mod uncertainty;
 mod unit;
 
+pub use alarms::{AlarmSettings, Priorities, Priority};
 pub use batch::{Batch, Grade, Quality, Reading};
+pub use by_hand::{Action, ByHand};
 pub use dimension::{ALIASES, ANSWERS, Dimension, UnitFault};
 pub use file::{
     Fault, Faults, Format, MAX_BYTES, PlantFile, Severity, canonical_json, read, render,
@@ -23,5 +28,6 @@ pub use model::{
     Assumption, Barometer, Equipment, EquipmentId, Kind, Plant, PressureReference, Quantity,
     Stream, StreamId, Tag,
 };
+pub use portable::Portable;
 pub use uncertainty::{COVERAGE_FACTOR, Sigma, Uncertainty};
 pub use unit::Unit;

@@ -1,6 +1,6 @@
 //! The types of a plant that has passed every check.
 
-use super::{Uncertainty, Unit};
+use super::{AlarmSettings, Portable, Uncertainty, Unit};
 
 /// A stream, by its place in [`Plant::streams`].
 #[derive(Clone, Copy, Debug, PartialEq, Eq, Hash, PartialOrd, Ord)]
@@ -23,6 +23,8 @@ pub struct Plant {
     pub uncertain_factor: f64,
     /// Confidence of the statistical tests, 0 to 1.
     pub confidence: f64,
+    /// The search for suspects starts from a robust solution.
+    pub robust_start: bool,
     /// Streams in the order of the file.
     pub streams: Vec<Stream>,
     /// Equipment in the order of the file.
@@ -32,6 +34,10 @@ pub struct Plant {
     /// Assumptions in the order of the file; an uncertain barometer is one of
     /// them, named `barometer`.
     pub assumptions: Vec<Assumption>,
+    /// When alarms rise and return, and how urgent they are.
+    pub alarms: AlarmSettings,
+    /// Uncertainties of portable instruments.
+    pub portable: Portable,
 }
 
 /// What is known of the atmospheric pressure at the instruments.
@@ -56,6 +62,8 @@ pub struct Stream {
     pub to: Option<EquipmentId>,
     /// The flow may not turn negative.
     pub non_negative: bool,
+    /// Its valve is closed: nothing flows unless the valve passes.
+    pub normally_closed: bool,
 }
 
 /// A machine or vessel.

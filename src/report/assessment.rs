@@ -1,6 +1,6 @@
 //! The assessment of a plant: what its tags can and cannot determine.
 
-use super::{Class, Observability};
+use super::{Class, Limit, Observability};
 use indexmap::IndexMap;
 use serde::{Deserialize, Serialize};
 use utoipa::ToSchema;
@@ -28,6 +28,10 @@ pub struct Assessment {
     pub tags: IndexMap<String, AssessedTag>,
     /// Every assumption.
     pub assumptions: IndexMap<String, AssessedTag>,
+    /// What would be found and what would go unseen, tag by tag and balance by
+    /// balance: the unseen first.
+    #[serde(default)]
+    pub limits: Vec<Limit>,
     /// Every stream.
     pub streams: IndexMap<String, AssessedStream>,
     /// What is unobservable, and why.

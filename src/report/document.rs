@@ -1,5 +1,6 @@
 //! The report of one batch.
 
+use super::suspects::{AfterSuspects, ByHandReport, Limit, Suspect};
 use indexmap::IndexMap;
 use serde::{Deserialize, Serialize};
 use time::OffsetDateTime;
@@ -37,6 +38,24 @@ pub struct Report {
     pub streams: IndexMap<String, StreamReport>,
     /// Every piece of equipment.
     pub equipment: IndexMap<String, EquipmentReport>,
+    /// What explains the disagreement, in the order in which it was found.
+    #[serde(default)]
+    pub suspects: Vec<Suspect>,
+    /// What the search for suspects came to, where the suspects alone do not
+    /// tell: no single cause explains a failed global test, the redundancy is
+    /// used up.
+    #[serde(default, skip_serializing_if = "Vec::is_empty")]
+    pub suspects_remarks: Vec<String>,
+    /// Reconciled values with the suspects taken out; absent without suspects.
+    /// The verdict stays what the readings earned.
+    #[serde(default, skip_serializing_if = "Option::is_none")]
+    pub after_suspects: Option<Box<AfterSuspects>>,
+    /// What this batch would show and what would go unseen: the unseen first.
+    #[serde(default)]
+    pub limits: Vec<Limit>,
+    /// What was decided by hand about tags of this batch.
+    #[serde(default, skip_serializing_if = "Vec::is_empty")]
+    pub by_hand: Vec<ByHandReport>,
     /// Tags of the batch that the plant file does not know.
     pub ignored_tags: Vec<String>,
     /// Remarks that a person should see: a negative flow that was used, a
@@ -85,6 +104,10 @@ pub struct SingleTest {
     /// The set of tags in use, phases, zero flows and active bounds that it
     /// holds for; the same set of one revision has the same critical value.
     pub class_set: String,
+    /// Likelihood ratios within this of the best are not told apart: the true
+    /// cause is then among them with 95 %.
+    #[serde(default)]
+    pub group_distance: f64,
 }
 
 /// What the observations can say of a tag.
@@ -104,7 +127,8 @@ pub enum Class {
 /// A tag or assumption in a report; all numbers in its own unit.
 #[derive(Clone, Debug, PartialEq, Serialize, Deserialize, ToSchema)]
 pub struct TagReport {
-    /// Reading (value of an assumption); null where it is missing.
+    /// Reading (value of an assumption), an offset by hand added; null where it
+    /// is missing.
     pub measured: Option<f64>,
     /// Best estimate; null where it cannot be determined.
     pub reconciled: Option<f64>,

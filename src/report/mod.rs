@@ -7,9 +7,15 @@
 
 mod assessment;
 mod document;
+mod influence;
+mod suspects;
 
 pub use assessment::{AssessedQuantity, AssessedStream, AssessedTag, Assessment};
 pub use document::{
     Class, EquipmentReport, GlobalTest, Imbalance, Imbalances, Observability, Phase,
     QuantityReport, Report, SingleTest, StreamReport, TagReport, Verdict,
+};
+pub use influence::{Influence, Influences};
+pub use suspects::{
+    Accused, AfterSuspects, ByHandReport, Cause, FieldCheck, Hypothesis, Limit, Repaired, Suspect,
 };

@@ -187,6 +187,30 @@ impl<'a> Covariance<'a> {
         scaled.max(0.0) * scale * scale
     }
 
+    /// Variance of a combination of multipliers, as (relation, factor); exactly
+    /// zero where none of the relations is checked.
+    pub fn multiplier_combination_variance(&self, terms: &[(usize, f64)]) -> f64 {
+        let checked = terms
+            .iter()
+            .filter(|&&(k, _)| self.system.row_scale[k] != 0.0 && self.classes.relation_checked[k]);
+        let scaled: Vec<(usize, f64)> = checked
+            .map(|&(k, factor)| {
+                let place = self.system.symbolic.relation_place(k);
+                (place, factor * self.system.row_scale[k])
+            })
+            .collect();
+        if scaled.is_empty() {
+            return 0.0;
+        }
+        let variance = self.within_fill(&scaled).unwrap_or_else(|| {
+            let mut rhs = self.zeros();
+            scaled.iter().for_each(|&(place, f)| rhs[place] += f);
+            let solution = self.refined(&rhs);
+            scaled.iter().map(|&(place, f)| f * solution[place]).sum()
+        });
+        (-variance).max(0.0)
+    }
+
     /// Multipliers with the dependent relations set aside: those in use are
     /// unique and belong to [`Self::multiplier_variance`].
     pub fn multipliers(&self) -> Vec<f64> {

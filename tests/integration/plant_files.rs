@@ -1,5 +1,6 @@
 //! Plant files: what is accepted, what is refused, and how it is explained.
 
+mod alarms;
 mod cases;
 mod kinds;
 mod network;

@@ -17,10 +17,13 @@ pub(super) const PLANT: Shape = Shape {
         "barometer",
         "uncertain-factor",
         "confidence",
+        "robust-start",
         "streams",
         "equipment",
         "tags",
         "assumptions",
+        "alarms",
+        "portable",
     ],
 };
 
@@ -41,6 +44,7 @@ pub(super) struct Heading<'n> {
     pub title: Option<String>,
     pub uncertain_factor: Option<f64>,
     pub confidence: Option<f64>,
+    pub robust_start: Option<bool>,
     pub barometer: BarometerDraft<'n>,
 }
 
@@ -69,6 +73,10 @@ impl<'n> Heading<'n> {
             title,
             uncertain_factor: uncertain_factor(root, cx),
             confidence: confidence(root, cx),
+            robust_start: match root.get("robust-start") {
+                Some(at) => at.boolean(cx),
+                None => Some(false),
+            },
             barometer: barometer(root, cx),
         }
     }

@@ -7,6 +7,7 @@
 //! was probably meant to be is remembered, so that one fault does not cause
 //! others elsewhere. A [`Plant`] is made only from a file without errors.
 
+mod alarms;
 mod amount;
 mod assumptions;
 mod equipment;
@@ -17,6 +18,7 @@ mod json;
 mod kinds;
 mod network;
 mod parts;
+mod portable;
 mod pressures;
 mod reader;
 mod sides;
@@ -116,6 +118,8 @@ fn plant(root: &Node, cx: &mut Context<'_>) -> Option<Plant> {
     let kinds = joints::kinds(&network, cx);
     let tags = tags::read(&root, &network, cx);
     let assumptions = assumptions::read(&root, &network, &tags, cx);
+    let alarms = alarms::read(&root, cx);
+    let portable = portable::read(&root, cx);
     heading.check_references(&tags, &assumptions, cx);
     structure::check(&network, &kinds, &tags, &assumptions, cx);
     warnings::losses(&network, &assumptions, cx);
@@ -128,6 +132,7 @@ fn plant(root: &Node, cx: &mut Context<'_>) -> Option<Plant> {
         barometer: heading.barometer.model(),
         uncertain_factor: heading.uncertain_factor?,
         confidence: heading.confidence?,
+        robust_start: heading.robust_start?,
         streams: streams(&network),
         equipment: equipment(&network, kinds)?,
         tags: tags.iter().map(|t| t.tag.clone()).collect::<Option<_>>()?,
@@ -136,6 +141,8 @@ fn plant(root: &Node, cx: &mut Context<'_>) -> Option<Plant> {
             .map(|a| a.assumption.clone())
             .chain(heading.barometer.assumption().map(Some))
             .collect::<Option<_>>()?,
+        alarms: alarms?,
+        portable: portable?,
     };
     let places = warnings::Places {
         streams: network.streams.iter().map(|s| &s.place).collect(),
@@ -155,6 +162,7 @@ fn streams(network: &Network<'_>) -> Vec<Stream> {
         from: joined(s.from),
         to: joined(s.to),
         non_negative: s.non_negative,
+        normally_closed: s.normally_closed,
     });
     streams.collect()
 }

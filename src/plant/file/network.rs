@@ -26,6 +26,7 @@ pub(super) struct StreamDraft<'n> {
     pub from: End,
     pub to: End,
     pub non_negative: bool,
+    pub normally_closed: bool,
 }
 
 /// Streams and equipment of a file, faulty or not.
@@ -41,7 +42,14 @@ pub(super) const MAX_MEMBERS: usize = 20_000;
 
 const STREAM: Shape = Shape {
     owner: "a stream",
-    keys: &["fluid", "from", "to", "non-negative", "description"],
+    keys: &[
+        "fluid",
+        "from",
+        "to",
+        "non-negative",
+        "normally-closed",
+        "description",
+    ],
 };
 
 const STREAM_EXAMPLE: &str = "{ fluid = \"water\", from = \"boiler.water\", to = \"turbine\" }";
@@ -109,6 +117,7 @@ impl<'n> Network<'n> {
             from: End::Unclear,
             to: End::Unclear,
             non_negative: false,
+            normally_closed: false,
         };
         let Some(fields) = at.fields(cx, &STREAM, STREAM_EXAMPLE) else {
             return stream;
@@ -117,6 +126,9 @@ impl<'n> Network<'n> {
         description(&fields, cx);
         if let Some(flag) = fields.get("non-negative") {
             stream.non_negative = flag.boolean(cx).unwrap_or(false);
+        }
+        if let Some(flag) = fields.get("normally-closed") {
+            stream.normally_closed = flag.boolean(cx).unwrap_or(false);
         }
         let from = fields.get("from");
         let to = fields.get("to");

@@ -60,6 +60,7 @@ pub(super) fn structural(plant: &Plant, places: &Places<'_>, cx: &mut Context<'_
     pressures::check(&view, places, cx);
     pressures::barometer(plant, places, cx);
     wet_streams(&view, places, cx);
+    closed_streams(&view, places, cx);
     untouched_sides(&view, places, cx);
 }
 
@@ -148,6 +149,82 @@ fn wet_streams(view: &View<'_>, places: &Places<'_>, cx: &mut Context<'_>) {
             cx.findings.warning(places.streams[i], what, mend);
         }
     }
+}
+
+/// Streams that are normally closed and whose enthalpy only balances of energy
+/// could tell: without a flow these say nothing of it, and a leak that carries
+/// an unknown enthalpy hardly shows.
+fn closed_streams(view: &View<'_>, places: &Places<'_>, cx: &mut Context<'_>) {
+    let plant = view.plant;
+    let mut alike = Parts::new(plant.streams.len());
+    let mut is_told: Vec<bool> = plant.streams.iter().map(|s| !s.normally_closed).collect();
+    for equipment in &plant.equipment {
+        match &equipment.kind {
+            Kind::Splitter { inlet, outlets } => {
+                outlets.iter().for_each(|s| alike.join(inlet.0, s.0));
+            }
+            Kind::Valve { inlet, outlet } => alike.join(inlet.0, outlet.0),
+            Kind::Header {
+                outlets,
+                well_mixed: true,
+                ..
+            } => alike.join_all(outlets.iter().map(|s| s.0)),
+            kind => saturated(kind).for_each(|s| is_told[s.0] = true),
+        }
+    }
+    for quantity in &view.observed {
+        match *quantity {
+            Quantity::Temperature(s)
+            | Quantity::Quality(s)
+            | Quantity::Enthalpy(s)
+            | Quantity::Subcooling(s) => is_told[s.0] = true,
+            Quantity::IsentropicEfficiency { inlet, outlet, .. } => {
+                is_told[inlet.0] = true;
+                is_told[outlet.0] = true;
+            }
+            _ => {}
+        }
+    }
+    for part in alike.all() {
+        if part.iter().any(|&s| is_told[s]) {
+            continue;
+        }
+        let name = &plant.streams[part[0]].name;
+        let what = format!(
+            "nothing determines the enthalpy of `{name}`, which is normally closed: without a \
+             flow no balance tells it, and what passes may go unseen"
+        );
+        let mend = format!(
+            "take `{name}` off a splitter, or add a temperature or an assumed enthalpy on it"
+        );
+        cx.findings.warning(places.streams[part[0]], what, mend);
+    }
+}
+
+/// Outlets that are on the saturation line by their kind.
+fn saturated(kind: &Kind) -> impl Iterator<Item = StreamId> {
+    let (liquid, vent) = match *kind {
+        Kind::ClosedHeater {
+            drain_out,
+            drain_saturated,
+            vent,
+            ..
+        } => (drain_saturated.then_some(drain_out), vent),
+        Kind::OpenHeater {
+            outlet,
+            outlet_saturated,
+            vent,
+            ..
+        } => (outlet_saturated.then_some(outlet), vent),
+        Kind::Condenser {
+            condensate,
+            condensate_saturated,
+            vent,
+            ..
+        } => (condensate_saturated.then_some(condensate), vent),
+        _ => (None, None),
+    };
+    liquid.into_iter().chain(vent)
 }
 
 /// Streams joined by mass balances, none of which has a tag, beside a plant
@@ -246,5 +323,54 @@ fn mass_balances(kind: &Kind) -> Vec<Vec<StreamId>> {
             water.chain(reheats).collect()
         }
         Kind::Generator { .. } | Kind::Shaft { .. } | Kind::Motor { .. } => Vec::new(),
+    }
+}
+
+#[cfg(test)]
+mod tests {
+    use crate::plant::{Format, read};
+
+    /// What is warned of a heater with a second drain of its own.
+    fn warnings(dump: &str, more: &str) -> Vec<String> {
+        let text = format!(
+            r#"
+plant = "heater"
+[streams]
+steam = {{ fluid = "water", to = "heater.steam" }}
+drain = {{ fluid = "water", from = "heater.drain", to = "tee" }}
+low   = {{ fluid = "water", from = "tee" }}
+cold  = {{ fluid = "water", to = "mixer" }}
+hot   = {{ fluid = "water", to = "mixer" }}
+water = {{ fluid = "water", from = "mixer", to = "heater.tube" }}
+warm  = {{ fluid = "water", from = "heater.tube" }}
+{dump}
+[equipment]
+heater = {{ kind = "closed-heater" }}
+tee    = {{ kind = "splitter" }}
+mixer  = {{ kind = "mixer" }}
+[tags]
+F-1 = {{ measures = "mass-flow", of = "warm", unit = "t/h", uncertainty = {{ of-reading = "1 %" }} }}
+F-2 = {{ measures = "mass-flow", of = "drain", unit = "t/h", uncertainty = {{ of-reading = "1 %" }} }}
+{more}
+"#
+        );
+        let file = read(&text, Format::Toml).unwrap_or_else(|faults| panic!("{faults}"));
+        let warnings = file.warnings.iter().map(|warning| warning.to_string());
+        warnings.filter(|w| w.contains("normally closed")).collect()
+    }
+
+    #[test]
+    fn a_closed_stream_whose_enthalpy_nothing_tells_is_warned_of() {
+        let from_outside = r#"bypass = { fluid = "water", to = "mixer", normally-closed = true }"#;
+        let found = warnings(from_outside, "");
+        assert_eq!(found.len(), 1, "{found:?}");
+        assert!(found[0].contains("`bypass`"), "{found:?}");
+
+        let temperature = r#"T-1 = { measures = "temperature", of = "bypass", unit = "Cel", uncertainty = { absolute = "1 K" } }"#;
+        assert!(warnings(from_outside, temperature).is_empty());
+        let off_a_tee = r#"dump = { fluid = "water", from = "tee", normally-closed = true }"#;
+        assert!(warnings(off_a_tee, "").is_empty());
+        let open = from_outside.replace(", normally-closed = true", "");
+        assert!(warnings(&open, "").is_empty());
     }
 }

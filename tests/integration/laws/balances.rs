@@ -470,6 +470,7 @@ fn with_leak(plant: &Plant, name: &str, flow: f64, half_width: f64) -> Plant {
         from,
         to: None,
         non_negative: false,
+        normally_closed: false,
     });
     let kind = &mut plant.equipment[from.expect("equipment").0].kind;
     match kind {
