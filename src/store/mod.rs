@@ -1,14 +1,21 @@
-//! What is kept: plants with their revisions, accepted batches, results.
+//! What is kept: plants with their revisions, accepted batches, results with
+//! their versions, the watch over each plant, and what people entered by hand.
 //!
 //! [`Store`] is the whole interface; [`SqliteStore`] is the one behind it. A
 //! call that returns `Ok` from [`Store::accept`] has put the batch where a
 //! power cut does not reach it. An error means that nothing was acknowledged.
+//! Nothing is ever deleted: what is changed leaves a trace of what it was.
 //! Nothing outside this directory knows SQL.
 
 mod numbers;
+mod records;
 mod sqlite;
 mod types;
 
+pub use records::{
+    AccusationRow, Again, ByHandRow, Ended, FieldReading, NewByHand, NewEvent, NewFieldReading,
+    StoredEvent, VersionLine, Watched,
+};
 pub use sqlite::{Hindrance, OLDEST_SQLITE, SqliteOptions, SqliteStore};
 pub use types::{
     Acceptance, BatchLine, BatchQuery, Column, Cursor, Field, Health, Incoming, NewPlant, Page,
@@ -19,12 +26,20 @@ pub use types::{
 use crate::report::{Report, SingleTest};
 use futures::future::BoxFuture;
 use std::sync::Arc;
+use time::OffsetDateTime;
 use tokio::sync::watch;
 
 /// What a call on a store comes to.
 pub type Reply<'a, T> = BoxFuture<'a, Result<T, StoreError>>;
 
 /// Where plants, batches and results are kept.
+///
+/// [`finish`](Store::finish), [`finish_again`](Store::finish_again),
+/// [`change_watch`](Store::change_watch) and the calls that add something take
+/// their turn **when they are called**, not when the future is polled: two
+/// calls one after another are done in that order, whatever is awaited first.
+/// What has been called is done even where the future is dropped. They have to
+/// be called inside a Tokio runtime.
 pub trait Store: Send + Sync + 'static {
     /// Takes a new revision of a plant, unless nothing changed or the
     /// precondition does not hold.
@@ -44,12 +59,48 @@ pub trait Store: Send + Sync + 'static {
     /// another it is a conflict.
     fn accept(&self, incoming: Incoming) -> Reply<'_, Acceptance>;
 
-    /// Makes the result of an accepted batch durable. A second result of the
-    /// same batch is dropped.
-    fn finish(&self, ticket: Ticket, report: Arc<Report>) -> Reply<'_, ()>;
+    /// Makes the result of an accepted batch durable, and with it, in one
+    /// transaction, what the look at it changed. Answers the numbers given to
+    /// the events. A second result of the same batch is dropped with all that
+    /// came with it, and answered with `None`.
+    ///
+    /// After an error nothing of either is kept: a caller that holds the watch
+    /// in memory has to read it again.
+    fn finish(
+        &self,
+        ticket: Ticket,
+        report: Arc<Report>,
+        watched: Option<Watched>,
+    ) -> Reply<'_, Option<Vec<i64>>>;
+
+    /// Puts a new result in the place of the present one, which becomes an
+    /// older version and stays. The batch keeps its ticket. Answers the number
+    /// of the new version; `None`, with nothing done, where the batch has no
+    /// result yet.
+    fn finish_again(
+        &self,
+        ticket: Ticket,
+        report: Arc<Report>,
+        again: Again,
+    ) -> Reply<'_, Option<u32>>;
+
+    /// The versions of a batch's result, the first one first; none where there
+    /// is no such batch or it has no result.
+    fn versions<'a>(&'a self, plant: &'a str, batch: &'a str) -> Reply<'a, Vec<VersionLine>>;
+
+    /// One version of a batch's result, older or present.
+    fn version<'a>(
+        &'a self,
+        plant: &'a str,
+        batch: &'a str,
+        version: u32,
+    ) -> Reply<'a, Option<Report>>;
 
     /// What is known of a batch.
     fn batch<'a>(&'a self, plant: &'a str, batch: &'a str) -> Reply<'a, Option<Stored>>;
+
+    /// A batch as it was accepted, finished or not, for reconciling it again.
+    fn inbox<'a>(&'a self, plant: &'a str, batch: &'a str) -> Reply<'a, Option<Unfinished>>;
 
     /// Batches, the latest period first.
     fn batches(&self, query: BatchQuery) -> Reply<'_, Page<BatchLine>>;
@@ -60,6 +111,69 @@ pub trait Store: Send + Sync + 'static {
     /// Accepted batches without a result, in the order of their acceptance,
     /// after the ticket number given.
     fn unfinished(&self, after: i64, limit: usize) -> Reply<'_, Vec<Unfinished>>;
+
+    /// The watch over a plant as it was last kept.
+    fn watch<'a>(&'a self, plant: &'a str) -> Reply<'a, Option<String>>;
+
+    /// Makes a change of the watch durable that no batch brought: what a person
+    /// did, or time. Answers the numbers given to the events; `None` where there
+    /// is no such plant.
+    fn change_watch(&self, plant: &str, watched: Watched) -> Reply<'_, Option<Vec<i64>>>;
+
+    /// Events of a plant after the number given, in their order.
+    fn events<'a>(
+        &'a self,
+        plant: &'a str,
+        after: i64,
+        limit: usize,
+    ) -> Reply<'a, Vec<StoredEvent>>;
+
+    /// Accusations of a plant, those that are open or those that are closed
+    /// where it is asked, after the number given, in the order of their numbers.
+    fn accusations<'a>(
+        &'a self,
+        plant: &'a str,
+        open: Option<bool>,
+        after: u64,
+        limit: usize,
+    ) -> Reply<'a, Vec<AccusationRow>>;
+
+    /// One accusation.
+    fn accusation<'a>(&'a self, plant: &'a str, id: u64) -> Reply<'a, Option<AccusationRow>>;
+
+    /// Keeps a decision by hand; `None` where there is no such plant.
+    fn add_by_hand(&self, plant: &str, new: NewByHand) -> Reply<'_, Option<ByHandRow>>;
+
+    /// Decisions by hand in the order of entering: all of them, or those that
+    /// hold for a period that starts at the time given.
+    fn by_hand<'a>(
+        &'a self,
+        plant: &'a str,
+        at: Option<OffsetDateTime>,
+    ) -> Reply<'a, Vec<ByHandRow>>;
+
+    /// Has a decision by hand hold until another time; answers it as it is now.
+    /// What it was before is kept. `None` where the plant has no such decision.
+    fn end_by_hand(
+        &self,
+        plant: &str,
+        id: i64,
+        until: OffsetDateTime,
+        ended: Ended,
+    ) -> Reply<'_, Option<ByHandRow>>;
+
+    /// Keeps a reading taken in the field; answers its number, `None` where
+    /// there is no such batch.
+    fn add_field_reading(
+        &self,
+        plant: &str,
+        batch: &str,
+        new: NewFieldReading,
+    ) -> Reply<'_, Option<i64>>;
+
+    /// Readings taken in the field for a batch, in the order of entering.
+    fn field_readings<'a>(&'a self, plant: &'a str, batch: &'a str)
+    -> Reply<'a, Vec<FieldReading>>;
 
     /// How the store is.
     fn health(&self) -> watch::Receiver<Health>;

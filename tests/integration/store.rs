@@ -1,5 +1,11 @@
 //! What holds for every store.
 
+mod again;
+mod by_hand;
+mod file;
+mod old;
+mod watch;
+
 use crate::harness::NOW;
 use counterpoise::report::{
     Class, GlobalTest, Observability, QuantityReport, Report, SingleTest, StreamReport, TagReport,
@@ -108,6 +114,11 @@ fn report(ticket: &Ticket, minute: i64, value: f64, unit: &str) -> Report {
         assumptions: Default::default(),
         streams: [("first".to_owned(), stream)].into_iter().collect(),
         equipment: Default::default(),
+        suspects: vec![],
+        suspects_remarks: vec![],
+        after_suspects: None,
+        limits: vec![],
+        by_hand: vec![],
         ignored_tags: vec![],
         remarks: vec![],
     }
@@ -129,6 +140,7 @@ async fn the_first_critical_value_of_a_class_set_stands() {
             method: "simulated".to_owned(),
             statistics: 7,
             class_set: class_set.to_owned(),
+            group_distance: 2.5,
         };
         let told = [test("one", 3.1), test("one", 3.2), test("two", 3.3)];
         for (minute, told) in (0..).zip(told) {
@@ -139,7 +151,7 @@ async fn the_first_critical_value_of_a_class_set_stands() {
                 ..report(&ticket, minute, 1.0, "kg/s")
             };
             store
-                .finish(ticket, Arc::new(report))
+                .finish(ticket, Arc::new(report), None)
                 .await
                 .expect("finished");
         }
@@ -269,11 +281,12 @@ async fn results_come_back_bit_for_bit() {
         assert_eq!(unfinished[0].received, NOW);
         let first = Arc::new(report(&ticket, 0, 0.1 + 0.2, "t/h"));
         store
-            .finish(ticket.clone(), Arc::clone(&first))
+            .finish(ticket.clone(), Arc::clone(&first), None)
             .await
             .expect("finished");
         let other = Arc::new(report(&ticket, 0, 7.0, "t/h"));
-        store.finish(ticket, other).await.expect("finished");
+        let second = store.finish(ticket, other, None).await.expect("finished");
+        assert_eq!(second, None);
         let read = store.batch("p", "b").await.expect("read");
         assert_eq!(
             read,
@@ -298,7 +311,7 @@ async fn lists_and_series_go_by_time() {
             let ticket = accepted(store, incoming("p", &format!("b{minute}"), minute, 1)).await;
             if minute != 4 {
                 let report = Arc::new(report(&ticket, minute, value, unit));
-                store.finish(ticket, report).await.expect("finished");
+                store.finish(ticket, report, None).await.expect("finished");
             }
         }
         let query = |verdict, limit, after| BatchQuery {

@@ -1,14 +1,17 @@
 //! The store in one SQLite file.
 //!
 //! WAL mode with `synchronous=FULL`: a commit returns after its bytes have been
-//! fsynced. One writer takes jobs from a bounded queue and commits many in one
-//! transaction, because the fsync costs more than everything else together.
+//! fsynced. One writer takes jobs from a queue and commits many in one
+//! transaction, because the fsync costs more than everything else together. A
+//! job enters the queue when it is called for, so that the order of calls is the
+//! order of the transactions; new batches are refused where the queue is long.
 //! Readers have a pool of their own and never wait for the writer.
 
 mod fault;
 mod open;
 mod read;
 mod sql;
+mod values;
 mod work;
 mod writer;
 
@@ -19,8 +22,10 @@ pub use open::OLDEST_SQLITE;
 
 use super::numbers::Layout;
 use super::{
-    Acceptance, BatchLine, BatchQuery, Health, Incoming, NewPlant, Page, PlantLine, PutOutcome,
-    Reply, SeriesPage, SeriesQuery, Store, StoreError, Stored, StoredPlant, Ticket, Unfinished,
+    Acceptance, AccusationRow, Again, BatchLine, BatchQuery, ByHandRow, Ended, FieldReading,
+    Health, Incoming, NewByHand, NewFieldReading, NewPlant, Page, PlantLine, PutOutcome, Reply,
+    SeriesPage, SeriesQuery, Store, StoreError, Stored, StoredEvent, StoredPlant, Ticket,
+    Unfinished, VersionLine, Watched,
 };
 use crate::report::{Report, SingleTest};
 use futures::FutureExt;
@@ -30,8 +35,12 @@ use std::collections::HashMap;
 use std::path::PathBuf;
 use std::sync::{Arc, Mutex};
 use std::time::Duration;
-use tokio::sync::{mpsc, oneshot, watch};
-use work::{Accept, Finish, PutPlant};
+use time::OffsetDateTime;
+use tokio::sync::{OwnedSemaphorePermit, Semaphore, mpsc, oneshot, watch};
+use work::{
+    Accept, AddByHand, AddFieldReading, ChangeWatch, EndByHand, Finish, FinishAgain, Prepared,
+    PutPlant, Work,
+};
 use writer::{Message, Task, Writer};
 
 /// How a SQLite store is set up.
@@ -39,7 +48,8 @@ use writer::{Message, Task, Writer};
 pub struct SqliteOptions {
     /// The database file; made where it is missing.
     pub path: PathBuf,
-    /// Jobs that may wait for the writer.
+    /// Jobs that may be with the writer before new batches are refused. What
+    /// has been accepted is always let in: its number is bounded by that.
     pub queue: usize,
     /// Jobs that one transaction takes at most.
     pub group: usize,
@@ -73,7 +83,10 @@ pub struct Hindrance {
 
 /// The store in one SQLite file.
 pub struct SqliteStore {
-    jobs: mpsc::Sender<Message>,
+    jobs: mpsc::UnboundedSender<Message>,
+    /// Places in the queue. A batch needs one; other jobs take one that is free,
+    /// and go without where there is none.
+    places: Arc<Semaphore>,
     readers: SqlitePool,
     health: watch::Receiver<Health>,
     layouts: Mutex<HashMap<i64, Arc<Layout>>>,
@@ -94,11 +107,13 @@ impl SqliteStore {
             .max_connections(4)
             .acquire_timeout(options.lock_timeout)
             .connect_lazy_with(open::reader(&options));
-        let (jobs, queue) = mpsc::channel(options.queue);
+        let (jobs, queue) = mpsc::unbounded_channel();
+        let places = Arc::new(Semaphore::new(options.queue));
         let (report_health, health) = watch::channel(Health::Ready);
         tokio::spawn(Writer::new(options, connection, queue, report_health).run());
         Ok(SqliteStore {
             jobs,
+            places,
             readers,
             health,
             layouts: Mutex::default(),
@@ -108,31 +123,51 @@ impl SqliteStore {
     /// Hinders the writer, or frees it again.
     pub async fn hinder(&self, hindrance: Hindrance) -> Result<(), StoreError> {
         let (reply, done) = oneshot::channel();
-        self.send(Message::Hinder(hindrance, reply)).await?;
+        self.send(Message::Hinder(hindrance, reply))?;
         done.await.map_err(|_| gone())
     }
 
-    async fn send(&self, message: Message) -> Result<(), StoreError> {
-        self.jobs.send(message).await.map_err(|_| gone())
+    fn send(&self, message: Message) -> Result<(), StoreError> {
+        self.jobs.send(message).map_err(|_| gone())
     }
 
-    /// Has the writer do some work, waiting for a place in its queue.
-    async fn write<W: work::Work>(&self, work: W) -> Result<W::Output, StoreError> {
-        let (task, done) = Task::queued(work);
-        self.send(Message::Job(task)).await?;
-        done.await.map_err(|_| gone())?
+    /// Has the writer do some work: it is in the queue when this returns, and
+    /// done whether or not the answer is waited for.
+    fn write<W: Work>(&self, work: W) -> Reply<'static, W::Output> {
+        let place = Arc::clone(&self.places).try_acquire_owned().ok();
+        self.queue(work, place)
     }
 
     /// The same, refused where the queue is full.
-    async fn write_now<W: work::Work>(&self, work: W) -> Result<W::Output, StoreError> {
-        let (task, done) = Task::queued(work);
-        self.jobs
-            .try_send(Message::Job(task))
-            .map_err(|error| match error {
-                mpsc::error::TrySendError::Full(_) => StoreError::Overloaded,
-                mpsc::error::TrySendError::Closed(_) => gone(),
-            })?;
-        done.await.map_err(|_| gone())?
+    fn write_now<W: Work>(&self, work: W) -> Reply<'static, W::Output> {
+        match Arc::clone(&self.places).try_acquire_owned() {
+            Ok(place) => self.queue(work, Some(place)),
+            Err(_) => std::future::ready(Err(StoreError::Overloaded)).boxed(),
+        }
+    }
+
+    fn queue<W: Work>(
+        &self,
+        work: W,
+        place: Option<OwnedSemaphorePermit>,
+    ) -> Reply<'static, W::Output> {
+        let (task, done) = Task::queued(work, place);
+        let sent = self.send(Message::Job(task));
+        async move {
+            sent?;
+            done.await.map_err(|_| gone())?
+        }
+        .boxed()
+    }
+
+    /// Has the writer do work that has to be made ready first: it takes its
+    /// place in the queue all the same now.
+    fn write_prepared<W: Work + Sync>(
+        &self,
+        prepare: impl FnOnce() -> Result<W, StoreError> + Send + 'static,
+    ) -> Reply<'static, W::Output> {
+        let written = self.write(Prepared::start(prepare));
+        async { written.await? }.boxed()
     }
 }
 
@@ -142,7 +177,7 @@ fn gone() -> StoreError {
 
 impl Store for SqliteStore {
     fn put_plant(&self, new: NewPlant) -> Reply<'_, PutOutcome> {
-        self.write(PutPlant(new)).boxed()
+        self.write(PutPlant(new))
     }
 
     fn plant<'a>(&'a self, name: &'a str, revision: Option<u32>) -> Reply<'a, Option<StoredPlant>> {
@@ -161,20 +196,43 @@ impl Store for SqliteStore {
         async { self.write_now(Accept::new(incoming)?).await }.boxed()
     }
 
-    fn finish(&self, ticket: Ticket, report: Arc<Report>) -> Reply<'_, ()> {
-        async move {
-            // Some 60 kB of JSON to be compressed: no work for an async thread.
-            let prepared = tokio::task::spawn_blocking(move || Finish::new(&ticket, &report));
-            let work = prepared
-                .await
-                .map_err(|error| StoreError::Corrupt(error.to_string()))??;
-            self.write(work).await
-        }
-        .boxed()
+    fn finish(
+        &self,
+        ticket: Ticket,
+        report: Arc<Report>,
+        watched: Option<Watched>,
+    ) -> Reply<'_, Option<Vec<i64>>> {
+        self.write_prepared(move || Finish::new(&ticket, &report, watched))
+    }
+
+    fn finish_again(
+        &self,
+        ticket: Ticket,
+        report: Arc<Report>,
+        again: Again,
+    ) -> Reply<'_, Option<u32>> {
+        self.write_prepared(move || FinishAgain::new(&ticket, &report, again))
+    }
+
+    fn versions<'a>(&'a self, plant: &'a str, batch: &'a str) -> Reply<'a, Vec<VersionLine>> {
+        read::versions(&self.readers, plant, batch).boxed()
+    }
+
+    fn version<'a>(
+        &'a self,
+        plant: &'a str,
+        batch: &'a str,
+        version: u32,
+    ) -> Reply<'a, Option<Report>> {
+        read::version(&self.readers, plant, batch, version).boxed()
     }
 
     fn batch<'a>(&'a self, plant: &'a str, batch: &'a str) -> Reply<'a, Option<Stored>> {
         read::batch(&self.readers, plant, batch).boxed()
+    }
+
+    fn inbox<'a>(&'a self, plant: &'a str, batch: &'a str) -> Reply<'a, Option<Unfinished>> {
+        read::inbox(&self.readers, plant, batch).boxed()
     }
 
     fn batches(&self, query: BatchQuery) -> Reply<'_, Page<BatchLine>> {
@@ -189,6 +247,89 @@ impl Store for SqliteStore {
         read::unfinished(&self.readers, after, limit).boxed()
     }
 
+    fn watch<'a>(&'a self, plant: &'a str) -> Reply<'a, Option<String>> {
+        read::watch(&self.readers, plant).boxed()
+    }
+
+    fn change_watch(&self, plant: &str, watched: Watched) -> Reply<'_, Option<Vec<i64>>> {
+        let plant = plant.to_owned();
+        self.write_prepared(move || ChangeWatch::new(plant, watched))
+    }
+
+    fn events<'a>(
+        &'a self,
+        plant: &'a str,
+        after: i64,
+        limit: usize,
+    ) -> Reply<'a, Vec<StoredEvent>> {
+        read::events(&self.readers, plant, after, limit).boxed()
+    }
+
+    fn accusations<'a>(
+        &'a self,
+        plant: &'a str,
+        open: Option<bool>,
+        after: u64,
+        limit: usize,
+    ) -> Reply<'a, Vec<AccusationRow>> {
+        read::accusations(&self.readers, plant, open, after, limit).boxed()
+    }
+
+    fn accusation<'a>(&'a self, plant: &'a str, id: u64) -> Reply<'a, Option<AccusationRow>> {
+        read::accusation(&self.readers, plant, id).boxed()
+    }
+
+    fn add_by_hand(&self, plant: &str, new: NewByHand) -> Reply<'_, Option<ByHandRow>> {
+        match AddByHand::new(plant.to_owned(), new) {
+            Ok(work) => self.write(work),
+            Err(error) => std::future::ready(Err(error)).boxed(),
+        }
+    }
+
+    fn by_hand<'a>(
+        &'a self,
+        plant: &'a str,
+        at: Option<OffsetDateTime>,
+    ) -> Reply<'a, Vec<ByHandRow>> {
+        read::by_hand(&self.readers, plant, at).boxed()
+    }
+
+    fn end_by_hand(
+        &self,
+        plant: &str,
+        id: i64,
+        until: OffsetDateTime,
+        ended: Ended,
+    ) -> Reply<'_, Option<ByHandRow>> {
+        self.write(EndByHand {
+            plant: plant.to_owned(),
+            id,
+            until,
+            ended,
+        })
+    }
+
+    fn add_field_reading(
+        &self,
+        plant: &str,
+        batch: &str,
+        new: NewFieldReading,
+    ) -> Reply<'_, Option<i64>> {
+        self.write(AddFieldReading {
+            plant: plant.to_owned(),
+            batch: batch.to_owned(),
+            new,
+        })
+    }
+
+    fn field_readings<'a>(
+        &'a self,
+        plant: &'a str,
+        batch: &'a str,
+    ) -> Reply<'a, Vec<FieldReading>> {
+        read::field_readings(&self.readers, plant, batch).boxed()
+    }
+
     fn health(&self) -> watch::Receiver<Health> {
         self.health.clone()
     }
@@ -198,7 +339,7 @@ impl Store for SqliteStore {
             // Readers first: a checkpoint cannot pass an open read.
             self.readers.close().await;
             let (reply, done) = oneshot::channel();
-            self.send(Message::Close(reply)).await?;
+            self.send(Message::Close(reply))?;
             done.await.map_err(|_| gone())?
         }
         .boxed()

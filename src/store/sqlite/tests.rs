@@ -14,17 +14,28 @@ async fn fresh() -> (tempfile::TempDir, SqliteOptions, sqlx::SqliteConnection) {
 #[tokio::test]
 async fn every_statement_prepares() {
     let (_directory, _, mut connection) = fresh().await;
-    for statement in sql::ALL {
-        let prepared = (&mut connection)
-            .prepare(AssertSqlSafe(*statement).into_sql_str())
-            .await;
-        assert!(prepared.is_ok(), "{statement}: {:?}", prepared.err());
+    for (statements, source) in [
+        (sql::OF_BATCHES, include_str!("sql/mod.rs")),
+        (sql::OF_RECORDS, include_str!("sql/records.rs")),
+    ] {
+        for statement in statements {
+            let prepared = (&mut connection)
+                .prepare(AssertSqlSafe(*statement).into_sql_str())
+                .await;
+            assert!(prepared.is_ok(), "{statement}: {:?}", prepared.err());
+        }
+        assert_eq!(
+            source.matches("pub(in crate::store::sqlite) const").count(),
+            statements.len() + 1,
+            "one is missing in the list at the end"
+        );
     }
-    let source = include_str!("sql.rs");
     assert_eq!(
-        source.matches("pub(super) const").count(),
-        sql::ALL.len() + 1,
-        "one is missing in ALL"
+        std::fs::read_dir(concat!(env!("CARGO_MANIFEST_DIR"), "/src/store/sqlite/sql"))
+            .expect("the folder")
+            .count(),
+        2,
+        "a file of statements is not looked at"
     );
 }
 

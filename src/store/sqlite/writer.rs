@@ -7,7 +7,7 @@ use futures::FutureExt;
 use futures::future::BoxFuture;
 use sqlx::Connection;
 use sqlx::sqlite::SqliteConnection;
-use tokio::sync::{mpsc, oneshot, watch};
+use tokio::sync::{OwnedSemaphorePermit, mpsc, oneshot, watch};
 
 /// What a caller gets after the commit.
 type Answer<T> = Result<T, StoreError>;
@@ -21,6 +21,9 @@ pub(super) enum Message {
 
 /// Work of any kind with the way to its answer.
 pub(super) trait Job: Send {
+    /// Waits for what has to be there before the transaction begins.
+    fn ready(&mut self) -> BoxFuture<'_, ()>;
+
     fn run<'a>(
         &'a mut self,
         on: &'a mut SqliteConnection,
@@ -34,17 +37,23 @@ pub(super) trait Job: Send {
 pub(super) struct Task<W: Work> {
     work: W,
     output: Option<W::Output>,
+    /// Given back with the answer.
+    _place: Option<OwnedSemaphorePermit>,
     reply: oneshot::Sender<Answer<W::Output>>,
 }
 
 impl<W: Work> Task<W> {
     /// The work as a job, and where its answer will arrive.
-    pub fn queued(work: W) -> (Box<dyn Job>, oneshot::Receiver<Answer<W::Output>>) {
+    pub fn queued(
+        work: W,
+        place: Option<OwnedSemaphorePermit>,
+    ) -> (Box<dyn Job>, oneshot::Receiver<Answer<W::Output>>) {
         let (reply, done) = oneshot::channel();
         (
             Box::new(Task {
                 work,
                 output: None,
+                _place: place,
                 reply,
             }),
             done,
@@ -53,6 +62,10 @@ impl<W: Work> Task<W> {
 }
 
 impl<W: Work> Job for Task<W> {
+    fn ready(&mut self) -> BoxFuture<'_, ()> {
+        self.work.ready()
+    }
+
     fn run<'a>(
         &'a mut self,
         on: &'a mut SqliteConnection,
@@ -80,7 +93,7 @@ pub(super) struct Writer {
     options: SqliteOptions,
     /// `None` after a failure, until opening again succeeds.
     connection: Option<SqliteConnection>,
-    queue: mpsc::Receiver<Message>,
+    queue: mpsc::UnboundedReceiver<Message>,
     health: watch::Sender<Health>,
     hindrance: Hindrance,
 }
@@ -89,7 +102,7 @@ impl Writer {
     pub fn new(
         options: SqliteOptions,
         connection: SqliteConnection,
-        queue: mpsc::Receiver<Message>,
+        queue: mpsc::UnboundedReceiver<Message>,
         health: watch::Sender<Health>,
     ) -> Self {
         Writer {
@@ -180,6 +193,9 @@ impl Writer {
     }
 
     async fn commit(&mut self, mut jobs: Vec<Box<dyn Job>>) {
+        for job in &mut jobs {
+            job.ready().await;
+        }
         if self.connection.is_none() {
             self.reopen().await;
         }

@@ -1,94 +1,101 @@
 //! Every statement, in one place: a test prepares each against the newest
 //! schema.
 
-pub(super) const SQLITE_VERSION: &str = "SELECT sqlite_version()";
-pub(super) const QUICK_CHECK: &str = "PRAGMA quick_check(1)";
-pub(super) const CHECKPOINT: &str = "PRAGMA wal_checkpoint(TRUNCATE)";
-pub(super) const BEGIN: &str = "BEGIN IMMEDIATE";
-pub(super) const COMMIT: &str = "COMMIT";
+mod records;
 
-pub(super) const COUNT_START: &str = "
+pub(super) use records::*;
+
+pub(in crate::store::sqlite) const SQLITE_VERSION: &str = "SELECT sqlite_version()";
+pub(in crate::store::sqlite) const QUICK_CHECK: &str = "PRAGMA quick_check(1)";
+pub(in crate::store::sqlite) const CHECKPOINT: &str = "PRAGMA wal_checkpoint(TRUNCATE)";
+pub(in crate::store::sqlite) const BEGIN: &str = "BEGIN IMMEDIATE";
+pub(in crate::store::sqlite) const COMMIT: &str = "COMMIT";
+
+pub(in crate::store::sqlite) const COUNT_START: &str = "
     INSERT INTO starts (id, count) VALUES (1, 1)
     ON CONFLICT (id) DO UPDATE SET count = starts.count + 1";
 
-pub(super) const INSERT_PLANT: &str = "
+pub(in crate::store::sqlite) const INSERT_PLANT: &str = "
     INSERT INTO plants (name) VALUES (?1) ON CONFLICT (name) DO NOTHING";
 
-pub(super) const INSERT_REVISION: &str = "
+pub(in crate::store::sqlite) const INSERT_REVISION: &str = "
     INSERT INTO revisions (plant_id, revision, title, digest, media_type, source, canonical, created_ns)
     VALUES ((SELECT id FROM plants WHERE name = ?1), ?2, ?3, ?4, ?5, ?6, ?7, ?8)";
 
-pub(super) const CURRENT_REVISION: &str = "
+pub(in crate::store::sqlite) const CURRENT_REVISION: &str = "
     SELECT r.revision, r.digest, r.media_type, r.source, r.canonical, r.created_ns
     FROM revisions r JOIN plants p ON p.id = r.plant_id
     WHERE p.name = ?1
     ORDER BY r.revision DESC LIMIT 1";
 
-pub(super) const ONE_REVISION: &str = "
+pub(in crate::store::sqlite) const ONE_REVISION: &str = "
     SELECT r.revision, r.digest, r.media_type, r.source, r.canonical, r.created_ns
     FROM revisions r JOIN plants p ON p.id = r.plant_id
     WHERE p.name = ?1 AND r.revision = ?2";
 
-pub(super) const PLANTS: &str = "
+pub(in crate::store::sqlite) const PLANTS: &str = "
     SELECT p.name, r.title, r.revision, r.created_ns
     FROM plants p JOIN revisions r ON r.plant_id = p.id
     WHERE p.name > ?1
       AND r.revision = (SELECT MAX(c.revision) FROM revisions c WHERE c.plant_id = p.id)
     ORDER BY p.name LIMIT ?2";
 
-pub(super) const PLANT_FOR_BATCH: &str = "
+pub(in crate::store::sqlite) const PLANT_FOR_BATCH: &str = "
     SELECT p.id, MAX(r.revision)
     FROM plants p JOIN revisions r ON r.plant_id = p.id
     WHERE p.name = ?1
     GROUP BY p.id";
 
-pub(super) const KNOWN_BATCH: &str = "
+pub(in crate::store::sqlite) const KNOWN_BATCH: &str = "
     SELECT id, revision, digest FROM inbox WHERE plant_id = ?1 AND batch = ?2";
 
-pub(super) const INSERT_BATCH: &str = "
+pub(in crate::store::sqlite) const INSERT_BATCH: &str = "
     INSERT INTO inbox (plant_id, batch, revision, digest, start_ns, end_ns, received_ns, body)
     VALUES (?1, ?2, ?3, ?4, ?5, ?6, ?7, ?8)
     RETURNING id";
 
-pub(super) const INSERT_PENDING: &str = "INSERT INTO pending (inbox_id) VALUES (?1)";
+pub(in crate::store::sqlite) const INSERT_PENDING: &str =
+    "INSERT INTO pending (inbox_id) VALUES (?1)";
 
-pub(super) const DELETE_PENDING: &str = "DELETE FROM pending WHERE inbox_id = ?1";
+pub(in crate::store::sqlite) const DELETE_PENDING: &str = "DELETE FROM pending WHERE inbox_id = ?1";
 
-pub(super) const FIND_LAYOUT: &str = "SELECT id FROM layouts WHERE digest = ?1";
+pub(in crate::store::sqlite) const FIND_LAYOUT: &str = "SELECT id FROM layouts WHERE digest = ?1";
 
-pub(super) const INSERT_LAYOUT: &str = "
+pub(in crate::store::sqlite) const INSERT_LAYOUT: &str = "
     INSERT INTO layouts (digest, channels) VALUES (?1, ?2) RETURNING id";
 
-pub(super) const READ_LAYOUT: &str = "SELECT channels FROM layouts WHERE id = ?1";
+pub(in crate::store::sqlite) const READ_LAYOUT: &str = "SELECT channels FROM layouts WHERE id = ?1";
 
-pub(super) const INSERT_RESULT: &str = "
+pub(in crate::store::sqlite) const INSERT_RESULT: &str = "
     INSERT INTO results (inbox_id, verdict, statistic, degrees_of_freedom, layout_id, numbers, report)
     VALUES (?1, ?2, ?3, ?4, ?5, ?6, ?7)
     ON CONFLICT (inbox_id) DO NOTHING";
 
-pub(super) const INSERT_CRITICAL_VALUE: &str = "
+pub(in crate::store::sqlite) const INSERT_CRITICAL_VALUE: &str = "
     INSERT INTO critical_values (plant_id, revision, class_set, test)
-    SELECT plant_id, revision, ?2, ?3 FROM inbox WHERE id = ?1
+    SELECT v.plant_id, v.revision, ?3, ?4
+    FROM inbox i JOIN revisions v ON v.plant_id = i.plant_id
+    WHERE i.id = ?1 AND v.revision = ?2
     ON CONFLICT DO NOTHING";
 
-pub(super) const CRITICAL_VALUES: &str = "
+pub(in crate::store::sqlite) const CRITICAL_VALUES: &str = "
     SELECT c.test
     FROM critical_values c JOIN plants p ON p.id = c.plant_id
     WHERE p.name = ?1 AND c.revision = ?2";
 
-pub(super) const ONE_BATCH: &str = "
+pub(in crate::store::sqlite) const ONE_BATCH: &str = "
     SELECT i.id, i.revision, r.report
     FROM inbox i JOIN plants p ON p.id = i.plant_id
     LEFT JOIN results r ON r.inbox_id = i.id
     WHERE p.name = ?1 AND i.batch = ?2";
 
-pub(super) const UNFINISHED: &str = "
+pub(in crate::store::sqlite) const UNFINISHED: &str = "
     SELECT i.id, p.name, i.batch, i.revision, i.received_ns, i.body
     FROM pending w JOIN inbox i ON i.id = w.inbox_id JOIN plants p ON p.id = i.plant_id
     WHERE w.inbox_id > ?1
     ORDER BY w.inbox_id LIMIT ?2";
 
-pub(super) const BATCHES: &str = "
+pub(in crate::store::sqlite) const BATCHES: &str = "
     SELECT i.id, i.batch, i.start_ns, i.end_ns, i.revision,
            r.verdict, r.statistic, r.degrees_of_freedom
     FROM inbox i LEFT JOIN results r ON r.inbox_id = i.id
@@ -98,7 +105,7 @@ pub(super) const BATCHES: &str = "
       AND (?6 IS NULL OR r.verdict = ?6)
     ORDER BY i.start_ns DESC, i.id DESC LIMIT ?7";
 
-pub(super) const SERIES: &str = "
+pub(in crate::store::sqlite) const SERIES: &str = "
     SELECT i.id, i.batch, i.start_ns, i.end_ns, r.verdict, r.layout_id, r.numbers
     FROM inbox i JOIN results r ON r.inbox_id = i.id
     WHERE i.plant_id = (SELECT id FROM plants WHERE name = ?1)
@@ -106,9 +113,9 @@ pub(super) const SERIES: &str = "
       AND (i.start_ns, i.id) > (?4, ?5)
     ORDER BY i.start_ns, i.id LIMIT ?6";
 
-/// All of them.
+/// All of this file.
 #[cfg(test)]
-pub(super) const ALL: &[&str] = &[
+pub(in crate::store::sqlite) const OF_BATCHES: &[&str] = &[
     SQLITE_VERSION,
     QUICK_CHECK,
     CHECKPOINT,

@@ -1,0 +1,133 @@
+//! Batches as they were accepted and what has become of them.
+
+use super::{count, earliest, latest};
+use crate::store::sqlite::fault::{explain, time};
+use crate::store::sqlite::sql;
+use crate::store::sqlite::values::{self, expand, verdict, verdict_name};
+use crate::store::{BatchLine, BatchQuery, Cursor, Page, StoreError, Stored, Ticket, Unfinished};
+use sqlx::SqlitePool;
+
+pub(in crate::store::sqlite) async fn batch(
+    pool: &SqlitePool,
+    plant: &str,
+    batch: &str,
+) -> Result<Option<Stored>, StoreError> {
+    let row: Option<(i64, u32, Option<Vec<u8>>)> = sqlx::query_as(sql::ONE_BATCH)
+        .bind(plant)
+        .bind(batch)
+        .fetch_optional(pool)
+        .await
+        .map_err(|e| explain(&e))?;
+    row.map(|(id, revision, report)| match report {
+        None => Ok(Stored::Pending(Ticket {
+            id,
+            plant: plant.to_owned(),
+            batch: batch.to_owned(),
+            revision,
+        })),
+        Some(report) => Ok(Stored::Done(Box::new(values::report(&report)?))),
+    })
+    .transpose()
+}
+
+type InboxRow = (i64, String, String, u32, i64, Vec<u8>);
+
+fn unfinished_of(row: InboxRow) -> Result<Unfinished, StoreError> {
+    let (id, plant, batch, revision, received, body) = row;
+    Ok(Unfinished {
+        ticket: Ticket {
+            id,
+            plant,
+            batch,
+            revision,
+        },
+        received: time(received)?,
+        body: expand(&body)?,
+    })
+}
+
+pub(in crate::store::sqlite) async fn inbox(
+    pool: &SqlitePool,
+    plant: &str,
+    batch: &str,
+) -> Result<Option<Unfinished>, StoreError> {
+    let row: Option<InboxRow> = sqlx::query_as(sql::INBOX)
+        .bind(plant)
+        .bind(batch)
+        .fetch_optional(pool)
+        .await
+        .map_err(|e| explain(&e))?;
+    row.map(unfinished_of).transpose()
+}
+
+pub(in crate::store::sqlite) async fn unfinished(
+    pool: &SqlitePool,
+    after: i64,
+    limit: usize,
+) -> Result<Vec<Unfinished>, StoreError> {
+    let rows: Vec<InboxRow> = sqlx::query_as(sql::UNFINISHED)
+        .bind(after)
+        .bind(count(limit))
+        .fetch_all(pool)
+        .await
+        .map_err(|e| explain(&e))?;
+    rows.into_iter().map(unfinished_of).collect()
+}
+
+type BatchRow = (
+    i64,
+    String,
+    i64,
+    i64,
+    u32,
+    Option<String>,
+    Option<f64>,
+    Option<u32>,
+);
+
+pub(in crate::store::sqlite) async fn batches(
+    pool: &SqlitePool,
+    query: BatchQuery,
+) -> Result<Page<BatchLine>, StoreError> {
+    let after = query.after.unwrap_or(Cursor {
+        start_ns: i64::MAX,
+        id: i64::MAX,
+    });
+    let mut rows: Vec<BatchRow> = sqlx::query_as(sql::BATCHES)
+        .bind(&query.plant)
+        .bind(earliest(query.from))
+        .bind(latest(query.to))
+        .bind(after.start_ns)
+        .bind(after.id)
+        .bind(query.verdict.map(verdict_name))
+        .bind(count(query.limit + 1))
+        .fetch_all(pool)
+        .await
+        .map_err(|e| explain(&e))?;
+    let more = rows.len() > query.limit;
+    rows.truncate(query.limit);
+    let last = rows.last().map(|row| Cursor {
+        start_ns: row.2,
+        id: row.0,
+    });
+    let items = rows
+        .into_iter()
+        .map(
+            |(_, batch, start, end, revision, verdict_name, statistic, degrees_of_freedom)| {
+                Ok(BatchLine {
+                    batch,
+                    start: time(start)?,
+                    end: time(end)?,
+                    revision,
+                    verdict: verdict_name.as_deref().map(verdict).transpose()?,
+                    statistic,
+                    degrees_of_freedom,
+                })
+            },
+        )
+        .collect::<Result<_, StoreError>>()?;
+    Ok(Page {
+        items,
+        next: last.filter(|_| more),
+    })
+}

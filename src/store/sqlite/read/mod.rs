@@ -1,0 +1,30 @@
+//! What readers ask.
+
+mod batches;
+mod by_hand;
+mod plants;
+mod results;
+mod series;
+mod watch;
+
+pub(super) use batches::{batch, batches, inbox, unfinished};
+pub(super) use by_hand::{by_hand, decision, field_readings};
+pub(super) use plants::{critical_values, current_plant, plant, plants};
+pub(super) use results::{version, versions};
+pub(super) use series::series;
+pub(super) use watch::{accusation, accusations, events, watch};
+
+use super::fault::nanoseconds;
+use time::OffsetDateTime;
+
+fn earliest(from: Option<OffsetDateTime>) -> i64 {
+    from.map_or(i64::MIN, nanoseconds)
+}
+
+fn latest(to: Option<OffsetDateTime>) -> i64 {
+    to.map_or(i64::MAX, nanoseconds)
+}
+
+fn count(limit: usize) -> i64 {
+    i64::try_from(limit).unwrap_or(i64::MAX)
+}
