@@ -8,6 +8,7 @@
 //! sockets stay at the edges.
 #![forbid(unsafe_code)]
 
+pub mod alarms;
 pub mod cli;
 pub mod config;
 pub mod demo;
@@ -23,3 +24,4 @@ pub mod server;
 pub mod solver;
 pub mod store;
 pub mod telemetry;
+pub mod webhook;

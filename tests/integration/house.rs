@@ -28,6 +28,8 @@ const IMPORTS: &[(&str, &[&str])] = &[
     ("equations", &["fluid", "plant", "solver"]),
     ("demo", &["fluid", "plant"]),
     ("ingest", &["plant"]),
+    ("alarms", &["plant", "report"]),
+    ("webhook", &["alarms"]),
     ("telemetry", &[]),
     ("plant", &[]),
     ("fluid", &[]),
