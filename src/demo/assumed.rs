@@ -39,6 +39,17 @@ impl Assumed {
         }
     }
 
+    /// Moves the true value of one assumption away by this many standard
+    /// deviations of its stated distribution; no effect where the plant has none
+    /// of that name.
+    pub fn shift(&mut self, plant: &Plant, name: &str, sigmas: f64) {
+        if let Some(assumption) = plant.assumptions.iter().find(|a| a.name == name)
+            && let Some(value) = self.0.get_mut(name)
+        {
+            *value += true_value(assumption, sigmas) - true_value(assumption, 0.0);
+        }
+    }
+
     /// The true value of an assumption, in its internal unit.
     ///
     /// # Errors

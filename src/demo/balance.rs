@@ -130,7 +130,7 @@ fn assemble(
         drum_pressure,
         fluid::saturation(drum_pressure)?.t - assumed.get("drum-subcooling")?,
     )?;
-    let streams: [(&str, f64, State); 59] = [
+    let streams: [(&str, f64, State); 61] = [
         ("live-steam", flows.live, steam.live),
         ("chest-steam", flows.live, steam.chest),
         ("hp-exhaust", flows.hp_exhaust, steam.hp_exhaust),
@@ -200,6 +200,8 @@ fn assemble(
         ("final-feed", feed.feed_flow, feed.final_feed),
         ("drain-7", feed.bleed_7, feed.drain_7),
         ("drain-6", drain_6, feed.drain_6),
+        ("drain-6-cascade", drain_6, feed.drain_6),
+        ("drain-6-dump", 0.0, feed.drain_6),
         ("drain-5", drain_6 + feed.bleed_5, feed.drain_5),
         ("drain-3", feed.bleed_3, feed.drain_3),
         ("drain-2", drain_2, feed.drain_2),

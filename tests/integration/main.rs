@@ -2,10 +2,12 @@
 
 mod batches;
 mod cycles;
+mod defects;
 mod demo_truth;
 mod fluid;
 mod harness;
 mod house;
+mod identification;
 mod jacobians;
 mod laws;
 mod malformed;
