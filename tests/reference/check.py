@@ -11,10 +11,12 @@ Each prints the largest disagreement it found and fails beyond the bound beside 
 - redundancies sum to the degrees of freedom;
 - scaling: other state scales, same results;
 - a tag split into two of root-two sigma: one more degree of freedom, nothing else;
-- statistic: mean over seeded batches (tags and assumptions drawn around the truth).
+- statistic: mean over seeded batches (tags and assumptions drawn around the truth);
+- likelihood ratios of hypotheses.py against adjustments and imbalances of reference.py.
 """
 
 import copy
+import json
 import sys
 
 import numpy as np
@@ -199,11 +201,48 @@ def mean_statistic(plant, truth, solution, problem, draws=60):
     verdict("mean statistic, in standard errors", abs(np.mean(values) - dof) / error, 3.3)
 
 
+def ratios(name):
+    """Likelihood ratios of hypotheses.py against adjustments and imbalances of reference.py.
+
+    A bias is minus the standardised adjustment; an unstated loss, and a leak that has a mass
+    row alone, is the imbalance of that balance.  One adds a column, the other takes a row away.
+    """
+    def lines(file):
+        return [json.loads(line) for line in (ref.HERE / file).read_text().splitlines()]
+    expected = {r["batch"]: r for r in lines(f"{name}.expected.ndjson")}
+    equipment, worst, compared = ref.load(name)[0].equipment, 0.0, 0
+    for line in lines("hypotheses.expected.ndjson"):
+        report = expected.get(line["batch"])
+        for each in line["hypotheses"] if report and line["plant"] == name else ():
+            of, entry = each["of"], None
+            if each["cause"] in ("bias", "departure") and of != "barometer":
+                entry = report["tags" if each["cause"] == "bias" else "assumptions"][of]
+                known = entry["class"] == "redundant"
+                pairs = [(entry["standardised_adjustment"], each["z"] and -each["z"])]
+            elif each["cause"] == "heat-loss":
+                entry = report["equipment"][of]["imbalance"]["energy"]
+            elif each["cause"] == "leak" and equipment[of]["kind"] in ("valve", "splitter"):
+                entry = report["equipment"][of]["imbalance"]["mass"]["main"]
+            if entry is None:
+                continue
+            if "standardised" in entry:
+                known = entry["standardised"] is not None
+                pairs = [(entry["standardised"], each["z"]), (entry["value"], each["size"])]
+            if known != each["testable"]:
+                worst = np.inf
+                print("       testable or not:", line["batch"], each)
+            elif known:
+                compared += len(pairs)
+                worst = max(worst, *(abs(a - b) / max(1.0, abs(a)) for a, b in pairs))
+    verdict(f"{compared} figures of hypotheses against adjustments and imbalances", worst, 1e-7)
+
+
 def main(names):
     properties()
     for name in names:
         plant, truth, batches = ref.load(name)
         print(name)
+        ratios(name)
         derivatives(plant, truth)
         for number, batch in enumerate(batches):
             solution, _ = ref.reconcile(plant, truth, batch, starts=[truth])
@@ -223,4 +262,4 @@ def main(names):
 
 
 if __name__ == "__main__":
-    main(sys.argv[1:] or ["hazel-quay", "ferrow-bridge", "corrow-mill"])
+    main(sys.argv[1:] or ["hazel-quay", "ferrow-bridge", "corrow-mill", "alder-weir"])

@@ -41,6 +41,7 @@ PLANS = {
         {"batch": "2031-04-04T22:10Z", "seed": 33, "bias": {"FT-303": 10.0}},
         {"batch": "2031-04-04T22:15Z", "seed": 34, "thin": True},
     ],
+    "alder-weir": [{"batch": "2031-04-05T14:00Z", "seed": 41}],
 }
 
 

@@ -52,21 +52,34 @@ def project(plant, guess, weight):
     return x
 
 
+def weights(plant, state):
+    """How far each state may move for one unit of the distance to `state`."""
+    weight = np.full(len(plant.states), FREE)
+    for i, name in enumerate(plant.states):
+        quantity, _, of = name.partition(":")
+        if of in plant.streams:
+            weight[i] = {"m": 0.01 * (state[i] or 1.0), "p": 0.001 * state[i], "h": 3.0}[quantity]
+        elif quantity in ("loss", "holdup", "barometer"):
+            weight[i] = max(1e-4 * abs(state[i]), 1e-4)
+    return weight
+
+
 def main(name):
     plant = Plant(HERE / f"{name}.toml")
     with open(HERE / f"{name}.guess.toml", "rb") as file:
         spec = tomllib.load(file)
-    guess, weight = np.zeros(len(plant.states)), np.full(len(plant.states), FREE)
+    guess = np.zeros(len(plant.states))
     for i, state in enumerate(plant.states):
         quantity, _, of = state.partition(":")
         if of in plant.streams:
             stream = spec["streams"][of]
             guess[i] = enthalpy(stream) if quantity == "h" else stream[quantity]
-            weight[i] = {"m": 0.01 * stream["m"], "p": 0.001 * stream["p"], "h": 3.0}[quantity]
         elif quantity in ("loss", "holdup", "barometer"):
             guess[i] = spec.get("own", {}).get(state, 0.0)
-            weight[i] = max(1e-4 * abs(guess[i]), 1e-4)
-    x = project(plant, guess, weight)
+    x = project(plant, guess, weights(plant, guess))
+    for stream, each in plant.streams.items():
+        if each.get("normally-closed"):
+            x[plant.index["m:" + stream]] = 0.0  # not 1e-17
     f, _ = estimate.evaluate([(r.residual, r.touches) for r in plant.relations], x)
     for stream in plant.streams:
         m, p, h = (x[plant.index[f"{q}:{stream}"]] for q in "mph")

@@ -65,6 +65,7 @@ class Plant:
         for name, spec in self.equipment.items():
             getattr(self, "_" + spec["kind"].replace("-", "_"))(name, spec)
             self._zero_states(name)
+        self._closed_streams()
         self.tags = {n: self._measure(n, t, t["measures"]) for n, t in self.file["tags"].items()}
         self.assumptions = {n: self._measure(n, a, a["value-of"])
                             for n, a in self.file.get("assumptions", {}).items()}
@@ -132,6 +133,13 @@ class Plant:
             if state in ("loss", "holdup") and not self._given(name, state):
                 i = self.index[f"{state}:{name}"]
                 self._add(f"{state} is zero", name, [], [(state, name)], lambda x, i=i: x[i])
+
+    def _closed_streams(self):
+        for stream, spec in self.streams.items():
+            if spec.get("normally-closed"):
+                i = self.index["m:" + stream]
+                self.relations.append(Relation(f"{stream}: closed", stream, None, None, [i],
+                                               lambda x, i=i: x[i]))
 
     def m(self, x, stream):
         return x[self.index["m:" + stream]]

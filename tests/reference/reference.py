@@ -93,7 +93,7 @@ def scale_of(plant, truth):
         if name.startswith("h:"):
             scale[i] = 1000.0
         elif name.startswith(("m:", "p:")):
-            scale[i] = abs(truth[i])
+            scale[i] = abs(truth[i]) or 1.0  # a normally closed stream has no flow
     return scale
 
 
