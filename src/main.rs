@@ -18,6 +18,8 @@ fn main() -> ExitCode {
         Command::Demo(demo) => service(run_demo(demo)),
         Command::Check(check) => cli::check(&check),
         Command::Reconcile(reconcile) => cli::reconcile(&reconcile),
+        Command::Influences(influences) => cli::influences(&influences),
+        Command::TellApart(tell_apart) => cli::tell_apart(&tell_apart),
         Command::Openapi => cli::openapi(),
         Command::MakeDemoFixture { out } => cli::make_demo_fixture(&out),
     };
@@ -73,7 +75,7 @@ async fn start(config: &Config) -> anyhow::Result<Server> {
         .await
         .with_context(|| format!("cannot use the database {}", config.database.display()))?;
     let (clock, entropy) = (Arc::new(SystemClock), Arc::new(SystemEntropy));
-    Ok(Server::start(config.server(), Arc::new(store), clock, entropy).await?)
+    Ok(Server::start(config.server()?, Arc::new(store), clock, entropy).await?)
 }
 
 /// Ends the service in order on SIGTERM and SIGINT.

@@ -66,6 +66,7 @@ impl Demo {
             listen,
             database: self.database.clone(),
             bounds: self.bounds.clone(),
+            webhook: Default::default(),
             log: Log {
                 log_format: Default::default(),
                 log: self.log.clone(),

@@ -7,17 +7,25 @@
 
 mod check;
 mod demo;
+mod found;
+mod influences;
 mod input;
+mod moved;
 mod output;
 mod reconcile;
 mod summary;
+mod suspects;
 mod table;
+mod tell_apart;
 mod text;
+mod words;
 
 pub use check::{Check, check};
 pub use demo::{Demo, demo};
+pub use influences::{Influences, influences};
 pub use output::Unread;
 pub use reconcile::{Reconcile, reconcile};
+pub use tell_apart::{TellApart, tell_apart};
 
 use crate::config::Config;
 use clap::{Parser, Subcommand};
@@ -32,6 +40,9 @@ pub const EXIT_TROUBLE: u8 = 3;
 
 /// The last line of everything that a person may act on.
 pub const CAUTION: &str = "Advisory only, not for protection or safety functions.";
+
+/// The line after it where causes are named.
+const DECIDE: &str = "Site procedures, local codes and licensed engineers decide.";
 
 /// Reconciles the measurements of steam and power plants.
 #[derive(Debug, Parser)]
@@ -56,6 +67,10 @@ pub enum Command {
     Check(Check),
     /// Reconcile batches from a file, without a service.
     Reconcile(Reconcile),
+    /// Print the readings that a reconciled value hangs on.
+    Influences(Influences),
+    /// Print which faults a plant's readings tell apart, and which they mix up.
+    TellApart(TellApart),
     /// Serve the demo plant and post its day of batches.
     Demo(Demo),
     /// Print the OpenAPI document of the service.

@@ -3,23 +3,15 @@
 use super::input::{self, Read as PlantRead, Show};
 use super::output::print;
 use super::text;
-use crate::ingest::{self, Refusal};
+use crate::ingest::Refusal;
 use crate::pipeline::{self, Compiled};
-use crate::plant;
 use crate::report::Report;
 use crate::server::Problem;
 use anyhow::Context;
 use clap::{Args, ValueEnum};
-use std::fs::File;
-use std::io::{self, BufRead, BufReader, Read};
-use std::path::{Path, PathBuf};
+use std::io::{BufRead, Read};
+use std::path::PathBuf;
 use std::process::ExitCode;
-use time::OffsetDateTime;
-use time::macros::datetime;
-
-/// A file may hold any time: without a service there is no "now" that a batch
-/// could be ahead of, and the same files give the same answer on every day.
-const END_OF_TIME: OffsetDateTime = datetime!(2200-01-01 0:00 UTC);
 
 /// Reconcile batches from a file.
 #[derive(Args, Debug)]
@@ -60,8 +52,9 @@ pub fn reconcile(arguments: &Reconcile) -> anyhow::Result<ExitCode> {
     };
     let plant = Compiled::new(file.plant, 1);
     let name = arguments.batch_file.display().to_string();
-    let mut source = open(&arguments.batch_file)?;
-    let many = arguments.format == ReconcileFormat::Ndjson || is_stream(&arguments.batch_file);
+    let mut source = input::open(&arguments.batch_file)?;
+    let many =
+        arguments.format == ReconcileFormat::Ndjson || input::is_stream(&arguments.batch_file);
     if many {
         lines(&plant, source, &name, arguments.format)
     } else {
@@ -78,28 +71,16 @@ pub fn reconcile(arguments: &Reconcile) -> anyhow::Result<ExitCode> {
                 Ok(ExitCode::SUCCESS)
             }
             Err(refusal) => {
-                show(&refusal, &String::from_utf8_lossy(&body), &name);
+                input::show(&refusal, &String::from_utf8_lossy(&body), &name);
                 Ok(input::faulty())
             }
         }
     }
 }
 
-fn open(path: &Path) -> anyhow::Result<Box<dyn BufRead>> {
-    if path.as_os_str() == "-" {
-        return Ok(Box::new(io::stdin().lock()));
-    }
-    let file = File::open(path).with_context(|| path.display().to_string())?;
-    Ok(Box::new(BufReader::new(file)))
-}
-
-fn is_stream(path: &Path) -> bool {
-    let extension = path.extension().and_then(|extension| extension.to_str());
-    matches!(extension, Some("ndjson" | "jsonl"))
-}
-
 fn one(plant: &Compiled, body: &[u8]) -> Result<Report, Refusal> {
-    ingest::parse(body, END_OF_TIME).map(|parsed| pipeline::reconcile(plant, &parsed.batch))
+    let batch = input::parse(body)?;
+    Ok(pipeline::reconcile(plant, &batch))
 }
 
 fn lines(
@@ -122,7 +103,7 @@ fn lines(
             Err(refusal) => {
                 all_read = false;
                 let name = format!("{name} (line {})", index + 1);
-                show(&refusal, &String::from_utf8_lossy(&line), &name);
+                input::show(&refusal, &String::from_utf8_lossy(&line), &name);
                 if format != ReconcileFormat::Text {
                     // In the place of the report, as the service answers.
                     let mut problem = Problem::from(refusal).on_line(index + 1).document();
@@ -137,10 +118,4 @@ fn lines(
     } else {
         input::faulty()
     })
-}
-
-fn show(refusal: &Refusal, source: &str, name: &str) {
-    for fault in &refusal.faults {
-        eprintln!("{}", plant::render(fault, source, name));
-    }
 }

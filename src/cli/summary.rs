@@ -1,8 +1,9 @@
 //! What a day of reports comes to, for people.
 
-use super::CAUTION;
+use super::found::Found;
 use super::table::{Table, decimals, fixed, number};
 use super::text::{class_name, minute, verdict_name};
+use super::{CAUTION, DECIDE};
 use crate::report::{Assessment, Class, Report, Verdict};
 use std::collections::BTreeMap;
 use std::fmt;
@@ -222,6 +223,7 @@ impl<'r> Summary<'r> {
 impl fmt::Display for Summary<'_> {
     fn fmt(&self, f: &mut fmt::Formatter<'_>) -> fmt::Result {
         self.verdicts(f)?;
+        write!(f, "{}", Found::new(self.reports))?;
         self.worst(f)?;
         self.uncertain(f)?;
         self.unchecked(f)?;
@@ -239,7 +241,7 @@ impl fmt::Display for Summary<'_> {
                 verdict_name(report.verdict)
             )?;
         }
-        writeln!(f, "\n{CAUTION}\n")
+        writeln!(f, "\n{CAUTION} {DECIDE}\n")
     }
 }
 

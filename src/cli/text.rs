@@ -1,9 +1,10 @@
 //! A report for people.
 
-use super::CAUTION;
+use super::moved::moved;
 use super::table::{Table, decimals, fixed, number, pair, plain_zero};
+use super::{CAUTION, DECIDE, suspects};
 use crate::report::{
-    Class, GlobalTest, Imbalance, Phase, QuantityReport, Report, TagReport, Verdict,
+    ByHandReport, Class, GlobalTest, Imbalance, Phase, QuantityReport, Report, TagReport, Verdict,
 };
 use std::fmt::Write;
 use time::OffsetDateTime;
@@ -60,6 +61,13 @@ pub(super) fn describe(report: &Report) -> String {
         minute(report.end),
     );
     let _ = writeln!(text, "{}\n", verdict_line(report));
+    for decision in &report.by_hand {
+        let _ = writeln!(text, "{}", by_hand(decision));
+    }
+    if !report.by_hand.is_empty() {
+        text.push('\n');
+    }
+    text.push_str(&suspects::describe(report));
     let critical = report.single_test.as_ref().map(|test| test.critical_value);
     let _ = writeln!(text, "{}", tags(report, critical));
     if !report.streams.is_empty() {
@@ -67,6 +75,9 @@ pub(super) fn describe(report: &Report) -> String {
     }
     if !report.equipment.is_empty() {
         let _ = writeln!(text, "{}", equipment(report, critical));
+    }
+    if let Some(moved) = moved(report) {
+        let _ = writeln!(text, "{moved}");
     }
     if !report.ignored_tags.is_empty() {
         let _ = writeln!(
@@ -78,7 +89,15 @@ pub(super) fn describe(report: &Report) -> String {
     for remark in &report.remarks {
         let _ = writeln!(text, "Note: {remark}");
     }
-    let _ = writeln!(text, "± is the half-width at 95 % coverage. {CAUTION}");
+    let decide = if report.suspects.is_empty() {
+        String::new()
+    } else {
+        format!("\n{DECIDE}")
+    };
+    let _ = writeln!(
+        text,
+        "± is the half-width at 95 % coverage. {CAUTION}{decide}"
+    );
     text
 }
 
@@ -87,27 +106,44 @@ fn verdict_line(report: &Report) -> String {
     if let Some(reason) = &report.reason {
         let _ = write!(line, ": {reason}");
     }
-    if let Some(GlobalTest {
-        statistic,
-        degrees_of_freedom,
-        critical_value,
-        p_value,
-        ..
-    }) = &report.global_test
-    {
-        let noun = match degrees_of_freedom {
-            1 => "degree",
-            _ => "degrees",
-        };
-        let _ = write!(
-            line,
-            ": {statistic:.1} on {degrees_of_freedom} {noun} of freedom"
-        );
-        if let (Some(critical), Some(p)) = (critical_value, p_value) {
-            let _ = write!(line, " (critical {critical:.1}, p = {p:.3})");
-        }
+    if let Some(test) = &report.global_test {
+        line.push_str(&global_line(test));
     }
     line
+}
+
+/// ": 47.0 on 46 degrees of freedom (critical 62.8, p = 0.432)"
+pub(super) fn global_line(test: &GlobalTest) -> String {
+    let noun = match test.degrees_of_freedom {
+        1 => "degree",
+        _ => "degrees",
+    };
+    let mut line = format!(
+        ": {:.1} on {} {noun} of freedom",
+        test.statistic, test.degrees_of_freedom
+    );
+    if let (Some(critical), Some(p)) = (test.critical_value, test.p_value) {
+        let _ = write!(line, " (critical {critical:.1}, p = {p:.3})");
+    }
+    line
+}
+
+/// What an engineer decided about a tag.
+fn by_hand(decision: &ByHandReport) -> String {
+    let done = match (decision.action.as_str(), decision.offset) {
+        ("offset", Some(offset)) => format!("{} added to the reading", signed(offset)),
+        ("out-of-service", _) => "out of service".to_owned(),
+        (action, _) => action.to_owned(),
+    };
+    format!(
+        "By hand: {}: {done} ({}; decided by {})",
+        decision.tag, decision.reason, decision.by
+    )
+}
+
+fn signed(value: f64) -> String {
+    let sign = if value < 0.0 { "-" } else { "+" };
+    format!("{sign}{}", number(value.abs()))
 }
 
 fn disagrees(standardised: Option<f64>, critical: Option<f64>) -> &'static str {

@@ -61,6 +61,17 @@ pub fn relations(plant: &Plant, layout: &Layout) -> Vec<Relation> {
     relations
 }
 
+/// The stream that leaves a vessel from below its water level: liquid, whatever a
+/// thermometer says.
+pub(super) fn liquid_outlet(kind: &Kind) -> Option<StreamId> {
+    match kind {
+        Kind::ClosedHeater { drain_out, .. } => Some(*drain_out),
+        Kind::Condenser { condensate, .. } => Some(*condensate),
+        Kind::OpenHeater { outlet, .. } => Some(*outlet),
+        _ => None,
+    }
+}
+
 /// The sides of a kind that conserve mass each.
 pub(super) fn sides(kind: &Kind, layout: &Layout) -> Vec<Balanced> {
     table(kind, OwnStates::default(), layout).sides

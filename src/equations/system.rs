@@ -42,6 +42,8 @@ pub struct System {
     pub observations: Vec<Observation>,
     /// Streams that a relation holds on the saturation line.
     pub on_saturation: Vec<Option<Side>>,
+    /// Streams that leave a vessel as liquid.
+    pub always_liquid: Vec<bool>,
     /// Streams that "equal enthalpy" relations join, each in one chain.
     pub chains: Vec<Vec<StreamId>>,
     /// Sparsity, for the solver.
@@ -124,6 +126,11 @@ impl System {
                 on_saturation[stream.0] = Some(*side);
             }
         }
+        let mut always_liquid = vec![false; plant.streams.len()];
+        let liquid = plant.equipment.iter();
+        for s in liquid.filter_map(|e| kinds::liquid_outlet(&e.kind)) {
+            always_liquid[s.0] = true;
+        }
         let quantities = plant.tags.iter().map(|tag| tag.quantity);
         let stated = plant.assumptions.iter().map(|a| a.quantity);
         let observations: Vec<Observation> = quantities
@@ -167,6 +174,7 @@ impl System {
             relations,
             observations,
             on_saturation,
+            always_liquid,
             chains,
             structure,
             needs_saturation,

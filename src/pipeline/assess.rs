@@ -8,7 +8,7 @@
 use super::attempt::{Found, attempt};
 use super::class_set;
 use super::compiled::Compiled;
-use super::hypotheses::limits;
+use super::hypotheses::{judged, limits};
 use super::solution::Solution;
 use super::tags::class;
 use crate::diagnosis::detectable;
@@ -28,15 +28,8 @@ const LOOSE: f64 = 10.0;
 
 /// What the tags can and cannot determine.
 pub fn assess(compiled: &Compiled) -> Assessment {
-    let (found, trouble) = operating_point(compiled);
+    let (found, operating_point) = operating_point(compiled);
     let plant = compiled.plant();
-    let guessed: Vec<&str> = plant
-        .tags
-        .iter()
-        .filter(|tag| tag.normal.is_none())
-        .map(|tag| tag.name.as_str())
-        .collect();
-    let operating_point = in_words(&guessed, trouble.as_deref());
     let system = compiled.system();
     let mut assessment = Assessment {
         plant: plant.name.clone(),
@@ -75,19 +68,19 @@ pub fn assess(compiled: &Compiled) -> Assessment {
         assessment.streams.insert(stream.name.clone(), entry);
     }
     let critical = solution.single_test().map(|test| test.critical_value);
-    assessment.limits = limits(compiled, &solution, critical);
+    assessment.limits = limits(compiled, &judged(compiled, &solution), critical);
     // The operating point is no batch: nothing is held against anything.
     (assessment.limits.iter_mut()).for_each(|limit| limit.standardised = None);
     assessment.unobservable = unobservable(compiled, &solution);
     assessment
 }
 
-/// Solves the plant at its normal readings.
+/// Solves the plant at its normal readings; answers in words too where that is.
 ///
 /// A tag without one reads at first, loosely, what the start predicts for it,
 /// and then what the solution does. Where no solution is found the start itself
 /// serves: rank is the same at almost every point.
-fn operating_point(compiled: &Compiled) -> (Found<'_>, Option<String>) {
+pub(super) fn operating_point(compiled: &Compiled) -> (Found<'_>, String) {
     let plant = compiled.plant();
     let system = compiled.system();
     let assumptions = plant
@@ -115,9 +108,14 @@ fn operating_point(compiled: &Compiled) -> (Found<'_>, Option<String>) {
     };
     // What was not stated now reads what the solution says.
     let exactly = complete(compiled, &known, &x, 1.0);
+    let untold = plant.tags.iter().filter(|tag| tag.normal.is_none());
+    let guessed: Vec<&str> = untold.map(|tag| tag.name.as_str()).collect();
     match attempt(compiled, &exactly) {
-        Ok(found) => (found, None),
-        Err(reason) => (Found::unsolved(compiled, exactly, &x), Some(reason)),
+        Ok(found) => (found, in_words(&guessed, None)),
+        Err(reason) => {
+            let in_words = in_words(&guessed, Some(&reason));
+            (Found::unsolved(compiled, exactly, &x), in_words)
+        }
     }
 }
 

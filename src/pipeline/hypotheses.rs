@@ -40,11 +40,35 @@ impl Unseen {
     }
 }
 
+/// What a solution says of a hypothesis, or why nothing of it would show.
+pub type Judged = Result<Evidence, Unseen>;
+
+/// Redundancy down to which a tag may join a suspect's group. A gross error moves
+/// the solution that redundancy is taken at: a tag that is weakly redundant
+/// without it can come out hardly redundant with it.
+const WEAKLY_REDUNDANT: f64 = 0.1 * HARDLY_REDUNDANT;
+
 /// What a solution says of a hypothesis, in internal units.
 ///
 /// # Errors
 /// Why nothing of it would show.
-pub fn testable(solution: &Solution, hypothesis: &Hypothesis) -> Result<Evidence, Unseen> {
+pub fn testable(solution: &Solution, hypothesis: &Hypothesis) -> Judged {
+    evidence(solution, hypothesis, HARDLY_REDUNDANT)
+}
+
+/// The same of a hypothesis that need not stand out by itself.
+///
+/// # Errors
+/// Why nothing of it would show.
+pub fn arguable(solution: &Solution, hypothesis: &Hypothesis) -> Judged {
+    evidence(solution, hypothesis, WEAKLY_REDUNDANT)
+}
+
+fn evidence(
+    solution: &Solution,
+    hypothesis: &Hypothesis,
+    least: f64,
+) -> Judged {
     if let Some(i) = hypothesis.observation() {
         if solution.measured(i).is_none() {
             return Err(Unseen::Unused);
@@ -52,7 +76,7 @@ pub fn testable(solution: &Solution, hypothesis: &Hypothesis) -> Result<Evidence
         if !solution.is_redundant(i) {
             return Err(Unseen::NotRedundant);
         }
-        if solution.redundancy(i) < HARDLY_REDUNDANT {
+        if solution.redundancy(i) < least {
             return Err(Unseen::Hardly);
         }
         return solution.evidence(hypothesis).ok_or(Unseen::NotRedundant);
@@ -76,9 +100,11 @@ pub fn testable(solution: &Solution, hypothesis: &Hypothesis) -> Result<Evidence
     if evidence.sigma.powi(-2) < CANCELS * alone {
         return Err(Unseen::Unchecked);
     }
-    // Of believable size is what is no more than flows there.
+    // Of believable size is what is no more than flows there. Through a closed
+    // valve nothing does.
     let (k, phi) = rows[0];
-    if evidence.sigma * phi.abs() > solution.relation_scale(k) {
+    let flows = !matches!(hypothesis.blame, Blame::Passing { .. });
+    if flows && evidence.sigma * phi.abs() > solution.relation_scale(k) {
         return Err(Unseen::Hardly);
     }
     Ok(evidence)
@@ -123,10 +149,17 @@ pub fn unit(compiled: &Compiled, hypothesis: &Hypothesis) -> (String, f64) {
     }
 }
 
+/// What a solution says of every hypothesis, in their order.
+pub fn judged(compiled: &Compiled, solution: &Solution) -> Vec<Judged> {
+    let hypotheses = compiled.hypotheses().iter();
+    hypotheses.map(|h| testable(solution, h)).collect()
+}
+
 /// What would be found of every hypothesis, and what would go unseen: the
 /// unseen first, otherwise in the order of the hypotheses.
-pub fn limits(compiled: &Compiled, solution: &Solution, critical: Option<f64>) -> Vec<Limit> {
-    let limits = compiled.hypotheses().iter().map(|hypothesis| {
+pub fn limits(compiled: &Compiled, judged: &[Judged], critical: Option<f64>) -> Vec<Limit> {
+    let hypotheses = compiled.hypotheses().iter().zip(judged);
+    let limits = hypotheses.map(|(hypothesis, judged)| {
         let (unit, factor) = unit(compiled, hypothesis);
         let mut limit = Limit {
             hypothesis: named(compiled, hypothesis),
@@ -135,7 +168,7 @@ pub fn limits(compiled: &Compiled, solution: &Solution, critical: Option<f64>) -
             unit,
             reason: None,
         };
-        match (testable(solution, hypothesis), critical) {
+        match (*judged, critical) {
             (Ok(evidence), Some(c)) => {
                 limit.detectable = Some(factor * detectable(c, evidence.sigma));
                 limit.standardised = Some(evidence.standardised);

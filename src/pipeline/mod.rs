@@ -23,12 +23,14 @@ mod solution;
 mod streams;
 mod suspects;
 mod tags;
+mod tell_apart;
 mod trial;
 
 pub use assess::assess;
 pub use compiled::Compiled;
 pub use influence::{NoInfluences, influences};
 pub use suspects::suppose;
+pub use tell_apart::tell_apart;
 
 use crate::diagnosis::{chi_square_quantile, chi_square_tail};
 use crate::plant::{Batch, ByHand};
@@ -67,8 +69,9 @@ pub fn reconcile_with(compiled: &Compiled, batch: &Batch, by_hand: &[ByHand]) ->
     report.equipment = equipment::equipment(compiled, &solution);
     report.remarks.extend(solution.remarks(compiled));
     let critical = report.single_test.as_ref().map(|test| test.critical_value);
-    report.limits = hypotheses::limits(compiled, &solution, critical);
-    suspects::name(compiled, &readings, &found, &solution, &mut report);
+    let judged = hypotheses::judged(compiled, &solution);
+    report.limits = hypotheses::limits(compiled, &judged, critical);
+    suspects::name(compiled, &readings, &found, &solution, &judged, &mut report);
     report
 }
 

@@ -77,15 +77,16 @@ impl Intervals {
             return None;
         }
         for &(s, measured) in &thermometers(case, chain) {
-            let plain = !may_be_near(case, s, measured, x);
+            let liquid_only = system.always_liquid[s.0];
+            let plain = !liquid_only && !may_be_near(case, s, measured, x);
             let Some(at) = system.saturation(s, x).filter(|_| !plain) else {
                 continue;
             };
             let h = x[system.layout.h(s)];
             let (liquid, vapour) = (at.liquid.h, at.vapour.h);
             let near = measured.is_some_and(|m| near(case, s, m, at.t, at.t_p));
-            if measured.is_none() {
-                // Subcooling is stated of liquid.
+            if measured.is_none() || (liquid_only && (near || h > liquid)) {
+                // Subcooling is stated of liquid, and a drain is nothing else.
                 intervals.doubtful.push((s, liquid, vapour));
                 intervals.allowed.1 = intervals.allowed.1.min(liquid);
             } else if near || (h > liquid && h < vapour) {
@@ -109,7 +110,8 @@ impl Intervals {
     /// Number of the interval that `x` has the chain in.
     pub fn at(&self, system: &System, x: &[f64]) -> usize {
         let h = x[system.layout.h(self.members[0])];
-        let allowed = h.clamp(self.allowed.0, self.allowed.1);
+        // Readings can contradict each other: then the upper end holds.
+        let allowed = h.max(self.allowed.0).min(self.allowed.1);
         // On the upper end of what is allowed it belongs below.
         self.cuts.iter().filter(|&&cut| cut < allowed).count()
     }
@@ -211,6 +213,17 @@ fn may_be_near(case: &Case, s: StreamId, measured: Option<Measured>, x: &[f64]) 
     let saturated = system.saturation_temperature(s, x).unwrap_or(f64::INFINITY);
     let far = |m: Measured| m.value - saturated > FAR.max(2.0 * NEAR * m.sigma.get());
     x[system.layout.h(s)] < NEVER_WET || !measured.is_some_and(far)
+}
+
+/// The case with every doubtful stream on the side that `x` has it on; no others
+/// are held to a side.
+pub fn sided<'a>(plain: &Case<'a>, doubts: &[Intervals], x: &[f64]) -> Case<'a> {
+    let system = plain.system();
+    let mut modes = Modes::none(system.layout.streams());
+    for chain in doubts {
+        chain.put(chain.at(system, x), &mut modes);
+    }
+    plain.with_modes(modes)
 }
 
 /// The best of the solutions on either side.

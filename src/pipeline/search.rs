@@ -10,10 +10,10 @@
 
 use super::attempt::Found;
 use super::compiled::Compiled;
-use super::hypotheses::testable;
+use super::hypotheses::{Judged, arguable, testable};
 use super::solution::Solution;
 use super::trial::Trial;
-use crate::diagnosis::Evidence;
+use crate::diagnosis::{Evidence, chi_square_quantile};
 use crate::equations::Measured;
 use crate::report::SingleTest;
 
@@ -23,8 +23,10 @@ pub const MOST_SUSPECTS: usize = 5;
 const MOST_SOLVED: usize = 8;
 /// How much further than the group distance linear theory is trusted to err.
 const MARGIN: f64 = 1.0;
-/// The same as a part of the ratio.
+/// The same as a part of the ratio, before the first is solved...
 const MARGIN_OF_RATIO: f64 = 0.05;
+/// ...and in errors that it turned out to have.
+const FAMILIAR_ERRORS: f64 = 2.0;
 /// Exchanges of one suspect for another.
 const MOST_EXCHANGES: usize = 3;
 /// Ratios this near, as a part of the larger, are equal but for rounding: the
@@ -75,6 +77,8 @@ pub struct Search<'a> {
     pub readings: &'a [Option<Measured>],
     /// Critical value and group distance.
     pub test: &'a SingleTest,
+    /// What the batch without suspects says of every hypothesis.
+    pub plain: &'a [Judged],
 }
 
 /// One step: the members of a group, the best first, and the best one solved.
@@ -137,12 +141,38 @@ impl Search<'_> {
         }
     }
 
+    /// Whether one suspect after another may have led astray: several were
+    /// named, or those named leave the global test failing.
+    pub fn is_muddled(&self, findings: &Findings, solution: &Solution) -> bool {
+        let statistic = match &findings.explained {
+            Some(explained) => explained.outcome.objective,
+            None => solution.objective(),
+        };
+        let named = findings.suspects.len();
+        let left = solution.degrees_of_freedom().saturating_sub(named);
+        let critical = chi_square_quantile(self.base.plant().confidence, left);
+        named > 1 || critical.is_some_and(|critical| statistic > critical)
+    }
+
+    /// What is left unexplained, and what each suspect has to explain to be worth
+    /// naming: of two searches the cheaper one is kept.
+    pub fn price(&self, findings: &Findings, solution: &Solution) -> f64 {
+        let suspects = findings.suspects.len() as f64;
+        match &findings.explained {
+            Some(explained) => {
+                explained.outcome.objective + suspects * self.test.critical_value.powi(2)
+            }
+            None if findings.suspects.is_empty() => solution.objective(),
+            None => f64::INFINITY,
+        }
+    }
+
     /// The batch with all of these in; those that do not solve stay out.
     fn take_in(&self, nothing: &Trial, chosen: &[usize]) -> Trial {
         let mut stage = nothing.clone();
         for &suspect in chosen.iter().take(MOST_SUSPECTS) {
             if let Some(next) = stage.with(self.base, suspect, 0.0) {
-                stage = next;
+                stage = next.settled(self.base);
             }
         }
         stage
@@ -151,53 +181,68 @@ impl Search<'_> {
     /// What is spoken for most strongly, with the suspects of `stage` in;
     /// `None` where nothing stands above the critical value.
     fn step(&self, stage: &Trial, solution: &Solution) -> Option<Step> {
-        let mut scores = self.scores(stage, solution);
+        let scores = self.scores(stage, solution);
         let (_, _, largest) = *scores.first()?;
-        if largest <= self.test.critical_value.powi(2) {
+        let speaks = |&(h, _, ratio): &(usize, Evidence, f64)| {
+            let hypothesis = &self.base.hypotheses()[h];
+            ratio > self.test.critical_value.powi(2) && testable(solution, hypothesis).is_ok()
+        };
+        if !scores.iter().any(speaks) {
             return None;
         }
         let distance = self.test.group_distance;
-        let reach = distance + MARGIN + MARGIN_OF_RATIO * largest;
-        scores.retain(|&(_, _, ratio)| ratio >= largest - reach);
+        let mut reach = distance + MARGIN + MARGIN_OF_RATIO * largest;
         let mut best: Option<Trial> = None;
         let mut members = Vec::new();
         for (nth, &(hypothesis, evidence, ratio)) in scores.iter().enumerate() {
-            let member = Member {
+            if ratio < largest - reach {
+                break;
+            }
+            let linear = Member {
                 hypothesis,
                 size: evidence.size,
                 sigma: evidence.sigma,
                 ratio,
                 solved: false,
             };
-            let trial = (nth < MOST_SOLVED)
-                .then(|| stage.with(self.base, hypothesis, evidence.size))
+            let solved = (nth < MOST_SOLVED)
+                .then(|| self.solved(stage, linear))
                 .flatten();
-            let Some(trial) = trial else {
-                members.push(member);
+            let Some((member, trial)) = solved else {
+                members.push(linear);
                 continue;
             };
-            let reading = self.reading(hypothesis);
-            let Some(size) = trial.size(self.base, hypothesis, reading) else {
-                members.push(member);
-                continue;
-            };
-            if self.base.hypotheses()[hypothesis].one_sided && size <= 0.0 {
+            if self.base.hypotheses()[hypothesis].one_sided && member.size <= 0.0 {
                 continue;
             }
-            members.push(Member {
-                size,
-                ratio: stage.outcome.objective - trial.outcome.objective,
-                solved: true,
-                ..member
-            });
-            let lower =
-                |best: &Trial| trial.outcome.objective < best.outcome.objective * (1.0 - EQUAL);
+            if nth == 0 {
+                // Linear theory errs for the others as it does for the first.
+                let error = (member.ratio - ratio).abs();
+                reach = reach.min(distance + MARGIN + FAMILIAR_ERRORS * error);
+            }
+            members.push(member);
+            let objective = trial.outcome.objective;
+            let lower = |best: &Trial| objective < best.outcome.objective * (1.0 - EQUAL);
             if best.as_ref().is_none_or(lower) {
                 best = Some(trial);
             }
         }
+        let best = best.map(|best| best.settled(self.base));
         self.rank(&mut members, best.as_ref());
         (!members.is_empty()).then_some(Step { members, best })
+    }
+
+    /// A member by a solve of its own.
+    fn solved(&self, stage: &Trial, linear: Member) -> Option<(Member, Trial)> {
+        let trial = stage.with(self.base, linear.hypothesis, linear.size)?;
+        let reading = self.reading(linear.hypothesis);
+        let member = Member {
+            size: trial.size(self.base, linear.hypothesis, reading)?,
+            ratio: stage.outcome.objective - trial.outcome.objective,
+            solved: true,
+            ..linear
+        };
+        Some((member, trial))
     }
 
     /// The best first, and only what lies within the group distance of it.
@@ -222,14 +267,20 @@ impl Search<'_> {
         members.insert(0, lead);
     }
 
-    /// Hypotheses that can be tested and are not in, with their ratio, the
+    /// Hypotheses that can be argued for and are not in, with their ratio, the
     /// largest first.
     fn scores(&self, stage: &Trial, solution: &Solution) -> Vec<(usize, Evidence, f64)> {
         let all = self.base.hypotheses().iter().enumerate();
         let mut scores: Vec<(usize, Evidence, f64)> = all
             .filter(|(h, _)| !stage.suspects.contains(h))
             .filter_map(|(h, hypothesis)| {
-                let evidence = testable(solution, hypothesis).ok()?;
+                let known = hypothesis.observation().is_none() && stage.suspects.is_empty();
+                let judged = if known {
+                    self.plain[h]
+                } else {
+                    arguable(solution, hypothesis)
+                };
+                let evidence = judged.ok()?;
                 let ratio = evidence.ratio(hypothesis.one_sided);
                 (ratio > 0.0).then_some((h, evidence, ratio))
             })
@@ -259,7 +310,7 @@ impl Search<'_> {
                 break;
             };
             match stage.less(self.base, nth, self.readings) {
-                Some(less) => stage = less,
+                Some(less) => stage = less.settled(self.base),
                 None => break,
             }
         }
@@ -287,7 +338,8 @@ impl Search<'_> {
             let mut groups = Vec::new();
             for nth in 0..stage.suspects.len() {
                 let suspect = stage.suspects[nth];
-                let Some(before) = stage.less(self.base, nth, self.readings) else {
+                let less = stage.less(self.base, nth, self.readings);
+                let Some(before) = less.map(|less| less.settled(self.base)) else {
                     continue;
                 };
                 let step = if before.suspects.is_empty() {

@@ -4,7 +4,7 @@
 use super::attempt::{Found, attempt};
 use super::checks;
 use super::compiled::Compiled;
-use super::hypotheses::{named, testable, unit};
+use super::hypotheses::{Judged, arguable, named, unit};
 use super::readings::Readings;
 use super::search::{Findings, Group, MOST_SUSPECTS, Member, Search};
 use super::solution::Solution;
@@ -26,6 +26,7 @@ pub fn name(
     readings: &Readings,
     found: &Found,
     solution: &Solution,
+    judged: &[Judged],
     report: &mut Report,
 ) {
     let Some(test) = report.single_test.clone() else {
@@ -35,14 +36,16 @@ pub fn name(
         base: compiled,
         readings: &readings.measured,
         test: &test,
+        plain: judged,
     };
-    let robust = compiled.plant().robust_start && report.verdict == Verdict::Inconsistent;
-    let chosen = if robust {
-        robust::left_out(compiled, found, test.critical_value)
-    } else {
-        Vec::new()
-    };
-    let findings = search.run(found, solution, &chosen);
+    let mut findings = search.run(found, solution, &[]);
+    if compiled.plant().robust_start && search.is_muddled(&findings, solution) {
+        let chosen = robust::left_out(compiled, found, test.critical_value);
+        let other = search.run(found, solution, &chosen);
+        if search.price(&other, solution) < search.price(&findings, solution) {
+            findings = other;
+        }
+    }
     let tell = Telling {
         compiled,
         test: &test,
@@ -75,14 +78,15 @@ pub fn suppose(
     let test = solution.single_test()?;
     let all = compiled.hypotheses();
     let place = all.iter().position(|h| named(compiled, h) == *supposed)?;
-    let evidence = testable(&solution, &all[place]).ok()?;
+    let evidence = arguable(&solution, &all[place]).ok()?;
     let search = Search {
         base: compiled,
         readings: &readings.measured,
         test: &test,
+        plain: &[],
     };
     let nothing = Trial::without_suspects(&found);
-    let trial = nothing.with(compiled, place, evidence.size)?;
+    let trial = nothing.with(compiled, place, evidence.size)?.settled(compiled);
     let view = trial.view(compiled, &test);
     let (size, sigma) = search.sized(&trial, &view.solution(), place)?;
     let tell = Telling {

@@ -19,7 +19,7 @@ use super::assess::operating_point;
 use super::attempt::attempt;
 use super::class_set;
 use super::compiled::Compiled;
-use super::hypotheses::{limits, named, testable, unit};
+use super::hypotheses::{judged, limits, testable};
 use super::readings::Readings;
 use super::solution::Solution;
 use crate::diagnosis::detectable;
@@ -83,8 +83,12 @@ fn tell(solution: &Solution, compiled: &Compiled, told: &mut TellApart) {
     };
     told.critical_value = Some(test.critical_value);
     told.group_distance = Some(test.group_distance);
-    told.unseen = limits(compiled, solution, Some(test.critical_value));
-    told.unseen.retain(|limit| limit.detectable.is_none());
+    // The seen stand in the order of the hypotheses, as those that are tested do.
+    let (seen, unseen): (Vec<Limit>, Vec<Limit>) =
+        limits(compiled, &judged(compiled, solution), Some(test.critical_value))
+            .into_iter()
+            .partition(|limit| limit.detectable.is_some());
+    told.unseen = unseen;
     let all = compiled.hypotheses().iter();
     let tested: Vec<Tested> = all
         .filter_map(|hypothesis| {
@@ -94,24 +98,14 @@ fn tell(solution: &Solution, compiled: &Compiled, told: &mut TellApart) {
         .collect();
     let correlation = correlations(solution, &tested);
     let one_sided: Vec<bool> = tested.iter().map(|t| t.hypothesis.one_sided).collect();
-    let limit = |t: usize| {
-        let (unit, factor) = unit(compiled, tested[t].hypothesis);
-        let sigma = factor.abs() * tested[t].sigma;
-        Limit {
-            hypothesis: named(compiled, tested[t].hypothesis),
-            detectable: Some(detectable(test.critical_value, sigma)),
-            unit,
-            reason: None,
-        }
-    };
     told.rows = rows(&correlation, &one_sided, &test)
         .into_iter()
         .map(|row| Apart {
-            causes: row.causes.iter().map(|&t| limit(t)).collect(),
+            causes: row.causes.iter().map(|&t| seen[t].clone()).collect(),
             alike: row.alike,
             mixed_up_with: (row.others.iter())
                 .map(|&(h, correlation)| MixedUp {
-                    hypothesis: named(compiled, tested[h].hypothesis),
+                    hypothesis: seen[h].hypothesis.clone(),
                     correlation,
                 })
                 .collect(),

@@ -7,7 +7,7 @@
 use super::attempt::Found;
 use super::class_set::{self, ClassSet};
 use super::compiled::{Compiled, Variant};
-use super::phases;
+use super::phases::{self, Intervals};
 use super::solution::Solution;
 use crate::equations::{Case, Measured, Modes};
 use crate::plant::StreamId;
@@ -61,6 +61,20 @@ impl Trial {
         self.solve(base, suspects, measured, &[(suspect, guess)])
     }
 
+    /// The same solution, or a better one on another side of saturation.
+    pub fn settled(self, base: &Compiled) -> Trial {
+        let compiled = self.compiled(base);
+        let (measured, modes) = (self.measured.clone(), self.modes.clone());
+        let case = Case::new(compiled.system(), measured, modes, &self.outcome.x);
+        let found = phases::settle(compiled, case, self.outcome.clone());
+        Trial {
+            modes: found.case.modes().clone(),
+            open: found.open,
+            outcome: found.outcome,
+            ..self
+        }
+    }
+
     /// Solves without suspect number `nth`; `readings` are those of the batch.
     pub fn less(
         &self,
@@ -100,18 +114,20 @@ impl Trial {
                 .map(|&(_, size)| size);
             guess.or_else(|| self.state_of(h)).unwrap_or(0.0)
         }));
-        let case = Case::new(compiled.system(), measured, self.modes.clone(), &start);
+        // A stream whose thermometer is left out is held to no side any more.
+        let free = Modes::none(compiled.system().layout.streams());
+        let plain = Case::new(compiled.system(), measured, free, &start);
+        let case = phases::sided(&plain, &Intervals::of(&plain, &start), &start);
         let outcome = solve(&case, compiled.symbolic(), &start, &Options::default());
         if outcome.status != Status::Converged {
             return None;
         }
-        let found = phases::settle(compiled, case, outcome);
         Some(Trial {
             suspects,
-            measured: found.case.measured().to_vec(),
-            modes: found.case.modes().clone(),
-            open: found.open,
-            outcome: found.outcome,
+            measured: case.measured().to_vec(),
+            modes: case.modes().clone(),
+            open: Vec::new(),
+            outcome,
             variant,
         })
     }

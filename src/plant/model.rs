@@ -23,7 +23,8 @@ pub struct Plant {
     pub uncertain_factor: f64,
     /// Confidence of the statistical tests, 0 to 1.
     pub confidence: f64,
-    /// The search for suspects starts from a robust solution.
+    /// Where several suspects are named, or do not explain everything, the search
+    /// is made from a robust solution too, and the better one kept.
     pub robust_start: bool,
     /// Streams in the order of the file.
     pub streams: Vec<Stream>,

@@ -9,6 +9,7 @@ mod assessment;
 mod document;
 mod influence;
 mod suspects;
+mod tell_apart;
 
 pub use assessment::{AssessedQuantity, AssessedStream, AssessedTag, Assessment};
 pub use document::{
@@ -19,3 +20,4 @@ pub use influence::{Influence, Influences};
 pub use suspects::{
     Accused, AfterSuspects, ByHandReport, Cause, FieldCheck, Hypothesis, Limit, Repaired, Suspect,
 };
+pub use tell_apart::{Apart, MixedUp, TellApart};

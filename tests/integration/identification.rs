@@ -8,11 +8,18 @@
 //! takes that many batches per hypothesis and holds each hypothesis by itself to
 //! its bound too. Figures are printed: `cargo test --release --test integration
 //! identification -- --nocapture`.
+//!
+//! Beside the demonstration plant stand published networks of flows, and the
+//! independent reference's figures of every hypothesis.
 
 mod bench;
 mod detectability;
+mod linear;
+mod metering;
 mod pairs;
 mod power;
+mod reference;
+mod wrong_models;
 
 /// Batches per hypothesis.
 fn batches_each(usual: usize) -> usize {

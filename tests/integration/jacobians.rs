@@ -5,7 +5,7 @@
 //! The plants are those of `tests/reference`, which between them use every kind
 //! of equipment, every measured quantity and every assumption.
 
-use counterpoise::equations::{Observation, System};
+use counterpoise::equations::{Observation, System, hypotheses};
 use counterpoise::fluid;
 use counterpoise::plant::{self, Format, Plant, Quantity, StreamId};
 use rand::{Rng, SeedableRng};
@@ -25,6 +25,7 @@ fn plants() -> Vec<Plant> {
         include_str!("../reference/hazel-quay.toml"),
         include_str!("../reference/ferrow-bridge.toml"),
         include_str!("../reference/corrow-mill.toml"),
+        include_str!("../reference/alder-weir.toml"),
     ]
     .map(|text| plant::read(text, Format::Toml).unwrap().plant)
     .into()
@@ -164,4 +165,45 @@ fn relations_and_measurements_have_exact_jacobians() {
         without_value < checked / 100,
         "{without_value} of {checked} had no value"
     );
+}
+
+/// A hypothesis adds a state of its own; what it adds to each relation is the
+/// derivative by that state, and where it is zero nothing else has changed.
+#[test]
+fn hypotheses_add_what_they_say_to_the_relations() {
+    let mut random = ChaCha8Rng::seed_from_u64(12);
+    let mut checked = 0;
+    for plant in plants() {
+        let plain = System::new(&plant);
+        for hypothesis in hypotheses(&plant, &plain) {
+            let (system, states) = plain.with(&plant, &[&hypothesis]);
+            let Some(state) = states[0] else {
+                assert!(hypothesis.observation().is_some());
+                assert_eq!(system.relations, plain.relations);
+                continue;
+            };
+            assert_eq!(state, plain.layout.len());
+            for _ in 0..20 {
+                let mut x = random_state(&plain, &mut random);
+                x.push(0.0);
+                for (k, relation) in system.relations.iter().enumerate() {
+                    let (without, with) = (plain.residual(k, &x), system.residual(k, &x));
+                    assert_eq!(without.unwrap().0, with.unwrap().0, "{:?}", relation.role);
+                }
+                let rows = hypothesis.rows(&plain.layout, &x);
+                x[state] = random.random_range(-3.0..3.0);
+                for (k, relation) in system.relations.iter().enumerate() {
+                    let (_, exact) = system.residual(k, &x).unwrap();
+                    let f = |x: &[f64]| Some(system.residual(k, x)?.0);
+                    let worst = check(&f, &x, &relation.row, &exact).unwrap();
+                    assert!(worst < TOLERANCE, "{:?}: {worst:e}", relation.role);
+                    let slot = relation.row.iter().position(|&j| j == state);
+                    let phi = rows.iter().find(|&&(row, _)| row == k).map(|&(_, phi)| phi);
+                    assert_eq!(slot.map(|slot| exact[slot]), phi, "{:?}", hypothesis.blame);
+                    checked += 1;
+                }
+            }
+        }
+    }
+    assert!(checked > 10_000, "{checked}");
 }

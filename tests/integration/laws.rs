@@ -13,4 +13,5 @@ mod invariance;
 mod propagation;
 mod readings;
 mod saturation;
+mod suspects;
 mod workbench;

@@ -207,3 +207,12 @@ fn corrow_mill_agrees_with_the_reference() {
         include_str!("../reference/corrow-mill.expected.ndjson"),
     );
 }
+
+#[test]
+fn alder_weir_agrees_with_the_reference() {
+    compare(
+        include_str!("../reference/alder-weir.toml"),
+        include_str!("../reference/alder-weir.batches.ndjson"),
+        include_str!("../reference/alder-weir.expected.ndjson"),
+    );
+}

@@ -75,7 +75,7 @@ impl<'n> Heading<'n> {
             confidence: confidence(root, cx),
             robust_start: match root.get("robust-start") {
                 Some(at) => at.boolean(cx),
-                None => Some(false),
+                None => Some(true),
             },
             barometer: barometer(root, cx),
         }

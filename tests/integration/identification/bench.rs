@@ -159,6 +159,9 @@ pub fn plant_two(
     Some(bench.batch(clean, &truth, &faults))
 }
 
+/// A truth with an error in it, or faults of tags, and the size of the error.
+type Made = (Truth, Vec<(String, Fault)>, f64);
+
 fn made(
     bench: &Bench,
     clean: &Clean,
@@ -166,7 +169,7 @@ fn made(
     report: &Report,
     hypothesis: &Hypothesis,
     (limits, sigmas): (f64, f64),
-) -> Option<(Truth, Vec<(String, Fault)>, f64)> {
+) -> Option<Made> {
     let limit = report
         .limits
         .iter()
