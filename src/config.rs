@@ -1,12 +1,16 @@
 //! Settings of the service, from the command line and the environment.
 
-use crate::server::{Limits, Options};
+use crate::server::{Hook, Limits, Options};
 use crate::store::SqliteOptions;
 use crate::telemetry::LogFormat;
+use anyhow::Context;
 use clap::Args;
 use std::net::SocketAddr;
 use std::path::PathBuf;
 use std::time::Duration;
+
+/// How often the clock is looked at for shelvings that end.
+const TICK: Duration = Duration::from_secs(1);
 
 /// Settings of a running service.
 #[derive(Args, Clone, Debug)]
@@ -27,9 +31,33 @@ pub struct Config {
     #[command(flatten)]
     pub bounds: Bounds,
 
+    /// Where events of alarms are sent.
+    #[command(flatten)]
+    pub webhook: Webhook,
+
     /// How it logs.
     #[command(flatten)]
     pub log: Log,
+}
+
+/// Where events of alarms are sent.
+#[derive(Args, Clone, Debug, Default)]
+pub struct Webhook {
+    /// Address that every event of an alarm is posted to, signed: http://...
+    #[arg(
+        long,
+        env = "COUNTERPOISE_WEBHOOK_URL",
+        requires = "webhook_secret_file"
+    )]
+    pub webhook_url: Option<String>,
+
+    /// File with the secret it is signed with, 32 bytes or more.
+    #[arg(
+        long,
+        env = "COUNTERPOISE_WEBHOOK_SECRET_FILE",
+        requires = "webhook_url"
+    )]
+    pub webhook_secret_file: Option<PathBuf>,
 }
 
 /// How a service logs.
@@ -56,6 +84,10 @@ pub struct Bounds {
     #[arg(long, env = "COUNTERPOISE_MAX_CONNECTIONS", default_value_t = Limits::default().connections, value_parser = at_least_one)]
     pub max_connections: usize,
 
+    /// Clients that listen to events at once; more get 429.
+    #[arg(long, env = "COUNTERPOISE_MAX_LISTENERS", default_value_t = Limits::default().listeners, value_parser = at_least_one)]
+    pub max_listeners: usize,
+
     /// Batches that are reconciled at once; as many as there are processors
     /// unless set.
     #[arg(long, env = "COUNTERPOISE_WORKERS", value_parser = at_least_one)]
@@ -79,26 +111,45 @@ pub struct Bounds {
 }
 
 impl Config {
-    /// Settings of the server.
-    pub fn server(&self) -> Options {
+    /// Settings of the server; reads the webhook's secret.
+    ///
+    /// # Errors
+    ///
+    /// Where the webhook's secret cannot be read, or it or the address be used.
+    pub fn server(&self) -> anyhow::Result<Options> {
         let defaults = Limits::default();
-        Options {
+        Ok(Options {
             listen: self.listen,
             grace: self.bounds.grace,
+            tick: TICK,
+            webhook: self.webhook.hook()?,
             limits: Limits {
                 in_flight: self.bounds.max_in_flight,
                 connections: self.bounds.max_connections,
+                listeners: self.bounds.max_listeners,
                 workers: self.bounds.workers.unwrap_or(defaults.workers),
                 document: self.bounds.max_document,
                 stream: self.bounds.max_stream,
                 read_timeout: self.bounds.read_timeout,
             },
-        }
+        })
     }
 
     /// Settings of the store.
     pub fn store(&self) -> SqliteOptions {
         SqliteOptions::new(&self.database)
+    }
+}
+
+impl Webhook {
+    fn hook(&self) -> anyhow::Result<Option<Hook>> {
+        let (Some(url), Some(file)) = (&self.webhook_url, &self.webhook_secret_file) else {
+            return Ok(None);
+        };
+        let secret = std::fs::read(file)
+            .with_context(|| format!("cannot read the webhook's secret {}", file.display()))?;
+        let hook = Hook::new(url, &secret).context("the webhook cannot be used")?;
+        Ok(Some(hook))
     }
 }
 

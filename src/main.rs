@@ -20,6 +20,9 @@ fn main() -> ExitCode {
         Command::Reconcile(reconcile) => cli::reconcile(&reconcile),
         Command::Influences(influences) => cli::influences(&influences),
         Command::TellApart(tell_apart) => cli::tell_apart(&tell_apart),
+        Command::Backup(backup) => run(cli::backup(&backup)),
+        Command::Restore(restore) => run(cli::restore(&restore)),
+        Command::Verify(verify) => run(cli::verify(&verify)),
         Command::Openapi => cli::openapi(),
         Command::MakeDemoFixture { out } => cli::make_demo_fixture(&out),
     };
@@ -33,8 +36,12 @@ fn main() -> ExitCode {
 }
 
 fn service(work: impl Future<Output = anyhow::Result<()>>) -> anyhow::Result<ExitCode> {
+    run(work).map(|()| ExitCode::SUCCESS)
+}
+
+fn run<T>(work: impl Future<Output = anyhow::Result<T>>) -> anyhow::Result<T> {
     let runtime = tokio::runtime::Runtime::new().context("cannot start")?;
-    runtime.block_on(work).map(|()| ExitCode::SUCCESS)
+    runtime.block_on(work)
 }
 
 async fn serve(config: Config) -> anyhow::Result<()> {

@@ -1,6 +1,7 @@
 //! Batches: taking one or many, listing, giving a report.
 
 use super::body::{self, Permit, media_type};
+use super::engine::no_batch;
 use super::error::{Kind, Problem};
 use super::headers::{encode, next_link, prefers_async, value};
 use super::observe::RequestId;
@@ -21,7 +22,7 @@ use time::OffsetDateTime;
 use utoipa::ToSchema;
 
 /// The media type of a stream of JSON documents, one per line.
-const NDJSON: &str = "application/x-ndjson";
+pub(super) const NDJSON: &str = "application/x-ndjson";
 
 /// Lines of a stream that are worked on together: enough for the store to
 /// commit many at once.
@@ -361,9 +362,6 @@ pub(super) async fn get(
             let headers = [(header::RETRY_AFTER, value("1"))];
             Ok((StatusCode::ACCEPTED, headers, Json(pending)).into_response())
         }
-        None => Err(Problem::new(
-            Kind::NotFound,
-            format!("there is no batch \"{batch}\" of plant \"{plant}\""),
-        )),
+        None => Err(no_batch(&plant, &batch)),
     }
 }

@@ -5,6 +5,7 @@
 //! outermost layer, which knows the request's id and turns the errors of every
 //! other layer into problems as well.
 
+use crate::alarms::{Action, State};
 use crate::ingest::Refusal;
 use crate::plant::Fault;
 use crate::store::StoreError;
@@ -34,6 +35,8 @@ pub enum Kind {
     Timeout,
     /// The name is taken by other content.
     Conflict,
+    /// The state that it is in does not allow it.
+    Refused,
     /// The current revision is not the one that was expected.
     PreconditionFailed,
     /// The body is too large, as sent or after decompression.
@@ -90,6 +93,11 @@ impl Kind {
                 StatusCode::CONFLICT,
                 "urn:counterpoise:problem:conflict",
                 "The name is taken by other content",
+            ),
+            Kind::Refused => (
+                StatusCode::CONFLICT,
+                "urn:counterpoise:problem:refused",
+                "Its state does not allow this",
             ),
             Kind::PreconditionFailed => (
                 StatusCode::PRECONDITION_FAILED,
@@ -171,8 +179,22 @@ pub struct Problem {
     #[serde(skip_serializing_if = "Vec::is_empty")]
     #[schema(required = false)]
     faults: Vec<Fault>,
+    /// What stands in the way, and what may be done instead.
+    #[serde(flatten)]
+    standing: Option<Box<Standing>>,
     #[serde(skip)]
-    headers: Vec<(HeaderName, &'static str)>,
+    headers: Box<[(HeaderName, &'static str)]>,
+}
+
+/// The state of an alarm to which something cannot be done.
+#[derive(Clone, Debug, Serialize, ToSchema)]
+pub struct Standing {
+    /// State.
+    #[schema(required = false)]
+    state: State,
+    /// What may be done to it.
+    #[schema(required = false)]
+    allowed: &'static [Action],
 }
 
 impl Problem {
@@ -190,7 +212,8 @@ impl Problem {
             detail: detail.into().into_boxed_str(),
             instance: Box::default(),
             faults: Vec::new(),
-            headers,
+            standing: None,
+            headers: headers.into_boxed_slice(),
         }
     }
 
@@ -200,9 +223,18 @@ impl Problem {
         self
     }
 
+    /// The same of an alarm in a state.
+    pub fn with_state(mut self, state: State) -> Self {
+        let allowed = state.allows();
+        self.standing = Some(Box::new(Standing { state, allowed }));
+        self
+    }
+
     /// The same with a header on its response.
     pub fn with_header(mut self, name: HeaderName, value: &'static str) -> Self {
-        self.headers.push((name, value));
+        let mut headers = self.headers.into_vec();
+        headers.push((name, value));
+        self.headers = headers.into_boxed_slice();
         self
     }
 
@@ -218,6 +250,12 @@ impl Problem {
         for fault in &mut self.faults {
             fault.line = Some(line);
         }
+        self
+    }
+
+    /// The same, said of a batch of many.
+    pub fn of_batch(mut self, batch: &str) -> Self {
+        self.detail = format!("batch \"{batch}\": {}", self.detail).into_boxed_str();
         self
     }
 
@@ -307,7 +345,7 @@ pub(super) fn finish(mut response: Response, request_id: &str) -> Response {
         headers.remove(name);
     }
     headers.insert(header::CONTENT_TYPE, HeaderValue::from_static(PROBLEM_JSON));
-    for (name, value) in &problem.headers {
+    for (name, value) in problem.headers.iter() {
         headers.insert(name, HeaderValue::from_static(value));
     }
     let mut finished = (status, problem.document()).into_response();

@@ -4,15 +4,23 @@
 //! Handlers take apart, call and convert; the way of a batch is in `engine`,
 //! and `error` alone knows status codes.
 
+mod accusations;
+mod again;
+mod alarms;
 mod ambient;
 mod batches;
 mod body;
+mod by_hand;
 mod engine;
 mod error;
+mod events;
+mod field;
+mod fields;
 mod headers;
 mod observe;
 mod openapi;
 mod operation;
+mod outgoing;
 mod params;
 mod plants;
 mod revisions;
@@ -22,6 +30,7 @@ pub mod shapes;
 pub use ambient::{Clock, Entropy, SystemClock, SystemEntropy};
 pub use error::{Kind, Problem};
 pub use openapi::document;
+pub use outgoing::{Hook, Unusable};
 
 use crate::store::Store;
 use axum::http::header;
@@ -30,6 +39,7 @@ use engine::Engine;
 use std::sync::Arc;
 use std::time::Duration;
 use tokio::sync::Semaphore;
+use tokio_util::sync::CancellationToken;
 use tower_http::catch_panic::CatchPanicLayer;
 use tower_http::compression::{CompressionLayer, DefaultPredicate, Predicate};
 
@@ -40,6 +50,8 @@ pub struct Limits {
     pub in_flight: usize,
     /// Connections at once; more wait.
     pub connections: usize,
+    /// Clients that listen to events at once; more are refused.
+    pub listeners: usize,
     /// Batches that are reconciled at once.
     pub workers: usize,
     /// Bytes of one document (plant file or batch) after decompression.
@@ -55,6 +67,7 @@ impl Default for Limits {
         Limits {
             in_flight: 64,
             connections: 1024,
+            listeners: 256,
             workers: std::thread::available_parallelism().map_or(1, usize::from),
             document: 4 << 20,
             stream: 32 << 20,
@@ -72,6 +85,9 @@ pub struct App {
     entropy: Arc<dyn Entropy>,
     limits: Arc<Limits>,
     permits: Arc<Semaphore>,
+    listeners: Arc<Semaphore>,
+    /// Ends what would never end by itself.
+    ending: CancellationToken,
 }
 
 impl App {
@@ -82,8 +98,11 @@ impl App {
         entropy: Arc<dyn Entropy>,
         limits: Limits,
     ) -> Self {
+        let engine = Engine::new(Arc::clone(&store), Arc::clone(&clock), limits.workers);
         App {
-            engine: Arc::new(Engine::new(Arc::clone(&store), limits.workers)),
+            engine: Arc::new(engine),
+            listeners: Arc::new(Semaphore::new(limits.listeners)),
+            ending: CancellationToken::new(),
             permits: Arc::new(Semaphore::new(limits.in_flight)),
             limits: Arc::new(limits),
             store,
@@ -109,6 +128,23 @@ impl App {
     /// Where the store cannot be read; it can be called again.
     pub async fn resume(&self) -> Result<(), crate::store::StoreError> {
         self.engine.resume().await
+    }
+
+    /// Ends shelvings in time, looking at the clock every `tick`; for ever.
+    pub async fn pass_time(&self, tick: Duration) {
+        events::pass_time(Arc::clone(&self.engine), tick).await;
+    }
+
+    /// Sends events to the webhook; for ever.
+    pub async fn send_out(&self, hook: Hook) {
+        let (store, engine) = (Arc::clone(&self.store), Arc::clone(&self.engine));
+        let (clock, entropy) = (Arc::clone(&self.clock), Arc::clone(&self.entropy));
+        outgoing::run(hook, store, engine, clock, entropy).await;
+    }
+
+    /// Ends the answers that go on for as long as their clients listen.
+    pub fn end_streams(&self) {
+        self.ending.cancel();
     }
 
     /// Waits until everything that was accepted is finished.

@@ -1,6 +1,9 @@
 //! The routes with their OpenAPI 3.1 document: one table gives both.
 
-use super::{App, Problem, batches, operation, plants, series};
+use super::{
+    App, Problem, accusations, again, alarms, batches, by_hand, events, field, operation, plants,
+    series,
+};
 use utoipa::OpenApi;
 use utoipa_axum::router::OpenApiRouter;
 use utoipa_axum::routes;
@@ -21,6 +24,10 @@ use utoipa_axum::routes;
     tags(
         (name = "plants", description = "Plant files and what their tags can determine"),
         (name = "batches", description = "Readings in, reports out"),
+        (name = "again", description = "Batches reconciled again: with decisions by hand, field readings, another revision"),
+        (name = "alarms", description = "What stays wrong over several batches, and who knows of it"),
+        (name = "accusations", description = "What suspects stood for, and what was found"),
+        (name = "by hand", description = "Tags out of service, and known offsets"),
         (name = "operation", description = "For whoever keeps the service running"),
     ),
     components(schemas(Problem)),
@@ -36,6 +43,24 @@ pub(super) fn routes() -> OpenApiRouter<App> {
         .routes(routes!(batches::post, batches::list))
         .routes(routes!(batches::get))
         .routes(routes!(series::get))
+        .routes(routes!(again::influences))
+        .routes(routes!(again::batch))
+        .routes(routes!(again::period))
+        .routes(routes!(again::versions))
+        .routes(routes!(again::version))
+        .routes(routes!(field::enter, field::list))
+        .routes(routes!(alarms::list))
+        .routes(routes!(events::listen))
+        .routes(routes!(alarms::acknowledge))
+        .routes(routes!(alarms::shelve))
+        .routes(routes!(alarms::unshelve))
+        .routes(routes!(alarms::remove_from_service))
+        .routes(routes!(alarms::return_to_service))
+        .routes(routes!(accusations::list))
+        .routes(routes!(accusations::get_record))
+        .routes(routes!(accusations::close))
+        .routes(routes!(by_hand::decide, by_hand::list))
+        .routes(routes!(by_hand::end))
         .routes(routes!(operation::live))
         .routes(routes!(operation::ready))
 }

@@ -3,7 +3,7 @@
 //! Nothing is read with these types: `ingest` reads batches, and tells every
 //! fault at once where a derived reader stops at the first.
 
-use serde::Deserialize;
+use serde::{Deserialize, Serialize};
 use time::OffsetDateTime;
 use utoipa::ToSchema;
 
@@ -83,4 +83,178 @@ pub enum Grade {
     Uncertain,
     /// Kept and not used.
     Bad,
+}
+
+/// What a person does to an alarm.
+#[derive(Deserialize, ToSchema)]
+#[serde(deny_unknown_fields)]
+pub struct Act {
+    /// Who.
+    #[schema(min_length = 1, max_length = 128, example = "R. Moss")]
+    pub by: String,
+    /// What they remark.
+    #[schema(max_length = 2000)]
+    pub note: Option<String>,
+}
+
+/// The same for a time.
+#[derive(Deserialize, ToSchema)]
+#[serde(deny_unknown_fields)]
+pub struct Shelve {
+    /// Who.
+    #[schema(min_length = 1, max_length = 128, example = "R. Moss")]
+    pub by: String,
+    /// When it ends, RFC 3339 with offset, in the future.
+    #[serde(with = "time::serde::rfc3339")]
+    pub until: OffsetDateTime,
+    /// What they remark.
+    #[schema(max_length = 2000)]
+    pub note: Option<String>,
+}
+
+/// The same with a reason.
+#[derive(Deserialize, ToSchema)]
+#[serde(deny_unknown_fields)]
+pub struct RemoveFromService {
+    /// Who.
+    #[schema(min_length = 1, max_length = 128, example = "R. Moss")]
+    pub by: String,
+    /// Why.
+    #[schema(
+        min_length = 1,
+        max_length = 2000,
+        example = "The line is drained until May"
+    )]
+    pub reason: String,
+    /// What they remark.
+    #[schema(max_length = 2000)]
+    pub note: Option<String>,
+}
+
+/// What came of an accusation.
+#[derive(Deserialize, ToSchema)]
+#[serde(deny_unknown_fields)]
+pub struct Closing {
+    /// What it came to.
+    pub outcome: crate::alarms::Outcome,
+    /// Which member of the group it was.
+    pub cause: Option<crate::report::Hypothesis>,
+    /// What was found: an as-found calibration, an inspection.
+    #[schema(
+        min_length = 1,
+        max_length = 2000,
+        example = "Reads 3.2 t/h high at 350 t/h"
+    )]
+    pub found: String,
+    /// The size that was measured.
+    pub as_found: Option<crate::alarms::AsFound>,
+    /// When it was found, RFC 3339 with offset, not in the future.
+    #[serde(with = "time::serde::rfc3339")]
+    pub at: OffsetDateTime,
+    /// Who closes it.
+    #[schema(min_length = 1, max_length = 128, example = "R. Moss")]
+    pub by: String,
+}
+
+/// A decision about a tag.
+#[derive(Deserialize, ToSchema)]
+#[serde(deny_unknown_fields)]
+pub struct ByHand {
+    /// A tag of the current revision.
+    #[schema(example = "FT-201")]
+    pub tag: String,
+    /// What is done to its readings.
+    pub action: Action,
+    /// What is added to them, in the tag's unit; of action `offset` alone.
+    #[schema(example = -3.2)]
+    pub offset: Option<f64>,
+    /// For periods that start at this time or later, RFC 3339 with offset...
+    #[serde(with = "time::serde::rfc3339")]
+    pub from: OffsetDateTime,
+    /// ...and before this time; without it until it is ended.
+    #[serde(default, with = "time::serde::rfc3339::option")]
+    pub until: Option<OffsetDateTime>,
+    /// Why.
+    #[schema(
+        min_length = 1,
+        max_length = 2000,
+        example = "Calibration of 12 March: reads high"
+    )]
+    pub reason: String,
+    /// Who decides it.
+    #[schema(min_length = 1, max_length = 128, example = "R. Moss")]
+    pub by: String,
+}
+
+/// What is done to the readings of a tag.
+#[derive(Clone, Copy, Deserialize, Serialize, ToSchema)]
+#[serde(rename_all = "kebab-case")]
+pub enum Action {
+    /// They are kept and not used.
+    OutOfService,
+    /// A known amount is added to them.
+    Offset,
+}
+
+/// An end put to a decision.
+#[derive(Deserialize, ToSchema)]
+#[serde(deny_unknown_fields)]
+pub struct End {
+    /// Who.
+    #[schema(min_length = 1, max_length = 128, example = "R. Moss")]
+    pub by: String,
+    /// When it ends, RFC 3339 with offset; at once where it is left out.
+    #[serde(default, with = "time::serde::rfc3339::option")]
+    pub until: Option<OffsetDateTime>,
+}
+
+/// Why a batch is to be reconciled again.
+#[derive(Deserialize, ToSchema)]
+#[serde(deny_unknown_fields)]
+pub struct Again {
+    /// Who asks for it.
+    #[schema(min_length = 1, max_length = 128, example = "R. Moss")]
+    pub by: String,
+    /// Why.
+    #[schema(min_length = 1, max_length = 2000, example = "FT-201 was recalibrated")]
+    pub reason: String,
+    /// With this revision; the batch's own where it is left out.
+    #[schema(minimum = 1)]
+    pub revision: Option<u32>,
+}
+
+/// The same for a period.
+#[derive(Deserialize, ToSchema)]
+#[serde(deny_unknown_fields)]
+pub struct PeriodAgain {
+    /// Periods that start at this time or later, RFC 3339 with offset...
+    #[serde(with = "time::serde::rfc3339")]
+    pub from: OffsetDateTime,
+    /// ...and before this time.
+    #[serde(with = "time::serde::rfc3339")]
+    pub to: OffsetDateTime,
+    /// Who asks for it.
+    #[schema(min_length = 1, max_length = 128, example = "R. Moss")]
+    pub by: String,
+    /// Why.
+    #[schema(min_length = 1, max_length = 2000, example = "FT-201 was recalibrated")]
+    pub reason: String,
+    /// With this revision; each batch's own where it is left out.
+    #[schema(minimum = 1)]
+    pub revision: Option<u32>,
+}
+
+/// Readings taken in the field.
+#[derive(Deserialize, ToSchema)]
+#[serde(deny_unknown_fields)]
+pub struct FieldEntry {
+    /// Who took them.
+    #[schema(min_length = 1, max_length = 128, example = "R. Moss")]
+    pub by: String,
+    /// When, RFC 3339 with offset, not in the future.
+    #[serde(with = "time::serde::rfc3339")]
+    pub at: OffsetDateTime,
+    /// What was read.
+    #[schema(min_items = 1, max_items = 20)]
+    pub readings: Vec<super::engine::FieldReading>,
 }

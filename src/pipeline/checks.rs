@@ -30,6 +30,9 @@ use statrs::distribution::{ContinuousCDF, Normal};
 const LISTED: usize = 6;
 /// What clears less than this part of the others is not worth the walk.
 const WORTH: f64 = 0.2;
+/// Likelihood ratio by which a reading must speak for one of two at least: 95 %
+/// of one sign, 1.645 squared.
+const LEAST_DISTANCE: f64 = 2.706;
 /// Members that are reckoned with.
 const MOST_MEMBERS: usize = 12;
 
@@ -171,7 +174,8 @@ impl Group<'_> {
                 let d = (expected[h] - expected[k]).powi(2) / variance;
                 if d > 0.0 {
                     let ahead = self.members[h].ratio - self.members[k].ratio;
-                    let margin = (d + ahead - self.distance) / (2.0 * d.sqrt());
+                    let apart = self.distance.max(LEAST_DISTANCE);
+                    let margin = (d + ahead - apart) / (2.0 * d.sqrt());
                     cleared += Normal::standard().cdf(margin);
                 }
             }

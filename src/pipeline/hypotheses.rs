@@ -64,11 +64,7 @@ pub fn arguable(solution: &Solution, hypothesis: &Hypothesis) -> Judged {
     evidence(solution, hypothesis, WEAKLY_REDUNDANT)
 }
 
-fn evidence(
-    solution: &Solution,
-    hypothesis: &Hypothesis,
-    least: f64,
-) -> Judged {
+fn evidence(solution: &Solution, hypothesis: &Hypothesis, least: f64) -> Judged {
     if let Some(i) = hypothesis.observation() {
         if solution.measured(i).is_none() {
             return Err(Unseen::Unused);

@@ -17,6 +17,7 @@ mod hypotheses;
 mod influence;
 mod phases;
 mod readings;
+mod refine;
 mod robust;
 mod search;
 mod solution;

@@ -8,12 +8,11 @@
 //! its group: every hypothesis whose ratio after solving again lies within the
 //! calibrated distance of the best. Linear theory chooses who is solved.
 
-use super::attempt::Found;
 use super::compiled::Compiled;
 use super::hypotheses::{Judged, arguable, testable};
 use super::solution::Solution;
 use super::trial::Trial;
-use crate::diagnosis::{Evidence, chi_square_quantile};
+use crate::diagnosis::Evidence;
 use crate::equations::Measured;
 use crate::report::SingleTest;
 
@@ -23,15 +22,11 @@ pub const MOST_SUSPECTS: usize = 5;
 const MOST_SOLVED: usize = 8;
 /// How much further than the group distance linear theory is trusted to err.
 const MARGIN: f64 = 1.0;
-/// The same as a part of the ratio, before the first is solved...
+/// The same as a part of the ratio.
 const MARGIN_OF_RATIO: f64 = 0.05;
-/// ...and in errors that it turned out to have.
-const FAMILIAR_ERRORS: f64 = 2.0;
-/// Exchanges of one suspect for another.
-const MOST_EXCHANGES: usize = 3;
 /// Ratios this near, as a part of the larger, are equal but for rounding: the
 /// order of the hypotheses then decides.
-const EQUAL: f64 = 1e-6;
+pub(super) const EQUAL: f64 = 1e-6;
 
 /// What the search found.
 #[derive(Default)]
@@ -67,6 +62,8 @@ pub struct Member {
     pub ratio: f64,
     /// Size and ratio are of a solve and not of linear theory.
     pub solved: bool,
+    /// It can be tested by itself; what cannot does not lead a group.
+    pub leads: bool,
 }
 
 /// One batch to be searched.
@@ -79,48 +76,37 @@ pub struct Search<'a> {
     pub test: &'a SingleTest,
     /// What the batch without suspects says of every hypothesis.
     pub plain: &'a [Judged],
+    /// The batch without suspects.
+    pub nothing: Trial,
 }
 
 /// One step: the members of a group, the best first, and the best one solved.
-struct Step {
-    members: Vec<Member>,
-    best: Option<Trial>,
+pub(super) struct Step {
+    pub(super) members: Vec<Member>,
+    pub(super) best: Option<Trial>,
 }
 
 impl Search<'_> {
-    /// Searches from the batch as it was solved, or from suspects that were
-    /// chosen otherwise.
-    pub fn run(&self, found: &Found, solution: &Solution, chosen: &[usize]) -> Findings {
-        let nothing = Trial::without_suspects(found);
+    /// Searches from the batch as it was solved, whose solution is `plain`, or
+    /// from suspects that were chosen otherwise.
+    pub fn run(&self, plain: &Solution, chosen: &[usize]) -> Findings {
         let mut more = false;
+        let mut unsolved = None;
         let mut kept: Vec<Group> = Vec::new();
-        let mut stage = self.take_in(&nothing, chosen);
-        loop {
-            let step = if stage.suspects.is_empty() {
-                self.step(&stage, solution)
-            } else {
-                self.step(&stage, &stage.view(self.base, self.test).solution())
-            };
-            let Some(Step { members, best }) = step else {
-                break;
-            };
+        let mut stage = self.take_in(chosen);
+        while let Some(Step { members, best }) = self.step_from(&stage, plain) {
             if stage.suspects.len() == MOST_SUSPECTS {
                 more = true;
                 break;
             }
             let Some(best) = best else {
                 // Linear figures are all there is, and there is nowhere to go on from.
-                let statistic_after = stage.outcome.objective - members[0].ratio;
-                kept.push(Group {
+                unsolved = Some(Group {
+                    statistic_after: stage.outcome.objective - members[0].ratio,
                     members,
-                    statistic_after,
-                    before: stage,
+                    before: stage.clone(),
                 });
-                return Findings {
-                    suspects: kept,
-                    explained: None,
-                    more,
-                };
+                break;
             };
             let statistic_after = best.outcome.objective;
             let before = std::mem::replace(&mut stage, best);
@@ -131,9 +117,9 @@ impl Search<'_> {
             });
         }
         if stage.suspects.len() > 1 || !chosen.is_empty() {
-            stage = self.pruned(stage);
-            (kept, stage) = self.regrouped(stage, solution);
+            (kept, stage) = self.refined(stage, plain);
         }
+        kept.extend(unsolved);
         Findings {
             suspects: kept,
             explained: (!stage.suspects.is_empty()).then_some(stage),
@@ -141,35 +127,9 @@ impl Search<'_> {
         }
     }
 
-    /// Whether one suspect after another may have led astray: several were
-    /// named, or those named leave the global test failing.
-    pub fn is_muddled(&self, findings: &Findings, solution: &Solution) -> bool {
-        let statistic = match &findings.explained {
-            Some(explained) => explained.outcome.objective,
-            None => solution.objective(),
-        };
-        let named = findings.suspects.len();
-        let left = solution.degrees_of_freedom().saturating_sub(named);
-        let critical = chi_square_quantile(self.base.plant().confidence, left);
-        named > 1 || critical.is_some_and(|critical| statistic > critical)
-    }
-
-    /// What is left unexplained, and what each suspect has to explain to be worth
-    /// naming: of two searches the cheaper one is kept.
-    pub fn price(&self, findings: &Findings, solution: &Solution) -> f64 {
-        let suspects = findings.suspects.len() as f64;
-        match &findings.explained {
-            Some(explained) => {
-                explained.outcome.objective + suspects * self.test.critical_value.powi(2)
-            }
-            None if findings.suspects.is_empty() => solution.objective(),
-            None => f64::INFINITY,
-        }
-    }
-
     /// The batch with all of these in; those that do not solve stay out.
-    fn take_in(&self, nothing: &Trial, chosen: &[usize]) -> Trial {
-        let mut stage = nothing.clone();
+    pub(super) fn take_in(&self, chosen: &[usize]) -> Trial {
+        let mut stage = self.nothing.clone();
         for &suspect in chosen.iter().take(MOST_SUSPECTS) {
             if let Some(next) = stage.with(self.base, suspect, 0.0) {
                 stage = next.settled(self.base);
@@ -178,32 +138,42 @@ impl Search<'_> {
         stage
     }
 
+    /// The step from a stage; `plain` is the solution without any suspect in.
+    pub(super) fn step_from(&self, stage: &Trial, plain: &Solution) -> Option<Step> {
+        if stage.suspects.is_empty() {
+            self.step(stage, plain)
+        } else {
+            self.step(stage, &stage.view(self.base, self.test).solution())
+        }
+    }
+
     /// What is spoken for most strongly, with the suspects of `stage` in;
     /// `None` where nothing stands above the critical value.
     fn step(&self, stage: &Trial, solution: &Solution) -> Option<Step> {
+        let critical = self.test.critical_value.powi(2);
         let scores = self.scores(stage, solution);
-        let (_, _, largest) = *scores.first()?;
-        let speaks = |&(h, _, ratio): &(usize, Evidence, f64)| {
-            let hypothesis = &self.base.hypotheses()[h];
-            ratio > self.test.critical_value.powi(2) && testable(solution, hypothesis).is_ok()
-        };
-        if !scores.iter().any(speaks) {
+        let leads = |h: usize| testable(solution, &self.base.hypotheses()[h]).is_ok();
+        if !scores
+            .iter()
+            .any(|&(h, _, ratio)| ratio > critical && leads(h))
+        {
             return None;
         }
-        let distance = self.test.group_distance;
-        let mut reach = distance + MARGIN + MARGIN_OF_RATIO * largest;
+        let (_, _, largest) = *scores.first()?;
+        let reach = self.test.group_distance + MARGIN + MARGIN_OF_RATIO * largest;
+        let within = scores
+            .iter()
+            .filter(|&&(_, _, ratio)| ratio >= largest - reach);
         let mut best: Option<Trial> = None;
         let mut members = Vec::new();
-        for (nth, &(hypothesis, evidence, ratio)) in scores.iter().enumerate() {
-            if ratio < largest - reach {
-                break;
-            }
+        for (nth, &(hypothesis, evidence, ratio)) in within.enumerate() {
             let linear = Member {
                 hypothesis,
                 size: evidence.size,
                 sigma: evidence.sigma,
                 ratio,
                 solved: false,
+                leads: leads(hypothesis),
             };
             let solved = (nth < MOST_SOLVED)
                 .then(|| self.solved(stage, linear))
@@ -215,21 +185,16 @@ impl Search<'_> {
             if self.base.hypotheses()[hypothesis].one_sided && member.size <= 0.0 {
                 continue;
             }
-            if nth == 0 {
-                // Linear theory errs for the others as it does for the first.
-                let error = (member.ratio - ratio).abs();
-                reach = reach.min(distance + MARGIN + FAMILIAR_ERRORS * error);
-            }
             members.push(member);
             let objective = trial.outcome.objective;
             let lower = |best: &Trial| objective < best.outcome.objective * (1.0 - EQUAL);
-            if best.as_ref().is_none_or(lower) {
+            if member.leads && best.as_ref().is_none_or(lower) {
                 best = Some(trial);
             }
         }
         let best = best.map(|best| best.settled(self.base));
-        self.rank(&mut members, best.as_ref());
-        (!members.is_empty()).then_some(Step { members, best })
+        let lead = self.rank(&mut members, best.as_ref())?;
+        (lead.ratio > critical).then_some(Step { members, best })
     }
 
     /// A member by a solve of its own.
@@ -245,17 +210,15 @@ impl Search<'_> {
         Some((member, trial))
     }
 
-    /// The best first, and only what lies within the group distance of it.
-    fn rank(&self, members: &mut Vec<Member>, best: Option<&Trial>) {
+    /// The best first, which is answered, and only what lies within the group
+    /// distance of it; `None` where none can lead.
+    fn rank(&self, members: &mut Vec<Member>, best: Option<&Trial>) -> Option<Member> {
         let first = best.and_then(|trial| trial.suspects.last().copied());
         let leads = |member: &Member| match first {
             Some(first) => member.hypothesis == first,
-            None => !member.solved,
+            None => member.leads,
         };
-        let Some(lead) = members.iter().position(leads) else {
-            return;
-        };
-        let lead = members.remove(lead);
+        let lead = members.remove(members.iter().position(leads)?);
         members.retain(|member| member.ratio >= lead.ratio - self.test.group_distance);
         // Stable: what is equal but for rounding stays in the order it has.
         let whole = |member: &Member| (member.ratio / (EQUAL * lead.ratio)).round();
@@ -265,6 +228,7 @@ impl Search<'_> {
                 .then(a.hypothesis.cmp(&b.hypothesis))
         });
         members.insert(0, lead);
+        Some(lead)
     }
 
     /// Hypotheses that can be argued for and are not in, with their ratio, the
@@ -291,32 +255,6 @@ impl Search<'_> {
         scores
     }
 
-    /// Only suspects that are needed with the others in: the weakest goes as
-    /// long as its size over its uncertainty is below the critical value.
-    fn pruned(&self, mut stage: Trial) -> Trial {
-        while stage.suspects.len() > 1 {
-            let view = stage.view(self.base, self.test);
-            let solution = view.solution();
-            let strengths = stage.suspects.iter().map(|&h| {
-                let (size, sigma) = self.sized(&stage, &solution, h)?;
-                let strength = size.abs() / sigma;
-                Some(strength)
-            });
-            let weakest = strengths
-                .map(|strength| strength.unwrap_or(0.0))
-                .enumerate()
-                .min_by(|a, b| a.1.total_cmp(&b.1));
-            let Some((nth, _)) = weakest.filter(|&(_, s)| s <= self.test.critical_value) else {
-                break;
-            };
-            match stage.less(self.base, nth, self.readings) {
-                Some(less) => stage = less.settled(self.base),
-                None => break,
-            }
-        }
-        stage
-    }
-
     /// Size of a suspect that is in and its standard uncertainty, internal units.
     pub fn sized(&self, stage: &Trial, solution: &Solution, suspect: usize) -> Option<(f64, f64)> {
         let size = stage.size(self.base, suspect, self.reading(suspect))?;
@@ -330,52 +268,7 @@ impl Search<'_> {
         Some((size, sigma))
     }
 
-    /// The group of each suspect with the others in; a suspect gives way to one
-    /// that explains more.
-    fn regrouped(&self, mut stage: Trial, plain: &Solution) -> (Vec<Group>, Trial) {
-        let mut exchanges = 0;
-        'again: loop {
-            let mut groups = Vec::new();
-            for nth in 0..stage.suspects.len() {
-                let suspect = stage.suspects[nth];
-                let less = stage.less(self.base, nth, self.readings);
-                let Some(before) = less.map(|less| less.settled(self.base)) else {
-                    continue;
-                };
-                let step = if before.suspects.is_empty() {
-                    self.step(&before, plain)
-                } else {
-                    self.step(&before, &before.view(self.base, self.test).solution())
-                };
-                let Some(mut step) = step else {
-                    // Not needed after all.
-                    stage = before;
-                    continue 'again;
-                };
-                if step.members[0].hypothesis != suspect
-                    && exchanges < MOST_EXCHANGES
-                    && let Some(best) = step.best.take()
-                    && best.outcome.objective < stage.outcome.objective * (1.0 - EQUAL)
-                {
-                    exchanges += 1;
-                    stage = best;
-                    continue 'again;
-                }
-                // The one that is in leads its group.
-                if let Some(at) = step.members.iter().position(|m| m.hypothesis == suspect) {
-                    step.members[..=at].rotate_right(1);
-                }
-                groups.push(Group {
-                    members: step.members,
-                    before,
-                    statistic_after: stage.outcome.objective,
-                });
-            }
-            return (groups, stage);
-        }
-    }
-
-    fn reading(&self, hypothesis: usize) -> Option<Measured> {
+    pub(super) fn reading(&self, hypothesis: usize) -> Option<Measured> {
         let observation = self.base.hypotheses()[hypothesis].observation();
         observation.and_then(|i| self.readings[i])
     }

@@ -17,6 +17,8 @@ use crate::report::{Accused, AfterSuspects, Repaired, Report, SingleTest, Suspec
 
 /// Standardised statistics below this are no evidence.
 const WORTH_SAYING: f64 = 2.0;
+/// Hypotheses of several groups that are tried by themselves.
+const MOST_RETRIED: usize = 3;
 /// Pieces of evidence that are listed, of balances and of tags.
 const LISTED: usize = 6;
 
@@ -37,12 +39,20 @@ pub fn name(
         readings: &readings.measured,
         test: &test,
         plain: judged,
+        nothing: Trial::without_suspects(found),
     };
-    let mut findings = search.run(found, solution, &[]);
+    let mut findings = search.run(solution, &[]);
+    let mut starts: Vec<Vec<usize>> = (search.shared(&findings).into_iter().take(MOST_RETRIED))
+        .map(|shared| vec![shared])
+        .collect();
     if compiled.plant().robust_start && search.is_muddled(&findings, solution) {
-        let chosen = robust::left_out(compiled, found, test.critical_value);
-        let other = search.run(found, solution, &chosen);
-        if search.price(&other, solution) < search.price(&findings, solution) {
+        let mut chosen = robust::left_out(compiled, found, test.critical_value);
+        chosen.retain(|&h| judged[h].is_ok());
+        starts.push(chosen);
+    }
+    for start in starts {
+        let other = search.run(solution, &start);
+        if search.price(&other) < search.price(&findings) {
             findings = other;
         }
     }
@@ -84,9 +94,12 @@ pub fn suppose(
         readings: &readings.measured,
         test: &test,
         plain: &[],
+        nothing: Trial::without_suspects(&found),
     };
-    let nothing = Trial::without_suspects(&found);
-    let trial = nothing.with(compiled, place, evidence.size)?.settled(compiled);
+    let nothing = &search.nothing;
+    let trial = nothing
+        .with(compiled, place, evidence.size)?
+        .settled(compiled);
     let view = trial.view(compiled, &test);
     let (size, sigma) = search.sized(&trial, &view.solution(), place)?;
     let tell = Telling {
@@ -101,6 +114,7 @@ pub fn suppose(
         sigma,
         ratio: nothing.outcome.objective - trial.outcome.objective,
         solved: true,
+        leads: true,
     }))
 }
 

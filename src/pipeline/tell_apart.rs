@@ -84,10 +84,13 @@ fn tell(solution: &Solution, compiled: &Compiled, told: &mut TellApart) {
     told.critical_value = Some(test.critical_value);
     told.group_distance = Some(test.group_distance);
     // The seen stand in the order of the hypotheses, as those that are tested do.
-    let (seen, unseen): (Vec<Limit>, Vec<Limit>) =
-        limits(compiled, &judged(compiled, solution), Some(test.critical_value))
-            .into_iter()
-            .partition(|limit| limit.detectable.is_some());
+    let (seen, unseen): (Vec<Limit>, Vec<Limit>) = limits(
+        compiled,
+        &judged(compiled, solution),
+        Some(test.critical_value),
+    )
+    .into_iter()
+    .partition(|limit| limit.detectable.is_some());
     told.unseen = unseen;
     let all = compiled.hypotheses().iter();
     let tested: Vec<Tested> = all

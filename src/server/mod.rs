@@ -24,13 +24,13 @@ use std::time::Duration;
 use tokio::io::{AsyncReadExt, AsyncWriteExt};
 use tokio::net::{TcpListener, TcpStream};
 use tokio::sync::Semaphore;
-use tokio::task::JoinHandle;
+use tokio::task::{JoinHandle, JoinSet};
 use tokio::time::{Instant, timeout, timeout_at};
 use tokio_util::sync::CancellationToken;
 use tokio_util::task::TaskTracker;
 use tower::ServiceExt;
 
-pub use crate::http::{Limits, Problem, SystemClock, SystemEntropy};
+pub use crate::http::{Hook, Limits, Problem, SystemClock, SystemEntropy, Unusable};
 
 /// How long a closed connection is read from, so that the client gets the
 /// answer to a body that it was still sending.
@@ -60,6 +60,10 @@ pub struct Options {
     pub limits: Limits,
     /// How long an orderly end may take.
     pub grace: Duration,
+    /// How often the clock is looked at for shelvings that end.
+    pub tick: Duration,
+    /// Where events of alarms are sent.
+    pub webhook: Option<Hook>,
 }
 
 /// Why a server ended.
@@ -117,7 +121,8 @@ impl Server {
         let address = listener.local_addr().map_err(refused)?;
         let app = App::new(store, clock, entropy, options.limits);
         let stop = CancellationToken::new();
-        let task = tokio::spawn(run(listener, app, stop.clone(), options.grace));
+        let aside = Aside::start(&app, options.tick, options.webhook);
+        let task = tokio::spawn(run(listener, app, aside, stop.clone(), options.grace));
         Ok(Server {
             address,
             stop,
@@ -145,20 +150,37 @@ impl Server {
     }
 }
 
+/// What goes on beside the requests until the end; aborted when it is dropped.
+struct Aside(JoinSet<()>);
+
+impl Aside {
+    fn start(app: &App, tick: Duration, webhook: Option<Hook>) -> Self {
+        let mut tasks = JoinSet::new();
+        let (a, b, c) = (app.clone(), app.clone(), app.clone());
+        tasks.spawn(resume_whenever_ready(a));
+        tasks.spawn(async move { b.pass_time(tick).await });
+        if let Some(hook) = webhook {
+            tasks.spawn(async move { c.send_out(hook).await });
+        }
+        Aside(tasks)
+    }
+}
+
 async fn run(
     listener: TcpListener,
     app: App,
+    mut aside: Aside,
     stop: CancellationToken,
     grace: Duration,
 ) -> Result<(), ServerError> {
     let connections = TaskTracker::new();
-    let resuming = tokio::spawn(resume_whenever_ready(app.clone()));
     let failure = tokio::select! {
         () = accept(listener, &app, &stop, &connections) => None,
         reason = failed(&app) => Some(reason),
     };
     stop.cancel();
-    resuming.abort();
+    app.end_streams();
+    aside.0.shutdown().await;
     connections.close();
     let deadline = Instant::now() + grace;
     let quiet = async {

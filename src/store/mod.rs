@@ -7,16 +7,20 @@
 //! Nothing is ever deleted: what is changed leaves a trace of what it was.
 //! Nothing outside this directory knows SQL.
 
+mod copies;
 mod numbers;
 mod records;
 mod sqlite;
 mod types;
 
+pub use copies::{CopyError, Existing, Holdings, NewestBatch, Restored};
 pub use records::{
     AccusationRow, Again, ByHandRow, Ended, FieldReading, NewByHand, NewEvent, NewFieldReading,
     StoredEvent, VersionLine, Watched,
 };
-pub use sqlite::{Hindrance, OLDEST_SQLITE, SqliteOptions, SqliteStore};
+pub use sqlite::{
+    Hindrance, OLDEST_SQLITE, SqliteOptions, SqliteStore, backup, restore, verify,
+};
 pub use types::{
     Acceptance, BatchLine, BatchQuery, Column, Cursor, Field, Health, Incoming, NewPlant, Page,
     PlantLine, Precondition, PutOutcome, Selector, SeriesPage, SeriesQuery, SeriesRow, StoreError,
@@ -127,6 +131,19 @@ pub trait Store: Send + Sync + 'static {
         after: i64,
         limit: usize,
     ) -> Reply<'a, Vec<StoredEvent>>;
+
+    /// Events of all plants after the number given, in their order.
+    fn events_of_all(&self, after: i64, limit: usize) -> Reply<'_, Vec<StoredEvent>>;
+
+    /// The newest event of all plants; 0 where there is none.
+    fn newest_event(&self) -> Reply<'_, i64>;
+
+    /// Up to which event the receiver outside has been served; `None` where
+    /// there never was one.
+    fn delivered(&self) -> Reply<'_, Option<i64>>;
+
+    /// Keeps that; it never goes back.
+    fn set_delivered(&self, event: i64) -> Reply<'_, ()>;
 
     /// Accusations of a plant, those that are open or those that are closed
     /// where it is asked, after the number given, in the order of their numbers.

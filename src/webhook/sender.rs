@@ -8,9 +8,10 @@ use serde::{Deserialize, Serialize};
 use std::future::Future;
 use time::OffsetDateTime;
 use tokio::sync::mpsc;
+use utoipa::ToSchema;
 
 /// A numbered event: the body of a request.
-#[derive(Clone, Debug, PartialEq, Serialize, Deserialize)]
+#[derive(Clone, Debug, PartialEq, Serialize, Deserialize, ToSchema)]
 pub struct Notice {
     /// Number of the event, increasing.
     pub id: i64,

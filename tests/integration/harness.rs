@@ -1,17 +1,16 @@
 //! A real server on a free port, with a database file of its own, a clock that
-//! stands still and random bytes that count.
+//! stands still unless a test moves it, and random bytes that count.
 
 use counterpoise::http::{Clock, Entropy};
-use counterpoise::server::{Limits, Options, Server, ServerError};
+use counterpoise::server::{Hook, Limits, Options, Server, ServerError};
 use counterpoise::store::{SqliteOptions, SqliteStore, Store};
 use reqwest::{Client, Response, StatusCode};
 use serde_json::Value;
 use sqlx::{AssertSqlSafe, ConnectOptions};
 use std::net::SocketAddr;
 use std::path::{Path, PathBuf};
-use std::sync::Arc;
 use std::sync::atomic::{AtomicU64, Ordering};
-use std::sync::mpsc;
+use std::sync::{Arc, Mutex, mpsc};
 use std::thread::JoinHandle;
 use std::time::Duration;
 use tempfile::TempDir;
@@ -56,11 +55,24 @@ pub fn batch(name: &str, minute: u32, flow: f64) -> String {
     )
 }
 
-struct StoppedClock;
+/// Shows what it is set to.
+pub struct StoppedClock(Mutex<OffsetDateTime>);
+
+impl Default for StoppedClock {
+    fn default() -> Self {
+        StoppedClock(Mutex::new(NOW))
+    }
+}
+
+impl StoppedClock {
+    pub fn set(&self, now: OffsetDateTime) {
+        *self.0.lock().expect("the clock") = now;
+    }
+}
 
 impl Clock for StoppedClock {
     fn now(&self) -> OffsetDateTime {
-        NOW
+        *self.0.lock().expect("the clock")
     }
 }
 
@@ -80,6 +92,7 @@ pub struct Setup {
     pub limits: Limits,
     pub database: Option<PathBuf>,
     pub lock_timeout: Duration,
+    pub webhook: Option<Hook>,
 }
 
 impl Default for Setup {
@@ -88,6 +101,7 @@ impl Default for Setup {
             limits: Limits::default(),
             database: None,
             lock_timeout: Duration::from_secs(5),
+            webhook: None,
         }
     }
 }
@@ -98,6 +112,7 @@ pub struct Service {
     pub base: String,
     pub client: Client,
     pub store: Arc<SqliteStore>,
+    pub clock: Arc<StoppedClock>,
     pub database: PathBuf,
     stop: CancellationToken,
     thread: Option<JoinHandle<Result<(), ServerError>>>,
@@ -131,7 +146,11 @@ impl Service {
             listen: "127.0.0.1:0".parse().expect("an address"),
             limits: setup.limits,
             grace: Duration::from_secs(20),
+            tick: Duration::from_millis(20),
+            webhook: setup.webhook,
         };
+        let clock = Arc::new(StoppedClock::default());
+        let shown = Arc::clone(&clock);
         let (tell, told) = mpsc::channel();
         let thread = std::thread::spawn(move || {
             let runtime = tokio::runtime::Builder::new_multi_thread()
@@ -142,8 +161,8 @@ impl Service {
             runtime.block_on(async move {
                 let store = Arc::new(SqliteStore::open(store_options).await.expect("a store"));
                 let shared: Arc<dyn Store> = store.clone();
-                let (clock, entropy) = (Arc::new(StoppedClock), Arc::new(Counter::default()));
-                let server = Server::start(options, shared, clock, entropy)
+                let entropy = Arc::new(Counter::default());
+                let server = Server::start(options, shared, shown, entropy)
                     .await
                     .expect("a server");
                 tell.send((server.address(), server.stopper(), store))
@@ -157,6 +176,7 @@ impl Service {
             base: format!("http://{address}"),
             client: Client::new(),
             store,
+            clock,
             database,
             stop,
             thread: Some(thread),
@@ -195,10 +215,14 @@ impl Service {
     }
 
     pub async fn put_plant(&self) {
-        let request = self.client.put(self.url("/v1/plants/mixer"));
+        self.put_plant_file("mixer", PLANT).await;
+    }
+
+    pub async fn put_plant_file(&self, name: &str, file: &str) {
+        let request = self.client.put(self.url(&format!("/v1/plants/{name}")));
         let request = request
             .header("content-type", "application/toml")
-            .body(PLANT);
+            .body(file.to_owned());
         let response = request.send().await.expect("an answer");
         let status = response.status();
         assert!(
@@ -216,6 +240,21 @@ impl Service {
             .send()
             .await
             .expect("an answer")
+    }
+
+    /// Posts JSON somewhere.
+    pub async fn post_json(&self, path: &str, body: &Value) -> Response {
+        let request = self.client.post(self.url(path)).json(body);
+        request.send().await.expect("an answer")
+    }
+
+    /// The same where it has to be done.
+    pub async fn done(&self, path: &str, body: &Value) -> Value {
+        let response = self.post_json(path, body).await;
+        let status = response.status();
+        let text = response.text().await.expect("text");
+        assert!(status.is_success(), "{path}: {status}: {text}");
+        serde_json::from_str(&text).expect("JSON")
     }
 
     pub async fn post_batch(&self, body: String) -> Response {
@@ -274,6 +313,33 @@ pub async fn problem(response: Response, status: StatusCode) -> Value {
     problem
 }
 
+/// Numbers of the events of a plant that a database holds.
+///
+/// Read beside the service: a reader of its store that a test has used goes back
+/// to the pool by the test's own runtime, which stands still while the service
+/// is ended.
+pub async fn event_ids(database: &Path, plant: &str) -> Vec<i64> {
+    let plant = format!("\"plant\":\"{plant}\"");
+    let rows = contents(database).await.into_iter();
+    let events = rows.filter(|row| row.starts_with("events: ") && row.contains(&plant));
+    let mut ids: Vec<i64> = events.map(|row| first_number(&row)).collect();
+    ids.sort_unstable();
+    ids
+}
+
+/// Up to which event the webhook's receiver has been served.
+pub async fn delivered(database: &Path) -> Option<i64> {
+    let rows = contents(database).await;
+    let row = rows.iter().find(|row| row.starts_with("delivered: "))?;
+    Some(row.split(',').nth(1)?.parse().expect("a number"))
+}
+
+fn first_number(row: &str) -> i64 {
+    let numbers = row.split_once(": ").expect("a table").1;
+    let number = numbers.split(',').next().expect("a number");
+    number.parse().expect("a number")
+}
+
 /// Everything that a database holds, row by row.
 pub async fn contents(database: &Path) -> Vec<String> {
     let options = sqlx::sqlite::SqliteConnectOptions::new().filename(database);
@@ -286,6 +352,16 @@ pub async fn contents(database: &Path) -> Vec<String> {
         "pending",
         "layouts",
         "results",
+        "former_results",
+        "reconciled_again",
+        "watches",
+        "events",
+        "accusations",
+        "former_closings",
+        "by_hand",
+        "by_hand_ends",
+        "field_readings",
+        "delivered",
     ] {
         let columns: Vec<String> = sqlx::query_scalar("SELECT name FROM pragma_table_info(?1)")
             .bind(table)

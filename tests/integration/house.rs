@@ -12,12 +12,17 @@ const IMPORTS: &[(&str, &[&str])] = &[
     (
         "cli",
         &[
-            "config", "demo", "ingest", "pipeline", "plant", "report", "server",
+            "config", "demo", "ingest", "pipeline", "plant", "report", "server", "store",
         ],
     ),
     ("config", &["server", "store", "telemetry"]),
     ("server", &["http", "store"]),
-    ("http", &["ingest", "pipeline", "plant", "report", "store"]),
+    (
+        "http",
+        &[
+            "alarms", "ingest", "pipeline", "plant", "report", "store", "webhook",
+        ],
+    ),
     (
         "pipeline",
         &["diagnosis", "equations", "plant", "report", "solver"],

@@ -14,6 +14,7 @@
 
 mod bench;
 mod detectability;
+mod gross;
 mod linear;
 mod metering;
 mod pairs;

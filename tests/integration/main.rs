@@ -1,9 +1,12 @@
 //! The tests that look at the whole from outside, in one binary.
 
+mod alarms;
 mod batches;
+mod by_hand;
 mod cycles;
 mod defects;
 mod demo_truth;
+mod field_readings;
 mod fluid;
 mod harness;
 mod house;
@@ -11,6 +14,7 @@ mod identification;
 mod jacobians;
 mod laws;
 mod malformed;
+mod malformed_acts;
 mod malformed_slow;
 mod monte_carlo;
 mod openapi;
@@ -22,3 +26,4 @@ mod service;
 mod service_process;
 mod store;
 mod store_faults;
+mod suspects_text;

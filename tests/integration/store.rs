@@ -2,6 +2,7 @@
 
 mod again;
 mod by_hand;
+mod delivered;
 mod file;
 mod old;
 mod watch;

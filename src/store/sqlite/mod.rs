@@ -7,6 +7,7 @@
 //! order of the transactions; new batches are refused where the queue is long.
 //! Readers have a pool of their own and never wait for the writer.
 
+mod copies;
 mod fault;
 mod open;
 mod read;
@@ -18,6 +19,7 @@ mod writer;
 #[cfg(test)]
 mod tests;
 
+pub use copies::{backup, restore, verify};
 pub use open::OLDEST_SQLITE;
 
 use super::numbers::Layout;
@@ -39,7 +41,7 @@ use time::OffsetDateTime;
 use tokio::sync::{OwnedSemaphorePermit, Semaphore, mpsc, oneshot, watch};
 use work::{
     Accept, AddByHand, AddFieldReading, ChangeWatch, EndByHand, Finish, FinishAgain, Prepared,
-    PutPlant, Work,
+    PutPlant, SetDelivered, Work,
 };
 use writer::{Message, Task, Writer};
 
@@ -263,6 +265,22 @@ impl Store for SqliteStore {
         limit: usize,
     ) -> Reply<'a, Vec<StoredEvent>> {
         read::events(&self.readers, plant, after, limit).boxed()
+    }
+
+    fn events_of_all(&self, after: i64, limit: usize) -> Reply<'_, Vec<StoredEvent>> {
+        read::events_of_all(&self.readers, after, limit).boxed()
+    }
+
+    fn newest_event(&self) -> Reply<'_, i64> {
+        read::newest_event(&self.readers).boxed()
+    }
+
+    fn delivered(&self) -> Reply<'_, Option<i64>> {
+        read::delivered(&self.readers).boxed()
+    }
+
+    fn set_delivered(&self, event: i64) -> Reply<'_, ()> {
+        self.write(SetDelivered(event))
     }
 
     fn accusations<'a>(

@@ -37,20 +37,28 @@ impl Bench {
         }
     }
 
-    /// A clean batch by its number; the same number is the same batch.
+    /// A clean batch by its number; the same number is the same batch. Of some
+    /// ten thousand one has conditions and assumptions that the unit's heat
+    /// balance does not settle at: that one is drawn again.
     pub fn clean(&self, number: usize) -> Clean {
-        let mut rng = ChaCha8Rng::seed_from_u64(SEED);
-        rng.set_stream(number as u64);
-        let conditions = Conditions {
-            fouling: rng.random_range(0.0..3.0),
-            ..Conditions::at_load(rng.random_range(0.6..1.0))
-        };
-        let assumed = Assumed::drawn(&self.plant, &mut rng);
-        Clean {
-            truth: demo::truth(&conditions, &assumed).expect("settles"),
-            noise: rng,
-            name: format!("batch {number}"),
+        const MOST_DRAWS: u64 = 3;
+        for draw in 0..MOST_DRAWS {
+            let mut rng = ChaCha8Rng::seed_from_u64(SEED + draw);
+            rng.set_stream(number as u64);
+            let conditions = Conditions {
+                fouling: rng.random_range(0.0..3.0),
+                ..Conditions::at_load(rng.random_range(0.6..1.0))
+            };
+            let assumed = Assumed::drawn(&self.plant, &mut rng);
+            if let Ok(truth) = demo::truth(&conditions, &assumed) {
+                return Clean {
+                    truth,
+                    noise: rng,
+                    name: format!("batch {number}"),
+                };
+            }
         }
+        panic!("batch {number} does not settle");
     }
 
     /// Its readings, of this truth and with these faults of tags.

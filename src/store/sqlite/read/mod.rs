@@ -12,7 +12,9 @@ pub(super) use by_hand::{by_hand, decision, field_readings};
 pub(super) use plants::{critical_values, current_plant, plant, plants};
 pub(super) use results::{version, versions};
 pub(super) use series::series;
-pub(super) use watch::{accusation, accusations, events, watch};
+pub(super) use watch::{
+    accusation, accusations, delivered, events, events_of_all, newest_event, watch,
+};
 
 use super::fault::nanoseconds;
 use time::OffsetDateTime;

@@ -38,6 +38,35 @@ pub(in crate::store::sqlite) async fn events(
     Ok(events.map(|(id, json)| StoredEvent { id, json }).collect())
 }
 
+pub(in crate::store::sqlite) async fn events_of_all(
+    pool: &SqlitePool,
+    after: i64,
+    limit: usize,
+) -> Result<Vec<StoredEvent>, StoreError> {
+    let rows: Vec<(i64, String)> = sqlx::query_as(sql::EVENTS_OF_ALL)
+        .bind(after)
+        .bind(count(limit))
+        .fetch_all(pool)
+        .await
+        .map_err(|e| explain(&e))?;
+    let events = rows.into_iter();
+    Ok(events.map(|(id, json)| StoredEvent { id, json }).collect())
+}
+
+pub(in crate::store::sqlite) async fn newest_event(pool: &SqlitePool) -> Result<i64, StoreError> {
+    let newest = sqlx::query_scalar(sql::NEWEST_EVENT).fetch_one(pool).await;
+    newest.map_err(|e| explain(&e))
+}
+
+pub(in crate::store::sqlite) async fn delivered(
+    pool: &SqlitePool,
+) -> Result<Option<i64>, StoreError> {
+    let delivered = sqlx::query_scalar(sql::DELIVERED)
+        .fetch_optional(pool)
+        .await;
+    delivered.map_err(|e| explain(&e))
+}
+
 pub(in crate::store::sqlite) async fn accusations(
     pool: &SqlitePool,
     plant: &str,

@@ -1,8 +1,10 @@
 //! Every statement, in one place: a test prepares each against the newest
 //! schema.
 
+mod copies;
 mod records;
 
+pub(super) use copies::*;
 pub(super) use records::*;
 
 pub(in crate::store::sqlite) const SQLITE_VERSION: &str = "SELECT sqlite_version()";

@@ -73,6 +73,19 @@ pub(in crate::store::sqlite) const EVENTS: &str = "
     WHERE plant_id = (SELECT id FROM plants WHERE name = ?1) AND id > ?2
     ORDER BY id LIMIT ?3";
 
+pub(in crate::store::sqlite) const EVENTS_OF_ALL: &str = "
+    SELECT id, event FROM events WHERE id > ?1 ORDER BY id LIMIT ?2";
+
+pub(in crate::store::sqlite) const NEWEST_EVENT: &str = "
+    SELECT COALESCE(MAX(id), 0) FROM events";
+
+pub(in crate::store::sqlite) const DELIVERED: &str = "
+    SELECT event FROM delivered WHERE id = 1";
+
+pub(in crate::store::sqlite) const SET_DELIVERED: &str = "
+    INSERT INTO delivered (id, event) VALUES (1, ?1)
+    ON CONFLICT (id) DO UPDATE SET event = MAX(delivered.event, excluded.event)";
+
 pub(in crate::store::sqlite) const KEEP_FORMER_CLOSING: &str = "
     INSERT INTO former_closings (plant_id, accusation_id, accusation)
     SELECT plant_id, id, accusation FROM accusations
@@ -143,6 +156,10 @@ pub(in crate::store::sqlite) const OF_RECORDS: &[&str] = &[
     READ_WATCH,
     INSERT_EVENT,
     EVENTS,
+    EVENTS_OF_ALL,
+    NEWEST_EVENT,
+    DELIVERED,
+    SET_DELIVERED,
     KEEP_FORMER_CLOSING,
     PUT_ACCUSATION,
     ACCUSATIONS,

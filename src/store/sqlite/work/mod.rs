@@ -6,12 +6,14 @@
 
 mod batches;
 mod by_hand;
+mod delivered;
 mod plants;
 mod results;
 mod watch;
 
 pub(super) use batches::Accept;
 pub(super) use by_hand::{AddByHand, AddFieldReading, EndByHand};
+pub(super) use delivered::SetDelivered;
 pub(super) use plants::PutPlant;
 pub(super) use results::{Finish, FinishAgain};
 pub(super) use watch::ChangeWatch;

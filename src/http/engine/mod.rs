@@ -1,11 +1,22 @@
-//! The way of a batch: read, made durable, reconciled, its result made durable.
+//! The way of a batch: read, made durable, reconciled, looked at, its result made
+//! durable.
 //!
 //! What has been accepted is finished whether or not the client still waits:
 //! the work runs in a task of its own, and everybody who asks for the same batch
 //! meanwhile waits for that one task. Reconciling is pure computation, so it
 //! runs on threads that may block, a bounded number at once and one at a time
-//! per plant.
+//! per plant. What is remembered of a plant between its batches is in [`lane`].
 
+mod again;
+mod field;
+mod lane;
+
+pub(super) use again::no_batch;
+pub use field::FieldReading;
+pub(super) use field::{Extended, FieldReadings};
+pub(super) use lane::NotActed;
+
+use super::ambient::Clock;
 use super::error::{Kind, Problem};
 use super::revisions::{Revision, Revisions};
 use crate::ingest::{self, Parsed};
@@ -15,10 +26,11 @@ use crate::report::{Assessment, Report};
 use crate::store::{Acceptance, Incoming, Store, StoreError, Stored, Ticket, Unfinished};
 use futures::future::{BoxFuture, Shared};
 use futures::{FutureExt, StreamExt};
+use lane::Lane;
 use std::collections::HashMap;
 use std::sync::{Arc, Mutex, MutexGuard, PoisonError};
 use time::OffsetDateTime;
-use tokio::sync::Semaphore;
+use tokio::sync::{OwnedMutexGuard, Semaphore, watch};
 use tokio_util::task::TaskTracker;
 
 /// Bodies longer than this are read on a thread that may block.
@@ -33,10 +45,13 @@ type Running = Shared<BoxFuture<'static, Outcome>>;
 /// See the module.
 pub(super) struct Engine {
     store: Arc<dyn Store>,
+    clock: Arc<dyn Clock>,
     revisions: Revisions,
     workers: Semaphore,
-    /// One lock per plant, so that its batches are reconciled one at a time.
-    lanes: Mutex<HashMap<String, Arc<tokio::sync::Mutex<()>>>>,
+    /// One for each plant that has been met.
+    lanes: Mutex<HashMap<String, Arc<Lane>>>,
+    /// Changes whenever an event of any plant has been kept.
+    told: watch::Sender<u64>,
     /// What is being worked on, by number of the ticket.
     running: Mutex<HashMap<i64, Running>>,
     tasks: TaskTracker,
@@ -51,12 +66,14 @@ pub(super) struct Accepted {
 }
 
 impl Engine {
-    pub fn new(store: Arc<dyn Store>, workers: usize) -> Self {
+    pub fn new(store: Arc<dyn Store>, clock: Arc<dyn Clock>, workers: usize) -> Self {
         Engine {
             revisions: Revisions::new(Arc::clone(&store)),
             store,
+            clock,
             workers: Semaphore::new(workers.max(1)),
             lanes: Mutex::default(),
+            told: watch::Sender::new(0),
             running: Mutex::default(),
             tasks: TaskTracker::new(),
         }
@@ -186,8 +203,16 @@ impl Engine {
             return same.clone();
         }
         let engine = Arc::clone(self);
+        let lane = self.lane(&ticket.plant);
+        // In the queue before the next batch, whichever thread runs first.
+        let mut turn = Box::pin(Arc::clone(&lane.turn).lock_owned());
+        let had = (&mut turn).now_or_never();
         let work = async move {
-            let outcome = engine.work(ticket, batch).await;
+            let turn = match had {
+                Some(turn) => turn,
+                None => turn.await,
+            };
+            let outcome = engine.work(&lane, turn, ticket, batch).await;
             lock(&engine.running).remove(&id);
             outcome
         };
@@ -197,19 +222,26 @@ impl Engine {
         work
     }
 
-    async fn work(&self, ticket: Ticket, batch: Batch) -> Outcome {
+    async fn work(
+        &self,
+        lane: &Lane,
+        turn: OwnedMutexGuard<()>,
+        ticket: Ticket,
+        batch: Batch,
+    ) -> Outcome {
         let revision = self
             .revisions
             .get(&ticket.plant, Some(ticket.revision))
             .await?;
-        let report = {
-            let lane = Arc::clone(lock(&self.lanes).entry(ticket.plant.clone()).or_default());
-            let _turn = lane.lock().await;
-            let _worker = self.workers.acquire().await;
-            compute(move || pipeline::reconcile(&revision.compiled, &batch)).await?
-        };
+        let settings = revision.compiled.plant().alarms;
+        let by_hand = self.decisions(lane).await?;
+        let worker = self.workers.acquire().await;
+        let report =
+            compute(move || pipeline::reconcile_with(&revision.compiled, &batch, &by_hand)).await?;
+        drop(worker);
         let report = Arc::new(report);
-        self.store.finish(ticket, Arc::clone(&report)).await?;
+        self.look(lane, turn, ticket, Arc::clone(&report), &settings)
+            .await?;
         Ok(report)
     }
 
