@@ -188,9 +188,7 @@ pub(super) async fn pass_time(engine: Arc<Engine>, tick: Duration) {
             let meeting = engine.meet_all().await;
             met = meeting.is_ok();
         }
-        if let Err(problem) = engine.pass_time().await {
-            tracing::warn!(?problem, "a shelving that is over could not be ended");
-        }
+        engine.pass_time().await;
         tokio::time::sleep(tick).await;
     }
 }

@@ -18,9 +18,7 @@ pub use records::{
     AccusationRow, Again, ByHandRow, Ended, FieldReading, NewByHand, NewEvent, NewFieldReading,
     StoredEvent, VersionLine, Watched,
 };
-pub use sqlite::{
-    Hindrance, OLDEST_SQLITE, SqliteOptions, SqliteStore, backup, restore, verify,
-};
+pub use sqlite::{Hindrance, OLDEST_SQLITE, SqliteOptions, SqliteStore, backup, restore, verify};
 pub use types::{
     Acceptance, BatchLine, BatchQuery, Column, Cursor, Field, Health, Incoming, NewPlant, Page,
     PlantLine, Precondition, PutOutcome, Selector, SeriesPage, SeriesQuery, SeriesRow, StoreError,

@@ -1,10 +1,13 @@
 //! What happens to a service when it ends, and when its disk misbehaves.
 
-use crate::harness::{PLANT, Service, Setup, batch, contents, problem};
+use crate::alarms::{self, Listener};
+use crate::harness::{NOW, PLANT, Service, Setup, batch, contents, problem};
 use crate::store::{accepted, incoming};
 use counterpoise::store::{Health, Hindrance, Incoming, SqliteOptions, SqliteStore, Store};
 use reqwest::StatusCode;
+use serde_json::json;
 use sqlx::{ConnectOptions, Connection};
+use std::path::Path;
 use std::time::Duration;
 
 #[tokio::test]
@@ -178,4 +181,139 @@ async fn an_orderly_end_leaves_everything_in_the_main_file() {
         "{rows:?}"
     );
     assert!(PLANT.contains("mixer") && rows.iter().any(|row| row.contains("mixer")));
+}
+
+/// Runs a statement beside the service.
+async fn beside(database: &Path, statement: &'static str) {
+    let options = sqlx::sqlite::SqliteConnectOptions::new().filename(database);
+    let mut other = options.connect().await.expect("a connection");
+    sqlx::query(statement)
+        .execute(&mut other)
+        .await
+        .expect("done");
+    other.close().await.expect("closed");
+}
+
+/// Posts a batch of the alarms' plant that is accepted, reconciled and looked at,
+/// but whose result is refused by the disk. A hindrance of the store would refuse
+/// the batch itself, before anybody looks at it.
+async fn lost(service: &Service, minute: u32) {
+    let hinder = "CREATE TRIGGER hindrance BEFORE INSERT ON results
+                  BEGIN SELECT RAISE(ABORT, 'hindered'); END";
+    beside(&service.database, hinder).await;
+    let answer = service.post_batch(alarms::batch(minute, 8.0)).await;
+    assert!(answer.status().is_server_error(), "{}", answer.status());
+    let name = format!("m{minute:03}");
+    let rows = contents(&service.database).await;
+    assert!(rows.iter().any(|row| row.contains(&name)), "not accepted");
+    beside(&service.database, "DROP TRIGGER hindrance").await;
+    let mut health = service.store.health();
+    let recovering = health.wait_for(|health| *health == Health::Ready);
+    tokio::time::timeout(Duration::from_secs(10), recovering)
+        .await
+        .expect("in time")
+        .expect("a store");
+}
+
+/// The watch as it is on disk; the only plant there is.
+async fn stored_watch(service: &Service) -> serde_json::Value {
+    let options = sqlx::sqlite::SqliteConnectOptions::new().filename(&service.database);
+    let mut other = options.connect().await.expect("a connection");
+    let frame: Vec<u8> = sqlx::query_scalar("SELECT watch FROM watches")
+        .fetch_one(&mut other)
+        .await
+        .expect("a watch");
+    other.close().await.expect("closed");
+    let json = zstd::decode_all(&frame[..]).expect("a frame");
+    serde_json::from_slice(&json).expect("JSON")
+}
+
+/// What was counted for a batch whose result is lost is not built upon: the
+/// batch counts when it is finished, or not at all.
+#[tokio::test]
+async fn a_lost_result_is_not_counted() {
+    let service = alarms::service().await;
+    let mut listener = Listener::new(&service, None).await;
+    alarms::reported(&service, 0, 8.0).await;
+    let before = stored_watch(&service).await;
+    assert_eq!(before["candidates"][0]["over"], 1);
+    lost(&service, 1).await;
+    assert_eq!(stored_watch(&service).await, before);
+    alarms::reported(&service, 2, 8.0).await;
+    assert_eq!(stored_watch(&service).await["candidates"][0]["over"], 2);
+    assert_eq!(alarms::alarms(&service, "").await.len(), 0);
+    // Late now, so that it is finished and not counted.
+    alarms::reported(&service, 1, 8.0).await;
+    assert_eq!(alarms::alarms(&service, "").await.len(), 0);
+    alarms::reported(&service, 3, 8.0).await;
+    let alarm = &alarms::alarms(&service, "").await[0];
+    assert_eq!(
+        (&alarm["batches"], &alarm["raises"]),
+        (&json!(3), &json!(1))
+    );
+    let heard = listener.next().await.expect("an event");
+    assert_eq!(
+        (heard.kind.as_str(), &heard.data["alarm"]),
+        ("raised", alarm)
+    );
+}
+
+/// Nor is an alarm raised in memory alone: it rises with the batch when that is
+/// finished, once.
+#[tokio::test]
+async fn a_lost_alarm_rises_when_its_batch_is_finished() {
+    let service = alarms::service().await;
+    let mut listener = Listener::new(&service, None).await;
+    for minute in 0..2 {
+        alarms::reported(&service, minute, 8.0).await;
+    }
+    lost(&service, 2).await;
+    assert_eq!(alarms::alarms(&service, "").await.len(), 0);
+    for _ in 0..2 {
+        alarms::reported(&service, 2, 8.0).await;
+        let alarm = &alarms::alarms(&service, "").await[0];
+        assert_eq!(alarm["last"]["batch"], "m002");
+        assert_eq!(
+            (&alarm["batches"], &alarm["accusation"]),
+            (&json!(3), &json!(1))
+        );
+    }
+    assert_eq!(listener.next().await.expect("an event").kind, "raised");
+    let act = json!({"by": "R. Moss"});
+    service.done(&alarms::act(1, "acknowledge"), &act).await;
+    let next = listener.next().await.expect("an event");
+    assert_eq!(next.kind, "acknowledged", "nothing is told twice");
+}
+
+/// A plant whose watch cannot be read does not hold up the shelvings of others.
+#[tokio::test]
+async fn an_unreadable_watch_is_the_trouble_of_its_own_plant() {
+    let directory = tempfile::tempdir().expect("a directory");
+    let database = directory.path().join("test.sqlite");
+    let until = NOW + Duration::from_secs(3600);
+    {
+        let mut service = alarms::at(Some(&database)).await;
+        let id = alarms::raise(&service, 0).await;
+        let shelve = json!({"by": "R. Moss", "until": "2031-04-02T13:00:00Z"});
+        service.done(&alarms::act(id, "shelve"), &shelve).await;
+        // Plants are gone through in no order: one of many is likely to be first.
+        for n in 0..8 {
+            let name = format!("other-{n}");
+            let file = PLANT.replace("\"mixer\"", &format!("\"{name}\""));
+            service.put_plant_file(&name, &file).await;
+        }
+        service.stop().expect("an orderly end");
+    }
+    beside(
+        &database,
+        "INSERT INTO watches (plant_id, watch)
+         SELECT id, x'28b52ffd' FROM plants WHERE name LIKE 'other-%'",
+    )
+    .await;
+    let service = alarms::at(Some(&database)).await;
+    let answer = service.get("/v1/plants/other-0/alarms").await;
+    problem(answer, StatusCode::INTERNAL_SERVER_ERROR).await;
+    let mut listener = Listener::new(&service, None).await;
+    service.clock.set(until);
+    assert_eq!(listener.next().await.expect("an event").kind, "unshelved");
 }

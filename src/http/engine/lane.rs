@@ -259,25 +259,37 @@ impl Engine {
         }
     }
 
-    /// Ends every shelving whose time is up.
-    pub async fn pass_time(self: &Arc<Self>) -> Result<(), Problem> {
+    /// Ends every shelving whose time is up. A plant where that fails does not
+    /// hold up the others.
+    pub async fn pass_time(self: &Arc<Self>) {
         let lanes: Vec<Arc<Lane>> = lock(&self.lanes).values().map(Arc::clone).collect();
         for lane in lanes {
             let engine = Arc::clone(self);
-            self.detached(async move {
-                let mut memory = lane.memory.lock().await;
-                let now = engine.clock.now();
-                let watch = engine.read_watch(&lane, &mut memory).await?;
-                if watch.next_time().is_none_or(|next| now < next) {
-                    return Ok(());
-                }
-                let mut next = watch.clone();
-                let events = next.pass_time(now);
-                engine.change(&lane, &mut memory, next, &events, None).await
-            })
-            .await??;
+            let ended = self.detached({
+                let lane = Arc::clone(&lane);
+                async move { engine.end_shelvings(&lane).await }
+            });
+            if let Err(problem) = ended.await.and_then(|ended| ended) {
+                let plant = &lane.plant;
+                tracing::warn!(
+                    plant,
+                    ?problem,
+                    "a shelving that is over could not be ended"
+                );
+            }
         }
-        Ok(())
+    }
+
+    async fn end_shelvings(&self, lane: &Lane) -> Result<(), Problem> {
+        let mut memory = lane.memory.lock().await;
+        let now = self.clock.now();
+        let watch = self.read_watch(lane, &mut memory).await?;
+        if watch.next_time().is_none_or(|next| now < next) {
+            return Ok(());
+        }
+        let mut next = watch.clone();
+        let events = next.pass_time(now);
+        self.change(lane, &mut memory, next, &events, None).await
     }
 
     /// The watch in memory, read where it is not there.

@@ -15,7 +15,7 @@ use std::path::Path;
 use std::sync::Arc;
 
 /// Migrations that have been merged, with their SHA-256: none may ever change,
-/// or no database that has it opens any more.
+/// or no database that has it opens any more. One joins the list when it is merged.
 const MERGED: &[(&str, &str)] = &[(
     include_str!("../../../migrations/0001_start.sql"),
     "05b17a62ebf34d3bd93a28d3ae7a65ff320db048ae14440afba16047a6b1a2a1",
