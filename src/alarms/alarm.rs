@@ -44,11 +44,13 @@ pub struct Alarm {
     pub id: u64,
     /// Plant.
     pub plant: String,
-    /// What it is about. That of a suspect follows its likeliest member.
+    /// What it is about. That of a suspect is the member that was the likeliest
+    /// when it was raised, and stays for as long as that one is in the group.
     pub key: Key,
     /// What it watches.
     pub kind: AlarmKind,
-    /// What it is about, for people.
+    /// What it is about, for people: of a suspect the newest group, the
+    /// likeliest first.
     pub title: String,
     /// How urgent it is.
     pub priority: Priority,
@@ -206,7 +208,8 @@ pub enum EventKind {
     RemovedFromService,
     /// Back in service.
     ReturnedToService,
-    /// Another member of the suspect's group has become the likeliest.
+    /// The member that the alarm has its key from is no longer in the suspect's
+    /// group: it has the key of the likeliest now.
     Renamed,
 }
 

@@ -1,9 +1,9 @@
 //! Which suspect of a report belongs to which alarm of earlier batches.
 //!
 //! They belong together where their groups share a member. One suspect belongs
-//! to one alarm and the other way round; where there is a choice, the alarm with
-//! the same likeliest member comes first, alarms come before what is not yet an
-//! alarm, and the older before the newer.
+//! to one alarm and the other way round; where there is a choice, the alarm whose
+//! key is that of the suspect's likeliest member comes first, alarms come before
+//! what is not yet an alarm, and the older before the newer.
 
 use super::sight::Sighted;
 use super::words::Key;

@@ -5,12 +5,14 @@
 //! over where it exceeds c, below where it is less than (1 - d) c, and counts
 //! neither way between them. What a report names without a statistic (a tag that
 //! is missing or that nothing checks) counts neither way either; what it does not
-//! name is no longer in the plant file, and is below.
+//! name is no longer in the plant file, and is below. A suspect that the report
+//! does not name is below where all its members are: a leak, a loss or a tag that
+//! is hardly checked has no statistic of its own and is below then.
 
 use super::alarm::{AlarmKind, Figures};
 use super::words::{self, Key};
 use crate::report::{
-    Accused, Cause, EquipmentReport, Hypothesis, Imbalance, Report, TagReport, Verdict,
+    Accused, Cause, Class, EquipmentReport, Hypothesis, Imbalance, Report, TagReport, Verdict,
 };
 use indexmap::IndexMap;
 use std::collections::HashSet;
@@ -39,6 +41,7 @@ pub(super) struct Sight<'r> {
 /// A suspect of a report.
 #[derive(Clone, Debug)]
 pub(super) struct Sighted<'r> {
+    /// Of its likeliest member.
     pub key: Key,
     pub title: String,
     /// The likeliest first; never empty.
@@ -61,6 +64,14 @@ struct Rest<'r> {
     tags: &'r IndexMap<String, TagReport>,
     assumptions: &'r IndexMap<String, TagReport>,
     equipment: &'r IndexMap<String, EquipmentReport>,
+}
+
+impl Sighted<'_> {
+    /// Whether the member of this key is in the group.
+    pub fn has(&self, key: &Key) -> bool {
+        let mut group = self.group.iter();
+        group.any(|accused| Key::suspect(&accused.hypothesis) == *key)
+    }
 }
 
 impl<'r> Sight<'r> {
@@ -109,7 +120,7 @@ impl<'r> Sight<'r> {
             let first = group.first()?;
             seen.insert(&first.hypothesis).then(|| Sighted {
                 key: Key::suspect(&first.hypothesis),
-                title: words::suspect_title(&first.hypothesis),
+                title: words::suspect_title(group.iter().map(|accused| &accused.hypothesis)),
                 group,
                 figures: Figures {
                     value: Some(first.size),
@@ -136,6 +147,8 @@ impl<'r> Sight<'r> {
                 _ => return false,
             };
             match adjustment {
+                // It never shows anything, and would hold the others up for ever.
+                Some(Some(tag)) if tag.class == Class::HardlyRedundant => false,
                 Some(Some(tag)) => !tag
                     .standardised_adjustment
                     .is_some_and(|s| s.abs() < self.low),

@@ -12,7 +12,7 @@ use utoipa::ToSchema;
 pub struct Key(String);
 
 impl Key {
-    /// Of a suspect, by its likeliest member.
+    /// Of a suspect, by a member of its group.
     pub fn suspect(hypothesis: &Hypothesis) -> Self {
         let Hypothesis { cause, of, side } = hypothesis;
         let side = side.iter().map(|side| format!(" {side}"));
@@ -42,10 +42,25 @@ impl fmt::Display for Key {
     }
 }
 
-/// A suspect for people, by its likeliest member.
-pub(super) fn suspect_title(hypothesis: &Hypothesis) -> String {
+/// A suspect for people, by its group, the likeliest first. Where the readings
+/// cannot tell several apart, the first is not accused alone.
+pub(super) fn suspect_title<'a>(group: impl IntoIterator<Item = &'a Hypothesis>) -> String {
+    let names: Vec<String> = group.into_iter().map(name).collect();
+    match names.as_slice() {
+        [] => String::new(),
+        [only] => only.clone(),
+        [first, second] => format!("{first} or {second}"),
+        [first, second, third] => format!("{first}, {second} or {third}"),
+        [first, others @ ..] => format!(
+            "{first}, or one of {} others that the readings cannot tell apart",
+            others.len()
+        ),
+    }
+}
+
+fn name(hypothesis: &Hypothesis) -> String {
     let Hypothesis { cause, of, side } = hypothesis;
-    let side = side.iter().map(|side| format!(", {side}"));
+    let side = side.iter().map(|side| format!(" ({side})"));
     let side: String = side.collect();
     match cause {
         Cause::Bias => format!("bias of {of}"),
@@ -100,12 +115,31 @@ mod tests {
             Key::suspect(&leak).to_string(),
             "suspect leak-between heater-6 tube into steam"
         );
-        assert_eq!(suspect_title(&leak), "leak in heater-6, tube into steam");
         assert_eq!(
             Key::imbalance("heater-6", "mass steam").as_str(),
             "imbalance heater-6 mass steam"
         );
         assert_eq!(Key::adjustment("FT-101").as_str(), "adjustment FT-101");
+    }
+
+    #[test]
+    fn titles_name_the_likeliest_and_do_not_hide_the_others() {
+        let group = [
+            hypothesis(Cause::Bias, "T7", None),
+            hypothesis(Cause::HeatLoss, "heater", None),
+            hypothesis(Cause::LeakBetween, "heater", Some("tube into steam")),
+            hypothesis(Cause::Passing, "drain", None),
+        ];
+        let titles: Vec<String> = (1..=4).map(|n| suspect_title(&group[..n])).collect();
+        assert_eq!(
+            titles,
+            [
+                "bias of T7",
+                "bias of T7 or heat loss of heater",
+                "bias of T7, heat loss of heater or leak in heater (tube into steam)",
+                "bias of T7, or one of 3 others that the readings cannot tell apart",
+            ]
+        );
     }
 
     /// The word of a cause is the one that reports write.

@@ -9,7 +9,6 @@ use crate::demo;
 use crate::report::{Assessment, Report};
 use anyhow::{Context, bail, ensure};
 use clap::Args;
-use futures::StreamExt;
 use indicatif::{ProgressBar, ProgressStyle};
 use reqwest::{Client, Response};
 use std::net::{Ipv4Addr, SocketAddr, TcpListener};
@@ -23,9 +22,6 @@ const USUAL_PORT: u16 = 8080;
 
 /// The status of an answer to a name that other content has taken.
 const CONFLICT: u16 = 409;
-
-/// Batches on their way at once.
-const TOGETHER: usize = 8;
 
 /// Serve the demo plant.
 #[derive(Args, Debug)]
@@ -124,17 +120,13 @@ async fn post_all(
     let bar = ProgressBar::new(u64::try_from(batches.len())?).with_style(style);
     bar.set_message("Posting a day of batches");
     let address = format!("{base}/v1/plants/{plant}/batches");
-    let mut answers = futures::stream::iter(batches)
-        .map(|batch| {
-            let request = client
-                .post(&address)
-                .header("content-type", "application/json");
-            async move { request.body(batch).send().await }
-        })
-        .buffered(TOGETHER);
     let mut reports = Vec::new();
-    while let Some(answer) = answers.next().await {
-        let answer = answer?;
+    // One after another: what comes late raises no alarm.
+    for batch in batches {
+        let request = client
+            .post(&address)
+            .header("content-type", "application/json");
+        let answer = request.body(batch).send().await?;
         ensure!(
             answer.status().as_u16() != CONFLICT,
             "{} holds another version of the demo: remove it, or name another with --database",

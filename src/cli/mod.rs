@@ -1,11 +1,12 @@
 //! The command line.
 //!
-//! Exit codes: 0, done, whatever the verdict; 1, the plant file or a batch has
-//! faults; 2, the command line itself (from `clap`); 3, anything else, such as
+//! Exit codes: 0, done, whatever the verdict; 1, the plant file, a batch or a
+//! copy of the database has faults; 2, the command line itself (from `clap`); 3, anything else, such as
 //! a file that cannot be read. A reader that closes our output early, as `head`
 //! does, ends the work with 0.
 
 mod check;
+mod copies;
 mod demo;
 mod found;
 mod influences;
@@ -21,6 +22,7 @@ mod text;
 mod words;
 
 pub use check::{Check, check};
+pub use copies::{Backup, Restore, Verify, backup, restore, verify};
 pub use demo::{Demo, demo};
 pub use influences::{Influences, influences};
 pub use output::Unread;
@@ -32,7 +34,7 @@ use clap::{Parser, Subcommand};
 use std::path::{Path, PathBuf};
 use std::process::ExitCode;
 
-/// Exit code where the plant file or a batch has faults.
+/// Exit code where the plant file, a batch or a copy of the database has faults.
 pub const EXIT_FAULTS: u8 = 1;
 
 /// Exit code of anything else that went wrong.
@@ -50,7 +52,7 @@ const DECIDE: &str = "Site procedures, local codes and licensed engineers decide
     name = "counterpoise",
     version,
     about,
-    after_help = "Exit codes: 0 done, whatever the verdict; 1 the plant file or a batch has faults; 2 wrong command line; 3 anything else.\n\nAdvisory only, not for protection or safety functions."
+    after_help = "Exit codes: 0 done, whatever the verdict; 1 the plant file, a batch or a copy of the database has faults; 2 wrong command line; 3 anything else.\n\nAdvisory only, not for protection or safety functions."
 )]
 pub struct Cli {
     /// What to do.
@@ -73,6 +75,12 @@ pub enum Command {
     TellApart(TellApart),
     /// Serve the demo plant and post its day of batches.
     Demo(Demo),
+    /// Copy the database to a file, beside a service that may be running.
+    Backup(Backup),
+    /// Put a copy in the place of the database, while no service runs.
+    Restore(Restore),
+    /// Look over a copy of the database: whole, readable, of a known schema?
+    Verify(Verify),
     /// Print the OpenAPI document of the service.
     Openapi,
     /// Make the demo's batches, and the truth beside them, again from their seed.

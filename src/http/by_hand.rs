@@ -209,11 +209,13 @@ pub(super) async fn end(
     let number: i64 = id.parse().map_err(|_| none())?;
     let rows = app.store.by_hand(&plant, None).await?;
     let row = rows.iter().find(|row| row.decision.id == number);
-    let from = row.ok_or_else(none)?.decision.from;
+    let decision = &row.ok_or_else(none)?.decision;
+    let from = decision.from;
     let mut body = fields::read(&app, request).await?;
     let now = app.clock.now();
-    // What has not begun yet never holds.
-    let until = body.optional_time("until").unwrap_or(now.max(from));
+    // What has not begun yet never holds, and what is over stays over.
+    let over = decision.until.map_or(now, |until| until.min(now));
+    let until = body.optional_time("until").unwrap_or(over.max(from));
     if until < from {
         body.fault("until", "it ends before it begins", "give a later time");
     }

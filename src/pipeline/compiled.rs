@@ -8,6 +8,10 @@ use crate::solver::{Classes, Symbolic};
 use std::collections::HashMap;
 use std::sync::{Arc, Mutex, PoisonError};
 
+/// Class sets that are kept: of a plant whose readings come and go there are as
+/// many as there are sets of missing tags.
+const SETS_KEPT: usize = 1024;
+
 /// Variants that are kept: a suspect that stays is met in every batch.
 const VARIANTS_KEPT: usize = 128;
 
@@ -136,7 +140,14 @@ impl Compiled {
             return Arc::clone(known);
         }
         let made = Arc::new(make());
-        Arc::clone(lock().entry(key).or_insert(made))
+        let mut sets = lock();
+        if sets.len() >= SETS_KEPT {
+            // Their critical values stand, whoever else is forgotten.
+            let tests = sets.values().filter_map(|set| set.single_test.clone());
+            self.recall(tests.collect::<Vec<_>>());
+            sets.clear();
+        }
+        Arc::clone(sets.entry(key).or_insert(made))
     }
 
     /// The classes of a key, likewise.
@@ -146,6 +157,10 @@ impl Compiled {
             return Arc::clone(known);
         }
         let made = Arc::new(make());
-        Arc::clone(lock().entry(key).or_insert(made))
+        let mut classes = lock();
+        if classes.len() >= SETS_KEPT {
+            classes.clear();
+        }
+        Arc::clone(classes.entry(key).or_insert(made))
     }
 }

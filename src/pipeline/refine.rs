@@ -111,10 +111,9 @@ impl Search<'_> {
     /// figures.
     fn alone(&self, stage: &Trial, suspect: usize) -> Option<Group> {
         let member = self.member(stage, &self.nothing, suspect)?;
-        let strength = member.size / member.sigma;
         Some(Group {
             members: vec![Member {
-                ratio: strength * strength,
+                ratio: member.linear_ratio,
                 solved: false,
                 ..member
             }],
@@ -132,6 +131,7 @@ impl Search<'_> {
             size,
             sigma,
             ratio: before.outcome.objective - stage.outcome.objective,
+            linear_ratio: (size / sigma).powi(2),
             solved: true,
             leads: true,
         })

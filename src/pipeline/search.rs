@@ -60,6 +60,8 @@ pub struct Member {
     pub sigma: f64,
     /// Generalised likelihood ratio.
     pub ratio: f64,
+    /// The same by linear theory.
+    pub linear_ratio: f64,
     /// Size and ratio are of a solve and not of linear theory.
     pub solved: bool,
     /// It can be tested by itself; what cannot does not lead a group.
@@ -172,6 +174,7 @@ impl Search<'_> {
                 size: evidence.size,
                 sigma: evidence.sigma,
                 ratio,
+                linear_ratio: ratio,
                 solved: false,
                 leads: leads(hypothesis),
             };
@@ -219,6 +222,11 @@ impl Search<'_> {
             None => member.leads,
         };
         let lead = members.remove(members.iter().position(leads)?);
+        // What linear theory errs by for the best it errs by for those like it.
+        let error = lead.ratio - lead.linear_ratio;
+        for member in members.iter_mut().filter(|member| !member.solved) {
+            member.ratio += error;
+        }
         members.retain(|member| member.ratio >= lead.ratio - self.test.group_distance);
         // Stable: what is equal but for rounding stays in the order it has.
         let whole = |member: &Member| (member.ratio / (EQUAL * lead.ratio)).round();

@@ -113,6 +113,7 @@ pub fn suppose(
         size,
         sigma,
         ratio: nothing.outcome.objective - trial.outcome.objective,
+        linear_ratio: evidence.ratio(false),
         solved: true,
         leads: true,
     }))

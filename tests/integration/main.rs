@@ -1,6 +1,7 @@
 //! The tests that look at the whole from outside, in one binary.
 
 mod alarms;
+mod backup;
 mod batches;
 mod by_hand;
 mod cycles;

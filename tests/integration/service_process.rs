@@ -224,6 +224,71 @@ fn faults_and_trouble_have_their_exit_codes() {
     }
 }
 
+/// A webhook that cannot work is a fault before the service serves, and nothing
+/// of the secret is told.
+#[test]
+fn a_webhook_that_cannot_work_is_said() {
+    let directory = files();
+    let write = |name: &str, secret: &str| {
+        std::fs::write(directory.path().join(name), secret).expect("written");
+    };
+    write("short", &format!("{}  \n", "s".repeat(31)));
+    write("long", &"s".repeat(32));
+    let (url, file) = ("--webhook-url", "--webhook-secret-file");
+    let address = "http://alarms.example/in";
+    for (options, code, said) in [
+        (&[url, address][..], 2, file),
+        (&[file, "long"], 2, url),
+        (
+            &[url, address, file, "short"],
+            3,
+            "the secret has 31 bytes: give 32 random ones or more",
+        ),
+        (
+            &[url, address, file, "none"],
+            3,
+            "the webhook's secret none",
+        ),
+        (
+            &[url, "https://alarms.example/in", file, "long"],
+            3,
+            "write http://",
+        ),
+        (&[url, "alarms", file, "long"], 3, "`alarms` is no address"),
+    ] {
+        let serve = ["serve", "--listen", "127.0.0.1:0"];
+        let output = run(directory.path(), &[&serve[..], options].concat(), "");
+        let told = text(&output.stderr);
+        assert_eq!(output.status.code(), Some(code), "{options:?}: {told}");
+        assert!(told.contains(said), "{options:?}: {told}");
+        assert!(!told.contains("sss"), "{told}");
+        assert!(!told.contains("serving"), "{told}");
+    }
+}
+
+/// From the environment too, with white space around the secret.
+#[test]
+fn a_webhook_that_works_is_taken() {
+    let directory = files();
+    let secret = format!("{}\n", "s".repeat(32));
+    std::fs::write(directory.path().join("secret"), secret).expect("written");
+    let mut child = program()
+        .args(["serve", "--listen", "127.0.0.1:0"])
+        .env("COUNTERPOISE_WEBHOOK_URL", "http://127.0.0.1:9/in")
+        .env("COUNTERPOISE_WEBHOOK_SECRET_FILE", "secret")
+        .current_dir(directory.path())
+        .stderr(Stdio::piped())
+        .spawn()
+        .expect("a process");
+    let lines = BufReader::new(child.stderr.take().expect("a log")).lines();
+    let mut lines = lines.map(|line| line.expect("text"));
+    let serving = lines.find(|line| line.contains("serving") || line.contains("error"));
+    child.kill().expect("killed");
+    child.wait().expect("an end");
+    let serving = serving.expect("a line");
+    assert!(serving.contains("serving"), "{serving}");
+}
+
 #[test]
 fn openapi_is_printed() {
     let output = run(Path::new("."), &["openapi"], "");

@@ -83,7 +83,8 @@ async fn hindered(hindrance: Hindrance, reason: &str) {
     assert!(
         before
             .iter()
-            .all(|row| row.starts_with("layouts") || after.contains(row)),
+            .filter(|row| !row.starts_with("layouts") && !row.starts_with("watches"))
+            .all(|row| after.contains(row)),
         "a row is gone"
     );
     if acknowledged == StatusCode::NOT_FOUND {
@@ -187,7 +188,8 @@ async fn an_orderly_end_leaves_everything_in_the_main_file() {
 async fn beside(database: &Path, statement: &'static str) {
     let options = sqlx::sqlite::SqliteConnectOptions::new().filename(database);
     let mut other = options.connect().await.expect("a connection");
-    sqlx::query(statement)
+    // More than one statement at a time.
+    sqlx::raw_sql(statement)
         .execute(&mut other)
         .await
         .expect("done");
@@ -195,18 +197,22 @@ async fn beside(database: &Path, statement: &'static str) {
 }
 
 /// Posts a batch of the alarms' plant that is accepted, reconciled and looked at,
-/// but whose result is refused by the disk. A hindrance of the store would refuse
-/// the batch itself, before anybody looks at it.
-async fn lost(service: &Service, minute: u32) {
+/// but whose result is refused by the disk, and frees the disk by a statement. A
+/// hindrance of the store would refuse the batch itself, before anybody looks at
+/// it.
+async fn lost(service: &Service, minute: u32, free: &'static str) {
+    let before = stored_watch(service).await;
     let hinder = "CREATE TRIGGER hindrance BEFORE INSERT ON results
                   BEGIN SELECT RAISE(ABORT, 'hindered'); END";
     beside(&service.database, hinder).await;
     let answer = service.post_batch(alarms::batch(minute, 8.0)).await;
     assert!(answer.status().is_server_error(), "{}", answer.status());
+    assert_eq!(alarms::alarms(service, "").await.len(), 0);
+    assert_eq!(stored_watch(service).await, before);
     let name = format!("m{minute:03}");
     let rows = contents(&service.database).await;
     assert!(rows.iter().any(|row| row.contains(&name)), "not accepted");
-    beside(&service.database, "DROP TRIGGER hindrance").await;
+    beside(&service.database, free).await;
     let mut health = service.store.health();
     let recovering = health.wait_for(|health| *health == Health::Ready);
     tokio::time::timeout(Duration::from_secs(10), recovering)
@@ -228,22 +234,20 @@ async fn stored_watch(service: &Service) -> serde_json::Value {
     serde_json::from_slice(&json).expect("JSON")
 }
 
-/// What was counted for a batch whose result is lost is not built upon: the
-/// batch counts when it is finished, or not at all.
+/// What was counted for a batch whose result is lost is not built upon.
 #[tokio::test]
 async fn a_lost_result_is_not_counted() {
     let service = alarms::service().await;
     let mut listener = Listener::new(&service, None).await;
     alarms::reported(&service, 0, 8.0).await;
-    let before = stored_watch(&service).await;
-    assert_eq!(before["candidates"][0]["over"], 1);
-    lost(&service, 1).await;
-    assert_eq!(stored_watch(&service).await, before);
+    assert_eq!(stored_watch(&service).await["candidates"][0]["over"], 1);
+    // Lost for good: the service would finish it as soon as it can.
+    let free = "BEGIN IMMEDIATE; DELETE FROM pending; DROP TRIGGER hindrance; COMMIT";
+    lost(&service, 1, free).await;
+    // Whatever had begun to finish it has failed by then.
+    tokio::time::sleep(Duration::from_millis(500)).await;
     alarms::reported(&service, 2, 8.0).await;
     assert_eq!(stored_watch(&service).await["candidates"][0]["over"], 2);
-    assert_eq!(alarms::alarms(&service, "").await.len(), 0);
-    // Late now, so that it is finished and not counted.
-    alarms::reported(&service, 1, 8.0).await;
     assert_eq!(alarms::alarms(&service, "").await.len(), 0);
     alarms::reported(&service, 3, 8.0).await;
     let alarm = &alarms::alarms(&service, "").await[0];
@@ -258,8 +262,8 @@ async fn a_lost_result_is_not_counted() {
     );
 }
 
-/// Nor is an alarm raised in memory alone: it rises with the batch when that is
-/// finished, once.
+/// Nor is an alarm raised in memory alone: it rises with the batch when the
+/// service has finished that, once.
 #[tokio::test]
 async fn a_lost_alarm_rises_when_its_batch_is_finished() {
     let service = alarms::service().await;
@@ -267,17 +271,15 @@ async fn a_lost_alarm_rises_when_its_batch_is_finished() {
     for minute in 0..2 {
         alarms::reported(&service, minute, 8.0).await;
     }
-    lost(&service, 2).await;
-    assert_eq!(alarms::alarms(&service, "").await.len(), 0);
-    for _ in 0..2 {
-        alarms::reported(&service, 2, 8.0).await;
-        let alarm = &alarms::alarms(&service, "").await[0];
-        assert_eq!(alarm["last"]["batch"], "m002");
-        assert_eq!(
-            (&alarm["batches"], &alarm["accusation"]),
-            (&json!(3), &json!(1))
-        );
-    }
+    lost(&service, 2, "DROP TRIGGER hindrance").await;
+    service.report("m002").await;
+    alarms::reported(&service, 2, 8.0).await;
+    let alarm = &alarms::alarms(&service, "").await[0];
+    assert_eq!(alarm["last"]["batch"], "m002");
+    assert_eq!(
+        (&alarm["batches"], &alarm["accusation"]),
+        (&json!(3), &json!(1))
+    );
     assert_eq!(listener.next().await.expect("an event").kind, "raised");
     let act = json!({"by": "R. Moss"});
     service.done(&alarms::act(1, "acknowledge"), &act).await;
@@ -299,7 +301,7 @@ async fn an_unreadable_watch_is_the_trouble_of_its_own_plant() {
         // Plants are gone through in no order: one of many is likely to be first.
         for n in 0..8 {
             let name = format!("other-{n}");
-            let file = PLANT.replace("\"mixer\"", &format!("\"{name}\""));
+            let file = PLANT.replace("plant = \"mixer\"", &format!("plant = \"{name}\""));
             service.put_plant_file(&name, &file).await;
         }
         service.stop().expect("an orderly end");

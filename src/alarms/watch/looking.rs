@@ -85,15 +85,15 @@ impl Watch {
             let suspect = look.suspect_of(at);
             let stand = match &suspect {
                 Some(suspect) => {
-                    let is_renamed = alarm.key != suspect.key;
-                    take_group(
-                        suspect,
-                        &mut alarm.key,
-                        &mut alarm.title,
-                        &mut alarm.members,
-                    );
-                    if is_renamed && !alarm.state.is_suppressed() {
-                        look.tell(alarm, Some(EventKind::Renamed));
+                    alarm.title.clone_from(&suspect.title);
+                    alarm.members = hypotheses(suspect.group);
+                    // Two members that are nearly equal swap places at every batch:
+                    // that is no news.
+                    if !suspect.has(&alarm.key) {
+                        alarm.key.clone_from(&suspect.key);
+                        if !alarm.state.is_suppressed() {
+                            look.tell(alarm, Some(EventKind::Renamed));
+                        }
                     }
                     Stand::Over(suspect.figures.clone())
                 }
@@ -113,14 +113,10 @@ impl Watch {
             }
             match look.suspect_of(alarms + at) {
                 Some(suspect) => {
-                    let Candidate {
-                        key,
-                        title,
-                        members,
-                        ..
-                    } = &mut candidate;
-                    take_group(&suspect, key, title, members);
-                    let stand = Stand::Over(suspect.figures.clone());
+                    candidate.key = suspect.key;
+                    candidate.title = suspect.title;
+                    candidate.members = hypotheses(suspect.group);
+                    let stand = Stand::Over(suspect.figures);
                     self.advance(candidate, stand, suspect.group, look);
                 }
                 None => {
@@ -297,18 +293,6 @@ impl<'r> Look<'_, 'r> {
         let event = kind.map(|kind| alarm.event(kind, self.now));
         self.events.extend(event);
     }
-}
-
-/// The newest group is the one that counts.
-fn take_group(
-    suspect: &Sighted<'_>,
-    key: &mut Key,
-    title: &mut String,
-    members: &mut Vec<Hypothesis>,
-) {
-    key.clone_from(&suspect.key);
-    title.clone_from(&suspect.title);
-    *members = hypotheses(suspect.group);
 }
 
 fn hypotheses(group: &[Accused]) -> Vec<Hypothesis> {

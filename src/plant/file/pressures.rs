@@ -132,7 +132,7 @@ pub(super) fn check(view: &View<'_>, places: &Places<'_>, cx: &mut Context<'_>) 
                     let name = view.stream_name(s);
                     let what = format!(
                         "nothing determines the pressure of `{name}`: its temperature alone says \
-                         nothing of its enthalpy"
+                         nothing of its enthalpy, and many batches will not converge"
                     );
                     let mend = format!(
                         "add a pressure tag or an assumed pressure of `{name}`, or a pressure drop from where one is measured"

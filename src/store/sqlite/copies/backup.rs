@@ -44,10 +44,10 @@ pub async fn backup(database: &Path, to: &Path, existing: Existing) -> Result<Ho
         ));
     }
     let partial = Partial::begin(&target)?;
+    write(&source, database, partial.path()).await?;
     let rights = fs::metadata(&source)
         .map_err(|e| trouble(database, "cannot be looked at", &e, "look at its rights"))?;
     partial.permit(rights.permissions())?;
-    write(&source, database, partial.path()).await?;
     partial.sync()?;
     // The copy was made of what could be read: what is wrong with it was wrong
     // before.
@@ -58,7 +58,8 @@ pub async fn backup(database: &Path, to: &Path, existing: Existing) -> Result<Ho
         },
         other => other,
     })?;
-    partial.put(existing)?;
+    partial.name(existing)?;
+    partial.keep_name()?;
     Ok(holdings)
 }
 

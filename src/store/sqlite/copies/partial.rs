@@ -34,7 +34,6 @@ impl Partial {
         };
         // A journal that was left would be played back into the new file.
         partial.remove_companions();
-        partial.file.set_len(0).map_err(|e| partial.unwritten(&e))?;
         Ok(partial)
     }
 
@@ -64,7 +63,7 @@ impl Partial {
 
     /// Gives it its final name. Without [`Existing::Replace`] a file that has
     /// come there in the meantime stays.
-    pub fn put(self, existing: Existing) -> Result<(), CopyError> {
+    pub fn name(&self, existing: Existing) -> Result<(), CopyError> {
         let named = match existing {
             Existing::Replace => fs::rename(&self.path, &self.target),
             Existing::Refuse => self.name_a_vacant_place(),
@@ -77,7 +76,11 @@ impl Partial {
                 &error,
                 "try again",
             ),
-        })?;
+        })
+    }
+
+    /// Has the disk keep the name; nothing is left under the other one.
+    pub fn keep_name(self) -> Result<(), CopyError> {
         sync_folder(&self.target).map_err(|error| {
             let what = "it is in its place, but the disk does not say that it keeps the name";
             trouble(
@@ -131,35 +134,52 @@ impl Drop for Partial {
     }
 }
 
-/// The file at a path, made where it is missing, with nobody else on it.
+/// A new file at a path, locked. What an earlier copy left there is removed and
+/// never written to: it may be a second name of a whole one.
 fn open_alone(path: &Path) -> Result<File, CopyError> {
-    let unmade = |error: &io::Error| {
-        let mend = "look at the disk and the rights of the folder";
-        trouble(path, "cannot be made", error, mend)
-    };
     loop {
-        if fs::symlink_metadata(path).is_ok_and(|found| !found.is_file()) {
-            return Err(CopyError::refused(path, "this is no file", "remove it"));
-        }
         let mut options = OpenOptions::new();
-        options.read(true).write(true).create(true).truncate(false);
-        let file = options.mode(0o600).open(path).map_err(|e| unmade(&e))?;
-        match file.try_lock() {
-            Ok(()) => {}
-            Err(TryLockError::WouldBlock) => {
-                return Err(CopyError::refused(
-                    path,
-                    "another copy of this name is being made",
-                    "wait for it, or name another file",
-                ));
+        let options = options.read(true).write(true);
+        match options.clone().create_new(true).mode(0o600).open(path) {
+            Ok(file) => {
+                lock(&file, path)?;
+                // Whoever took it for one that was left has removed it.
+                if is_named(&file, path) {
+                    return Ok(file);
+                }
             }
-            Err(TryLockError::Error(error)) => return Err(unmade(&error)),
-        }
-        // Whoever had the lock may have given the file its name or removed it.
-        if is_named(&file, path) {
-            return Ok(file);
+            Err(error) if error.kind() == io::ErrorKind::AlreadyExists => {
+                if fs::symlink_metadata(path).is_ok_and(|found| !found.is_file()) {
+                    return Err(CopyError::refused(path, "this is no file", "remove it"));
+                }
+                let left = match options.open(path) {
+                    Err(error) if error.kind() == io::ErrorKind::NotFound => continue,
+                    opened => opened.map_err(|error| unmade(path, &error))?,
+                };
+                lock(&left, path)?;
+                if is_named(&left, path) {
+                    fs::remove_file(path).map_err(|error| unmade(path, &error))?;
+                }
+            }
+            Err(error) => return Err(unmade(path, &error)),
         }
     }
+}
+
+fn lock(file: &File, path: &Path) -> Result<(), CopyError> {
+    file.try_lock().map_err(|error| match error {
+        TryLockError::WouldBlock => CopyError::refused(
+            path,
+            "another copy of this name is being made",
+            "wait for it, or name another file",
+        ),
+        TryLockError::Error(error) => unmade(path, &error),
+    })
+}
+
+fn unmade(path: &Path, error: &io::Error) -> CopyError {
+    let mend = "look at the disk and the rights of the folder";
+    trouble(path, "cannot be made", error, mend)
 }
 
 /// Whether an open file stands at a path.

@@ -46,7 +46,9 @@ pub async fn restore(
     }
     let kept = beside(&target, KEPT);
     let replaces = is_there(&target);
-    if replaces && let Some(earlier) = kept_already(&kept) {
+    if (replaces || !companions(&target).is_empty())
+        && let Some(earlier) = kept_already(&kept)
+    {
         return Err(CopyError::refused(
             &earlier,
             "it is there from an earlier restore",
@@ -69,7 +71,8 @@ pub async fn restore(
     } else {
         Existing::Refuse
     };
-    partial.put(existing).inspect_err(|_| moved.undo())?;
+    partial.name(existing).inspect_err(|_| moved.undo())?;
+    partial.keep_name()?;
     Ok(Restored {
         holdings,
         kept: replaces.then_some(kept),

@@ -202,13 +202,13 @@ async fn references(on: &mut SqliteConnection) -> Result<Vec<String>, sqlx::Erro
     let mut faults: Vec<String> = dangling
         .into_iter()
         .map(|(table, parent, count)| {
-            format!("{count} rows of {table} belong to rows of {parent} that are missing")
+            format!("rows of {table} that belong to missing rows of {parent}: {count}")
         })
         .collect();
     let half: i64 = sqlx::query_scalar(sql::HALF_BATCHES).fetch_one(on).await?;
     if half != 0 {
         faults.push(format!(
-            "{half} accepted batches neither wait for a result nor have one, or both"
+            "accepted batches that neither wait for a result nor have one, or do both: {half}"
         ));
     }
     Ok(faults)
