@@ -89,9 +89,11 @@ async fn an_offset_is_added_until_it_is_ended() {
     );
     assert_eq!(reported(&service, 3, 8.0).await["verdict"], "consistent");
     assert_eq!(reported(&service, 4, 8.0).await["verdict"], "inconsistent");
-    // Without a time it ends now, which is after every batch.
+    // Without a time what is over stays over; with one it may go on.
     let ended = service.done(&end, &json!({"by": "A. Fell"})).await;
-    assert_eq!(ended["until"], "2031-04-02T12:00:00Z");
+    assert_eq!(ended["until"], at(4));
+    let until = json!({"by": "A. Fell", "until": at(6)});
+    assert_eq!(service.done(&end, &until).await["until"], at(6));
     assert_eq!(reported(&service, 5, 8.0).await["verdict"], "consistent");
     assert_eq!(service.report("m004").await["verdict"], "inconsistent");
     let none = service
