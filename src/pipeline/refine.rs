@@ -17,13 +17,29 @@ const MOST_EXCHANGES: usize = 3;
 impl Search<'_> {
     /// The suspects of a stage that are needed, each with its group, and the
     /// stage that they make.
-    pub(super) fn refined(&self, stage: Trial, plain: &Solution) -> (Vec<Group>, Trial) {
+    ///
+    /// `last` is the group that the suspect taken in last was found with: it stands
+    /// as long as nothing else has changed.
+    pub(super) fn refined(
+        &self,
+        stage: Trial,
+        mut last: Option<Group>,
+        plain: &Solution,
+    ) -> (Vec<Group>, Trial) {
+        let forward = stage.suspects.clone();
         let mut stage = self.pruned(stage);
         let mut exchanges = 0;
         'again: loop {
             let mut groups = Vec::new();
             for nth in 0..stage.suspects.len() {
                 let suspect = stage.suspects[nth];
+                if nth + 1 == forward.len()
+                    && stage.suspects == forward
+                    && let Some(last) = last.take()
+                {
+                    groups.push(last);
+                    continue;
+                }
                 let Some(before) = self.without(&stage, nth) else {
                     groups.extend(self.alone(&stage, suspect));
                     continue;
@@ -169,6 +185,15 @@ impl Search<'_> {
         let left = plain.degrees_of_freedom().saturating_sub(named);
         let critical = chi_square_quantile(self.base.plant().confidence, left);
         named > 1 || critical.is_some_and(|critical| statistic > critical)
+    }
+
+    /// Whether suspects that were chosen otherwise are worth a search: those of
+    /// them that are needed explain as much for their number as what was found.
+    pub fn is_promising(&self, chosen: &[usize], findings: &Findings) -> bool {
+        let stage = self.pruned(self.take_in(chosen));
+        let suspects = stage.suspects.len() as f64;
+        let price = stage.outcome.objective + suspects * self.test.critical_value.powi(2);
+        !stage.suspects.is_empty() && price < self.price(findings)
     }
 
     /// What is left unexplained, and what each suspect has to explain to be worth

@@ -19,7 +19,7 @@ use crate::report::SingleTest;
 /// Most suspects of a batch.
 pub const MOST_SUSPECTS: usize = 5;
 /// Most hypotheses that are solved to find one suspect and its group.
-const MOST_SOLVED: usize = 8;
+const MOST_SOLVED: usize = 6;
 /// How much further than the group distance linear theory is trusted to err.
 const MARGIN: f64 = 1.0;
 /// The same as a part of the ratio.
@@ -119,7 +119,8 @@ impl Search<'_> {
             });
         }
         if stage.suspects.len() > 1 || !chosen.is_empty() {
-            (kept, stage) = self.refined(stage, plain);
+            let last = kept.pop();
+            (kept, stage) = self.refined(stage, last, plain);
         }
         kept.extend(unsolved);
         Findings {

@@ -51,6 +51,9 @@ pub fn name(
         starts.push(chosen);
     }
     for start in starts {
+        if !search.is_promising(&start, &findings) {
+            continue;
+        }
         let other = search.run(solution, &start);
         if search.price(&other) < search.price(&findings) {
             findings = other;
