@@ -78,11 +78,13 @@ async fn start(config: &Config) -> anyhow::Result<Server> {
             "there are no access tokens yet: whoever reaches this address can read and write everything"
         );
     }
+    // Before a database is made: a wrong option changes nothing.
+    let options = config.server()?;
     let store = SqliteStore::open(config.store())
         .await
         .with_context(|| format!("cannot use the database {}", config.database.display()))?;
     let (clock, entropy) = (Arc::new(SystemClock), Arc::new(SystemEntropy));
-    Ok(Server::start(config.server()?, Arc::new(store), clock, entropy).await?)
+    Ok(Server::start(options, Arc::new(store), clock, entropy).await?)
 }
 
 /// Ends the service in order on SIGTERM and SIGINT.

@@ -2,8 +2,9 @@
 //!
 //! To first order the value is a sum of k_i y_i over the readings in sigma, with
 //! k = G P g from the gradient g of the value and the covariance P of the
-//! states. Its variance is the sum of k_i^2, and leaving reading i out changes
-//! it by k_i r_i / R_ii, since the others predict a reading with r_i / R_ii.
+//! states. Its variance is the sum of k_i^2, and reading i moves it by
+//! k_i r_i / R_ii from what it is without that reading, since r_i / R_ii is what
+//! the reading is off from what the others predict for it.
 
 use super::attempt::attempt;
 use super::class_set;
