@@ -3,9 +3,10 @@
 //! One after another, the hypothesis with the largest generalised likelihood
 //! ratio above the square of the critical value is taken in as an unknown and
 //! the batch solved again, nonlinearly, until none is left above it (Narasimhan
-//! and Mah 1987). Each gets its group: every hypothesis whose ratio after solving again lies within the
-//! calibrated distance of the best. Linear theory chooses who is solved. Whether
-//! each is still needed with the others in is asked in `refine`.
+//! and Mah 1987). Each gets its group: every hypothesis whose ratio after
+//! solving again lies within the calibrated distance of the best. Linear theory
+//! chooses who is solved. Whether each is still needed with the others in is
+//! asked in `refine`.
 
 use super::compiled::Compiled;
 use super::hypotheses::{Judged, arguable, testable};
