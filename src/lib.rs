@@ -8,8 +8,11 @@
 //! sockets stay at the edges.
 #![forbid(unsafe_code)]
 
+pub mod access;
 pub mod alarms;
+pub mod averaging;
 pub mod cli;
+pub mod comparison;
 pub mod config;
 pub mod demo;
 pub mod diagnosis;

@@ -79,7 +79,7 @@ impl<'r> Sight<'r> {
     pub fn of(report: &'r Report, dead_band: f64) -> Option<Self> {
         if matches!(
             report.verdict,
-            Verdict::NotConverged | Verdict::NotRedundant
+            Verdict::NotConverged | Verdict::NotRedundant | Verdict::NotRunning
         ) {
             return None;
         }

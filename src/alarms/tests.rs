@@ -55,6 +55,9 @@ fn batch(n: i64) -> Report {
         after_suspects: None,
         limits: Vec::new(),
         by_hand: Vec::new(),
+        line_up: None,
+        findings: Vec::new(),
+        steadiness: None,
         ignored_tags: Vec::new(),
         remarks: Vec::new(),
     }
@@ -73,6 +76,7 @@ fn tag(standardised: Option<f64>) -> TagReport {
         detectable: Some(3.0),
         class: Class::Redundant,
         reason: None,
+        averaged: None,
     }
 }
 

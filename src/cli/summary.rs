@@ -76,6 +76,7 @@ impl<'r> Summary<'r> {
             Verdict::Inconsistent,
             Verdict::NotRedundant,
             Verdict::NotConverged,
+            Verdict::NotRunning,
         ];
         let count = |reports: &[&Report], verdict| {
             reports

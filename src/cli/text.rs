@@ -27,6 +27,7 @@ pub(super) fn verdict_name(verdict: Verdict) -> &'static str {
         Verdict::Inconsistent => "inconsistent",
         Verdict::NotRedundant => "not redundant",
         Verdict::NotConverged => "not converged",
+        Verdict::NotRunning => "not running",
     }
 }
 

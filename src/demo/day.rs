@@ -106,6 +106,7 @@ impl<'a> Day<'a> {
             start,
             end: start + Duration::minutes(i64::from(BATCH_MINUTES)),
             readings: readings(self.plant, &truth, &mut self.noise, |tag| fault(tag, hour))?,
+            steadiness: None,
         };
         Ok((batch, truth))
     }

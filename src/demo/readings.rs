@@ -58,6 +58,7 @@ pub fn readings(
                 tag: tag.name.clone(),
                 value,
                 quality: Quality { grade, code: None },
+                averaged: None,
             })
         })
         .collect()

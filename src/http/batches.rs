@@ -292,7 +292,7 @@ pub(super) async fn list(
     uri: Uri,
 ) -> Result<Response, Problem> {
     let mut params = Params::new(&uri);
-    let verdicts = "one of consistent, inconsistent, not-redundant, not-converged";
+    let verdicts = "one of consistent, inconsistent, not-redundant, not-converged, not-running";
     let query = BatchQuery {
         plant: plant.clone(),
         from: params.time("from"),

@@ -109,6 +109,7 @@ impl DraftBatch {
             start: self.start,
             end: self.end,
             readings,
+            steadiness: None,
         };
         Parsed { batch, digest }
     }
@@ -246,6 +247,7 @@ impl<'a> Reader<'a> {
             tag: tag?,
             value: value?,
             quality: quality?,
+            averaged: None,
         };
         Some((
             tag_node?,

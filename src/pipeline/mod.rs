@@ -96,6 +96,9 @@ fn empty_report(compiled: &Compiled, batch: &Batch, readings: &Readings) -> Repo
         after_suspects: None,
         limits: Vec::new(),
         by_hand: readings.by_hand.clone(),
+        line_up: None,
+        findings: Vec::new(),
+        steadiness: None,
         ignored_tags: readings.ignored.clone(),
         remarks: readings.remarks.clone(),
     }

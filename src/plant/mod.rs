@@ -7,27 +7,33 @@
 //! otherwise; [`Unit`] converts to and from the units of tags.
 
 mod alarms;
+mod averaging;
 mod batch;
 mod by_hand;
 mod dimension;
 mod file;
 mod kind;
+mod line_up;
 mod model;
 mod portable;
+mod retention;
 mod uncertainty;
 mod unit;
 
 pub use alarms::{AlarmSettings, Priorities, Priority};
-pub use batch::{Batch, Grade, Quality, Reading};
+pub use averaging::{AveragingMethod, AveragingSettings, TagAveraging};
+pub use batch::{Averaged, Batch, Flag, Grade, Quality, Reading, Sample, Steadiness};
 pub use by_hand::{Action, ByHand};
 pub use dimension::{ALIASES, ANSWERS, Dimension, UnitFault};
 pub use file::{
     Fault, Faults, Format, MAX_BYTES, PlantFile, Severity, canonical_json, read, render,
 };
+pub use line_up::{Condition, Signal, Status, Test};
 pub use model::{
     Assumption, Barometer, Equipment, EquipmentId, Kind, Plant, PressureReference, Quantity,
     Stream, StreamId, Tag,
 };
 pub use portable::Portable;
+pub use retention::Retention;
 pub use uncertainty::{COVERAGE_FACTOR, Sigma, Uncertainty};
 pub use unit::Unit;

@@ -1,6 +1,9 @@
 //! The types of a plant that has passed every check.
 
-use super::{AlarmSettings, Portable, Uncertainty, Unit};
+use super::{
+    AlarmSettings, AveragingSettings, Condition, Portable, Retention, Status, TagAveraging,
+    Uncertainty, Unit,
+};
 
 /// A stream, by its place in [`Plant::streams`].
 #[derive(Clone, Copy, Debug, PartialEq, Eq, Hash, PartialOrd, Ord)]
@@ -39,6 +42,14 @@ pub struct Plant {
     pub alarms: AlarmSettings,
     /// Uncertainties of portable instruments.
     pub portable: Portable,
+    /// Tags that read a state, in the order of the file.
+    pub statuses: Vec<Status>,
+    /// The plant runs when this holds; `None`: always.
+    pub running_when: Option<Condition>,
+    /// How samples become batches.
+    pub averaging: AveragingSettings,
+    /// How long what is stored is kept.
+    pub retention: Retention,
 }
 
 /// What is known of the atmospheric pressure at the instruments.
@@ -65,6 +76,8 @@ pub struct Stream {
     pub non_negative: bool,
     /// Its valve is closed: nothing flows unless the valve passes.
     pub normally_closed: bool,
+    /// It is in service when this holds; `None`: always.
+    pub in_service_when: Option<Condition>,
 }
 
 /// A machine or vessel.
@@ -74,6 +87,8 @@ pub struct Equipment {
     pub name: String,
     /// What it is, with the streams on its ports.
     pub kind: Kind,
+    /// It is in service when this holds; `None`: always.
+    pub in_service_when: Option<Condition>,
 }
 
 /// Every kind of equipment, with its ports. Streams stand in file order; a
@@ -268,6 +283,8 @@ pub struct Tag {
     /// Reading at normal operation, in its unit: for the assessment, and for
     /// where a solve starts when the tag is missing.
     pub normal: Option<f64>,
+    /// How its samples become readings; `None`: as the plant's tags usually are.
+    pub averaging: Option<TagAveraging>,
 }
 
 /// A value with an uncertainty that comes from design data.

@@ -1,5 +1,6 @@
 //! The report of one batch.
 
+use super::operation::{Averaged, Finding, LineUp, Steadiness};
 use super::suspects::{AfterSuspects, ByHandReport, Limit, Suspect};
 use indexmap::IndexMap;
 use serde::{Deserialize, Serialize};
@@ -56,6 +57,16 @@ pub struct Report {
     /// What was decided by hand about tags of this batch.
     #[serde(default, skip_serializing_if = "Vec::is_empty")]
     pub by_hand: Vec<ByHandReport>,
+    /// What is in service; absent where everything always is.
+    #[serde(default, skip_serializing_if = "Option::is_none")]
+    pub line_up: Option<LineUp>,
+    /// What stands out before any balance is made: tags on one quantity that
+    /// disagree, a status that contradicts what flows.
+    #[serde(default, skip_serializing_if = "Vec::is_empty")]
+    pub findings: Vec<Finding>,
+    /// Whether the plant was steady; absent where nobody has judged it.
+    #[serde(default, skip_serializing_if = "Option::is_none")]
+    pub steadiness: Option<Steadiness>,
     /// Tags of the batch that the plant file does not know.
     pub ignored_tags: Vec<String>,
     /// Remarks that a person should see: a negative flow that was used, a
@@ -75,6 +86,8 @@ pub enum Verdict {
     NotRedundant,
     /// No solution was found; there are no reconciled values.
     NotConverged,
+    /// The plant was down; nothing was reconciled.
+    NotRunning,
 }
 
 /// Chi-square test of the weighted sum of squares.
@@ -152,6 +165,9 @@ pub struct TagReport {
     /// Why it was not used or what was done to it.
     #[serde(default, skip_serializing_if = "Option::is_none")]
     pub reason: Option<String>,
+    /// What it was averaged from; absent where it came as one value.
+    #[serde(default, skip_serializing_if = "Option::is_none")]
+    pub averaged: Option<Averaged>,
 }
 
 /// Whether the observations determine a quantity.

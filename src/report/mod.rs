@@ -8,6 +8,7 @@
 mod assessment;
 mod document;
 mod influence;
+mod operation;
 mod suspects;
 mod tell_apart;
 
@@ -17,6 +18,7 @@ pub use document::{
     QuantityReport, Report, SingleTest, StreamReport, TagReport, Verdict,
 };
 pub use influence::{Influence, Influences};
+pub use operation::{Averaged, Finding, FindingKind, LineUp, Steadiness};
 pub use suspects::{
     Accused, AfterSuspects, ByHandReport, Cause, FieldCheck, Hypothesis, Limit, Repaired, Suspect,
 };

@@ -7,17 +7,28 @@
 //! Nothing is ever deleted: what is changed leaves a trace of what it was.
 //! Nothing outside this directory knows SQL.
 
+mod access;
 mod copies;
+mod history;
 mod numbers;
+mod readings;
 mod records;
+mod replays;
 mod sqlite;
 mod types;
 
+pub use access::{AccessStore, DeedRow, NewToken, TokenRow};
 pub use copies::{CopyError, Existing, Holdings, NewestBatch, Restored};
+pub use history::{HistoryStore, Mean, MeansPage, MeansQuery, MeansRow, Resolution, Tidied};
+pub use readings::{
+    Backfill, BackfillMark, Closed, NewSamples, NewTagSamples, OpenPeriod, PeriodBatch,
+    ReadingsStore, SamplesTaken, TagSamples,
+};
 pub use records::{
     AccusationRow, Again, ByHandRow, Ended, FieldReading, NewByHand, NewEvent, NewFieldReading,
     StoredEvent, VersionLine, Watched,
 };
+pub use replays::{NewReplay, ReplayRow, ReplayState, ReplayWith, ReplayedBatch, ReplaysStore};
 pub use sqlite::{Hindrance, OLDEST_SQLITE, SqliteOptions, SqliteStore, backup, restore, verify};
 pub use types::{
     Acceptance, BatchLine, BatchQuery, Column, Cursor, Field, Health, Incoming, NewPlant, Page,

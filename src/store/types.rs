@@ -193,8 +193,10 @@ pub struct Unfinished {
     pub ticket: Ticket,
     /// When it came.
     pub received: OffsetDateTime,
-    /// As sent.
+    /// As sent; of a batch made from samples, as it was made last.
     pub body: Vec<u8>,
+    /// It has a result, from what it was made from before.
+    pub again: bool,
 }
 
 /// A place in a list by time: what comes next is beyond it.

@@ -96,12 +96,14 @@ impl Cycle {
             tag,
             value: Some(value),
             quality: good,
+            averaged: None,
         });
         let batch = Batch {
             name: "given".to_owned(),
             start: datetime!(2026-03-18 00:00 UTC),
             end: datetime!(2026-03-18 00:05 UTC),
             readings: readings.collect(),
+            steadiness: None,
         };
         let report = reconcile(&Compiled::new(plant, 1), &batch);
         assert_ne!(report.verdict, Verdict::NotConverged, "{:?}", report.reason);

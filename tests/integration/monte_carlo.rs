@@ -210,6 +210,7 @@ fn batch(plant: &Plant, number: u64) -> (Batch, Truth) {
         start: datetime!(2026-03-18 00:00 UTC),
         end: datetime!(2026-03-18 00:05 UTC),
         readings,
+        steadiness: None,
     };
     (batch, truth)
 }

@@ -65,6 +65,7 @@ fn batch(readings: Vec<Reading>) -> Batch {
         start: datetime!(2026-03-17 0:00 UTC),
         end: datetime!(2026-03-17 0:05 UTC),
         readings,
+        steadiness: None,
     }
 }
 
@@ -77,6 +78,7 @@ fn reading(tag: &str, value: f64) -> Reading {
         tag: tag.to_owned(),
         value: Some(value),
         quality,
+        averaged: None,
     }
 }
 

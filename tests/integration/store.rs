@@ -80,6 +80,7 @@ fn report(ticket: &Ticket, minute: i64, value: f64, unit: &str) -> Report {
         detectable: Some(5e-324),
         class: Class::Redundant,
         reason: None,
+        averaged: None,
     };
     let stream = StreamReport {
         mass_flow: quantity(value, "kg/s"),
@@ -122,6 +123,9 @@ fn report(ticket: &Ticket, minute: i64, value: f64, unit: &str) -> Report {
         by_hand: vec![],
         ignored_tags: vec![],
         remarks: vec![],
+        line_up: None,
+        findings: Vec::new(),
+        steadiness: None,
     }
 }
 

@@ -113,6 +113,7 @@ impl Extended {
                     grade: Grade::Good,
                     code: None,
                 },
+                averaged: None,
             });
         }
         let read = plant::read(&file.to_string(), Format::Json);

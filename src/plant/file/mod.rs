@@ -37,7 +37,7 @@ use self::heading::Heading;
 use self::network::{End, Network};
 use self::reader::{At, Context};
 use self::tree::Node;
-use super::{Equipment, EquipmentId, Kind, Plant, Stream};
+use super::{AveragingSettings, Equipment, EquipmentId, Kind, Plant, Retention, Stream};
 
 /// How a plant file is written.
 #[derive(Clone, Copy, Debug, PartialEq, Eq)]
@@ -143,6 +143,10 @@ fn plant(root: &Node, cx: &mut Context<'_>) -> Option<Plant> {
             .collect::<Option<_>>()?,
         alarms: alarms?,
         portable: portable?,
+        statuses: Vec::new(),
+        running_when: None,
+        averaging: AveragingSettings::default(),
+        retention: Retention::default(),
     };
     let places = warnings::Places {
         streams: network.streams.iter().map(|s| &s.place).collect(),
@@ -163,6 +167,7 @@ fn streams(network: &Network<'_>) -> Vec<Stream> {
         to: joined(s.to),
         non_negative: s.non_negative,
         normally_closed: s.normally_closed,
+        in_service_when: None,
     });
     streams.collect()
 }
@@ -174,6 +179,7 @@ fn equipment(network: &Network<'_>, kinds: Vec<Option<Kind>>) -> Option<Vec<Equi
             Some(Equipment {
                 name: draft.name.to_owned(),
                 kind: kind?,
+                in_service_when: None,
             })
         })
         .collect()

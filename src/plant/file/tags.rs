@@ -175,6 +175,7 @@ fn tag<'n>(name: String, at: At<'n>, network: &Network<'_>, cx: &mut Context<'_>
             },
             uncertainty,
             normal,
+            averaging: None,
         });
     }
     draft

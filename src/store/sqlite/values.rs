@@ -30,6 +30,7 @@ pub(super) fn verdict_name(verdict: Verdict) -> &'static str {
         Verdict::Inconsistent => "inconsistent",
         Verdict::NotRedundant => "not-redundant",
         Verdict::NotConverged => "not-converged",
+        Verdict::NotRunning => "not-running",
     }
 }
 
@@ -40,6 +41,7 @@ pub(super) fn verdict(name: &str) -> Result<Verdict, StoreError> {
         Verdict::Inconsistent,
         Verdict::NotRedundant,
         Verdict::NotConverged,
+        Verdict::NotRunning,
     ]
     .into_iter()
     .find(|&verdict| verdict_name(verdict) == name)

@@ -73,6 +73,7 @@ impl Bench {
             start: datetime!(2026-03-18 00:00 UTC),
             end: datetime!(2026-03-18 00:05 UTC),
             readings: demo::readings(&self.plant, truth, &mut noise, fault).expect("known"),
+            steadiness: None,
         }
     }
 

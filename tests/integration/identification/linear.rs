@@ -108,12 +108,14 @@ pub fn flows<'a>(readings: impl IntoIterator<Item = (&'a str, f64)>) -> Batch {
         tag: format!("F {of}"),
         value: Some(value),
         quality: good,
+        averaged: None,
     });
     Batch {
         name: "flows".to_owned(),
         start: datetime!(2026-03-18 00:00 UTC),
         end: datetime!(2026-03-18 00:05 UTC),
         readings: readings.collect(),
+        steadiness: None,
     }
 }
 

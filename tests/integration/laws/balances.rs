@@ -471,6 +471,7 @@ fn with_leak(plant: &Plant, name: &str, flow: f64, half_width: f64) -> Plant {
         to: None,
         non_negative: false,
         normally_closed: false,
+        in_service_when: None,
     });
     let kind = &mut plant.equipment[from.expect("equipment").0].kind;
     match kind {

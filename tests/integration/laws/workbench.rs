@@ -68,12 +68,14 @@ pub fn batch<N: Into<String>>(readings: impl IntoIterator<Item = (N, f64)>) -> B
         tag: tag.into(),
         value: Some(value),
         quality: good,
+        averaged: None,
     });
     Batch {
         name: "a batch".to_owned(),
         start: datetime!(2026-03-18 00:00 UTC),
         end: datetime!(2026-03-18 00:05 UTC),
         readings: readings.collect(),
+        steadiness: None,
     }
 }
 

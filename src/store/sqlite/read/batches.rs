@@ -43,6 +43,7 @@ fn unfinished_of(row: InboxRow) -> Result<Unfinished, StoreError> {
         },
         received: time(received)?,
         body: expand(&body)?,
+        again: false,
     })
 }
 
