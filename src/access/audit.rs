@@ -26,7 +26,7 @@ pub enum Actor {
 
 /// What was done, as it goes into the log with the change itself, in one
 /// transaction.
-#[derive(Clone, Debug, PartialEq)]
+#[derive(Clone, Debug, PartialEq, Eq)]
 pub struct Deed {
     /// Who.
     pub actor: Actor,
@@ -36,7 +36,8 @@ pub struct Deed {
     pub kind: DeedKind,
     /// The plant that it changed, if it was one.
     pub plant: Option<String>,
-    /// What exactly, as JSON: names, numbers, reasons; never a secret.
+    /// What exactly, as a JSON object: names, numbers, reasons; never a secret.
+    /// The store adds the numbers that it gives: `revision`, `id`, `version`.
     pub what: serde_json::Value,
 }
 
@@ -68,4 +69,32 @@ pub enum DeedKind {
     TokenMade,
     /// A token was revoked.
     TokenRevoked,
+}
+
+impl DeedKind {
+    /// Its name, as it is stored and served.
+    pub fn name(self) -> String {
+        let name = serde_json::to_value(self).unwrap_or_default();
+        name.as_str().unwrap_or_default().to_owned()
+    }
+
+    /// The kind of a name.
+    pub fn of_name(name: &str) -> Option<DeedKind> {
+        serde_json::from_value(name.into()).ok()
+    }
+}
+
+#[cfg(test)]
+mod tests {
+    use super::*;
+
+    #[test]
+    fn kinds_have_names() {
+        assert_eq!(DeedKind::PlantPut.name(), "plant-put");
+        assert_eq!(
+            DeedKind::of_name("token-revoked"),
+            Some(DeedKind::TokenRevoked)
+        );
+        assert_eq!(DeedKind::of_name("rain"), None);
+    }
 }

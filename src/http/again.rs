@@ -222,6 +222,7 @@ fn why(body: &mut Fields, at: OffsetDateTime) -> Option<Again> {
         at,
         by: by?,
         reason: reason?,
+        deed: None,
     })
 }
 
@@ -251,7 +252,7 @@ pub(super) async fn versions(
     }
     let versions = lines.into_iter().map(|line| {
         let (at, by, reason) = match line.again {
-            Some(Again { at, by, reason }) => (Some(at), Some(by), Some(reason)),
+            Some(Again { at, by, reason, .. }) => (Some(at), Some(by), Some(reason)),
             None => (None, None, None),
         };
         Version {

@@ -173,6 +173,7 @@ fn decision(body: &mut Fields, plant: &Plant, entered: OffsetDateTime) -> Option
         reason: reason?,
         by: by?,
         entered,
+        deed: None,
     })
 }
 
@@ -221,7 +222,11 @@ pub(super) async fn end(
     }
     let by = body.by();
     let by = body.finish(by)?;
-    let ended = Ended { by, at: now };
+    let ended = Ended {
+        by,
+        at: now,
+        deed: None,
+    };
     let row = app
         .engine
         .end_decision(&plant, number, until, ended)
@@ -252,6 +257,6 @@ fn told(row: ByHandRow, plant: &Plant) -> Decision {
         reason: decision.reason,
         by: decision.by,
         entered,
-        ended: ended.map(|Ended { by, at }| End { by, at }),
+        ended: ended.map(|Ended { by, at, .. }| End { by, at }),
     }
 }

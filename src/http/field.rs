@@ -85,6 +85,7 @@ pub(super) async fn enter(
         at: now,
         by,
         reason: REASON.to_owned(),
+        deed: None,
     };
     let new = FieldReadings { at, readings };
     let report = app.engine.enter(&plant, &batch, new, again).await?;

@@ -111,6 +111,7 @@ pub(super) async fn put(
         canonical: canonical.to_string(),
         received: app.clock.now(),
         precondition,
+        deed: None,
     };
     match app.store.put_plant(new).await? {
         PutOutcome::Created(stored) => Ok(answer(StatusCode::CREATED, &stored, warnings)),

@@ -1,7 +1,7 @@
 //! Tokens and the audit log.
 
 use super::Reply;
-use crate::access::{Deed, Scopes};
+use crate::access::{Deed, Rate, Scopes, TokenDigest};
 use time::OffsetDateTime;
 
 /// A token to be kept: never the token itself, only its hash.
@@ -10,7 +10,7 @@ pub struct NewToken {
     /// A name for people, unique among those that are not revoked.
     pub name: String,
     /// SHA-256 of the token.
-    pub digest: [u8; 32],
+    pub digest: TokenDigest,
     /// What it allows.
     pub scopes: Scopes,
     /// The plants that it reaches; `None`: every plant.
@@ -18,7 +18,7 @@ pub struct NewToken {
     /// When it ends by itself.
     pub expires: Option<OffsetDateTime>,
     /// Requests a second that it may make; `None`: as the service allows.
-    pub rate: Option<f64>,
+    pub rate: Option<Rate>,
 }
 
 /// A token as it is kept.
@@ -65,10 +65,10 @@ pub trait AccessStore: Send + Sync + 'static {
     fn tokens_version(&self) -> Reply<'_, i64>;
 
     /// Entries of the audit log before the number given, the newest first; of
-    /// one plant where it is named.
+    /// some plants alone where they are named.
     fn deeds<'a>(
         &'a self,
-        plant: Option<&'a str>,
+        plants: Option<&'a [String]>,
         before: Option<i64>,
         limit: usize,
     ) -> Reply<'a, Vec<DeedRow>>;

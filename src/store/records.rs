@@ -6,6 +6,7 @@
 //! the accusations as the JSON that it was given, with what it needs to find
 //! them again.
 
+use crate::access::Deed;
 use crate::plant::{Action, ByHand};
 use crate::report::Verdict;
 use time::OffsetDateTime;
@@ -19,6 +20,8 @@ pub struct Watched {
     pub events: Vec<NewEvent>,
     /// Accusations that are new or have changed; the others stay as they are.
     pub accusations: Vec<AccusationRow>,
+    /// What of it goes into the audit log.
+    pub deed: Option<Deed>,
 }
 
 /// Something that happened to an alarm.
@@ -67,6 +70,8 @@ pub struct NewByHand {
     pub by: String,
     /// When it was entered.
     pub entered: OffsetDateTime,
+    /// What of it goes into the audit log.
+    pub deed: Option<Deed>,
 }
 
 /// A decision by hand as it stands.
@@ -87,6 +92,8 @@ pub struct Ended {
     pub by: String,
     /// When they entered it.
     pub at: OffsetDateTime,
+    /// What of it goes into the audit log; `None` of what is read.
+    pub deed: Option<Deed>,
 }
 
 /// Why a batch was reconciled again.
@@ -98,6 +105,8 @@ pub struct Again {
     pub by: String,
     /// Why.
     pub reason: String,
+    /// What of it goes into the audit log; `None` of what is read.
+    pub deed: Option<Deed>,
 }
 
 /// A version of a result in a list.
@@ -122,6 +131,8 @@ pub struct NewFieldReading {
     pub by: String,
     /// When it was entered.
     pub at: OffsetDateTime,
+    /// What of it goes into the audit log.
+    pub deed: Option<Deed>,
 }
 
 /// A reading taken in the field, with its number.

@@ -1,5 +1,6 @@
 //! What goes into a store and comes out of it.
 
+use crate::access::Deed;
 use crate::report::{Report, Verdict};
 use time::OffsetDateTime;
 
@@ -50,6 +51,8 @@ pub struct NewPlant {
     pub received: OffsetDateTime,
     /// What must hold for it to be taken.
     pub precondition: Precondition,
+    /// What of it goes into the audit log.
+    pub deed: Option<Deed>,
 }
 
 /// A condition on the current revision.

@@ -43,6 +43,7 @@ fn plant(name: &str, content: &str) -> NewPlant {
         canonical: content.to_owned(),
         received: NOW,
         precondition: Precondition::Any,
+        deed: None,
     }
 }
 

@@ -123,7 +123,12 @@ impl Engine {
                 let json = serde_json::to_string(&new)
                     .map_err(|error| Problem::new(Kind::Internal, error.to_string()))?;
                 let (by, at) = (again.by.clone(), again.at);
-                let new = NewFieldReading { json, by, at };
+                let new = NewFieldReading {
+                    json,
+                    by,
+                    at,
+                    deed: None,
+                };
                 let kept = engine.store.add_field_reading(&plant, &batch, new).await?;
                 kept.ok_or_else(|| no_batch(&plant, &batch))?;
             }

@@ -367,6 +367,7 @@ fn watched(watch: &mut Watch, events: &[Event]) -> Result<Watched, Problem> {
         accusations: accusations.collect::<Result<_, Problem>>()?,
         events: events.collect::<Result<_, Problem>>()?,
         watch: json(watch)?,
+        deed: None,
     })
 }
 

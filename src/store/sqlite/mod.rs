@@ -7,6 +7,7 @@
 //! order of the transactions; new batches are refused where the queue is long.
 //! Readers have a pool of their own and never wait for the writer.
 
+mod access;
 mod copies;
 mod fault;
 mod open;

@@ -16,6 +16,7 @@ async fn every_statement_prepares() {
     let (_directory, _, mut connection) = fresh().await;
     for (statements, source) in [
         (sql::OF_BATCHES, include_str!("sql/mod.rs")),
+        (sql::OF_ACCESS, include_str!("sql/access.rs")),
         (sql::OF_COPIES, include_str!("sql/copies.rs")),
         (sql::OF_RECORDS, include_str!("sql/records.rs")),
     ] {
@@ -35,7 +36,7 @@ async fn every_statement_prepares() {
         std::fs::read_dir(concat!(env!("CARGO_MANIFEST_DIR"), "/src/store/sqlite/sql"))
             .expect("the folder")
             .count(),
-        3,
+        4,
         "a file of statements is not looked at"
     );
 }

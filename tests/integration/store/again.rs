@@ -12,6 +12,7 @@ fn again(minute: i64, reason: &str) -> Again {
         at: NOW + time::Duration::minutes(minute),
         by: "R. Engineer".to_owned(),
         reason: reason.to_owned(),
+        deed: None,
     }
 }
 

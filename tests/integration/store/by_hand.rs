@@ -22,6 +22,7 @@ fn decision(tag: &str, action: Action, from: i64, until: Option<i64>) -> NewByHa
         reason: format!("a reason for {tag}"),
         by: "R. Engineer".to_owned(),
         entered: hour(100),
+        deed: None,
     }
 }
 
@@ -94,6 +95,7 @@ async fn an_end_is_kept_with_who_and_when() {
             let ended = Ended {
                 by: by.to_owned(),
                 at: hour(at),
+                deed: None,
             };
             let now = store.end_by_hand("p", id, hour(until), ended.clone());
             let now = now.await.expect("kept").expect("a decision");
@@ -114,6 +116,7 @@ async fn an_end_is_kept_with_who_and_when() {
         let ended = Ended {
             by: "nobody".to_owned(),
             at: hour(9),
+            deed: None,
         };
         for (plant, id) in [("q", id), ("r", id), ("p", id + 1)] {
             let none = store.end_by_hand(plant, id, hour(1), ended.clone()).await;
@@ -150,6 +153,7 @@ async fn field_readings_stay_with_their_batch() {
             json: json.to_owned(),
             by: "R. Fitter".to_owned(),
             at: hour(at),
+            deed: None,
         };
         let mut expected = Vec::new();
         for (json, at) in [("{\"value\":3.1}", 2), ("{\"value\":3.2}", 1)] {

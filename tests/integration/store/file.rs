@@ -200,6 +200,7 @@ async fn an_end_that_is_changed_leaves_a_trace() {
         reason: "a reason".to_owned(),
         by: "R. Engineer".to_owned(),
         entered: NOW,
+        deed: None,
     };
     let row = store.add_by_hand("p", new).await.expect("kept");
     let id = row.expect("a plant").decision.id;
@@ -207,6 +208,7 @@ async fn an_end_that_is_changed_leaves_a_trace() {
         let ended = Ended {
             by: by.to_owned(),
             at: NOW,
+            deed: None,
         };
         store.end_by_hand("p", id, NOW, ended).await.expect("kept");
     }

@@ -170,6 +170,7 @@ async fn a_database_of_version_1_goes_on() {
         at: NOW,
         by: "R. Engineer".to_owned(),
         reason: "suspects are looked for now".to_owned(),
+        deed: None,
     };
     let new = Arc::new(report(&old.ticket, 0, 4.5, "t/h"));
     let made = store.finish_again(old.ticket, Arc::clone(&new), again);

@@ -16,6 +16,7 @@ pub(super) fn watched(watch: &str, events: &[&str]) -> Watched {
             })
             .collect(),
         accusations: vec![],
+        deed: None,
     }
 }
 

@@ -24,7 +24,11 @@ type DecisionRow = (
 fn decision_of(row: DecisionRow) -> Result<ByHandRow, StoreError> {
     let (id, tag, added, from, until, reason, by, entered, ended_by, ended_at) = row;
     let ended = match (ended_by, ended_at) {
-        (Some(by), Some(at)) => Some(Ended { by, at: time(at)? }),
+        (Some(by), Some(at)) => Some(Ended {
+            by,
+            at: time(at)?,
+            deed: None,
+        }),
         _ => None,
     };
     Ok(ByHandRow {

@@ -1,5 +1,6 @@
 //! What readers ask.
 
+mod access;
 mod batches;
 mod by_hand;
 mod plants;
@@ -7,6 +8,7 @@ mod results;
 mod series;
 mod watch;
 
+pub(super) use access::{deeds, token, tokens, tokens_version};
 pub(super) use batches::{batch, batches, inbox, unfinished};
 pub(super) use by_hand::{by_hand, decision, field_readings};
 pub(super) use plants::{critical_values, current_plant, plant, plants};

@@ -37,6 +37,7 @@ fn line(row: VersionRow) -> Result<VersionLine, StoreError> {
             at: time(at)?,
             by,
             reason,
+            deed: None,
         }),
         _ => None,
     };

@@ -1,9 +1,11 @@
 //! Every statement, in one place: a test prepares each against the newest
 //! schema.
 
+mod access;
 mod copies;
 mod records;
 
+pub(super) use access::*;
 pub(super) use copies::*;
 pub(super) use records::*;
 

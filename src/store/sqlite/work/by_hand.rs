@@ -1,6 +1,7 @@
 //! Keeping what people enter: decisions by hand, and readings in the field.
 
 use super::Work;
+use super::access::note;
 use crate::plant::Action;
 use crate::store::sqlite::fault::{corrupt, nanoseconds};
 use crate::store::sqlite::{read, sql};
@@ -53,7 +54,10 @@ impl Work for AddByHand {
                 .fetch_optional(&mut *on)
                 .await?;
             match id {
-                Some(id) => read::decision(on, &self.plant, id).await,
+                Some(id) => {
+                    note(&mut *on, self.new.deed.as_ref(), [("id", id.into())]).await?;
+                    read::decision(on, &self.plant, id).await
+                }
                 None => Ok(None),
             }
         }
@@ -77,7 +81,7 @@ impl Work for EndByHand {
         on: &'a mut SqliteConnection,
     ) -> BoxFuture<'a, Result<Option<ByHandRow>, sqlx::Error>> {
         async move {
-            sqlx::query(sql::INSERT_BY_HAND_END)
+            let ended = sqlx::query(sql::INSERT_BY_HAND_END)
                 .bind(&self.plant)
                 .bind(self.id)
                 .bind(nanoseconds(self.until))
@@ -85,6 +89,10 @@ impl Work for EndByHand {
                 .bind(nanoseconds(self.ended.at))
                 .execute(&mut *on)
                 .await?;
+            if ended.rows_affected() > 0 {
+                let deed = self.ended.deed.as_ref();
+                note(&mut *on, deed, [("id", self.id.into())]).await?;
+            }
             read::decision(on, &self.plant, self.id).await
         }
         .boxed()
@@ -106,14 +114,19 @@ impl Work for AddFieldReading {
         on: &'a mut SqliteConnection,
     ) -> BoxFuture<'a, Result<Option<i64>, sqlx::Error>> {
         async move {
-            sqlx::query_scalar(sql::INSERT_FIELD_READING)
+            let id: Option<i64> = sqlx::query_scalar(sql::INSERT_FIELD_READING)
                 .bind(&self.plant)
                 .bind(&self.batch)
                 .bind(&self.new.json)
                 .bind(&self.new.by)
                 .bind(nanoseconds(self.new.at))
-                .fetch_optional(on)
-                .await
+                .fetch_optional(&mut *on)
+                .await?;
+            if let Some(id) = id {
+                let numbers = [("batch", self.batch.as_str().into()), ("id", id.into())];
+                note(on, self.new.deed.as_ref(), numbers).await?;
+            }
+            Ok(id)
         }
         .boxed()
     }

@@ -4,6 +4,7 @@
 //! and with it what others have asked for. What cannot be done (no such plant,
 //! no such batch) is an answer.
 
+mod access;
 mod batches;
 mod by_hand;
 mod delivered;
@@ -11,6 +12,7 @@ mod plants;
 mod results;
 mod watch;
 
+pub(super) use access::{AddToken, RevokeToken, TokenUsed};
 pub(super) use batches::Accept;
 pub(super) use by_hand::{AddByHand, AddFieldReading, EndByHand};
 pub(super) use delivered::SetDelivered;

@@ -1,6 +1,7 @@
 //! Taking plant files.
 
 use super::Work;
+use super::access::note;
 use crate::store::sqlite::fault::nanoseconds;
 use crate::store::sqlite::values::hex;
 use crate::store::sqlite::{read, sql};
@@ -50,6 +51,11 @@ impl Work for PutPlant {
                 .bind(nanoseconds(new.received))
                 .execute(&mut *on)
                 .await?;
+            let numbers = [
+                ("revision", revision.into()),
+                ("digest", hexadecimal.as_str().into()),
+            ];
+            note(on, new.deed.as_ref(), numbers).await?;
             Ok(PutOutcome::Created(StoredPlant {
                 name: new.name.clone(),
                 revision,

@@ -1,6 +1,7 @@
 //! Keeping results: the first of a batch, and those that take its place.
 
 use super::Work;
+use super::access::note;
 use super::watch::Look;
 use crate::report::Report;
 use crate::store::numbers;
@@ -63,6 +64,7 @@ impl Work for Finish {
 /// Puts a result in the place of the present one.
 pub(in crate::store::sqlite) struct FinishAgain {
     row: Row,
+    batch: String,
     again: Again,
 }
 
@@ -70,6 +72,7 @@ impl FinishAgain {
     pub fn new(ticket: &Ticket, report: &Report, again: Again) -> Result<Self, StoreError> {
         Ok(FinishAgain {
             row: Row::new(ticket, report)?,
+            batch: ticket.batch.clone(),
             again,
         })
     }
@@ -97,8 +100,13 @@ impl Work for FinishAgain {
                 .bind(nanoseconds(self.again.at))
                 .bind(&self.again.by)
                 .bind(&self.again.reason)
-                .execute(on)
+                .execute(&mut *on)
                 .await?;
+            let numbers = [
+                ("batch", self.batch.as_str().into()),
+                ("version", (former + 1).into()),
+            ];
+            note(on, self.again.deed.as_ref(), numbers).await?;
             Ok(Some(former + 1))
         }
         .boxed()

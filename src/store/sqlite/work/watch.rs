@@ -1,6 +1,8 @@
 //! Keeping what a look at a plant changed: its watch, events, accusations.
 
 use super::Work;
+use super::access::note;
+use crate::access::Deed;
 use crate::store::sqlite::sql;
 use crate::store::sqlite::values::{compress, signed};
 use crate::store::{AccusationRow, NewEvent, StoreError, Watched};
@@ -49,6 +51,7 @@ pub(super) struct Look {
     watch: Vec<u8>,
     events: Vec<NewEvent>,
     accusations: Vec<AccusationRow>,
+    deed: Option<Deed>,
 }
 
 impl Look {
@@ -57,6 +60,7 @@ impl Look {
             watch: compress(watched.watch.as_bytes())?,
             events: watched.events,
             accusations: watched.accusations,
+            deed: watched.deed,
         })
     }
 
@@ -92,6 +96,7 @@ impl Look {
                 .await?;
             ids.push(id);
         }
+        note(on, self.deed.as_ref(), []).await?;
         Ok(ids)
     }
 }
