@@ -29,7 +29,9 @@ pub use records::{
     StoredEvent, VersionLine, Watched,
 };
 pub use replays::{NewReplay, ReplayRow, ReplayState, ReplayWith, ReplayedBatch, ReplaysStore};
-pub use sqlite::{Hindrance, OLDEST_SQLITE, SqliteOptions, SqliteStore, backup, restore, verify};
+pub use sqlite::{
+    Hindrance, OLDEST_SQLITE, SqliteOptions, SqliteStore, Synchronous, backup, restore, verify,
+};
 pub use types::{
     Acceptance, BatchLine, BatchQuery, Column, Cursor, Field, Health, Incoming, NewPlant, Page,
     PlantLine, Precondition, PutOutcome, Selector, SeriesPage, SeriesQuery, SeriesRow, StoreError,

@@ -60,6 +60,23 @@ pub struct SqliteOptions {
     pub lock_timeout: Duration,
     /// How long after a failure the writer tries again by itself.
     pub retry: Duration,
+    /// Whether a commit waits for the disk.
+    pub synchronous: Synchronous,
+}
+
+/// Whether a commit waits until the disk has it.
+///
+/// A batch is acknowledged after its commit, so that only [`Full`](Self::Full)
+/// keeps what was promised, and no setting of the service reaches anything else.
+/// The other is there for the trial of power cuts, which has to find losses with
+/// it or it would prove nothing.
+#[derive(Clone, Copy, Debug, Default, PartialEq, Eq)]
+pub enum Synchronous {
+    /// Every commit is synced before it returns.
+    #[default]
+    Full,
+    /// The log is synced before a checkpoint only: a power cut loses commits.
+    Normal,
 }
 
 impl SqliteOptions {
@@ -71,6 +88,7 @@ impl SqliteOptions {
             group: 256,
             lock_timeout: Duration::from_secs(5),
             retry: Duration::from_secs(1),
+            synchronous: Synchronous::Full,
         }
     }
 }

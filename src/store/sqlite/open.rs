@@ -2,7 +2,7 @@
 //! batch.
 
 use super::fault::{corrupt, explain};
-use super::{Hindrance, SqliteOptions, sql};
+use super::{Hindrance, SqliteOptions, Synchronous, sql};
 use crate::store::StoreError;
 use sqlx::sqlite::{SqliteConnectOptions, SqliteConnection, SqliteJournalMode, SqliteSynchronous};
 use sqlx::{AssertSqlSafe, ConnectOptions};
@@ -28,7 +28,10 @@ fn writer(options: &SqliteOptions) -> SqliteConnectOptions {
         .create_if_missing(true)
         .page_size(PAGE_SIZE)
         .journal_mode(SqliteJournalMode::Wal)
-        .synchronous(SqliteSynchronous::Full)
+        .synchronous(match options.synchronous {
+            Synchronous::Full => SqliteSynchronous::Full,
+            Synchronous::Normal => SqliteSynchronous::Normal,
+        })
 }
 
 /// How a reader connects.
