@@ -55,7 +55,7 @@ pub type Reply<'a, T> = BoxFuture<'a, Result<T, StoreError>>;
 /// calls one after another are done in that order, whatever is awaited first.
 /// What has been called is done even where the future is dropped. They have to
 /// be called inside a Tokio runtime.
-pub trait Store: AccessStore + Send + Sync + 'static {
+pub trait Store: AccessStore + ReadingsStore {
     /// Takes a new revision of a plant, unless nothing changed or the
     /// precondition does not hold.
     fn put_plant(&self, new: NewPlant) -> Reply<'_, PutOutcome>;
@@ -79,6 +79,9 @@ pub trait Store: AccessStore + Send + Sync + 'static {
     /// the events. A second result of the same batch is dropped with all that
     /// came with it, and answered with `None`.
     ///
+    /// A result of a body that is not the newest any more is kept as well; the
+    /// batch then waits for one of the newest.
+    ///
     /// After an error nothing of either is kept: a caller that holds the watch
     /// in memory has to read it again.
     fn finish(
@@ -91,7 +94,8 @@ pub trait Store: AccessStore + Send + Sync + 'static {
     /// Puts a new result in the place of the present one, which becomes an
     /// older version and stays. The batch keeps its ticket. Answers the number
     /// of the new version; `None`, with nothing done, where the batch has no
-    /// result yet.
+    /// result yet, or one of a newer body than the ticket's. It ends the waiting
+    /// for a result where there is no newer body.
     fn finish_again(
         &self,
         ticket: Ticket,
@@ -114,7 +118,8 @@ pub trait Store: AccessStore + Send + Sync + 'static {
     /// What is known of a batch.
     fn batch<'a>(&'a self, plant: &'a str, batch: &'a str) -> Reply<'a, Option<Stored>>;
 
-    /// A batch as it was accepted, finished or not, for reconciling it again.
+    /// A batch as it was accepted, finished or not, for reconciling it again; of
+    /// one made from samples as it was made last.
     fn inbox<'a>(&'a self, plant: &'a str, batch: &'a str) -> Reply<'a, Option<Unfinished>>;
 
     /// Batches, the latest period first.
@@ -123,8 +128,8 @@ pub trait Store: AccessStore + Send + Sync + 'static {
     /// Numbers over time, the earliest period first.
     fn series(&self, query: SeriesQuery) -> Reply<'_, SeriesPage>;
 
-    /// Accepted batches without a result, in the order of their acceptance,
-    /// after the ticket number given.
+    /// Accepted batches without a result of their newest body, in the order of
+    /// their acceptance, after the ticket number given.
     fn unfinished(&self, after: i64, limit: usize) -> Reply<'_, Vec<Unfinished>>;
 
     /// The watch over a plant as it was last kept.

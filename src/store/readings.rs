@@ -35,6 +35,10 @@ pub struct NewTagSamples {
     /// A value holds for so long: a late one changes the means of the periods
     /// up to the next sample, but not beyond this.
     pub holds: Duration,
+    /// Where straight lines join the samples, one changes the means back to the
+    /// sample before it as well, but not further than this; zero where a value
+    /// holds until the next.
+    pub reaches_back: Duration,
     /// The samples.
     pub samples: Vec<Sample>,
 }
@@ -49,8 +53,11 @@ pub struct BackfillMark {
     pub bytes: u64,
     /// Lines of its content that are settled.
     pub lines: u64,
-    /// Samples refused so far, by reason.
+    /// Samples refused so far, for whatever reason.
     pub refused: u64,
+    /// The first line of its content where that names the columns: who goes on
+    /// with the rest need not send it again.
+    pub header: Option<String>,
 }
 
 /// What became of samples.
@@ -74,7 +81,7 @@ pub struct OpenPeriod {
     pub start: OffsetDateTime,
     /// Its end.
     pub end: OffsetDateTime,
-    /// Grows whenever samples that matter to it come.
+    /// Grows whenever samples that matter to it come, also over closings.
     pub generation: i64,
     /// Only a backfill has touched it: live ones go first.
     pub backfill: bool,
@@ -82,7 +89,7 @@ pub struct OpenPeriod {
     pub touched: OffsetDateTime,
 }
 
-/// A period's batch.
+/// A period's batch. That only a backfill brought it is known from the period.
 #[derive(Clone, Debug)]
 pub struct PeriodBatch {
     /// The batch.
@@ -115,7 +122,9 @@ pub struct TagSamples {
     /// Name of the tag.
     pub tag: String,
     /// In order of time: those within the period asked for, the last one before
-    /// its start and the first one at or after its end, where there are.
+    /// its start and the first one at or after its end, where there are such no
+    /// further away than `holds`: what lies beyond opens no period when it
+    /// comes, so no mean may depend on it.
     pub samples: Vec<Sample>,
 }
 
@@ -137,15 +146,27 @@ pub struct Backfill {
 }
 
 /// Samples and periods.
+///
+/// A batch made from samples has bodies, numbered from 1: a late sample adds
+/// one, none is ever lost, and the newest counts. A [`Ticket`] says which body it
+/// stands for, and the result that is kept with it is a result of that body. So
+/// a result of an older body never ends the waiting for one of the newer.
 pub trait ReadingsStore: Send + Sync + 'static {
     /// Makes samples durable and opens the periods whose means they change: of
-    /// a sample its own period, and of those that have a batch every one from
-    /// the sample before it to the sample after it, but not beyond `holds`.
-    /// `None` where there is no such plant.
+    /// a sample its own period, and of those that have a batch or are open
+    /// already every one from the sample before it (`reaches_back`) to the
+    /// sample after it (`holds`). Where a period of another length lies in the
+    /// way, made before the length was changed, that one is the sample's own or
+    /// its own is shortened: periods never overlap. Samples that were there
+    /// open nothing. Without samples only the backfill's mark is moved on; it
+    /// never goes back.
+    ///
+    /// `None` where there is no such plant. Refused like a batch
+    /// ([`Overloaded`](super::StoreError::Overloaded)) where the queue is full.
     fn add_samples(&self, new: NewSamples) -> Reply<'_, Option<SamplesTaken>>;
 
-    /// Samples of all tags of a plant that matter to a period; see
-    /// [`TagSamples`].
+    /// Samples of all tags of a plant that matter to a period, in the order of
+    /// the tags' names; see [`TagSamples`]. Tags without any are left out.
     fn samples<'a>(
         &'a self,
         plant: &'a str,
@@ -154,17 +175,33 @@ pub trait ReadingsStore: Send + Sync + 'static {
         holds: Duration,
     ) -> Reply<'a, Vec<TagSamples>>;
 
-    /// Open periods that end at or before a time, live ones first, the earliest
-    /// first.
-    fn open_periods(&self, due: OffsetDateTime, limit: usize) -> Reply<'_, Vec<OpenPeriod>>;
+    /// Open periods of a plant that end at or before a time, live ones first,
+    /// the earliest first.
+    fn open_periods<'a>(
+        &'a self,
+        plant: &'a str,
+        due: OffsetDateTime,
+        limit: usize,
+    ) -> Reply<'a, Vec<OpenPeriod>>;
+
+    /// Names of the plants that have open periods, in their order.
+    fn plants_with_open_periods(&self) -> Reply<'_, Vec<String>>;
 
     /// Accepts a period's batch and closes the period, in one transaction. The
     /// batch is then pending like any other, also where it has a result
-    /// already: [`Unfinished::again`](super::Unfinished) tells.
+    /// already: [`Unfinished::again`](super::Unfinished) tells. A period that is
+    /// not open any more answers [`Closed::Same`] to the content that it has, and
+    /// [`Closed::Overtaken`] to any other.
     fn close_period(&self, batch: PeriodBatch) -> Reply<'_, Closed>;
 
-    /// Closes a period from which nothing can be made.
+    /// Closes a period from which nothing can be made, unless samples have come
+    /// since.
     fn drop_period(&self, period: OpenPeriod) -> Reply<'_, ()>;
+
+    /// A body of a batch by its number: what a version of its report
+    /// ([`VersionLine::body`](super::VersionLine)) was made from. Body 1 is the
+    /// batch as it was accepted.
+    fn body<'a>(&'a self, plant: &'a str, batch: &'a str, body: u32) -> Reply<'a, Option<Vec<u8>>>;
 
     /// Begins a backfill, or answers how far the one of that name has come;
     /// `None` where there is no such plant.

@@ -120,6 +120,8 @@ pub struct VersionLine {
     pub verdict: Verdict,
     /// Weighted sum of squares.
     pub statistic: Option<f64>,
+    /// Which body of the batch it was made from.
+    pub body: u32,
 }
 
 /// A reading taken in the field for one batch.

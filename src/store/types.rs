@@ -165,6 +165,9 @@ pub struct Ticket {
     pub batch: String,
     /// The revision that it is reconciled with.
     pub revision: u32,
+    /// Which of its bodies it stands for: 1, or a later one where late samples
+    /// have changed what it is made from.
+    pub body: u32,
 }
 
 /// What became of an incoming batch.
@@ -189,7 +192,7 @@ pub enum Stored {
     Done(Box<Report>),
 }
 
-/// An accepted batch without a result.
+/// An accepted batch, with its newest body.
 #[derive(Clone, Debug, PartialEq)]
 pub struct Unfinished {
     /// Its receipt.
@@ -198,8 +201,12 @@ pub struct Unfinished {
     pub received: OffsetDateTime,
     /// As sent; of a batch made from samples, as it was made last.
     pub body: Vec<u8>,
-    /// It has a result, from what it was made from before.
+    /// It has a result already.
     pub again: bool,
+    /// It waits for a result of this body.
+    pub pending: bool,
+    /// It waits, and only a backfill brought it.
+    pub backfill: bool,
 }
 
 /// A place in a list by time: what comes next is beyond it.

@@ -362,6 +362,16 @@ pub async fn contents(database: &Path) -> Vec<String> {
         "by_hand_ends",
         "field_readings",
         "delivered",
+        "sample_tags",
+        "samples",
+        "open_periods",
+        "generations",
+        "made_periods",
+        "inbox_bodies",
+        "pending_again",
+        "backfills",
+        "replays",
+        "replayed",
     ] {
         let columns: Vec<String> = sqlx::query_scalar("SELECT name FROM pragma_table_info(?1)")
             .bind(table)

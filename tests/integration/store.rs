@@ -5,6 +5,8 @@ mod by_hand;
 mod delivered;
 mod file;
 mod old;
+mod readings;
+mod readings_model;
 mod watch;
 
 use crate::harness::NOW;

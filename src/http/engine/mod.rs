@@ -177,7 +177,7 @@ impl Engine {
             ticket,
             received,
             body,
-            again: _,
+            ..
         } = unfinished;
         let id = ticket.id;
         let outcome = match parse(body, received).await {

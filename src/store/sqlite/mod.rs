@@ -12,6 +12,7 @@ mod copies;
 mod fault;
 mod open;
 mod read;
+mod readings;
 mod sql;
 mod values;
 mod work;
@@ -54,7 +55,7 @@ pub struct SqliteOptions {
     /// Jobs that may be with the writer before new batches are refused. What
     /// has been accepted is always let in: its number is bounded by that.
     pub queue: usize,
-    /// Jobs that one transaction takes at most.
+    /// Jobs that one transaction takes at most; heavy ones count as several.
     pub group: usize,
     /// How long a lock of another process is waited for.
     pub lock_timeout: Duration,

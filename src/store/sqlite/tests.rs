@@ -18,6 +18,7 @@ async fn every_statement_prepares() {
         (sql::OF_BATCHES, include_str!("sql/mod.rs")),
         (sql::OF_ACCESS, include_str!("sql/access.rs")),
         (sql::OF_COPIES, include_str!("sql/copies.rs")),
+        (sql::OF_READINGS, include_str!("sql/readings.rs")),
         (sql::OF_RECORDS, include_str!("sql/records.rs")),
     ] {
         for statement in statements {
@@ -31,6 +32,11 @@ async fn every_statement_prepares() {
             statements.len() + 1,
             "one is missing in the list at the end"
         );
+    }
+    for (count, statement) in sql::INSERT_SAMPLES.iter() {
+        let prepared = (&mut connection).prepare(statement.as_str().into_sql_str());
+        let prepared = prepared.await;
+        assert!(prepared.is_ok(), "{count}: {:?}", prepared.err());
     }
     assert_eq!(
         std::fs::read_dir(concat!(env!("CARGO_MANIFEST_DIR"), "/src/store/sqlite/sql"))

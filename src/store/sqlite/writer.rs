@@ -21,6 +21,9 @@ pub(super) enum Message {
 
 /// Work of any kind with the way to its answer.
 pub(super) trait Job: Send {
+    /// How many ordinary jobs it takes as long as.
+    fn weight(&self) -> usize;
+
     /// Waits for what has to be there before the transaction begins.
     fn ready(&mut self) -> BoxFuture<'_, ()>;
 
@@ -62,6 +65,10 @@ impl<W: Work> Task<W> {
 }
 
 impl<W: Work> Job for Task<W> {
+    fn weight(&self) -> usize {
+        self.work.weight()
+    }
+
     fn ready(&mut self) -> BoxFuture<'_, ()> {
         self.work.ready()
     }
@@ -176,11 +183,15 @@ impl Writer {
     /// Commits a job with all the jobs that wait behind it; returns the first
     /// message behind them that is no job.
     async fn group(&mut self, first: Box<dyn Job>) -> Option<Message> {
+        let mut weight = first.weight();
         let mut jobs = vec![first];
         let mut other = None;
-        while jobs.len() < self.options.group {
+        while weight < self.options.group {
             match self.queue.try_recv() {
-                Ok(Message::Job(job)) => jobs.push(job),
+                Ok(Message::Job(job)) => {
+                    weight = weight.saturating_add(job.weight());
+                    jobs.push(job);
+                }
                 Ok(message) => {
                     other = Some(message);
                     break;

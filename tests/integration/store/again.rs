@@ -47,6 +47,7 @@ async fn every_version_stays_and_the_newest_stands() {
             again: again.cloned(),
             verdict,
             statistic: Some(statistic),
+            body: 1,
         };
         assert_eq!(
             store.versions("p", "b").await.expect("read"),

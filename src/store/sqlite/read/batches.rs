@@ -12,38 +12,53 @@ pub(in crate::store::sqlite) async fn batch(
     plant: &str,
     batch: &str,
 ) -> Result<Option<Stored>, StoreError> {
-    let row: Option<(i64, u32, Option<Vec<u8>>)> = sqlx::query_as(sql::ONE_BATCH)
+    let row: Option<(i64, u32, u32, Option<Vec<u8>>)> = sqlx::query_as(sql::ONE_BATCH)
         .bind(plant)
         .bind(batch)
         .fetch_optional(pool)
         .await
         .map_err(|e| explain(&e))?;
-    row.map(|(id, revision, report)| match report {
+    row.map(|(id, revision, body, report)| match report {
         None => Ok(Stored::Pending(Ticket {
             id,
             plant: plant.to_owned(),
             batch: batch.to_owned(),
             revision,
+            body,
         })),
         Some(report) => Ok(Stored::Done(Box::new(values::report(&report)?))),
     })
     .transpose()
 }
 
-type InboxRow = (i64, String, String, u32, i64, Vec<u8>);
+#[derive(sqlx::FromRow)]
+struct InboxRow {
+    id: i64,
+    plant: String,
+    batch: String,
+    revision: u32,
+    version: u32,
+    received_ns: i64,
+    body: Vec<u8>,
+    again: bool,
+    pending: bool,
+    backfill: bool,
+}
 
 fn unfinished_of(row: InboxRow) -> Result<Unfinished, StoreError> {
-    let (id, plant, batch, revision, received, body) = row;
     Ok(Unfinished {
         ticket: Ticket {
-            id,
-            plant,
-            batch,
-            revision,
+            id: row.id,
+            plant: row.plant,
+            batch: row.batch,
+            revision: row.revision,
+            body: row.version,
         },
-        received: time(received)?,
-        body: expand(&body)?,
-        again: false,
+        received: time(row.received_ns)?,
+        body: expand(&row.body)?,
+        again: row.again,
+        pending: row.pending,
+        backfill: row.backfill,
     })
 }
 

@@ -4,6 +4,7 @@ mod access;
 mod batches;
 mod by_hand;
 mod plants;
+mod readings;
 mod results;
 mod series;
 mod watch;
@@ -12,6 +13,9 @@ pub(super) use access::{deeds, token, tokens, tokens_version};
 pub(super) use batches::{batch, batches, inbox, unfinished};
 pub(super) use by_hand::{by_hand, decision, field_readings};
 pub(super) use plants::{critical_values, current_plant, plant, plants};
+pub(super) use readings::{
+    backfill, backfills, begun_backfill, body, open_periods, plants_with_open_periods, samples,
+};
 pub(super) use results::{version, versions};
 pub(super) use series::series;
 pub(super) use watch::{

@@ -14,6 +14,7 @@ type VersionRow = (
     Option<String>,
     String,
     Option<f64>,
+    u32,
 );
 
 pub(in crate::store::sqlite) async fn versions(
@@ -31,7 +32,7 @@ pub(in crate::store::sqlite) async fn versions(
 }
 
 fn line(row: VersionRow) -> Result<VersionLine, StoreError> {
-    let (version, at, by, reason, verdict_name, statistic) = row;
+    let (version, at, by, reason, verdict_name, statistic, body) = row;
     let again = match (at, by, reason) {
         (Some(at), Some(by), Some(reason)) => Some(Again {
             at: time(at)?,
@@ -46,6 +47,7 @@ fn line(row: VersionRow) -> Result<VersionLine, StoreError> {
         again,
         verdict: verdict(&verdict_name)?,
         statistic,
+        body,
     })
 }
 

@@ -3,10 +3,12 @@
 
 mod access;
 mod copies;
+mod readings;
 mod records;
 
 pub(super) use access::*;
 pub(super) use copies::*;
+pub(super) use readings::*;
 pub(super) use records::*;
 
 pub(in crate::store::sqlite) const SQLITE_VERSION: &str = "SELECT sqlite_version()";
@@ -51,7 +53,11 @@ pub(in crate::store::sqlite) const PLANT_FOR_BATCH: &str = "
     GROUP BY p.id";
 
 pub(in crate::store::sqlite) const KNOWN_BATCH: &str = "
-    SELECT id, revision, digest FROM inbox WHERE plant_id = ?1 AND batch = ?2";
+    SELECT i.id, i.revision, COALESCE(b.version, 1), COALESCE(b.digest, i.digest)
+    FROM inbox i
+    LEFT JOIN inbox_bodies b ON b.inbox_id = i.id
+      AND b.version = (SELECT MAX(n.version) FROM inbox_bodies n WHERE n.inbox_id = i.id)
+    WHERE i.plant_id = ?1 AND i.batch = ?2";
 
 pub(in crate::store::sqlite) const INSERT_BATCH: &str = "
     INSERT INTO inbox (plant_id, batch, revision, digest, start_ns, end_ns, received_ns, body)
@@ -59,7 +65,7 @@ pub(in crate::store::sqlite) const INSERT_BATCH: &str = "
     RETURNING id";
 
 pub(in crate::store::sqlite) const INSERT_PENDING: &str =
-    "INSERT INTO pending (inbox_id) VALUES (?1)";
+    "INSERT INTO pending (inbox_id, backfill) VALUES (?1, ?2)";
 
 pub(in crate::store::sqlite) const DELETE_PENDING: &str = "DELETE FROM pending WHERE inbox_id = ?1";
 
@@ -71,8 +77,8 @@ pub(in crate::store::sqlite) const INSERT_LAYOUT: &str = "
 pub(in crate::store::sqlite) const READ_LAYOUT: &str = "SELECT channels FROM layouts WHERE id = ?1";
 
 pub(in crate::store::sqlite) const INSERT_RESULT: &str = "
-    INSERT INTO results (inbox_id, verdict, statistic, degrees_of_freedom, layout_id, numbers, report)
-    VALUES (?1, ?2, ?3, ?4, ?5, ?6, ?7)
+    INSERT INTO results (inbox_id, verdict, statistic, degrees_of_freedom, layout_id, numbers, report, body)
+    VALUES (?1, ?2, ?3, ?4, ?5, ?6, ?7, ?8)
     ON CONFLICT (inbox_id) DO NOTHING";
 
 pub(in crate::store::sqlite) const INSERT_CRITICAL_VALUE: &str = "
@@ -88,16 +94,25 @@ pub(in crate::store::sqlite) const CRITICAL_VALUES: &str = "
     WHERE p.name = ?1 AND c.revision = ?2";
 
 pub(in crate::store::sqlite) const ONE_BATCH: &str = "
-    SELECT i.id, i.revision, r.report
+    SELECT i.id, i.revision,
+           COALESCE((SELECT MAX(b.version) FROM inbox_bodies b WHERE b.inbox_id = i.id), 1), r.report
     FROM inbox i JOIN plants p ON p.id = i.plant_id
     LEFT JOIN results r ON r.inbox_id = i.id
     WHERE p.name = ?1 AND i.batch = ?2";
 
+/// With the newest body, and whether there is a result already.
 pub(in crate::store::sqlite) const UNFINISHED: &str = "
-    SELECT i.id, p.name, i.batch, i.revision, i.received_ns, i.body
-    FROM pending w JOIN inbox i ON i.id = w.inbox_id JOIN plants p ON p.id = i.plant_id
-    WHERE w.inbox_id > ?1
-    ORDER BY w.inbox_id LIMIT ?2";
+    SELECT i.id, p.name AS plant, i.batch, i.revision, COALESCE(b.version, 1) AS version,
+           COALESCE(b.received_ns, i.received_ns) AS received_ns,
+           COALESCE(b.body, i.body) AS body, w.again, 1 AS pending, w.backfill
+    FROM (SELECT inbox_id, 0 AS again, backfill FROM pending WHERE inbox_id > ?1
+          UNION ALL
+          SELECT inbox_id, 1, backfill FROM pending_again WHERE inbox_id > ?1
+          ORDER BY inbox_id LIMIT ?2) w
+    JOIN inbox i ON i.id = w.inbox_id JOIN plants p ON p.id = i.plant_id
+    LEFT JOIN inbox_bodies b ON b.inbox_id = i.id
+      AND b.version = (SELECT MAX(n.version) FROM inbox_bodies n WHERE n.inbox_id = i.id)
+    ORDER BY i.id";
 
 pub(in crate::store::sqlite) const BATCHES: &str = "
     SELECT i.id, i.batch, i.start_ns, i.end_ns, i.revision,

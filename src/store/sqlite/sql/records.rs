@@ -6,18 +6,19 @@ pub(in crate::store::sqlite) const FIND_PLANT: &str = "
 pub(in crate::store::sqlite) const PLANT_OF_BATCH: &str = "
     SELECT plant_id FROM inbox WHERE id = ?1";
 
+/// Unless it is of a newer body than the one named.
 pub(in crate::store::sqlite) const KEEP_FORMER_RESULT: &str = "
     INSERT INTO former_results
-        (inbox_id, version, verdict, statistic, degrees_of_freedom, layout_id, numbers, report)
+        (inbox_id, version, verdict, statistic, degrees_of_freedom, layout_id, numbers, report, body)
     SELECT r.inbox_id, 1 + (SELECT COUNT(*) FROM former_results f WHERE f.inbox_id = r.inbox_id),
-           r.verdict, r.statistic, r.degrees_of_freedom, r.layout_id, r.numbers, r.report
-    FROM results r WHERE r.inbox_id = ?1
+           r.verdict, r.statistic, r.degrees_of_freedom, r.layout_id, r.numbers, r.report, r.body
+    FROM results r WHERE r.inbox_id = ?1 AND r.body <= ?2
     RETURNING version";
 
 pub(in crate::store::sqlite) const REPLACE_RESULT: &str = "
     UPDATE results
     SET verdict = ?2, statistic = ?3, degrees_of_freedom = ?4, layout_id = ?5, numbers = ?6,
-        report = ?7
+        report = ?7, body = ?8
     WHERE inbox_id = ?1";
 
 pub(in crate::store::sqlite) const INSERT_AGAIN: &str = "
@@ -28,15 +29,15 @@ pub(in crate::store::sqlite) const VERSIONS: &str = "
     WITH one (id) AS (
         SELECT i.id FROM inbox i JOIN plants p ON p.id = i.plant_id
         WHERE p.name = ?1 AND i.batch = ?2),
-    every (inbox_id, version, verdict, statistic) AS (
-        SELECT f.inbox_id, f.version, f.verdict, f.statistic
+    every (inbox_id, version, verdict, statistic, body) AS (
+        SELECT f.inbox_id, f.version, f.verdict, f.statistic, f.body
         FROM former_results f JOIN one ON one.id = f.inbox_id
         UNION ALL
         SELECT r.inbox_id,
                1 + (SELECT COUNT(*) FROM former_results c WHERE c.inbox_id = r.inbox_id),
-               r.verdict, r.statistic
+               r.verdict, r.statistic, r.body
         FROM results r JOIN one ON one.id = r.inbox_id)
-    SELECT e.version, a.at_ns, a.who, a.reason, e.verdict, e.statistic
+    SELECT e.version, a.at_ns, a.who, a.reason, e.verdict, e.statistic, e.body
     FROM every e
     LEFT JOIN reconciled_again a ON a.inbox_id = e.inbox_id AND a.version = e.version
     ORDER BY e.version";
@@ -53,9 +54,19 @@ pub(in crate::store::sqlite) const ONE_VERSION: &str = "
     FROM results r JOIN one ON one.id = r.inbox_id
     WHERE ?3 = 1 + (SELECT COUNT(*) FROM former_results c WHERE c.inbox_id = r.inbox_id)";
 
+/// With the newest body, whether there is a result, and whether it waits.
 pub(in crate::store::sqlite) const INBOX: &str = "
-    SELECT i.id, p.name, i.batch, i.revision, i.received_ns, i.body
+    SELECT i.id, p.name AS plant, i.batch, i.revision, COALESCE(b.version, 1) AS version,
+           COALESCE(b.received_ns, i.received_ns) AS received_ns,
+           COALESCE(b.body, i.body) AS body,
+           EXISTS (SELECT 1 FROM results r WHERE r.inbox_id = i.id) AS again,
+           w.inbox_id IS NOT NULL OR a.inbox_id IS NOT NULL AS pending,
+           COALESCE(w.backfill, a.backfill, 0) AS backfill
     FROM inbox i JOIN plants p ON p.id = i.plant_id
+    LEFT JOIN pending w ON w.inbox_id = i.id
+    LEFT JOIN pending_again a ON a.inbox_id = i.id
+    LEFT JOIN inbox_bodies b ON b.inbox_id = i.id
+      AND b.version = (SELECT MAX(n.version) FROM inbox_bodies n WHERE n.inbox_id = i.id)
     WHERE p.name = ?1 AND i.batch = ?2";
 
 pub(in crate::store::sqlite) const PUT_WATCH: &str = "

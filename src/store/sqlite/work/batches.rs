@@ -31,11 +31,12 @@ impl Work for Accept {
     ) -> BoxFuture<'a, Result<Acceptance, sqlx::Error>> {
         async move {
             let incoming = &self.incoming;
-            let ticket = |id, revision| Ticket {
+            let ticket = |id, revision, body| Ticket {
                 id,
                 plant: incoming.plant.clone(),
                 batch: incoming.batch.clone(),
                 revision,
+                body,
             };
             let plant: Option<(i64, u32)> = sqlx::query_as(sql::PLANT_FOR_BATCH)
                 .bind(&incoming.plant)
@@ -44,14 +45,14 @@ impl Work for Accept {
             let Some((plant, revision)) = plant else {
                 return Ok(Acceptance::NoPlant);
             };
-            let known: Option<(i64, u32, Vec<u8>)> = sqlx::query_as(sql::KNOWN_BATCH)
+            let known: Option<(i64, u32, u32, Vec<u8>)> = sqlx::query_as(sql::KNOWN_BATCH)
                 .bind(plant)
                 .bind(&incoming.batch)
                 .fetch_optional(&mut *on)
                 .await?;
-            if let Some((id, revision, digest)) = known {
+            if let Some((id, revision, body, digest)) = known {
                 return Ok(if digest == incoming.digest {
-                    Acceptance::Known(ticket(id, revision))
+                    Acceptance::Known(ticket(id, revision, body))
                 } else {
                     Acceptance::Conflict
                 });
@@ -69,9 +70,10 @@ impl Work for Accept {
                 .await?;
             sqlx::query(sql::INSERT_PENDING)
                 .bind(id)
+                .bind(false)
                 .execute(&mut *on)
                 .await?;
-            Ok(Acceptance::New(ticket(id, revision)))
+            Ok(Acceptance::New(ticket(id, revision, 1)))
         }
         .boxed()
     }

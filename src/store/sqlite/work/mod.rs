@@ -5,19 +5,25 @@
 //! no such batch) is an answer.
 
 mod access;
+mod backfills;
 mod batches;
 mod by_hand;
 mod delivered;
+mod periods;
 mod plants;
 mod results;
+mod samples;
 mod watch;
 
 pub(super) use access::{AddToken, RevokeToken, TokenUsed};
+pub(super) use backfills::{BeginBackfill, EndBackfill};
 pub(super) use batches::Accept;
 pub(super) use by_hand::{AddByHand, AddFieldReading, EndByHand};
 pub(super) use delivered::SetDelivered;
+pub(super) use periods::{ClosePeriod, DropPeriod};
 pub(super) use plants::PutPlant;
 pub(super) use results::{Finish, FinishAgain};
+pub(super) use samples::AddSamples;
 pub(super) use watch::ChangeWatch;
 
 use super::fault::corrupt;
@@ -31,6 +37,12 @@ use tokio::task::JoinHandle;
 pub(super) trait Work: Send + 'static {
     /// What the caller gets after the commit.
     type Output: Send;
+
+    /// How many ordinary jobs it takes as long as: a transaction takes less of
+    /// what is heavy, so that those who wait behind it wait no longer.
+    fn weight(&self) -> usize {
+        1
+    }
 
     /// Waits for what has to be there before the transaction begins.
     fn ready(&mut self) -> BoxFuture<'_, ()> {

@@ -44,6 +44,11 @@ impl Work for Finish {
             if self.row.write(&mut *on, sql::INSERT_RESULT).await? == 0 {
                 return Ok(None);
             }
+            sqlx::query(sql::PENDING_TO_AGAIN)
+                .bind(self.row.inbox_id)
+                .bind(self.row.body)
+                .execute(&mut *on)
+                .await?;
             sqlx::query(sql::DELETE_PENDING)
                 .bind(self.row.inbox_id)
                 .execute(&mut *on)
@@ -88,6 +93,7 @@ impl Work for FinishAgain {
         async move {
             let former: Option<u32> = sqlx::query_scalar(sql::KEEP_FORMER_RESULT)
                 .bind(self.row.inbox_id)
+                .bind(self.row.body)
                 .fetch_optional(&mut *on)
                 .await?;
             let Some(former) = former else {
@@ -100,6 +106,11 @@ impl Work for FinishAgain {
                 .bind(nanoseconds(self.again.at))
                 .bind(&self.again.by)
                 .bind(&self.again.reason)
+                .execute(&mut *on)
+                .await?;
+            sqlx::query(sql::DELETE_PENDING_AGAIN)
+                .bind(self.row.inbox_id)
+                .bind(self.row.body)
                 .execute(&mut *on)
                 .await?;
             let numbers = [
@@ -116,6 +127,7 @@ impl Work for FinishAgain {
 /// A result as it stands in the database.
 struct Row {
     inbox_id: i64,
+    body: u32,
     revision: u32,
     verdict: &'static str,
     statistic: Option<f64>,
@@ -140,6 +152,7 @@ impl Row {
         Ok(Row {
             single_test: single_test.transpose()?,
             inbox_id: ticket.id,
+            body: ticket.body,
             revision: report.revision,
             verdict: verdict_name(report.verdict),
             statistic: test.map(|test| test.statistic),
@@ -167,6 +180,7 @@ impl Row {
             .bind(layout)
             .bind(&self.numbers)
             .bind(&self.report)
+            .bind(self.body)
             .execute(&mut *on)
             .await?
             .rows_affected();
