@@ -55,7 +55,7 @@ pub type Reply<'a, T> = BoxFuture<'a, Result<T, StoreError>>;
 /// calls one after another are done in that order, whatever is awaited first.
 /// What has been called is done even where the future is dropped. They have to
 /// be called inside a Tokio runtime.
-pub trait Store: AccessStore + ReadingsStore {
+pub trait Store: AccessStore + ReadingsStore + ReplaysStore {
     /// Takes a new revision of a plant, unless nothing changed or the
     /// precondition does not hold.
     fn put_plant(&self, new: NewPlant) -> Reply<'_, PutOutcome>;

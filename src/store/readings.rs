@@ -8,6 +8,7 @@
 //! goes on where the end left off.
 
 use super::{Incoming, Reply, Ticket};
+use crate::access::Deed;
 use crate::plant::Sample;
 use time::{Duration, OffsetDateTime};
 
@@ -203,13 +204,14 @@ pub trait ReadingsStore: Send + Sync + 'static {
     /// batch as it was accepted.
     fn body<'a>(&'a self, plant: &'a str, batch: &'a str, body: u32) -> Reply<'a, Option<Vec<u8>>>;
 
-    /// Begins a backfill, or answers how far the one of that name has come;
-    /// `None` where there is no such plant.
+    /// Begins a backfill and notes it, or answers how far the one of that name
+    /// has come; `None` where there is no such plant.
     fn begin_backfill(
         &self,
         plant: &str,
         name: &str,
         at: OffsetDateTime,
+        deed: Option<Deed>,
     ) -> Reply<'_, Option<Backfill>>;
 
     /// Marks a backfill's content as settled to the end.

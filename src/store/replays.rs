@@ -2,6 +2,7 @@
 //! results and never in their place.
 
 use super::{BatchLine, Reply};
+use crate::access::Deed;
 use crate::report::Report;
 use std::sync::Arc;
 use time::OffsetDateTime;
@@ -23,6 +24,8 @@ pub struct NewReplay {
     pub reason: String,
     /// When.
     pub at: OffsetDateTime,
+    /// The entry of the audit log that goes with it; none when it is read.
+    pub deed: Option<Deed>,
 }
 
 /// What a replay is made with.
@@ -59,7 +62,8 @@ pub struct ReplayRow {
     pub new: NewReplay,
     /// Where it is.
     pub state: ReplayState,
-    /// Batches that the period has.
+    /// Batches that can be made: those of the period that had a result when it
+    /// was asked for, and those that came by one since and have been made.
     pub batches: u64,
     /// Batches that have been made.
     pub made: u64,
@@ -80,7 +84,7 @@ pub struct ReplayedBatch {
 
 /// Replays.
 pub trait ReplaysStore: Send + Sync + 'static {
-    /// Keeps a replay to be made; `None` where there is no such plant.
+    /// Keeps a replay to be made; `None` where there is no such plant or revision.
     fn add_replay(&self, new: NewReplay) -> Reply<'_, Option<ReplayRow>>;
 
     /// One replay.
@@ -98,21 +102,26 @@ pub trait ReplaysStore: Send + Sync + 'static {
     fn running_replays(&self) -> Reply<'_, Vec<ReplayRow>>;
 
     /// Names of the next batches of a replay that have not been made, in order
-    /// of time; batches without a result are left out.
+    /// of time; batches without a result are left out. None of one that has
+    /// ended.
     fn unreplayed(&self, id: i64, limit: usize) -> Reply<'_, Vec<String>>;
 
-    /// Keeps what a batch would be. A second one of the same batch is dropped.
+    /// Keeps what a batch would be. A second one of the same batch is dropped,
+    /// and so is one of a replay that has ended.
     fn add_replayed(&self, id: i64, batch: &str, report: Arc<Report>) -> Reply<'_, ()>;
 
-    /// Ends a replay, unless it has ended; answers how it is then.
+    /// Ends a replay, unless it has ended, and notes it then; answers how it is
+    /// after that.
     fn end_replay(
         &self,
         id: i64,
         state: ReplayState,
         at: OffsetDateTime,
+        deed: Option<Deed>,
     ) -> Reply<'_, Option<ReplayRow>>;
 
-    /// What has been made, in order of time, after the place given.
+    /// What has been made, in order of time, after the place given; without
+    /// batches whose report is kept no longer.
     fn replayed(
         &self,
         id: i64,

@@ -13,6 +13,7 @@ mod fault;
 mod open;
 mod read;
 mod readings;
+mod replays;
 mod sql;
 mod values;
 mod work;

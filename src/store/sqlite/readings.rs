@@ -2,6 +2,7 @@
 
 use super::work::{AddSamples, BeginBackfill, ClosePeriod, DropPeriod, EndBackfill};
 use super::{SqliteStore, read};
+use crate::access::Deed;
 use crate::store::{
     Backfill, Closed, NewSamples, OpenPeriod, PeriodBatch, ReadingsStore, Reply, SamplesTaken,
     TagSamples,
@@ -57,9 +58,15 @@ impl ReadingsStore for SqliteStore {
         plant: &str,
         name: &str,
         at: OffsetDateTime,
+        deed: Option<Deed>,
     ) -> Reply<'_, Option<Backfill>> {
         let (plant, name) = (plant.to_owned(), name.to_owned());
-        self.write(BeginBackfill { plant, name, at })
+        self.write(BeginBackfill {
+            plant,
+            name,
+            at,
+            deed,
+        })
     }
 
     fn end_backfill(&self, plant: &str, name: &str, at: OffsetDateTime) -> Reply<'_, ()> {

@@ -20,6 +20,7 @@ async fn every_statement_prepares() {
         (sql::OF_COPIES, include_str!("sql/copies.rs")),
         (sql::OF_READINGS, include_str!("sql/readings.rs")),
         (sql::OF_RECORDS, include_str!("sql/records.rs")),
+        (sql::OF_REPLAYS, include_str!("sql/replays.rs")),
     ] {
         for statement in statements {
             let prepared = (&mut connection)
@@ -42,7 +43,7 @@ async fn every_statement_prepares() {
         std::fs::read_dir(concat!(env!("CARGO_MANIFEST_DIR"), "/src/store/sqlite/sql"))
             .expect("the folder")
             .count(),
-        4,
+        6,
         "a file of statements is not looked at"
     );
 }

@@ -2,7 +2,7 @@
 
 use super::fault::corrupt;
 use crate::report::{Report, Verdict};
-use crate::store::StoreError;
+use crate::store::{ReplayState, StoreError};
 
 /// zstd's quick level: a batch must not wait for its compression.
 const LEVEL: i32 = 1;
@@ -46,6 +46,27 @@ pub(super) fn verdict(name: &str) -> Result<Verdict, StoreError> {
     .into_iter()
     .find(|&verdict| verdict_name(verdict) == name)
     .ok_or_else(|| corrupt(format!("verdict {name}")))
+}
+
+/// The state of a replay as it stands in the database.
+pub(super) fn replay_state_name(state: ReplayState) -> &'static str {
+    match state {
+        ReplayState::Running => "running",
+        ReplayState::Done => "done",
+        ReplayState::Cancelled => "cancelled",
+    }
+}
+
+/// The state of a replay of a name in the database.
+pub(super) fn replay_state(name: &str) -> Result<ReplayState, StoreError> {
+    [
+        ReplayState::Running,
+        ReplayState::Done,
+        ReplayState::Cancelled,
+    ]
+    .into_iter()
+    .find(|&state| replay_state_name(state) == name)
+    .ok_or_else(|| corrupt(format!("a replay that is {name}")))
 }
 
 /// Bytes as hexadecimal digits.

@@ -112,6 +112,7 @@ fn late() -> Again {
         at: NOW,
         by: "late readings".to_owned(),
         reason: "samples came".to_owned(),
+        deed: None,
     }
 }
 

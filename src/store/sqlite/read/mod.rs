@@ -5,6 +5,7 @@ mod batches;
 mod by_hand;
 mod plants;
 mod readings;
+mod replays;
 mod results;
 mod series;
 mod watch;
@@ -16,6 +17,7 @@ pub(super) use plants::{critical_values, current_plant, plant, plants};
 pub(super) use readings::{
     backfill, backfills, begun_backfill, body, open_periods, plants_with_open_periods, samples,
 };
+pub(super) use replays::{kept_replay, replay, replayed, replays, running_replays, unreplayed};
 pub(super) use results::{version, versions};
 pub(super) use series::series;
 pub(super) use watch::{

@@ -5,11 +5,13 @@ mod access;
 mod copies;
 mod readings;
 mod records;
+mod replays;
 
 pub(super) use access::*;
 pub(super) use copies::*;
 pub(super) use readings::*;
 pub(super) use records::*;
+pub(super) use replays::*;
 
 pub(in crate::store::sqlite) const SQLITE_VERSION: &str = "SELECT sqlite_version()";
 pub(in crate::store::sqlite) const QUICK_CHECK: &str = "PRAGMA quick_check(1)";

@@ -2,6 +2,8 @@
 //! samples.
 
 use super::Work;
+use super::access::note;
+use crate::access::Deed;
 use crate::store::Backfill;
 use crate::store::sqlite::fault::nanoseconds;
 use crate::store::sqlite::{read, sql};
@@ -15,6 +17,7 @@ pub(in crate::store::sqlite) struct BeginBackfill {
     pub plant: String,
     pub name: String,
     pub at: OffsetDateTime,
+    pub deed: Option<Deed>,
 }
 
 impl Work for BeginBackfill {
@@ -32,12 +35,15 @@ impl Work for BeginBackfill {
             let Some(plant) = plant else {
                 return Ok(None);
             };
-            sqlx::query(sql::BEGIN_BACKFILL)
+            let begun = sqlx::query(sql::BEGIN_BACKFILL)
                 .bind(plant)
                 .bind(&self.name)
                 .bind(nanoseconds(self.at))
                 .execute(&mut *on)
                 .await?;
+            if begun.rows_affected() > 0 {
+                note(&mut *on, self.deed.as_ref(), []).await?;
+            }
             read::begun_backfill(on, &self.plant, &self.name).await
         }
         .boxed()
