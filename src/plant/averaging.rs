@@ -37,6 +37,9 @@ pub struct TagAveraging {
     pub least_coverage: f64,
     /// Probability of calling a steady signal unsteady.
     pub steady_significance: f64,
+    /// A signal that wanders by no more than this part of the tag's standard
+    /// uncertainty is steady whatever the test says.
+    pub steady_within: f64,
 }
 
 /// What the reading of a period is.
@@ -71,9 +74,10 @@ impl Default for TagAveraging {
             method: AveragingMethod::Stepped,
             stale_after: Duration::minutes(15),
             stuck_after: None,
-            spikes: Some((5, 4.0)),
+            spikes: Some((5, 5.0)),
             least_coverage: 0.5,
             steady_significance: 0.001,
+            steady_within: 0.25,
         }
     }
 }
