@@ -1,12 +1,15 @@
 //! What holds for every store.
 
 mod again;
+mod bodies;
 mod by_hand;
 mod delivered;
 mod file;
 mod old;
 mod readings;
+mod readings_file;
 mod readings_model;
+mod replays;
 mod watch;
 
 use crate::harness::NOW;

@@ -19,7 +19,7 @@ fn options(path: &Path) -> SqliteOptions {
     }
 }
 
-async fn open(path: &Path) -> SqliteStore {
+pub async fn open(path: &Path) -> SqliteStore {
     SqliteStore::open(options(path)).await.expect("a store")
 }
 

@@ -32,6 +32,9 @@ pub(in crate::store::sqlite) struct AddSamples {
     backfill: Option<BackfillMark>,
 }
 
+/// A sample that is there, with the place of the stretch that it lies in.
+type ThereRow = (i64, i64, Option<f64>, i64, Option<i64>);
+
 /// What is new in a stretch, and what else is there.
 struct Kept<'a> {
     tag: &'a Tag,
@@ -106,11 +109,10 @@ impl AddSamples {
             .map(|(_, id, stretch)| (*id, stretch.first, stretch.last))
             .collect();
         let mut there: Vec<Vec<Row>> = stretches.iter().map(|_| Vec::new()).collect();
-        let rows: Vec<(i64, i64, Option<f64>, i64, Option<i64>)> =
-            sqlx::query_as(sql::SAMPLES_OF_STRETCHES)
-                .bind(json(&asked)?)
-                .fetch_all(&mut *on)
-                .await?;
+        let rows: Vec<ThereRow> = sqlx::query_as(sql::SAMPLES_OF_STRETCHES)
+            .bind(json(&asked)?)
+            .fetch_all(&mut *on)
+            .await?;
         for (place, time, value, grade, code) in rows {
             let rows = usize::try_from(place).ok().and_then(|at| there.get_mut(at));
             if let Some(rows) = rows {
