@@ -30,7 +30,13 @@ impl<'a> Reader<'a> {
         let taken = count("samples");
         let used = count("used");
         let covered = self
-            .required(path, node, members, "covered", "a part of the period, 0 to 1")
+            .required(
+                path,
+                node,
+                members,
+                "covered",
+                "a part of the period, 0 to 1",
+            )
             .and_then(|node| {
                 let mend = "write the part of the period that good samples cover, 0 to 1";
                 self.bounded(&Path::Key(path, "covered"), node, 1.0, mend)
@@ -111,13 +117,7 @@ impl<'a> Reader<'a> {
         found
     }
 
-    fn bounded(
-        &mut self,
-        path: &Path<'_>,
-        node: &Node<'a>,
-        most: f64,
-        mend: &str,
-    ) -> Option<f64> {
+    fn bounded(&mut self, path: &Path<'_>, node: &Node<'a>, most: f64, mend: &str) -> Option<f64> {
         let Value::Number { text, value } = &node.value else {
             self.wrong_type(path, node, "a number", mend);
             return None;
@@ -169,7 +169,8 @@ impl<'a> Reader<'a> {
     fn names(&mut self, path: &Path<'_>, node: &Node<'a>) -> Option<Vec<String>> {
         let Value::Array(items) = &node.value else {
             let what = format!("{} where a list of tags is needed", kind(&node.value));
-            self.faults.add(path, node.offset, what, "write [\"FT-201\"]");
+            self.faults
+                .add(path, node.offset, what, "write [\"FT-201\"]");
             return None;
         };
         let each = items.iter().enumerate();

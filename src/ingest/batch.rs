@@ -1,17 +1,12 @@
 //! The shape of a batch at the edge, and its faults.
 
-use super::LONGEST_NAME;
 use super::digest;
 use super::faults::{Faults, Path};
-use super::json::{self, Member, Node, Value, shorten};
-use crate::plant::{Batch, Fault, Grade, Quality, Reading};
+use super::fields::{FUTURE_ALLOWANCE, Reader, find};
+use super::json::{self, Node, Value};
+use crate::plant::{Batch, Fault, Grade, Quality, Reading, Steadiness};
 use std::collections::HashMap;
-use time::format_description::well_known::Rfc3339;
-use time::{Duration, OffsetDateTime, UtcOffset};
-
-/// How far ahead of our clock a time may lie: clocks of historians run ahead by
-/// minutes, and a batch from next month is a mistake.
-pub const FUTURE_ALLOWANCE: Duration = Duration::minutes(10);
+use time::OffsetDateTime;
 
 /// A batch, and what it hashes to.
 #[derive(Clone, Debug, PartialEq)]
@@ -65,7 +60,7 @@ pub fn parse(body: &[u8], now: OffsetDateTime) -> Result<Parsed, Refusal> {
     }
 }
 
-fn not_utf8(body: &[u8], valid: usize) -> Refusal {
+pub(super) fn not_utf8(body: &[u8], valid: usize) -> Refusal {
     // The part before `valid` is UTF-8 by the meaning of `valid_up_to`.
     let readable = String::from_utf8_lossy(&body[..valid]);
     let mut faults = Faults::new(&readable);
@@ -92,13 +87,19 @@ struct DraftBatch {
     start: OffsetDateTime,
     end: OffsetDateTime,
     readings: Vec<Draft>,
+    steadiness: Option<Steadiness>,
 }
 
 impl DraftBatch {
     fn finish(mut self) -> Parsed {
         self.readings
             .sort_by(|a, b| a.reading.tag.cmp(&b.reading.tag));
-        let digest = digest::of(&self.name, self.start, self.end, &self.readings);
+        let digest = digest::of(
+            &self.name,
+            (self.start, self.end),
+            &self.readings,
+            self.steadiness.as_ref(),
+        );
         let readings = self
             .readings
             .into_iter()
@@ -109,15 +110,10 @@ impl DraftBatch {
             start: self.start,
             end: self.end,
             readings,
-            steadiness: None,
+            steadiness: self.steadiness,
         };
         Parsed { batch, digest }
     }
-}
-
-struct Reader<'a> {
-    faults: Faults<'a>,
-    latest: OffsetDateTime,
 }
 
 impl<'a> Reader<'a> {
@@ -127,7 +123,7 @@ impl<'a> Reader<'a> {
             &path,
             root,
             "a batch",
-            &["batch", "start", "end", "readings"],
+            &["batch", "start", "end", "readings", "steadiness"],
         )?;
         let name = self
             .required(
@@ -175,11 +171,16 @@ impl<'a> Reader<'a> {
         let readings = self
             .required(&path, root, members, "readings", "a list of readings")
             .and_then(|node| self.readings(&Path::Key(&path, "readings"), node));
+        let steadiness = match find(members, "steadiness") {
+            None => Some(None),
+            Some(member) => self.steadiness(&Path::Key(&path, "steadiness"), &member.node),
+        };
         Some(DraftBatch {
             name: name?,
             start: start?.1,
             end: end?.1,
             readings: readings?,
+            steadiness: steadiness?,
         })
     }
 
@@ -225,7 +226,7 @@ impl<'a> Reader<'a> {
             path,
             node,
             "a reading",
-            &["tag", "value", "quality", "time"],
+            &["tag", "value", "quality", "time", "averaged"],
         )?;
         let tag_node = self.required(path, node, members, "tag", "the name of the tag");
         let tag = tag_node.and_then(|tag| self.name(&Path::Key(path, "tag"), tag));
@@ -240,6 +241,10 @@ impl<'a> Reader<'a> {
             None => Some(None),
             Some(member) => self.time(&Path::Key(path, "time"), &member.node).map(Some),
         };
+        let averaged = match find(members, "averaged") {
+            None => Some(None),
+            Some(member) => self.averaged(&Path::Key(path, "averaged"), &member.node),
+        };
         // A quality that could not be read must not add a second fault here.
         let may_lack = quality.is_none_or(|quality| quality.grade == Grade::Bad);
         let value = self.value(path, node, members, may_lack);
@@ -247,7 +252,7 @@ impl<'a> Reader<'a> {
             tag: tag?,
             value: value?,
             quality: quality?,
-            averaged: None,
+            averaged: averaged?,
         };
         Some((
             tag_node?,
@@ -256,112 +261,6 @@ impl<'a> Reader<'a> {
                 time: time?,
             },
         ))
-    }
-
-    fn value(
-        &mut self,
-        path: &Path<'_>,
-        node: &Node<'a>,
-        members: &[Member<'a>],
-        may_lack: bool,
-    ) -> Option<Option<f64>> {
-        let path = Path::Key(path, "value");
-        let (value, offset) = match find(members, "value") {
-            None => (&Value::Null, node.offset),
-            Some(member) => (&member.node.value, member.node.offset),
-        };
-        match value {
-            Value::Number { value, .. } => Some(Some(*value)),
-            Value::Null if may_lack => Some(None),
-            Value::Null => {
-                self.faults.add(
-                    &path,
-                    offset,
-                    "a reading without a value",
-                    "send a number, or null with quality \"bad\"",
-                );
-                None
-            }
-            Value::Faulty => None,
-            other => {
-                self.faults.add(
-                    &path,
-                    offset,
-                    format!("{} where a number is needed", kind(other)),
-                    "send a JSON number in the tag's own unit, without quotes",
-                );
-                None
-            }
-        }
-    }
-
-    fn quality(&mut self, path: &Path<'_>, node: &Node<'a>) -> Option<Quality> {
-        const MEND: &str =
-            "write \"good\", \"uncertain\", \"bad\" or an OPC UA status code (unsigned, 32 bits)";
-        match &node.value {
-            Value::String(text) => {
-                let grade = match text.as_ref() {
-                    "good" => Grade::Good,
-                    "uncertain" => Grade::Uncertain,
-                    "bad" => Grade::Bad,
-                    other => {
-                        let what = format!("unknown quality \"{}\"", shorten(other));
-                        self.faults.add(path, node.offset, what, MEND);
-                        return None;
-                    }
-                };
-                Some(Quality { grade, code: None })
-            }
-            Value::Number { text, .. } => match text.parse::<u32>() {
-                Ok(code) => Some(Quality {
-                    grade: grade(code),
-                    code: Some(code),
-                }),
-                Err(_) => {
-                    let what = format!("{} is no status code of 32 bits", shorten(text));
-                    self.faults.add(path, node.offset, what, MEND);
-                    None
-                }
-            },
-            Value::Faulty => None,
-            other => {
-                let what = format!("{} where a quality is needed", kind(other));
-                self.faults.add(path, node.offset, what, MEND);
-                None
-            }
-        }
-    }
-
-    fn time(&mut self, path: &Path<'_>, node: &Node<'a>) -> Option<OffsetDateTime> {
-        const MEND: &str =
-            "write it as in RFC 3339, with seconds and offset: 2026-03-17T10:05:00+02:00";
-        let Value::String(text) = &node.value else {
-            self.wrong_type(path, node, "a time", MEND);
-            return None;
-        };
-        let Ok(time) = OffsetDateTime::parse(text, &Rfc3339) else {
-            let what = format!("\"{}\" is no time", shorten(text));
-            self.faults.add(path, node.offset, what, MEND);
-            return None;
-        };
-        let time = time.to_offset(UtcOffset::UTC);
-        if time > self.latest {
-            let what = format!("{} lies in the future", shorten(text));
-            self.faults.add(
-                path,
-                node.offset,
-                what,
-                "check the clock and the offset of the sender",
-            );
-            return None;
-        }
-        if time < OffsetDateTime::UNIX_EPOCH {
-            let what = format!("{} lies before 1970", shorten(text));
-            self.faults
-                .add(path, node.offset, what, "check the clock of the sender");
-            return None;
-        }
-        Some(time)
     }
 
     /// A name that can stand in the address of the report.
@@ -375,116 +274,6 @@ impl<'a> Reader<'a> {
             return None;
         }
         Some(name)
-    }
-
-    fn name(&mut self, path: &Path<'_>, node: &Node<'a>) -> Option<String> {
-        let Value::String(text) = &node.value else {
-            self.wrong_type(path, node, "a name", "write it in double quotes");
-            return None;
-        };
-        let length = text.chars().count();
-        if length == 0 || length > LONGEST_NAME {
-            self.faults.add(
-                path,
-                node.offset,
-                format!("a name of {length} characters"),
-                format!("a name has 1 to {LONGEST_NAME} characters"),
-            );
-            return None;
-        }
-        if text.chars().any(char::is_control) {
-            self.faults.add(
-                path,
-                node.offset,
-                "a control character in a name",
-                "leave it out",
-            );
-            return None;
-        }
-        Some(text.clone().into_owned())
-    }
-
-    /// The members of an object, unknown ones noted.
-    fn members<'n>(
-        &mut self,
-        path: &Path<'_>,
-        node: &'n Node<'a>,
-        what: &str,
-        known: &[&str],
-    ) -> Option<&'n [Member<'a>]> {
-        let Value::Object(members) = &node.value else {
-            self.wrong_type(
-                path,
-                node,
-                what,
-                &format!("send an object with {}", known.join(", ")),
-            );
-            return None;
-        };
-        for member in members {
-            if !known.contains(&member.key.as_ref()) {
-                self.faults.add(
-                    &Path::Key(path, &member.key),
-                    member.offset,
-                    format!("unknown field \"{}\"", shorten(&member.key)),
-                    format!("{what} has {}", known.join(", ")),
-                );
-            }
-        }
-        Some(members)
-    }
-
-    fn required<'n>(
-        &mut self,
-        path: &Path<'_>,
-        object: &Node<'a>,
-        members: &'n [Member<'a>],
-        key: &str,
-        mend: &str,
-    ) -> Option<&'n Node<'a>> {
-        let found = find(members, key).map(|member| &member.node);
-        if found.is_none() {
-            self.faults.add(
-                &Path::Key(path, key),
-                object.offset,
-                format!("`{key}` is missing"),
-                format!("add `{key}`: {mend}"),
-            );
-        }
-        found
-    }
-
-    fn wrong_type(&mut self, path: &Path<'_>, node: &Node<'a>, wanted: &str, mend: &str) {
-        if !matches!(node.value, Value::Faulty) {
-            let what = format!("{} where {wanted} is needed", kind(&node.value));
-            self.faults.add(path, node.offset, what, mend);
-        }
-    }
-}
-
-fn find<'n, 'a>(members: &'n [Member<'a>], key: &str) -> Option<&'n Member<'a>> {
-    members.iter().find(|member| member.key == key)
-}
-
-fn kind(value: &Value<'_>) -> &'static str {
-    match value {
-        Value::Null => "null",
-        Value::Bool => "true or false",
-        Value::Number { .. } => "a number",
-        Value::String(_) => "a string",
-        Value::Array(_) => "a list",
-        Value::Object(_) => "an object",
-        Value::Faulty => "something unreadable",
-    }
-}
-
-/// Severity of an OPC UA status code: its two highest bits (OPC UA Part 4,
-/// section 7.39, from memory). 11 is reserved, and to be taken as bad.
-fn grade(code: u32) -> Grade {
-    match code >> 30 {
-        0 => Grade::Good,
-        1 => Grade::Uncertain,
-        _ => Grade::Bad,
     }
 }
 

@@ -110,16 +110,21 @@ impl<'a> Faults<'a> {
             faults.push(fault);
         }
         if self.untold > 0 {
-            let noun = if self.untold == 1 { "fault" } else { "faults" };
-            faults.push(Fault {
-                severity: Severity::Error,
-                path: String::new(),
-                line: None,
-                column: None,
-                what: format!("{} more {noun} not told here", self.untold),
-                mend: "mend these first".to_owned(),
-            });
+            faults.push(untold(self.untold as u64));
         }
         faults
+    }
+}
+
+/// What counts the faults that are not told.
+pub(super) fn untold(count: u64) -> Fault {
+    let noun = if count == 1 { "fault" } else { "faults" };
+    Fault {
+        severity: Severity::Error,
+        path: String::new(),
+        line: None,
+        column: None,
+        what: format!("{count} more {noun} not told here"),
+        mend: "mend these first".to_owned(),
     }
 }

@@ -208,7 +208,12 @@ pub(super) fn quality_word(text: &str) -> Result<Quality, Wrong> {
 
 /// A quality as a status code, which was written as `text`.
 pub(super) fn status_code(text: &str, code: Option<u32>) -> Result<Quality, Wrong> {
-    let wrong = || (format!("{} is no status code of 32 bits", shorten(text)), QUALITY);
+    let wrong = || {
+        (
+            format!("{} is no status code of 32 bits", shorten(text)),
+            QUALITY,
+        )
+    };
     let code = code.ok_or_else(wrong)?;
     Ok(Quality {
         grade: grade(code),

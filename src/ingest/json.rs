@@ -21,7 +21,7 @@ pub(super) struct Node<'a> {
 #[derive(Debug)]
 pub(super) enum Value<'a> {
     Null,
-    Bool,
+    Bool(bool),
     Number {
         text: &'a str,
         value: f64,
@@ -227,7 +227,8 @@ impl<'a> Reader<'a, '_> {
         let text = &self.source[offset..self.at];
         match text {
             "null" => return Ok(Value::Null),
-            "true" | "false" => return Ok(Value::Bool),
+            "true" => return Ok(Value::Bool(true)),
+            "false" => return Ok(Value::Bool(false)),
             _ => {}
         }
         if is_number(text) {

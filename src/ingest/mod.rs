@@ -10,12 +10,19 @@
 //! in order of their tags. Two bodies with the same canonical form are the same
 //! batch, whatever their spelling.
 
+mod averaged;
 mod batch;
 mod digest;
 mod faults;
+mod fields;
 mod json;
+mod readings;
+mod write;
 
-pub use batch::{FUTURE_ALLOWANCE, Parsed, Refusal, parse};
+pub use batch::{Parsed, Refusal, parse};
+pub use fields::FUTURE_ALLOWANCE;
+pub use readings::{Block, Readings, ReadingsForm, ReadingsLines, readings};
+pub use write::write;
 
 /// Longest name of a batch or a tag, in characters.
 pub const LONGEST_NAME: usize = 128;

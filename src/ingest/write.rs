@@ -118,3 +118,7 @@ fn flags<S: Serializer>(flags: &[(Flag, u32)], serializer: S) -> Result<S::Ok, S
     }
     map.end()
 }
+
+#[cfg(test)]
+#[path = "write_tests.rs"]
+mod tests;

@@ -79,6 +79,30 @@ pub enum Flag {
     Stuck,
 }
 
+impl Flag {
+    /// Every flag, in the order in which they are told.
+    pub const ALL: [Flag; 6] = [
+        Flag::Bad,
+        Flag::Uncertain,
+        Flag::OutOfRange,
+        Flag::Spike,
+        Flag::Stale,
+        Flag::Stuck,
+    ];
+
+    /// Its name in batches and reports.
+    pub fn name(self) -> &'static str {
+        match self {
+            Flag::Bad => "bad",
+            Flag::Uncertain => "uncertain",
+            Flag::OutOfRange => "out-of-range",
+            Flag::Spike => "spike",
+            Flag::Stale => "stale",
+            Flag::Stuck => "stuck",
+        }
+    }
+}
+
 /// Quality of a reading, with the source's own code where it sent one.
 #[derive(Clone, Copy, Debug, PartialEq, Eq)]
 pub struct Quality {
