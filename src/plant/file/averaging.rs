@@ -68,8 +68,36 @@ const LONGEST: Duration = Duration::days(31);
 const MOST_NEIGHBOURS: f64 = 100.0;
 const MOST_DEVIATIONS: f64 = 1000.0;
 
-/// Reads the table; `None` after a fault.
+/// Reads the table, and what tags say on top of it; `None` after a fault.
 pub(super) fn read(
+    root: &Fields<'_>,
+    tags: &mut [TagDraft<'_>],
+    cx: &mut Context<'_>,
+) -> Option<AveragingSettings> {
+    let settings = table(root, tags, cx);
+    let usual = settings.as_ref().map(|settings| settings.usual.clone());
+    let usual = usual.unwrap_or_default();
+    let mut whole = true;
+    for draft in tags {
+        // Its keys have been looked at where the tag was read.
+        let entries = match draft.at.is_table() {
+            true => draft.at.entries(cx, TAG_EXAMPLE).unwrap_or_default(),
+            false => continue,
+        };
+        let Some((_, at)) = entries.into_iter().find(|(key, _)| *key == "averaging") else {
+            continue;
+        };
+        let fields = at.fields(cx, &TAG_SHAPE, TAG_EXAMPLE);
+        let own = fields.and_then(|fields| of_tag(&fields, &usual, cx));
+        whole &= own.is_some();
+        if let Some(tag) = &mut draft.tag {
+            tag.averaging = own;
+        }
+    }
+    settings.filter(|_| whole)
+}
+
+fn table(
     root: &Fields<'_>,
     tags: &[TagDraft<'_>],
     cx: &mut Context<'_>,
@@ -96,38 +124,7 @@ pub(super) fn read(
     })
 }
 
-/// Reads the key `averaging` of a tag on top of what is usual for the plant:
-/// `Some(None)` where there is none.
-pub(super) fn read_tag(
-    fields: &Fields<'_>,
-    usual: &TagAveraging,
-    cx: &mut Context<'_>,
-) -> Option<Option<TagAveraging>> {
-    let Some(at) = fields.get("averaging") else {
-        return Some(None);
-    };
-    let fields = at.fields(cx, &TAG_SHAPE, TAG_EXAMPLE)?;
-    of_tag(&fields, usual, cx).map(Some)
-}
-
-/// What is usual for tags, for who reads them before the whole table: a fault of
-/// the table is not told.
-pub(super) fn usual(root: &Fields<'_>) -> TagAveraging {
-    let usual = TagAveraging::default();
-    let Some(at) = root.get("averaging") else {
-        return usual;
-    };
-    let mut silent = Context::new("");
-    let fields = at.fields(&mut silent, &SHAPE, EXAMPLE);
-    let read = fields.and_then(|fields| of_tag(&fields, &usual, &mut silent));
-    read.unwrap_or(usual)
-}
-
-fn of_tag(
-    fields: &Fields<'_>,
-    usual: &TagAveraging,
-    cx: &mut Context<'_>,
-) -> Option<TagAveraging> {
+fn of_tag(fields: &Fields<'_>, usual: &TagAveraging, cx: &mut Context<'_>) -> Option<TagAveraging> {
     let method = method(fields, usual.method, cx);
     let bounds = (SECOND, LONGEST);
     let stale_after = span(fields, "stale-after", usual.stale_after, bounds, cx);

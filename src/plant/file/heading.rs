@@ -23,6 +23,7 @@ pub(super) const PLANT: Shape = Shape {
         "tags",
         "assumptions",
         "alarms",
+        "averaging",
         "portable",
     ],
 };

@@ -10,6 +10,8 @@
 mod alarms;
 mod amount;
 mod assumptions;
+mod averaging;
+mod durations;
 mod equipment;
 mod fault;
 mod heading;
@@ -37,7 +39,7 @@ use self::heading::Heading;
 use self::network::{End, Network};
 use self::reader::{At, Context};
 use self::tree::Node;
-use super::{AveragingSettings, Equipment, EquipmentId, Kind, Plant, Retention, Stream};
+use super::{Equipment, EquipmentId, Kind, Plant, Retention, Stream};
 
 /// How a plant file is written.
 #[derive(Clone, Copy, Debug, PartialEq, Eq)]
@@ -116,7 +118,8 @@ fn plant(root: &Node, cx: &mut Context<'_>) -> Option<Plant> {
     let heading = Heading::read(&root, cx);
     let network = Network::read(&root, cx);
     let kinds = joints::kinds(&network, cx);
-    let tags = tags::read(&root, &network, cx);
+    let mut tags = tags::read(&root, &network, cx);
+    let averaging = averaging::read(&root, &mut tags, cx);
     let assumptions = assumptions::read(&root, &network, &tags, cx);
     let alarms = alarms::read(&root, cx);
     let portable = portable::read(&root, cx);
@@ -145,7 +148,7 @@ fn plant(root: &Node, cx: &mut Context<'_>) -> Option<Plant> {
         portable: portable?,
         statuses: Vec::new(),
         running_when: None,
-        averaging: AveragingSettings::default(),
+        averaging: averaging?,
         retention: Retention::default(),
     };
     let places = warnings::Places {

@@ -46,6 +46,7 @@ const TAG: Shape = Shape {
         "reference",
         "uncertainty",
         "normal",
+        "averaging",
         "description",
     ],
 };
