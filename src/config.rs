@@ -1,6 +1,7 @@
 //! Settings of the service, from the command line and the environment.
 
-use crate::server::{Hook, Limits, Options};
+use crate::access::Rate;
+use crate::server::{self, Hook, Limits, Options};
 use crate::store::SqliteOptions;
 use crate::telemetry::LogFormat;
 use anyhow::Context;
@@ -31,6 +32,14 @@ pub struct Config {
     #[command(flatten)]
     pub bounds: Bounds,
 
+    /// What tokens may do.
+    #[command(flatten)]
+    pub access: Access,
+
+    /// What TLS is spoken with.
+    #[command(flatten)]
+    pub tls: Tls,
+
     /// Where events of alarms are sent.
     #[command(flatten)]
     pub webhook: Webhook,
@@ -40,10 +49,33 @@ pub struct Config {
     pub log: Log,
 }
 
+/// What tokens may do.
+#[derive(Args, Clone, Debug)]
+pub struct Access {
+    /// Requests a second of each token that was made without a rate of its own,
+    /// and as many at once; more get 429.
+    #[arg(long, env = "COUNTERPOISE_TOKEN_RATE", default_value_t = Limits::default().token_rate)]
+    pub token_rate: Rate,
+}
+
+/// What TLS is spoken with.
+#[derive(Args, Clone, Debug, Default)]
+pub struct Tls {
+    /// File with the chain of certificates that TLS is spoken with, PEM, the
+    /// service's own first; read again when it changes and on SIGHUP.
+    #[arg(long, env = "COUNTERPOISE_TLS_CERT", requires = "tls_key")]
+    pub tls_cert: Option<PathBuf>,
+
+    /// File with the key of that certificate, PEM.
+    #[arg(long, env = "COUNTERPOISE_TLS_KEY", requires = "tls_cert")]
+    pub tls_key: Option<PathBuf>,
+}
+
 /// Where events of alarms are sent.
 #[derive(Args, Clone, Debug, Default)]
 pub struct Webhook {
-    /// Address that every event of an alarm is posted to, signed: http://...
+    /// Address that every event of an alarm is posted to, signed: https://...
+    /// or http://...
     #[arg(
         long,
         env = "COUNTERPOISE_WEBHOOK_URL",
@@ -58,6 +90,11 @@ pub struct Webhook {
         requires = "webhook_url"
     )]
     pub webhook_secret_file: Option<PathBuf>,
+
+    /// File with the root certificates that an https:// address is trusted by,
+    /// PEM; those of the system unless set.
+    #[arg(long, env = "COUNTERPOISE_WEBHOOK_CA", requires = "webhook_url")]
+    pub webhook_ca: Option<PathBuf>,
 }
 
 /// How a service logs.
@@ -111,11 +148,11 @@ pub struct Bounds {
 }
 
 impl Config {
-    /// Settings of the server; reads the webhook's secret.
+    /// Settings of the server; reads the files of TLS and the webhook.
     ///
     /// # Errors
     ///
-    /// Where the webhook's secret cannot be read, or it or the address be used.
+    /// Where a file cannot be read, or it or the webhook's address be used.
     pub fn server(&self) -> anyhow::Result<Options> {
         let defaults = Limits::default();
         Ok(Options {
@@ -123,6 +160,7 @@ impl Config {
             grace: self.bounds.grace,
             tick: TICK,
             webhook: self.webhook.hook()?,
+            tls: self.tls.load()?,
             limits: Limits {
                 in_flight: self.bounds.max_in_flight,
                 connections: self.bounds.max_connections,
@@ -131,6 +169,8 @@ impl Config {
                 document: self.bounds.max_document,
                 stream: self.bounds.max_stream,
                 read_timeout: self.bounds.read_timeout,
+                token_rate: self.access.token_rate,
+                token_freshness: defaults.token_freshness,
             },
         })
     }
@@ -141,6 +181,16 @@ impl Config {
     }
 }
 
+impl Tls {
+    fn load(&self) -> anyhow::Result<Option<server::Tls>> {
+        let (Some(cert), Some(key)) = (&self.tls_cert, &self.tls_key) else {
+            return Ok(None);
+        };
+        let tls = server::Tls::load(cert, key).context("TLS cannot be spoken")?;
+        Ok(Some(tls))
+    }
+}
+
 impl Webhook {
     fn hook(&self) -> anyhow::Result<Option<Hook>> {
         let (Some(url), Some(file)) = (&self.webhook_url, &self.webhook_secret_file) else {
@@ -148,8 +198,14 @@ impl Webhook {
         };
         let secret = std::fs::read(file)
             .with_context(|| format!("cannot read the webhook's secret {}", file.display()))?;
-        let hook = Hook::new(url, &secret).context("the webhook cannot be used")?;
-        Ok(Some(hook))
+        let unusable = "the webhook cannot be used";
+        let hook = Hook::new(url, &secret).context(unusable)?;
+        let Some(file) = &self.webhook_ca else {
+            return Ok(Some(hook));
+        };
+        let roots = std::fs::read(file)
+            .with_context(|| format!("cannot read the webhook's roots {}", file.display()))?;
+        Ok(Some(hook.trusting(&roots).context(unusable)?))
     }
 }
 

@@ -23,6 +23,7 @@ fn main() -> ExitCode {
         Command::Backup(backup) => run(cli::backup(&backup)),
         Command::Restore(restore) => run(cli::restore(&restore)),
         Command::Verify(verify) => run(cli::verify(&verify)),
+        Command::Token(tokens) => run(cli::tokens(tokens)),
         Command::Openapi => cli::openapi(),
         Command::MakeDemoFixture { out } => cli::make_demo_fixture(&out),
     };
@@ -72,12 +73,6 @@ async fn run_demo(demo: cli::Demo) -> anyhow::Result<()> {
 }
 
 async fn start(config: &Config) -> anyhow::Result<Server> {
-    if !config.listen.ip().is_loopback() {
-        tracing::warn!(
-            address = %config.listen,
-            "there are no access tokens yet: whoever reaches this address can read and write everything"
-        );
-    }
     // Before a database is made: a wrong option changes nothing.
     let options = config.server()?;
     let store = SqliteStore::open(config.store())

@@ -1,7 +1,8 @@
 //! The log: one line per event on standard error, as text or JSON.
 
+use crate::access::masked;
 use clap::ValueEnum;
-use std::io::{self, IsTerminal};
+use std::io::{self, IsTerminal, Write};
 use tracing_subscriber::EnvFilter;
 
 /// Form of the log.
@@ -12,6 +13,23 @@ pub enum LogFormat {
     Text,
     /// One JSON document per line.
     Json,
+}
+
+/// Standard error, on which no token can be read: whoever writes one where it
+/// does not belong, in an address say, does not find it in the log.
+struct Masked(io::Stderr);
+
+impl Write for Masked {
+    /// An event comes whole, as one piece.
+    fn write(&mut self, bytes: &[u8]) -> io::Result<usize> {
+        let text = String::from_utf8_lossy(bytes);
+        self.0.write_all(masked(&text).as_bytes())?;
+        Ok(bytes.len())
+    }
+
+    fn flush(&mut self) -> io::Result<()> {
+        self.0.flush()
+    }
 }
 
 /// Starts logging. `filter` is as `tracing-subscriber` reads it: `info`,
@@ -26,7 +44,7 @@ pub fn start(format: LogFormat, filter: &str) -> anyhow::Result<()> {
     // about it would go the same way, and panic.
     let builder = tracing_subscriber::fmt()
         .with_env_filter(filter)
-        .with_writer(io::stderr)
+        .with_writer(|| Masked(io::stderr()))
         .with_ansi(io::stderr().is_terminal())
         .log_internal_errors(false);
     let started = match format {

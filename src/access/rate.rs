@@ -13,6 +13,10 @@ pub struct Rate(f64);
 pub struct NoRate;
 
 impl Rate {
+    /// What a token may ask for unless something else is said: more than a
+    /// historian needs.
+    pub const USUAL: Rate = Rate(200.0);
+
     const LEAST: f64 = 1e-6;
     const MOST: f64 = 1e6;
 

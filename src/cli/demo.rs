@@ -4,7 +4,8 @@
 use super::output::print;
 use super::summary::Summary;
 use super::table::{Table, fixed};
-use crate::config::{Bounds, Config, Log};
+use crate::access::Rate;
+use crate::config::{Access, Bounds, Config, Log};
 use crate::demo;
 use crate::report::{Assessment, Report};
 use anyhow::{Context, bail, ensure};
@@ -62,6 +63,10 @@ impl Demo {
             listen,
             database: self.database.clone(),
             bounds: self.bounds.clone(),
+            access: Access {
+                token_rate: Rate::USUAL,
+            },
+            tls: Default::default(),
             webhook: Default::default(),
             log: Log {
                 log_format: Default::default(),

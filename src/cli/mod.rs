@@ -19,6 +19,7 @@ mod suspects;
 mod table;
 mod tell_apart;
 mod text;
+mod token;
 mod words;
 
 pub use check::{Check, check};
@@ -28,6 +29,7 @@ pub use influences::{Influences, influences};
 pub use output::Unread;
 pub use reconcile::{Reconcile, reconcile};
 pub use tell_apart::{TellApart, tell_apart};
+pub use token::{Tokens, tokens};
 
 use crate::config::Config;
 use clap::{Parser, Subcommand};
@@ -81,6 +83,8 @@ pub enum Command {
     Restore(Restore),
     /// Look over a copy of the database: whole, readable, of a known schema?
     Verify(Verify),
+    /// Make, list and revoke tokens; beside a service that may be running.
+    Token(Tokens),
     /// Print the OpenAPI document of the service.
     Openapi,
     /// Make the demo's batches, and the truth beside them, again from their seed.

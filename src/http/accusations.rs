@@ -2,6 +2,7 @@
 //! right.
 
 use super::App;
+use super::access::Who;
 use super::alarms::number;
 use super::body::Permit;
 use super::error::{Kind, Problem, count};
@@ -9,6 +10,7 @@ use super::fields::{self, Fields};
 use super::headers::next_link;
 use super::params::{Address, Params, with_cursor};
 use super::shapes;
+use crate::access::DeedKind;
 use crate::alarms::{Accusation, AsFound, Closing, NotClosed, Record, record};
 use crate::plant::{Fault, Severity};
 use crate::report::{Cause, Hypothesis};
@@ -18,6 +20,7 @@ use axum::extract::{Request, State};
 use axum::http::Uri;
 use axum::response::{IntoResponse, Response};
 use serde::Serialize;
+use serde_json::json;
 use utoipa::ToSchema;
 
 /// Accusations that are read together for the record.
@@ -96,6 +99,7 @@ pub(super) async fn list(
 pub(super) async fn close(
     State(app): State<App>,
     Address((plant, id)): Address<(String, String)>,
+    who: Who,
     _permit: Permit,
     request: Request,
 ) -> Result<Json<Accusation>, Problem> {
@@ -105,7 +109,9 @@ pub(super) async fn close(
     let mut body = fields::read(&app, request).await?;
     let closing = closing(&mut body, &app);
     let closing = body.finish(closing)?;
-    match app.engine.close(&plant, id, closing).await? {
+    let what = json!({"accusation": id, "outcome": closing.outcome, "found": closing.found, "by": closing.by});
+    let deed = who.deed(DeedKind::AccusationClosed, &plant, what, closing.entered);
+    match app.engine.close(&plant, id, closing, deed).await? {
         Some(Ok(closed)) => Ok(Json(closed)),
         Some(Err(not)) => Err(refusal(&not)),
         None => Err(Problem::new(

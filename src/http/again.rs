@@ -1,6 +1,7 @@
 //! Reconciling again, what came of it before, and what a report hangs on.
 
 use super::App;
+use super::access::Who;
 use super::batches::NDJSON;
 use super::body::Permit;
 use super::engine::no_batch;
@@ -9,6 +10,7 @@ use super::fields::{self, Fields};
 use super::observe::RequestId;
 use super::params::{Address, Params};
 use super::shapes;
+use crate::access::DeedKind;
 use crate::report::{Influences, Report, Verdict};
 use crate::store::{Again, BatchLine, BatchQuery, Cursor};
 use axum::body::{Body, Bytes};
@@ -18,6 +20,7 @@ use axum::response::{IntoResponse, Response};
 use axum::{Extension, Json};
 use futures::{Stream, StreamExt};
 use serde::Serialize;
+use serde_json::json;
 use std::convert::Infallible;
 use std::sync::Arc;
 use time::OffsetDateTime;
@@ -97,6 +100,7 @@ pub(super) struct Remade {
 pub(super) async fn batch(
     State(app): State<App>,
     Address((plant, batch)): Address<(String, String)>,
+    who: Who,
     _permit: Permit,
     request: Request,
 ) -> Result<Response, Problem> {
@@ -105,7 +109,7 @@ pub(super) async fn batch(
     let mut body = fields::read(&app, request).await?;
     let revision = body.optional_count("revision");
     let again = why(&mut body, app.clock.now());
-    let again = body.finish(again)?;
+    let again = noted(&who, &plant, body.finish(again)?, revision);
     let made = app.engine.again(&plant, &batch, revision, again).await?;
     let version = [(VERSION, HeaderValue::from(made.1))];
     Ok((version, Json(&*made.0)).into_response())
@@ -132,6 +136,7 @@ pub(super) async fn period(
     State(app): State<App>,
     Address(plant): Address<String>,
     Extension(id): Extension<RequestId>,
+    who: Who,
     permit: Permit,
     request: Request,
 ) -> Result<Response, Problem> {
@@ -145,6 +150,7 @@ pub(super) async fn period(
     let revision = body.optional_count("revision");
     let again = why(&mut body, app.clock.now());
     let (again, from, to) = body.finish(again.zip(from).zip(to).map(|((a, f), t)| (a, f, t)))?;
+    let again = noted(&who, &plant, again, revision);
     if let Some(number) = revision {
         app.engine.revisions().stored(&plant, Some(number)).await?;
     }
@@ -156,7 +162,7 @@ pub(super) async fn period(
         after: None,
         limit: TOGETHER,
     };
-    let ending = app.ending.clone();
+    let over = app.until_over(&who);
     let lines = finished(app.clone(), query).then(move |line| {
         let (app, plant, again, id) = (app.clone(), plant.clone(), again.clone(), id.clone());
         async move {
@@ -172,7 +178,7 @@ pub(super) async fn period(
     let lines = lines.inspect(move |_| {
         let _ = &permit;
     });
-    let body = Body::from_stream(lines.take_until(ending.cancelled_owned()));
+    let body = Body::from_stream(lines.take_until(over));
     Ok(([(header::CONTENT_TYPE, NDJSON)], body).into_response())
 }
 
@@ -224,6 +230,13 @@ fn why(body: &mut Fields, at: OffsetDateTime) -> Option<Again> {
         reason: reason?,
         deed: None,
     })
+}
+
+/// The same with its entry in the audit log.
+fn noted(who: &Who, plant: &str, mut again: Again, revision: Option<u32>) -> Again {
+    let what = json!({"by": again.by, "reason": again.reason, "revision": revision});
+    again.deed = Some(who.deed(DeedKind::ReconciledAgain, plant, what, again.at));
+    again
 }
 
 /// List the versions of a report.

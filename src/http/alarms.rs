@@ -1,19 +1,23 @@
 //! Alarms: listing them, and what people do to them.
 
 use super::App;
+use super::access::Who;
 use super::body::Permit;
 use super::engine::NotActed;
 use super::error::{Kind, Problem, count};
 use super::fields::{self, Fields};
 use super::params::{Address, Params};
 use super::shapes;
+use crate::access::{Deed, DeedKind};
 use crate::alarms::{Act, Alarm, Event, Refused, State as AlarmState, Watch};
 use crate::plant::{Fault, Severity};
 use axum::Json;
 use axum::extract::{Request, State};
 use axum::http::Uri;
 use serde::Serialize;
+use serde_json::{Value, json};
 use std::sync::Arc;
+use time::format_description::well_known::Rfc3339;
 use utoipa::ToSchema;
 
 const STATES: &str = "normal, active-unacknowledged, active-acknowledged, \
@@ -87,12 +91,17 @@ pub(super) async fn list(
 pub(super) async fn acknowledge(
     State(app): State<App>,
     Address(place): Address<(String, String)>,
+    who: Who,
     _permit: Permit,
     request: Request,
 ) -> Result<Json<Event>, Problem> {
     let (id, body, act) = asked(&app, &place, request).await?;
     let act = body.finish(act)?;
-    done(&app, &place.0, move |watch| watch.acknowledge(id, act)).await
+    let deed = deed(&who, &place, "acknowledge", &act, json!({}));
+    done(&app, deed, &place.0, move |watch| {
+        watch.acknowledge(id, act)
+    })
+    .await
 }
 
 /// Silence an alarm until a time.
@@ -117,6 +126,7 @@ pub(super) async fn acknowledge(
 pub(super) async fn shelve(
     State(app): State<App>,
     Address(place): Address<(String, String)>,
+    who: Who,
     _permit: Permit,
     request: Request,
 ) -> Result<Json<Event>, Problem> {
@@ -126,7 +136,12 @@ pub(super) async fn shelve(
         body.fault("until", "this time is not ahead", "give a later one");
     }
     let (act, until) = body.finish(act.zip(until))?;
-    done(&app, &place.0, move |watch| watch.shelve(id, until, act)).await
+    let until_when = until.format(&Rfc3339).unwrap_or_default();
+    let deed = deed(&who, &place, "shelve", &act, json!({"until": until_when}));
+    done(&app, deed, &place.0, move |watch| {
+        watch.shelve(id, until, act)
+    })
+    .await
 }
 
 /// End the silence before its time.
@@ -148,12 +163,14 @@ pub(super) async fn shelve(
 pub(super) async fn unshelve(
     State(app): State<App>,
     Address(place): Address<(String, String)>,
+    who: Who,
     _permit: Permit,
     request: Request,
 ) -> Result<Json<Event>, Problem> {
     let (id, body, act) = asked(&app, &place, request).await?;
     let act = body.finish(act)?;
-    done(&app, &place.0, move |watch| watch.unshelve(id, act)).await
+    let deed = deed(&who, &place, "unshelve", &act, json!({}));
+    done(&app, deed, &place.0, move |watch| watch.unshelve(id, act)).await
 }
 
 /// Take an alarm out of service.
@@ -177,13 +194,16 @@ pub(super) async fn unshelve(
 pub(super) async fn remove_from_service(
     State(app): State<App>,
     Address(place): Address<(String, String)>,
+    who: Who,
     _permit: Permit,
     request: Request,
 ) -> Result<Json<Event>, Problem> {
     let (id, mut body, act) = asked(&app, &place, request).await?;
     let reason = body.text("reason");
     let (act, reason) = body.finish(act.zip(reason))?;
-    done(&app, &place.0, move |watch| {
+    let because = json!({"reason": reason});
+    let deed = deed(&who, &place, "remove-from-service", &act, because);
+    done(&app, deed, &place.0, move |watch| {
         watch.remove_from_service(id, &reason, act)
     })
     .await
@@ -208,12 +228,14 @@ pub(super) async fn remove_from_service(
 pub(super) async fn return_to_service(
     State(app): State<App>,
     Address(place): Address<(String, String)>,
+    who: Who,
     _permit: Permit,
     request: Request,
 ) -> Result<Json<Event>, Problem> {
     let (id, body, act) = asked(&app, &place, request).await?;
     let act = body.finish(act)?;
-    done(&app, &place.0, move |watch| {
+    let deed = deed(&who, &place, "return-to-service", &act, json!({}));
+    done(&app, deed, &place.0, move |watch| {
         watch.return_to_service(id, act)
     })
     .await
@@ -239,13 +261,23 @@ async fn asked(
     Ok((id, body, act))
 }
 
+/// The act as it goes into the audit log.
+fn deed(who: &Who, (plant, id): &(String, String), word: &str, act: &Act, more: Value) -> Deed {
+    let mut what = json!({"alarm": id, "act": word, "by": act.by, "note": act.note});
+    if let (Value::Object(what), Value::Object(more)) = (&mut what, more) {
+        what.extend(more);
+    }
+    who.deed(DeedKind::AlarmActed, plant, what, act.at)
+}
+
 async fn done(
     app: &App,
+    deed: Deed,
     plant: &str,
     act: impl FnOnce(&mut Watch) -> Result<Event, Refused> + Send + 'static,
 ) -> Result<Json<Event>, Problem> {
     let engine = Arc::clone(&app.engine);
-    match engine.act(plant, act).await {
+    match engine.act(plant, deed, act).await {
         Ok(event) => Ok(Json(event)),
         Err(NotActed::Failed(problem)) => Err(problem),
         Err(NotActed::Refused(refused)) => Err(refusal(&refused)),

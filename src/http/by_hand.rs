@@ -1,18 +1,22 @@
 //! What engineers decide by hand about tags.
 
 use super::App;
+use super::access::Who;
 use super::body::Permit;
 use super::error::{Kind, Problem};
 use super::fields::{self, Fields};
 use super::params::{Address, Params};
 use super::shapes;
+use crate::access::{Deed, DeedKind};
 use crate::plant::{Action, Plant};
 use crate::store::{ByHandRow, Ended, NewByHand};
 use axum::Json;
 use axum::extract::{Request, State};
 use axum::http::{StatusCode, Uri};
 use serde::Serialize;
+use serde_json::json;
 use time::OffsetDateTime;
+use time::format_description::well_known::Rfc3339;
 use utoipa::ToSchema;
 
 /// Decisions in the order of entering.
@@ -118,6 +122,7 @@ pub(super) async fn list(
 pub(super) async fn decide(
     State(app): State<App>,
     Address(plant): Address<String>,
+    who: Who,
     _permit: Permit,
     request: Request,
 ) -> Result<(StatusCode, Json<Decision>), Problem> {
@@ -125,10 +130,28 @@ pub(super) async fn decide(
     let revision = app.engine.revisions().get(&plant, None).await?;
     let mut body = fields::read(&app, request).await?;
     let new = decision(&mut body, revision.compiled.plant(), app.clock.now());
-    let new = body.finish(new)?;
+    let mut new = body.finish(new)?;
+    new.deed = Some(entered(&who, &plant, &new));
     let row = app.engine.decide(&plant, new).await?;
     let decision = told(row, revision.compiled.plant());
     Ok((StatusCode::CREATED, Json(decision)))
+}
+
+fn entered(who: &Who, plant: &str, new: &NewByHand) -> Deed {
+    let offset = match new.action {
+        Action::OutOfService => None,
+        Action::Offset(offset) => Some(offset),
+    };
+    let time = |time: OffsetDateTime| time.format(&Rfc3339).ok();
+    let what = json!({
+        "tag": new.tag,
+        "offset": offset,
+        "from": time(new.from),
+        "until": new.until.and_then(time),
+        "reason": new.reason,
+        "by": new.by,
+    });
+    who.deed(DeedKind::ByHandEntered, plant, what, new.entered)
 }
 
 fn decision(body: &mut Fields, plant: &Plant, entered: OffsetDateTime) -> Option<NewByHand> {
@@ -198,6 +221,7 @@ fn decision(body: &mut Fields, plant: &Plant, entered: OffsetDateTime) -> Option
 pub(super) async fn end(
     State(app): State<App>,
     Address((plant, id)): Address<(String, String)>,
+    who: Who,
     _permit: Permit,
     request: Request,
 ) -> Result<Json<Decision>, Problem> {
@@ -222,11 +246,9 @@ pub(super) async fn end(
     }
     let by = body.by();
     let by = body.finish(by)?;
-    let ended = Ended {
-        by,
-        at: now,
-        deed: None,
-    };
+    let what = json!({"until": until.format(&Rfc3339).ok(), "by": by});
+    let deed = Some(who.deed(DeedKind::ByHandEnded, &plant, what, now));
+    let ended = Ended { by, at: now, deed };
     let row = app
         .engine
         .end_decision(&plant, number, until, ended)

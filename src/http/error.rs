@@ -13,6 +13,7 @@ use axum::http::{HeaderName, HeaderValue, StatusCode, header};
 use axum::response::{IntoResponse, Response};
 use serde::Serialize;
 use std::any::Any;
+use std::borrow::Cow;
 use utoipa::ToSchema;
 
 /// The media type of problem documents.
@@ -25,6 +26,10 @@ pub enum Kind {
     Malformed,
     /// A parameter of the query cannot be used.
     BadParameter,
+    /// A token is needed that is known and in force.
+    Unauthorised,
+    /// What is asked for is not allowed to whoever asks.
+    Forbidden,
     /// There is no such thing.
     NotFound,
     /// The address does not take the method.
@@ -47,6 +52,8 @@ pub enum Kind {
     Unacceptable,
     /// There is too much to do now.
     Overloaded,
+    /// One client asks more often than it may.
+    TooOften,
     /// The service made a mistake.
     Internal,
     /// The service cannot do this now.
@@ -68,6 +75,16 @@ impl Kind {
                 StatusCode::BAD_REQUEST,
                 "urn:counterpoise:problem:bad-parameter",
                 "A parameter cannot be used",
+            ),
+            Kind::Unauthorised => (
+                StatusCode::UNAUTHORIZED,
+                "urn:counterpoise:problem:unauthorised",
+                "A token is needed",
+            ),
+            Kind::Forbidden => (
+                StatusCode::FORBIDDEN,
+                "urn:counterpoise:problem:forbidden",
+                "This is not allowed to you",
             ),
             Kind::NotFound => (
                 StatusCode::NOT_FOUND,
@@ -123,6 +140,11 @@ impl Kind {
                 StatusCode::TOO_MANY_REQUESTS,
                 "urn:counterpoise:problem:overloaded",
                 "There is too much to do now",
+            ),
+            Kind::TooOften => (
+                StatusCode::TOO_MANY_REQUESTS,
+                "urn:counterpoise:problem:too-often",
+                "You ask more often than you may",
             ),
             Kind::Internal => (
                 StatusCode::INTERNAL_SERVER_ERROR,
@@ -183,7 +205,7 @@ pub struct Problem {
     #[serde(flatten)]
     standing: Option<Box<Standing>>,
     #[serde(skip)]
-    headers: Box<[(HeaderName, &'static str)]>,
+    headers: Box<[(HeaderName, Cow<'static, str>)]>,
 }
 
 /// The state of an alarm to which something cannot be done.
@@ -203,7 +225,7 @@ impl Problem {
         let (status, kind_urn, title) = kind.describe();
         let mut headers = Vec::new();
         if matches!(kind, Kind::Overloaded | Kind::Unavailable) {
-            headers.push((header::RETRY_AFTER, "1"));
+            headers.push((header::RETRY_AFTER, "1".into()));
         }
         Problem {
             kind: kind_urn,
@@ -231,9 +253,9 @@ impl Problem {
     }
 
     /// The same with a header on its response.
-    pub fn with_header(mut self, name: HeaderName, value: &'static str) -> Self {
+    pub fn with_header(mut self, name: HeaderName, value: impl Into<Cow<'static, str>>) -> Self {
         let mut headers = self.headers.into_vec();
-        headers.push((name, value));
+        headers.push((name, value.into()));
         self.headers = headers.into_boxed_slice();
         self
     }
@@ -346,7 +368,9 @@ pub(super) fn finish(mut response: Response, request_id: &str) -> Response {
     }
     headers.insert(header::CONTENT_TYPE, HeaderValue::from_static(PROBLEM_JSON));
     for (name, value) in problem.headers.iter() {
-        headers.insert(name, HeaderValue::from_static(value));
+        if let Ok(value) = HeaderValue::from_str(value) {
+            headers.insert(name, value);
+        }
     }
     let mut finished = (status, problem.document()).into_response();
     *finished.headers_mut() = headers;

@@ -6,6 +6,7 @@
 //! and nothing can be lost between what was before and what comes next.
 
 use super::App;
+use super::access::Who;
 use super::engine::Engine;
 use super::error::{Kind, Problem, count};
 use super::params::{Address, Params};
@@ -60,6 +61,7 @@ const LAST_EVENT_ID: HeaderName = HeaderName::from_static("last-event-id");
 pub(super) async fn listen(
     State(app): State<App>,
     Address(plant): Address<String>,
+    who: Who,
     uri: Uri,
     headers: HeaderMap,
 ) -> Result<Response, Problem> {
@@ -81,8 +83,7 @@ pub(super) async fn listen(
         told,
         _place: place,
     };
-    let ended = app.ending.clone().cancelled_owned();
-    let events = reader.events().take_until(ended);
+    let events = reader.events().take_until(app.until_over(&who));
     let alive = KeepAlive::new().interval(SIGN_OF_LIFE).text("alive");
     // Nothing on the way may hold it back or keep it.
     let headers = [(header::CACHE_CONTROL, "no-store")];

@@ -1,12 +1,14 @@
 //! Readings taken in the field for one batch.
 
 use super::App;
+use super::access::Who;
 use super::body::Permit;
 use super::engine::{FieldReading, FieldReadings, no_batch};
 use super::error::{Kind, Problem};
 use super::fields::{self, Fields};
 use super::params::{Address, Params};
 use super::shapes;
+use crate::access::DeedKind;
 use crate::report::Report;
 use crate::store::Again;
 use axum::Json;
@@ -14,6 +16,7 @@ use axum::extract::{Request, State};
 use axum::http::Uri;
 use axum::response::{IntoResponse, Response};
 use serde::Serialize;
+use serde_json::json;
 use time::OffsetDateTime;
 use utoipa::ToSchema;
 
@@ -70,6 +73,7 @@ struct Entry {
 pub(super) async fn enter(
     State(app): State<App>,
     Address((plant, batch)): Address<(String, String)>,
+    who: Who,
     _permit: Permit,
     request: Request,
 ) -> Result<Response, Problem> {
@@ -81,14 +85,17 @@ pub(super) async fn enter(
     let readings = body.list("readings", MOST, reading);
     let entry = at.zip(readings).zip(by);
     let ((at, readings), by) = body.finish(entry)?;
+    let what = json!({"by": by, "reason": REASON});
     let again = Again {
+        deed: Some(who.deed(DeedKind::ReconciledAgain, &plant, what, now)),
         at: now,
         by,
         reason: REASON.to_owned(),
-        deed: None,
     };
     let new = FieldReadings { at, readings };
-    let report = app.engine.enter(&plant, &batch, new, again).await?;
+    let what = json!({"by": again.by, "readings": new});
+    let deed = who.deed(DeedKind::FieldReadingEntered, &plant, what, now);
+    let report = app.engine.enter(&plant, &batch, new, again, deed).await?;
     Ok(Json(&*report).into_response())
 }
 

@@ -4,10 +4,12 @@
 //! Handlers take apart, call and convert; the way of a batch is in `engine`,
 //! and `error` alone knows status codes.
 
+mod access;
 mod accusations;
 mod again;
 mod alarms;
 mod ambient;
+mod audit;
 mod batches;
 mod body;
 mod by_hand;
@@ -27,12 +29,15 @@ mod revisions;
 mod series;
 pub mod shapes;
 
+pub use access::{Peer, is_loopback};
 pub use ambient::{Clock, Entropy, SystemClock, SystemEntropy};
 pub use error::{Kind, Problem};
 pub use openapi::document;
 pub use outgoing::{Hook, Unusable};
 
-use crate::store::Store;
+use crate::access::Rate;
+use crate::store::{Store, StoreError};
+use access::{Gate, Who};
 use axum::http::header;
 use axum::middleware::from_fn_with_state;
 use engine::Engine;
@@ -44,7 +49,7 @@ use tower_http::catch_panic::CatchPanicLayer;
 use tower_http::compression::{CompressionLayer, DefaultPredicate, Predicate};
 
 /// What one request, and all of them together, may take.
-#[derive(Clone, Debug, PartialEq, Eq)]
+#[derive(Clone, Debug, PartialEq)]
 pub struct Limits {
     /// Requests with a body that are worked on at once; more are refused.
     pub in_flight: usize,
@@ -60,6 +65,11 @@ pub struct Limits {
     pub stream: usize,
     /// How long a client may take for its headers, and again for its body.
     pub read_timeout: Duration,
+    /// Requests a second of a token that has no rate of its own.
+    pub token_rate: Rate,
+    /// How long what is known of the tokens is good for without asking whether
+    /// another program has changed them; a second at most.
+    pub token_freshness: Duration,
 }
 
 impl Default for Limits {
@@ -72,6 +82,8 @@ impl Default for Limits {
             document: 4 << 20,
             stream: 32 << 20,
             read_timeout: Duration::from_secs(10),
+            token_rate: Rate::USUAL,
+            token_freshness: Duration::from_millis(250),
         }
     }
 }
@@ -81,6 +93,7 @@ impl Default for Limits {
 pub struct App {
     store: Arc<dyn Store>,
     engine: Arc<Engine>,
+    gate: Arc<Gate>,
     clock: Arc<dyn Clock>,
     entropy: Arc<dyn Entropy>,
     limits: Arc<Limits>,
@@ -99,8 +112,15 @@ impl App {
         limits: Limits,
     ) -> Self {
         let engine = Engine::new(Arc::clone(&store), Arc::clone(&clock), limits.workers);
+        let gate = Gate::new(
+            Arc::clone(&store),
+            Arc::clone(&clock),
+            limits.token_rate,
+            limits.token_freshness,
+        );
         App {
             engine: Arc::new(engine),
+            gate: Arc::new(gate),
             listeners: Arc::new(Semaphore::new(limits.listeners)),
             ending: CancellationToken::new(),
             permits: Arc::new(Semaphore::new(limits.in_flight)),
@@ -121,12 +141,33 @@ impl App {
         &self.limits
     }
 
+    /// Whether there are no tokens, so that this machine alone is answered.
+    ///
+    /// # Errors
+    ///
+    /// Where the store cannot be read.
+    pub async fn is_open(&self) -> Result<bool, StoreError> {
+        self.gate.is_open().await
+    }
+
+    /// Waits until an answer that goes on has to end: with the service, or when
+    /// whoever asked would not be let in any more.
+    fn until_over(&self, who: &Who) -> impl Future<Output = ()> + Send + 'static {
+        let (ending, gate, who) = (self.ending.clone(), Arc::clone(&self.gate), who.clone());
+        async move {
+            tokio::select! {
+                () = ending.cancelled() => {}
+                () = gate.until_void(&who) => {}
+            }
+        }
+    }
+
     /// Finishes every batch that was accepted and has no result.
     ///
     /// # Errors
     ///
     /// Where the store cannot be read; it can be called again.
-    pub async fn resume(&self) -> Result<(), crate::store::StoreError> {
+    pub async fn resume(&self) -> Result<(), StoreError> {
         self.engine.resume().await
     }
 
@@ -176,6 +217,7 @@ pub fn router(app: App) -> axum::Router {
     };
     routes
         .with_state(app.clone())
+        .layer(from_fn_with_state(app.clone(), access::guard))
         .merge(docs)
         .layer(CompressionLayer::new().compress_when(DefaultPredicate::new().and(untagged)))
         .layer(CatchPanicLayer::custom(error::panicked))

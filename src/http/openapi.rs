@@ -1,10 +1,13 @@
 //! The routes with their OpenAPI 3.1 document: one table gives both.
 
+use super::access::{Need, ROUTES};
 use super::{
-    App, Problem, accusations, again, alarms, batches, by_hand, events, field, operation, plants,
-    series,
+    App, Problem, accusations, again, alarms, audit, batches, by_hand, events, field, operation,
+    plants, series,
 };
 use utoipa::OpenApi;
+use utoipa::openapi::path::{Operation, PathItem};
+use utoipa::openapi::security::{HttpAuthScheme, HttpBuilder, SecurityRequirement, SecurityScheme};
 use utoipa_axum::router::OpenApiRouter;
 use utoipa_axum::routes;
 
@@ -36,7 +39,7 @@ struct Document;
 
 /// Every route with its description.
 pub(super) fn routes() -> OpenApiRouter<App> {
-    OpenApiRouter::with_openapi(Document::openapi())
+    let mut routes = OpenApiRouter::with_openapi(Document::openapi())
         .routes(routes!(plants::list))
         .routes(routes!(plants::put, plants::get))
         .routes(routes!(plants::assessment))
@@ -61,8 +64,47 @@ pub(super) fn routes() -> OpenApiRouter<App> {
         .routes(routes!(accusations::close))
         .routes(routes!(by_hand::decide, by_hand::list))
         .routes(routes!(by_hand::end))
+        .routes(routes!(audit::list))
         .routes(routes!(operation::live))
-        .routes(routes!(operation::ready))
+        .routes(routes!(operation::ready));
+    secure(routes.get_openapi_mut());
+    routes
+}
+
+/// Says of each route which scope it needs, from the table that is held to.
+fn secure(document: &mut utoipa::openapi::OpenApi) {
+    let scheme = HttpBuilder::new()
+        .scheme(HttpAuthScheme::Bearer)
+        .description(Some(
+            "Made by `counterpoise token make`; the names beside it are the scopes that a route \
+             needs. A service without tokens answers its own machine alone, without one.",
+        ))
+        .build();
+    let components = document.components.get_or_insert_default();
+    components.add_security_scheme(TOKEN, SecurityScheme::Http(scheme));
+    for (method, template, need) in ROUTES {
+        let Need::Scope(scope) = need else {
+            continue;
+        };
+        let item = document.paths.paths.get_mut(*template);
+        if let Some(operation) = item.and_then(|item| operation(item, method)) {
+            let needed = SecurityRequirement::new(TOKEN, [scope.name()]);
+            operation.security = Some(vec![needed]);
+        }
+    }
+}
+
+/// Name of the security scheme.
+const TOKEN: &str = "token";
+
+fn operation<'d>(item: &'d mut PathItem, method: &str) -> Option<&'d mut Operation> {
+    match method {
+        "GET" => item.get.as_mut(),
+        "PUT" => item.put.as_mut(),
+        "POST" => item.post.as_mut(),
+        "DELETE" => item.delete.as_mut(),
+        _ => None,
+    }
 }
 
 /// The OpenAPI document.

@@ -29,6 +29,7 @@ const RETRY: Duration = Duration::from_secs(1);
 pub struct Hook {
     target: Target,
     key: Key,
+    post: Http,
     /// When an event is tried again.
     pub schedule: Schedule,
 }
@@ -41,11 +42,24 @@ impl Hook {
     ///
     /// Where the address or the secret cannot be used.
     pub fn new(address: &str, secret: &[u8]) -> Result<Self, Unusable> {
+        let target = Target::new(address)?;
         Ok(Hook {
-            target: Target::new(address)?,
             key: Key::new(KEY, secret.trim_ascii())?,
+            post: Http::new(&target, None)?,
             schedule: Schedule::default(),
+            target,
         })
+    }
+
+    /// The same, with the other end of an `https:` address held to these root
+    /// certificates in PEM and no others.
+    ///
+    /// # Errors
+    ///
+    /// Where they cannot be read.
+    pub fn trusting(self, roots: &[u8]) -> Result<Self, Unusable> {
+        let post = Http::new(&self.target, Some(roots))?;
+        Ok(Hook { post, ..self })
     }
 }
 
@@ -58,13 +72,6 @@ pub(super) async fn run(
     clock: Arc<dyn Clock>,
     entropy: Arc<dyn Entropy>,
 ) {
-    let post = match Http::new() {
-        Ok(post) => post,
-        Err(error) => {
-            tracing::error!(%error, "no webhook: the system gives no means to send");
-            return;
-        }
-    };
     let told = engine.told();
     let after = starting_point(&*store).await;
     let (handle, queue) = webhook::queue(TOGETHER);
@@ -73,7 +80,7 @@ pub(super) async fn run(
         target: hook.target,
         key: hook.key,
         schedule: hook.schedule,
-        post,
+        post: hook.post,
         clock: move || clock.now(),
         jitter: move || evenly(&*entropy),
         settled: move |one: Settled| {

@@ -31,12 +31,17 @@ where
     async fn from_request_parts(parts: &mut Parts, state: &S) -> Result<Self, Problem> {
         match Path::from_request_parts(parts, state).await {
             Ok(Path(names)) => Ok(Address(names)),
-            Err(_) => Err(Problem::new(
-                Kind::BadParameter,
-                "a name in the address is not UTF-8, percent-encoded",
-            )),
+            Err(_) => Err(no_name()),
         }
     }
+}
+
+/// The answer where a name in the address cannot be read.
+pub(super) fn no_name() -> Problem {
+    Problem::new(
+        Kind::BadParameter,
+        "a name in the address is not UTF-8, percent-encoded",
+    )
 }
 
 impl Params {

@@ -1,20 +1,23 @@
 //! Plants: taking a plant file, giving it back, listing, assessing.
 
 use super::App;
+use super::access::Who;
 use super::body::{self, Permit, media_type};
 use super::engine::compute;
 use super::error::{Kind, Problem, count};
 use super::headers::{accepted, encode, entity_tag, has_already, next_link, precondition, value};
 use super::params::{Address, Params, with_cursor};
 use super::revisions::{JSON, TOML, format_of};
+use crate::access::DeedKind;
 use crate::plant::{self, Fault, PlantFile, Severity};
 use crate::report::Assessment;
-use crate::store::{NewPlant, PutOutcome, StoredPlant};
+use crate::store::{NewPlant, PlantLine, PutOutcome, StoreError, StoredPlant};
 use axum::Json;
 use axum::extract::{Request, State};
 use axum::http::{HeaderMap, StatusCode, Uri, header};
 use axum::response::{IntoResponse, Response};
 use serde::Serialize;
+use serde_json::json;
 use time::OffsetDateTime;
 use utoipa::ToSchema;
 
@@ -84,6 +87,7 @@ struct PlantItem {
 pub(super) async fn put(
     State(app): State<App>,
     Address(name): Address<String>,
+    who: Who,
     _permit: Permit,
     request: Request,
 ) -> Result<Response, Problem> {
@@ -103,15 +107,18 @@ pub(super) async fn put(
     if plant.name != name {
         return Err(refused(vec![misnamed(&plant.name, &name)]));
     }
+    let received = app.clock.now();
+    let what = json!({"title": plant.title});
+    let deed = who.deed(DeedKind::PlantPut, &name, what, received);
     let new = NewPlant {
         name,
         title: plant.title,
         media_type,
         source,
         canonical: canonical.to_string(),
-        received: app.clock.now(),
+        received,
         precondition,
-        deed: None,
+        deed: Some(deed),
     };
     match app.store.put_plant(new).await? {
         PutOutcome::Created(stored) => Ok(answer(StatusCode::CREATED, &stored, warnings)),
@@ -241,19 +248,19 @@ fn revision_of(uri: &Uri) -> Result<Option<u32>, Problem> {
         (status = "default", description = "A problem", body = Problem, content_type = "application/problem+json"),
     )
 )]
-pub(super) async fn list(State(app): State<App>, uri: Uri) -> Result<Response, Problem> {
+pub(super) async fn list(State(app): State<App>, who: Who, uri: Uri) -> Result<Response, Problem> {
     let mut params = Params::new(&uri);
     let limit = params.limit(100, 1000);
     let after = params.one("cursor");
     params.finish()?;
-    let mut lines = app.store.plants(after.as_deref(), limit + 1).await?;
+    let mut lines = reached(&app, &who, after, limit + 1).await?;
     let more = lines.len() > limit;
     lines.truncate(limit);
     let link = lines
         .last()
         .filter(|_| more)
         .map(|last| [next_link(&with_cursor(&uri, "cursor", &last.name))]);
-    let item = |line: crate::store::PlantLine| PlantItem {
+    let item = |line: PlantLine| PlantItem {
         plant: line.name,
         title: line.title,
         revision: line.revision,
@@ -266,6 +273,26 @@ pub(super) async fn list(State(app): State<App>, uri: Uri) -> Result<Response, P
         Some(link) => (link, Json(list)).into_response(),
         None => Json(list).into_response(),
     })
+}
+
+/// The plants that somebody reaches, in order, after the one named.
+async fn reached(
+    app: &App,
+    who: &Who,
+    mut after: Option<String>,
+    limit: usize,
+) -> Result<Vec<PlantLine>, StoreError> {
+    let mut reached = Vec::new();
+    loop {
+        let lines = app.store.plants(after.as_deref(), limit).await?;
+        let all = lines.len() < limit;
+        after = lines.last().map(|line| line.name.clone());
+        reached.extend(lines.into_iter().filter(|line| who.reaches(&line.name)));
+        if all || reached.len() >= limit {
+            reached.truncate(limit);
+            return Ok(reached);
+        }
+    }
 }
 
 /// What the tags can and cannot determine, before any batch.

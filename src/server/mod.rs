@@ -6,10 +6,12 @@
 //! database back.
 
 mod stall;
+mod tls;
 
-use crate::http::{App, Clock, Entropy, router};
+use crate::http::{App, Clock, Entropy, Peer, is_loopback, router};
 use crate::store::{Health, Store, StoreError};
 use axum::Router;
+use hyper::body::Incoming;
 use hyper::server::conn::http1;
 use hyper::service::service_fn;
 use hyper_util::rt::{TokioIo, TokioTimer};
@@ -21,14 +23,18 @@ use std::pin::Pin;
 use std::sync::Arc;
 use std::task::Poll;
 use std::time::Duration;
-use tokio::io::{AsyncReadExt, AsyncWriteExt};
+use tokio::io::{AsyncRead, AsyncReadExt, AsyncWrite, AsyncWriteExt};
 use tokio::net::{TcpListener, TcpStream};
 use tokio::sync::Semaphore;
 use tokio::task::{JoinHandle, JoinSet};
 use tokio::time::{Instant, timeout, timeout_at};
+use tokio_rustls::TlsAcceptor;
+use tokio_rustls::server::TlsStream;
 use tokio_util::sync::CancellationToken;
 use tokio_util::task::TaskTracker;
 use tower::ServiceExt;
+
+pub use tls::{Tls, TlsError};
 
 pub use crate::http::{Hook, Limits, Problem, SystemClock, SystemEntropy, Unusable};
 
@@ -64,6 +70,8 @@ pub struct Options {
     pub tick: Duration,
     /// Where events of alarms are sent.
     pub webhook: Option<Hook>,
+    /// What TLS is spoken with; none is spoken without.
+    pub tls: Option<Tls>,
 }
 
 /// Why a server ended.
@@ -77,6 +85,13 @@ pub enum ServerError {
         /// What the operating system says.
         error: io::Error,
     },
+    /// There are no tokens, and others could reach the address.
+    #[error(
+        "there are no tokens yet, so {0} is not listened on: whoever reaches it could read and \
+         write everything. Make a token first (`counterpoise token make --help`), or listen on \
+         127.0.0.1"
+    )]
+    Open(SocketAddr),
     /// The database did not keep what it was given.
     #[error("ended because the database failed: {0}")]
     Store(String),
@@ -106,7 +121,8 @@ impl Server {
     ///
     /// # Errors
     ///
-    /// Where the address cannot be listened on.
+    /// Where the address cannot be listened on, or must not be because there are
+    /// no tokens.
     pub async fn start(
         options: Options,
         store: Arc<dyn Store>,
@@ -117,12 +133,25 @@ impl Server {
             address: options.listen,
             error,
         };
+        let app = App::new(store, clock, entropy, options.limits);
+        if app.is_open().await? {
+            if !is_loopback(options.listen.ip()) {
+                return Err(ServerError::Open(options.listen));
+            }
+            tracing::warn!(
+                "open: there are no tokens, so whoever is on this machine can read and write \
+                 everything, and nobody else anything; `counterpoise token make` makes one"
+            );
+        }
         let listener = TcpListener::bind(options.listen).await.map_err(refused)?;
         let address = listener.local_addr().map_err(refused)?;
-        let app = App::new(store, clock, entropy, options.limits);
         let stop = CancellationToken::new();
-        let aside = Aside::start(&app, options.tick, options.webhook);
-        let task = tokio::spawn(run(listener, app, aside, stop.clone(), options.grace));
+        let aside = Aside::start(&app, options.tick, options.webhook, options.tls.clone());
+        let entrance = Entrance {
+            listener,
+            tls: options.tls,
+        };
+        let task = tokio::spawn(run(entrance, app, aside, stop.clone(), options.grace));
         Ok(Server {
             address,
             stop,
@@ -154,7 +183,7 @@ impl Server {
 struct Aside(JoinSet<()>);
 
 impl Aside {
-    fn start(app: &App, tick: Duration, webhook: Option<Hook>) -> Self {
+    fn start(app: &App, tick: Duration, webhook: Option<Hook>, tls: Option<Tls>) -> Self {
         let mut tasks = JoinSet::new();
         let (a, b, c) = (app.clone(), app.clone(), app.clone());
         tasks.spawn(resume_whenever_ready(a));
@@ -162,12 +191,21 @@ impl Aside {
         if let Some(hook) = webhook {
             tasks.spawn(async move { c.send_out(hook).await });
         }
+        if let Some(tls) = tls {
+            tasks.spawn(tls.keep_up(tick));
+        }
         Aside(tasks)
     }
 }
 
-async fn run(
+/// Where connections come in.
+struct Entrance {
     listener: TcpListener,
+    tls: Option<Tls>,
+}
+
+async fn run(
+    entrance: Entrance,
     app: App,
     mut aside: Aside,
     stop: CancellationToken,
@@ -175,7 +213,7 @@ async fn run(
 ) -> Result<(), ServerError> {
     let connections = TaskTracker::new();
     let failure = tokio::select! {
-        () = accept(listener, &app, &stop, &connections) => None,
+        () = accept(entrance, &app, &stop, &connections) => None,
         reason = failed(&app) => Some(reason),
     };
     stop.cancel();
@@ -197,11 +235,12 @@ async fn run(
 
 /// Accepts until told to stop.
 async fn accept(
-    listener: TcpListener,
+    entrance: Entrance,
     app: &App,
     stop: &CancellationToken,
     connections: &TaskTracker,
 ) {
+    let Entrance { listener, tls } = entrance;
     let slots = Arc::new(Semaphore::new(app.limits().connections));
     let router = router(app.clone());
     loop {
@@ -212,10 +251,22 @@ async fn accept(
             accepted = next => accepted,
         };
         match accepted {
-            (Ok(slot), Ok((stream, _))) => {
+            (Ok(slot), Ok((stream, peer))) => {
                 let (router, app, stop) = (router.clone(), app.clone(), stop.clone());
+                let acceptor = tls.as_ref().map(Tls::acceptor);
                 connections.spawn(async move {
-                    serve(stream, router, &app, &stop).await;
+                    // Answers are written whole; waiting for more to send only delays them.
+                    let _ = stream.set_nodelay(true);
+                    let stream = Stalling::new(stream, UNREAD);
+                    let peer = Peer(peer);
+                    match acceptor {
+                        None => serve(stream, peer, router, &app, &stop).await,
+                        Some(acceptor) => {
+                            if let Some(stream) = greeted(stream, &acceptor, &app, &stop).await {
+                                serve(stream, peer, router, &app, &stop).await;
+                            }
+                        }
+                    }
                     drop(slot);
                 });
             }
@@ -229,12 +280,40 @@ async fn accept(
     }
 }
 
+/// A connection after its TLS handshake, which may take as long as headers may;
+/// `None` of one that is cut, as whoever speaks without TLS is.
+async fn greeted(
+    stream: Stalling<TcpStream>,
+    acceptor: &TlsAcceptor,
+    app: &App,
+    stop: &CancellationToken,
+) -> Option<TlsStream<Stalling<TcpStream>>> {
+    let handshake = timeout(app.limits().read_timeout, acceptor.accept(stream));
+    tokio::select! {
+        () = stop.cancelled() => None,
+        shaken = handshake => match shaken {
+            Ok(Ok(stream)) => Some(stream),
+            Ok(Err(error)) => {
+                tracing::debug!(%error, "no TLS");
+                None
+            }
+            Err(_) => None,
+        },
+    }
+}
+
 /// Serves one connection until it ends.
-async fn serve(stream: TcpStream, router: Router, app: &App, stop: &CancellationToken) {
-    // Answers are written whole; waiting for more to send only delays them.
-    let _ = stream.set_nodelay(true);
-    let stream = Stalling::new(stream, UNREAD);
-    let service = service_fn(move |request| Box::pin(router.clone().oneshot(request)));
+async fn serve<S: AsyncRead + AsyncWrite + Unpin>(
+    stream: S,
+    peer: Peer,
+    router: Router,
+    app: &App,
+    stop: &CancellationToken,
+) {
+    let service = service_fn(move |mut request: hyper::Request<Incoming>| {
+        request.extensions_mut().insert(peer);
+        Box::pin(router.clone().oneshot(request))
+    });
     let mut connection = http1::Builder::new()
         .timer(TokioTimer::new())
         .header_read_timeout(app.limits().read_timeout)

@@ -2,6 +2,8 @@
 
 use super::sender::{Answer, Post};
 use super::signature::{JSON, Signed};
+use super::target::{Target, Unusable};
+use reqwest::Certificate;
 use reqwest::header::{CONTENT_TYPE, RETRY_AFTER};
 use reqwest::redirect::Policy;
 use std::time::Duration;
@@ -9,25 +11,47 @@ use std::time::Duration;
 /// Time for one attempt, from connecting to the answer's head.
 const PATIENCE: Duration = Duration::from_secs(10);
 
-/// Posts by HTTP/1.1; follows no redirection and uses no proxy of the
+/// Posts by HTTP/1.1, over TLS where the target asks for it; follows no redirection and uses no proxy of the
 /// environment.
 #[derive(Clone, Debug)]
 pub struct Http(reqwest::Client);
 
 impl Http {
-    /// A client of its own.
+    /// A client of its own for a target. Over TLS the other end is held to the
+    /// root certificates in PEM, where there are some, else to the system's.
     ///
     /// # Errors
     ///
-    /// Where the system gives it no means.
-    pub fn new() -> Result<Self, reqwest::Error> {
+    /// Where the system gives it no means, or the root certificates cannot be
+    /// read.
+    pub fn new(target: &Target, roots: Option<&[u8]>) -> Result<Self, Unusable> {
+        let roots = roots.map(certificates).transpose()?;
+        // Reading those of the system takes time.
+        let asks_the_system = target.is_tls() && roots.is_none();
         let client = reqwest::Client::builder()
             .user_agent(concat!("counterpoise/", env!("CARGO_PKG_VERSION")))
             .redirect(Policy::none())
             .no_proxy()
+            .tls_built_in_root_certs(asks_the_system)
             .timeout(PATIENCE);
-        client.build().map(Http)
+        let client = roots
+            .into_iter()
+            .flatten()
+            .fold(client, reqwest::ClientBuilder::add_root_certificate);
+        let client = client.build();
+        client
+            .map(Http)
+            .map_err(|error| Unusable::Means(reasons(&error)))
     }
+}
+
+fn certificates(pem: &[u8]) -> Result<Vec<Certificate>, Unusable> {
+    let read = Certificate::from_pem_bundle(pem);
+    let read = read.map_err(|error| Unusable::Roots(reasons(&error)))?;
+    if read.is_empty() {
+        return Err(Unusable::Roots("there is none".to_owned()));
+    }
+    Ok(read)
 }
 
 impl Post for Http {

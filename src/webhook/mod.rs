@@ -5,10 +5,9 @@
 //! one that comes twice: delivery is at least once. It carries a Content-Digest
 //! (RFC 9530) and an HTTP message signature (RFC 9421) with HMAC-SHA256.
 //!
-//! Only `http:` is spoken, without TLS: what is sent can be read on the way, and
-//! not changed unnoticed. Where it leaves a trusted network, put a proxy that
-//! speaks TLS in front; the signature covers the address as written here. TLS of
-//! our own comes later.
+//! To an `https:` address TLS is spoken. To an `http:` one what is sent can be
+//! read on the way, and not changed unnoticed: that is for a trusted network. The
+//! signature covers the address as written here.
 
 mod http;
 mod schedule;

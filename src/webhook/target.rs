@@ -21,11 +21,17 @@ pub struct Key {
 #[derive(Clone, Debug, PartialEq, Eq, thiserror::Error)]
 pub enum Unusable {
     /// No address.
-    #[error("`{0}` is no address: write http://host:port/path")]
+    #[error("`{0}` is no address: write https://host:port/path")]
     Address(String),
     /// Another scheme.
-    #[error("`{0}:` is not spoken: write http://, and put a proxy in front for TLS")]
+    #[error("`{0}:` is not spoken: write http:// or https://")]
     Scheme(String),
+    /// Root certificates that cannot be read.
+    #[error("no root certificates in PEM: {0}")]
+    Roots(String),
+    /// Nothing to send with.
+    #[error("the system gives no means to send: {0}")]
+    Means(String),
     /// A name or password in the address.
     #[error("the address holds a user: leave it out, requests are signed")]
     User,
@@ -42,10 +48,10 @@ impl Target {
     ///
     /// # Errors
     ///
-    /// Where it is none, is not `http:`, or holds a user.
+    /// Where it is none, is neither `http:` nor `https:`, or holds a user.
     pub fn new(address: &str) -> Result<Self, Unusable> {
         let mut url = Url::parse(address).map_err(|_| Unusable::Address(address.to_owned()))?;
-        if url.scheme() != "http" {
+        if !["http", "https"].contains(&url.scheme()) {
             return Err(Unusable::Scheme(url.scheme().to_owned()));
         }
         if !url.username().is_empty() || url.password().is_some() {
@@ -54,6 +60,11 @@ impl Target {
         // A fragment is not sent.
         url.set_fragment(None);
         Ok(Target(url))
+    }
+
+    /// Whether TLS is spoken.
+    pub fn is_tls(&self) -> bool {
+        self.0.scheme() == "https"
     }
 
     /// The whole of it, as it is signed.
@@ -121,7 +132,7 @@ mod tests {
         assert_eq!(Target::new("http://a").unwrap().as_str(), "http://a/");
         for (address, fault) in [
             ("nowhere", Unusable::Address("nowhere".to_owned())),
-            ("https://a/", Unusable::Scheme("https".to_owned())),
+            ("ftp://a/", Unusable::Scheme("ftp".to_owned())),
             ("http://me:secret@a/", Unusable::User),
         ] {
             assert_eq!(Target::new(address), Err(fault));

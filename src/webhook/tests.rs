@@ -265,6 +265,10 @@ async fn receive() -> (String, Requests) {
     (address, requests)
 }
 
+fn client(address: &str) -> Http {
+    Http::new(&Target::new(address).unwrap(), None).unwrap()
+}
+
 /// In real time, which a paused clock would run ahead of.
 #[tokio::test]
 async fn a_real_receiver_can_check_what_it_gets() {
@@ -273,7 +277,7 @@ async fn a_real_receiver_can_check_what_it_gets() {
         first: Duration::from_millis(20),
         longest: Duration::from_millis(40),
     };
-    let settled = send(Http::new().unwrap(), &address, schedule, &[41, 42]).await;
+    let settled = send(client(&address), &address, schedule, &[41, 42]).await;
     assert_eq!(settled, [delivered(41), delivered(42)]);
     let requests = requests.lock().unwrap();
     assert_eq!(requests.len(), 3);
@@ -322,6 +326,6 @@ async fn a_receiver_that_is_not_there_is_no_panic() {
     let target = Target::new(&address).unwrap();
     let key = Key::new("hook-1", &SECRET).unwrap();
     let signed = sign(&target, &key, b"{}", START);
-    let reason = Http::new().unwrap().post(signed).await.unwrap_err();
+    let reason = client(&address).post(signed).await.unwrap_err();
     assert!(!reason.is_empty() && !reason.contains("secret"), "{reason}");
 }

@@ -2,7 +2,7 @@
 //! stands still unless a test moves it, and random bytes that count.
 
 use counterpoise::http::{Clock, Entropy};
-use counterpoise::server::{Hook, Limits, Options, Server, ServerError};
+use counterpoise::server::{Hook, Limits, Options, Server, ServerError, Tls};
 use counterpoise::store::{SqliteOptions, SqliteStore, Store};
 use reqwest::{Client, Response, StatusCode};
 use serde_json::Value;
@@ -93,6 +93,7 @@ pub struct Setup {
     pub database: Option<PathBuf>,
     pub lock_timeout: Duration,
     pub webhook: Option<Hook>,
+    pub tls: Option<Tls>,
 }
 
 impl Default for Setup {
@@ -102,6 +103,7 @@ impl Default for Setup {
             database: None,
             lock_timeout: Duration::from_secs(5),
             webhook: None,
+            tls: None,
         }
     }
 }
@@ -144,10 +146,15 @@ impl Service {
         };
         let options = Options {
             listen: "127.0.0.1:0".parse().expect("an address"),
-            limits: setup.limits,
+            limits: Limits {
+                // Whatever a test does to the tokens is seen by its next request.
+                token_freshness: Duration::ZERO,
+                ..setup.limits
+            },
             grace: Duration::from_secs(20),
             tick: Duration::from_millis(20),
             webhook: setup.webhook,
+            tls: setup.tls,
         };
         let clock = Arc::new(StoppedClock::default());
         let shown = Arc::clone(&clock);
@@ -372,6 +379,8 @@ pub async fn contents(database: &Path) -> Vec<String> {
         "backfills",
         "replays",
         "replayed",
+        "tokens",
+        "deeds",
     ] {
         let columns: Vec<String> = sqlx::query_scalar("SELECT name FROM pragma_table_info(?1)")
             .bind(table)

@@ -15,7 +15,7 @@ const IMPORTS: &[(&str, &[&str])] = &[
             "access", "config", "demo", "ingest", "pipeline", "plant", "report", "server", "store",
         ],
     ),
-    ("config", &["server", "store", "telemetry"]),
+    ("config", &["access", "server", "store", "telemetry"]),
     ("server", &["http", "store"]),
     (
         "http",
@@ -47,7 +47,7 @@ const IMPORTS: &[(&str, &[&str])] = &[
     ("alarms", &["plant", "report"]),
     ("webhook", &["alarms"]),
     ("access", &[]),
-    ("telemetry", &[]),
+    ("telemetry", &["access"]),
     ("plant", &[]),
     ("fluid", &[]),
     ("solver", &[]),

@@ -39,8 +39,7 @@ fn is_timeout(answer: &str) {
     );
 }
 
-const HEAD: &str =
-    "POST /v1/plants/mixer/batches HTTP/1.1\r\nhost: x\r\ncontent-type: application/json\r\n";
+const HEAD: &str = "POST /v1/plants/mixer/batches HTTP/1.1\r\nhost: localhost\r\ncontent-type: application/json\r\n";
 
 const CONTINUE: &[u8] = b"HTTP/1.1 100 Continue\r\n\r\n";
 

@@ -57,6 +57,7 @@ fn every_route_is_described() {
     let expected = [
         "get /livez",
         "get /readyz",
+        "get /v1/audit",
         "get /v1/plants",
         "get /v1/plants/{plant}",
         "get /v1/plants/{plant}/accusations",

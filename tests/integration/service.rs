@@ -330,7 +330,7 @@ async fn an_orderly_end_finishes_what_has_begun() {
     let mut service = Service::with_plant().await;
     let body = batch("last", 0, 150.0);
     let head = format!(
-        "POST /v1/plants/mixer/batches HTTP/1.1\r\nhost: x\r\ncontent-type: application/json\r\n\
+        "POST /v1/plants/mixer/batches HTTP/1.1\r\nhost: localhost\r\ncontent-type: application/json\r\n\
          expect: 100-continue\r\ncontent-length: {}\r\n\r\n",
         body.len()
     );

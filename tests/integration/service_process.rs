@@ -250,7 +250,7 @@ fn a_webhook_that_cannot_work_is_said() {
             "the webhook's secret none",
         ),
         (
-            &[url, "https://alarms.example/in", file, "long"],
+            &[url, "ftp://alarms.example/in", file, "long"],
             3,
             "write http://",
         ),

@@ -7,6 +7,7 @@
 
 use super::field::names;
 use super::{Engine, Extended, FieldReadings, Outcome, compute, lane::Lane, parse};
+use crate::access::Deed;
 use crate::http::error::{Kind, Problem, count};
 use crate::http::revisions::Revision;
 use crate::pipeline::{self, Compiled, NoInfluences};
@@ -92,6 +93,7 @@ impl Engine {
         batch: &str,
         new: FieldReadings,
         again: Again,
+        deed: Deed,
     ) -> Outcome {
         let (engine, lane) = (Arc::clone(self), self.lane(plant));
         let (plant, batch) = (plant.to_owned(), batch.to_owned());
@@ -127,7 +129,7 @@ impl Engine {
                     json,
                     by,
                     at,
-                    deed: None,
+                    deed: Some(deed),
                 };
                 let kept = engine.store.add_field_reading(&plant, &batch, new).await?;
                 kept.ok_or_else(|| no_batch(&plant, &batch))?;

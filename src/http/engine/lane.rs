@@ -14,6 +14,7 @@
 //! again when it is finished later.
 
 use super::{Engine, lock};
+use crate::access::Deed;
 use crate::alarms::{Accusation, Alarm, Closing, Event, NotClosed, Refused, Watch};
 use crate::http::engine::no_plant;
 use crate::http::error::{Kind, Problem};
@@ -42,6 +43,15 @@ pub(super) struct Lane {
 struct Memory {
     watch: Option<Watch>,
     by_hand: Option<Arc<[ByHand]>>,
+}
+
+/// What no batch has changed of a plant.
+struct Change<'e> {
+    /// The watch as it is from now on.
+    next: Watch,
+    events: &'e [Event],
+    accusation: Option<AccusationRow>,
+    deed: Option<Deed>,
 }
 
 /// Why a person's act was not done.
@@ -161,6 +171,7 @@ impl Engine {
     pub async fn act(
         self: &Arc<Self>,
         plant: &str,
+        deed: Deed,
         act: impl FnOnce(&mut Watch) -> Result<Event, Refused> + Send + 'static,
     ) -> Result<Event, NotActed> {
         let (engine, lane) = (Arc::clone(self), self.lane(plant));
@@ -171,9 +182,14 @@ impl Engine {
             let acted = act(&mut next);
             events.extend(acted.iter().cloned());
             if !events.is_empty() {
-                engine
-                    .change(&lane, &mut memory, next, &events, None)
-                    .await?;
+                let deed = acted.is_ok().then_some(deed);
+                let change = Change {
+                    next,
+                    events: &events,
+                    accusation: None,
+                    deed,
+                };
+                engine.change(&lane, &mut memory, change).await?;
             }
             acted.map_err(NotActed::Refused)
         })
@@ -186,6 +202,7 @@ impl Engine {
         plant: &str,
         id: u64,
         closing: Closing,
+        deed: Deed,
     ) -> Result<Option<Result<Accusation, NotClosed>>, Problem> {
         let (engine, lane) = (Arc::clone(self), self.lane(plant));
         self.detached(async move {
@@ -199,10 +216,13 @@ impl Engine {
                 Ok(closed) => closed,
                 Err(not) => return Ok(Some(Err(not))),
             };
-            let row = accusation_row(&closed)?;
-            engine
-                .change(&lane, &mut memory, next, &[], Some(row))
-                .await?;
+            let change = Change {
+                next,
+                events: &[],
+                accusation: Some(accusation_row(&closed)?),
+                deed: Some(deed),
+            };
+            engine.change(&lane, &mut memory, change).await?;
             Ok(Some(Ok(closed)))
         })
         .await?
@@ -289,7 +309,13 @@ impl Engine {
         }
         let mut next = watch.clone();
         let events = next.pass_time(now);
-        self.change(lane, &mut memory, next, &events, None).await
+        let change = Change {
+            next,
+            events: &events,
+            accusation: None,
+            deed: None,
+        };
+        self.change(lane, &mut memory, change).await
     }
 
     /// The watch in memory, read where it is not there.
@@ -316,12 +342,17 @@ impl Engine {
         &self,
         lane: &Lane,
         memory: &mut MutexGuard<'_, Memory>,
-        mut next: Watch,
-        events: &[Event],
-        accusation: Option<AccusationRow>,
+        change: Change<'_>,
     ) -> Result<(), Problem> {
+        let Change {
+            mut next,
+            events,
+            accusation,
+            deed,
+        } = change;
         let mut watched = watched(&mut next, events)?;
         watched.accusations.extend(accusation);
+        watched.deed = deed;
         // Whatever comes of it, the one before is no longer to be built upon.
         memory.watch = None;
         match self.store.change_watch(&lane.plant, watched).await? {

@@ -35,7 +35,7 @@ use super::{
 use crate::report::{Report, SingleTest};
 use futures::FutureExt;
 use sqlx::SqlitePool;
-use sqlx::sqlite::SqlitePoolOptions;
+use sqlx::sqlite::{SqliteConnection, SqlitePoolOptions};
 use std::collections::HashMap;
 use std::path::PathBuf;
 use std::sync::{Arc, Mutex};
@@ -126,6 +126,23 @@ impl SqliteStore {
     /// cannot be written.
     pub async fn open(options: SqliteOptions) -> Result<Self, StoreError> {
         let connection = open::first(&options).await?;
+        Ok(SqliteStore::around(options, connection))
+    }
+
+    /// Opens the file beside a service that may be running on it: brings its
+    /// schema up to date and looks no further, since the service has.
+    ///
+    /// # Errors
+    ///
+    /// [`StoreError::Unusable`] where SQLite is too old or the file was written
+    /// by a newer version; [`StoreError::Unavailable`] where there is none and
+    /// none is to be made.
+    pub async fn open_beside(options: SqliteOptions, make: bool) -> Result<Self, StoreError> {
+        let connection = open::beside(&options, make).await?;
+        Ok(SqliteStore::around(options, connection))
+    }
+
+    fn around(options: SqliteOptions, connection: SqliteConnection) -> Self {
         let readers = SqlitePoolOptions::new()
             .max_connections(4)
             .acquire_timeout(options.lock_timeout)
@@ -134,13 +151,13 @@ impl SqliteStore {
         let places = Arc::new(Semaphore::new(options.queue));
         let (report_health, health) = watch::channel(Health::Ready);
         tokio::spawn(Writer::new(options, connection, queue, report_health).run());
-        Ok(SqliteStore {
+        SqliteStore {
             jobs,
             places,
             readers,
             health,
             layouts: Mutex::default(),
-        })
+        }
     }
 
     /// Hinders the writer, or frees it again.

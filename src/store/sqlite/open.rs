@@ -44,19 +44,38 @@ pub(super) async fn first(options: &SqliteOptions) -> Result<SqliteConnection, S
     let mut connection = writer(options).connect().await.map_err(|e| explain(&e))?;
     check_version(&mut connection).await?;
     check_integrity(&mut connection).await?;
+    migrate(options, &mut connection).await?;
+    prove_durable(&mut connection)
+        .await
+        .map_err(|e| explain(&e))?;
+    Ok(connection)
+}
+
+/// A writer's connection beside a service that may be running.
+pub(super) async fn beside(
+    options: &SqliteOptions,
+    make: bool,
+) -> Result<SqliteConnection, StoreError> {
+    let writer = writer(options).create_if_missing(make);
+    let mut connection = writer.connect().await.map_err(|e| explain(&e))?;
+    check_version(&mut connection).await?;
+    migrate(options, &mut connection).await?;
+    Ok(connection)
+}
+
+async fn migrate(
+    options: &SqliteOptions,
+    connection: &mut SqliteConnection,
+) -> Result<(), StoreError> {
     sqlx::migrate!("./migrations")
-        .run(&mut connection)
+        .run(&mut *connection)
         .await
         .map_err(|error| {
             StoreError::Unusable(format!(
                 "the schema of {} cannot be brought up to date: {error}",
                 options.path.display()
             ))
-        })?;
-    prove_durable(&mut connection)
-        .await
-        .map_err(|e| explain(&e))?;
-    Ok(connection)
+        })
 }
 
 /// The writer's connection after a failure.
