@@ -25,6 +25,7 @@ pub(super) struct AuditList {
 
 /// An entry of the audit log.
 #[derive(Serialize, ToSchema)]
+#[schema(as = AuditEntry)]
 struct Entry {
     /// Number, in the order of what was done.
     #[schema(example = 41)]
@@ -55,8 +56,8 @@ struct Entry {
     get, path = "/v1/audit", operation_id = "read_audit", tag = "operation",
     params(
         ("plant" = Option<String>, Query, description = "Changes of this plant alone"),
-        ("limit" = Option<usize>, Query, description = "At most so many, 1 to 1000; 100 unless set"),
-        ("cursor" = Option<String>, Query, description = "From the Link header of the answer before"),
+        ("limit" = Option<usize>, Query, minimum = 1, maximum = 1000, description = "At most so many, 1 to 1000; 100 unless set"),
+        ("cursor" = Option<i64>, Query, description = "From the Link header of the answer before"),
     ),
     responses(
         (status = 200, description = "The entries", body = AuditList, headers(("Link" = String, description = "rel=\"next\": where the list goes on"))),

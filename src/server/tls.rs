@@ -10,7 +10,7 @@ use std::fmt;
 use std::path::{Path, PathBuf};
 use std::sync::{Arc, PoisonError, RwLock};
 use std::time::Duration;
-use tokio::signal::unix::{SignalKind, signal};
+use tokio::signal::unix::{Signal, SignalKind, signal};
 use tokio_rustls::TlsAcceptor;
 use tokio_rustls::rustls::ServerConfig;
 use tokio_rustls::rustls::crypto::ring;
@@ -112,15 +112,19 @@ impl Tls {
     }
 
     /// Reads the files again on SIGHUP and when they change, looking every
-    /// `tick`; for ever.
-    pub(super) async fn keep_up(self, tick: Duration) {
-        let mut hangups = match signal(SignalKind::hangup()) {
+    /// `tick`; for ever. From the call on, SIGHUP does not end the process.
+    pub(super) fn keep_up(self, tick: Duration) -> impl Future<Output = ()> + Send {
+        let hangups = match signal(SignalKind::hangup()) {
             Ok(hangups) => Some(hangups),
             Err(error) => {
                 tracing::warn!(%error, "SIGHUP cannot be listened to");
                 None
             }
         };
+        self.follow(hangups, tick)
+    }
+
+    async fn follow(self, mut hangups: Option<Signal>, tick: Duration) {
         let mut seen: Option<Seen> = None;
         loop {
             let look = self.clone();

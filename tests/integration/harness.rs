@@ -347,6 +347,16 @@ fn first_number(row: &str) -> i64 {
     number.parse().expect("a number")
 }
 
+/// The one number that a database answers.
+pub async fn number(database: &Path, statement: &str) -> i64 {
+    let options = sqlx::sqlite::SqliteConnectOptions::new().filename(database);
+    let mut connection = options.connect().await.expect("the database");
+    sqlx::query_scalar(AssertSqlSafe(statement.to_owned()))
+        .fetch_one(&mut connection)
+        .await
+        .expect("a number")
+}
+
 /// Everything that a database holds, row by row.
 pub async fn contents(database: &Path) -> Vec<String> {
     let options = sqlx::sqlite::SqliteConnectOptions::new().filename(database);

@@ -1,5 +1,6 @@
 //! The tests that look at the whole from outside, in one binary.
 
+mod access;
 mod alarms;
 mod backup;
 mod batches;

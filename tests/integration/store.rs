@@ -1,5 +1,6 @@
 //! What holds for every store.
 
+mod access;
 mod again;
 mod bodies;
 mod by_hand;

@@ -185,7 +185,7 @@ async fn an_orderly_end_leaves_everything_in_the_main_file() {
 }
 
 /// Runs a statement beside the service.
-async fn beside(database: &Path, statement: &'static str) {
+pub async fn beside(database: &Path, statement: &'static str) {
     let options = sqlx::sqlite::SqliteConnectOptions::new().filename(database);
     let mut other = options.connect().await.expect("a connection");
     // More than one statement at a time.

@@ -44,8 +44,8 @@ async fn admit(app: &App, request: &mut Request) -> Result<(), Problem> {
     let peer = request.extensions().get::<Peer>();
     let who = app.gate.who(peer, request.uri(), request.headers()).await?;
     match ruling {
-        // No such address: that is said by whoever looks for it.
-        None => return Ok(()),
+        // What has no template is no route of ours.
+        None => return Err(Problem::new(Kind::NotFound, "there is nothing here")),
         Some(Ruling::Needs(Need::Open)) => {}
         Some(Ruling::Needs(Need::Scope(scope))) => {
             if !who.may(scope) {

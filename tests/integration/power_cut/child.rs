@@ -45,6 +45,7 @@ async fn serves_until_it_dies() {
         grace: Duration::from_secs(30),
         tick: Duration::from_secs(1),
         webhook: None,
+        tls: None,
     };
     let server = Server::start(
         options,
