@@ -293,3 +293,41 @@ async fn open_periods_come_live_and_early_first() {
     })
     .await;
 }
+
+/// A few samples across a long time full of others are looked for one by one;
+/// what comes of them is the same.
+#[tokio::test]
+async fn a_few_samples_among_many_open_no_more_than_they_change() {
+    on_every_store(async |store| {
+        store.put_plant(plant("p", "{}")).await.expect("put");
+        let many: Vec<Sample> = (0..3600).map(|second| sample(second, 1.0)).collect();
+        added(store, samples(vec![tag("F-1", 60, &many)])).await;
+        for period in open(store).await {
+            let closed = closed(store, &period, 1).await;
+            assert!(matches!(closed, Closed::New(_)), "{closed:?}");
+        }
+        let half = Duration::milliseconds(500);
+        let mut few: Vec<Sample> = (0..60).map(|minute| sample(minute * 60, 1.0)).collect();
+        for minute in (0..60).step_by(3) {
+            few[minute].time += half;
+        }
+        for minute in (1..60).step_by(3) {
+            few[minute].value = Some(2.0);
+        }
+        few.push(sample(3600, 1.0));
+        let taken = added(store, samples(vec![tag("F-1", 60, &few)])).await;
+        let expected = SamplesTaken {
+            new: 21,
+            known: 20,
+            conflicting: (1..60).step_by(3).map(|place| (0, place)).collect(),
+        };
+        assert_eq!(taken, expected);
+        // The last one continues the line of the hour's last sample.
+        let mut opened: Vec<i64> = (0..60).step_by(3).collect();
+        opened.extend([59, 60]);
+        assert_eq!(open_minutes(store).await, opened);
+        let read = store.samples("p", at(0), at(3600), Duration::ZERO).await;
+        assert_eq!(read.expect("read")[0].samples.len(), 3621);
+    })
+    .await;
+}

@@ -27,12 +27,12 @@ pub(in crate::store::sqlite) const INSERT_SAMPLE_TAG: &str = "
     INSERT INTO sample_tags (plant_id, tag) VALUES (?1, ?2) RETURNING id";
 
 /// Samples of stretches, each `[tag, first, last, ...]`, with the place of the
-/// stretch.
+/// stretch, in no order.
 pub(in crate::store::sqlite) const SAMPLES_OF_STRETCHES: &str = "
     SELECT j.key, s.time_ns, s.value, s.grade, s.code
     FROM json_each(?1) j CROSS JOIN samples s
     WHERE s.tag_id = j.value ->> 0 AND s.time_ns BETWEEN j.value ->> 1 AND j.value ->> 2
-    ORDER BY j.key, s.time_ns";
+    LIMIT ?2";
 
 /// The samples before and after stretches, each `[tag, first, last, no earlier
 /// than, no later than]`.

@@ -4,6 +4,7 @@
 //! asks for all samples that may be there already, few insert what is new, one
 //! opens periods.
 
+mod kept;
 mod periods;
 mod sift;
 
@@ -14,13 +15,18 @@ use crate::store::sqlite::values::signed;
 use crate::store::{BackfillMark, NewSamples, SamplesTaken, StoreError};
 use futures::FutureExt;
 use futures::future::BoxFuture;
+use kept::Kept;
 use periods::{Periods, aligned};
-use sift::{Row, Stretch, Tag};
+use sift::{Row, Tag};
 use sqlx::sqlite::SqliteConnection;
 use std::collections::HashMap;
 
 /// Samples that take as long as one ordinary job.
 const SAMPLES_A_JOB: usize = 64;
+
+/// Where so many more samples than came lie among them, they are looked for one
+/// by one: a few samples across a year of others must not read the year.
+const MANY: usize = 1000;
 
 /// Keeps samples.
 pub(in crate::store::sqlite) struct AddSamples {
@@ -34,15 +40,6 @@ pub(in crate::store::sqlite) struct AddSamples {
 
 /// A sample that is there, with the place of the stretch that it lies in.
 type ThereRow = (i64, i64, Option<f64>, i64, Option<i64>);
-
-/// What is new in a stretch, and what else is there.
-struct Kept<'a> {
-    tag: &'a Tag,
-    tag_id: i64,
-    stretch: &'a Stretch,
-    there: Vec<Row>,
-    new: Vec<Row>,
-}
 
 impl AddSamples {
     /// Refuses a value that is no number, and a period without length: there are
@@ -88,61 +85,6 @@ impl AddSamples {
             });
         }
         Ok(ids)
-    }
-
-    /// Looks at what is there and keeps what is not.
-    async fn keep(
-        &self,
-        on: &mut SqliteConnection,
-        plant: i64,
-        taken: &mut SamplesTaken,
-    ) -> Result<Vec<Kept<'_>>, sqlx::Error> {
-        let ids = self.tag_ids(&mut *on, plant).await?;
-        let stretches: Vec<(&Tag, i64, &Stretch)> = self
-            .tags
-            .iter()
-            .zip(ids)
-            .flat_map(|(tag, id)| tag.stretches.iter().map(move |stretch| (tag, id, stretch)))
-            .collect();
-        let asked: Vec<(i64, i64, i64)> = stretches
-            .iter()
-            .map(|(_, id, stretch)| (*id, stretch.first, stretch.last))
-            .collect();
-        let mut there: Vec<Vec<Row>> = stretches.iter().map(|_| Vec::new()).collect();
-        let rows: Vec<ThereRow> = sqlx::query_as(sql::SAMPLES_OF_STRETCHES)
-            .bind(json(&asked)?)
-            .fetch_all(&mut *on)
-            .await?;
-        for (place, time, value, grade, code) in rows {
-            let rows = usize::try_from(place).ok().and_then(|at| there.get_mut(at));
-            if let Some(rows) = rows {
-                rows.push(Row {
-                    time,
-                    value,
-                    grade,
-                    code,
-                });
-            }
-        }
-        let mut kept = Vec::new();
-        for ((tag, tag_id, stretch), there) in stretches.into_iter().zip(there) {
-            let sifted = stretch.sift(&there);
-            taken.known += sifted.known;
-            taken.new += u64::try_from(sifted.new.len()).unwrap_or(u64::MAX);
-            taken.conflicting.extend(sifted.conflicting);
-            if !sifted.new.is_empty() {
-                kept.push(Kept {
-                    tag,
-                    tag_id,
-                    stretch,
-                    there,
-                    new: sifted.new,
-                });
-            }
-        }
-        taken.conflicting.sort_unstable();
-        insert(on, &kept).await?;
-        Ok(kept)
     }
 
     async fn open_periods(
@@ -244,7 +186,19 @@ impl Work for AddSamples {
             };
             let mut taken = SamplesTaken::default();
             if !self.tags.is_empty() {
-                let kept = self.keep(&mut *on, plant, &mut taken).await?;
+                let ids = self.tag_ids(&mut *on, plant).await?;
+                let most = self.count.saturating_mul(4).saturating_add(MANY);
+                let apart: Vec<Tag>;
+                let (tags, there) = match there(&mut *on, &self.tags, &ids, most).await? {
+                    Some(there) => (&self.tags, there),
+                    None => {
+                        apart = self.tags.iter().map(Tag::apart).collect();
+                        let there = there(&mut *on, &apart, &ids, usize::MAX).await?;
+                        (&apart, there.unwrap_or_default())
+                    }
+                };
+                let kept = sift(tags, &ids, there, &mut taken);
+                insert(&mut *on, &kept).await?;
                 self.open_periods(&mut *on, plant, &kept).await?;
             }
             self.mark(on, plant, taken.new).await?;
@@ -254,38 +208,73 @@ impl Work for AddSamples {
     }
 }
 
-impl Kept<'_> {
-    /// As far as these samples can change anything.
-    fn reach(&self) -> (i64, i64) {
-        (
-            self.stretch.first.saturating_sub(self.tag.reaches_back),
-            self.stretch.last.saturating_add(self.tag.holds),
-        )
+/// What is there in each stretch, in order of time; `None` where it is more than
+/// so many.
+async fn there(
+    on: &mut SqliteConnection,
+    tags: &[Tag],
+    ids: &[i64],
+    most: usize,
+) -> Result<Option<Vec<Vec<Row>>>, sqlx::Error> {
+    let asked: Vec<(i64, i64, i64)> = tags
+        .iter()
+        .zip(ids)
+        .flat_map(|(tag, id)| tag.stretches.iter().map(|s| (*id, s.first, s.last)))
+        .collect();
+    let rows: Vec<ThereRow> = sqlx::query_as(sql::SAMPLES_OF_STRETCHES)
+        .bind(json(&asked)?)
+        .bind(i64::try_from(most).unwrap_or(i64::MAX))
+        .fetch_all(on)
+        .await?;
+    if rows.len() >= most {
+        return Ok(None);
     }
+    let mut there: Vec<Vec<Row>> = asked.iter().map(|_| Vec::new()).collect();
+    for (place, time, value, grade, code) in rows {
+        let stretch = usize::try_from(place).ok();
+        if let Some(stretch) = stretch.and_then(|place| there.get_mut(place)) {
+            stretch.push(Row {
+                time,
+                value,
+                grade,
+                code,
+            });
+        }
+    }
+    for stretch in &mut there {
+        stretch.sort_unstable_by_key(|row| row.time);
+    }
+    Ok(Some(there))
+}
 
-    /// What to ask [`sql::NEIGHBOURS`] for.
-    fn asked(&self) -> (i64, i64, i64, i64, i64) {
-        let (from, to) = self.reach();
-        (self.tag_id, self.stretch.first, self.stretch.last, from, to)
+/// What is new in each stretch, the rest counted.
+fn sift<'a>(
+    tags: &'a [Tag],
+    ids: &[i64],
+    there: Vec<Vec<Row>>,
+    taken: &mut SamplesTaken,
+) -> Vec<Kept<'a>> {
+    let stretches = tags.iter().zip(ids);
+    let stretches =
+        stretches.flat_map(|(tag, id)| tag.stretches.iter().map(move |s| (tag, *id, s)));
+    let mut kept = Vec::new();
+    for ((tag, tag_id, stretch), there) in stretches.zip(there) {
+        let sifted = stretch.sift(&there);
+        taken.known += sifted.known;
+        taken.new += u64::try_from(sifted.new.len()).unwrap_or(u64::MAX);
+        taken.conflicting.extend(sifted.conflicting);
+        if !sifted.new.is_empty() {
+            kept.push(Kept {
+                tag,
+                tag_id,
+                stretch,
+                there,
+                new: sifted.new,
+            });
+        }
     }
-
-    /// The open intervals that the new samples change, given the samples before
-    /// and after the stretch.
-    fn changed(&self, before: Option<i64>, after: Option<i64>) -> Vec<(i64, i64)> {
-        let within = self.there.iter().chain(&self.new).map(|row| row.time);
-        let mut times: Vec<i64> = before.into_iter().chain(within).chain(after).collect();
-        times.sort_unstable();
-        let intervals = self.new.iter().map(|row| {
-            let at = times.partition_point(|&time| time < row.time);
-            let former = at.checked_sub(1).map_or(i64::MIN, |at| times[at]);
-            let next = times.get(at + 1).copied().unwrap_or(i64::MAX);
-            (
-                former.max(row.time.saturating_sub(self.tag.reaches_back)),
-                next.min(row.time.saturating_add(self.tag.holds)),
-            )
-        });
-        intervals.collect()
-    }
+    taken.conflicting.sort_unstable();
+    kept
 }
 
 /// Inserts what is new, many samples by statement.

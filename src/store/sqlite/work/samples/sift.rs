@@ -42,7 +42,8 @@ pub(super) struct Sifted {
     pub conflicting: Vec<(usize, usize)>,
 }
 
-/// The samples of a call by tag, for which no period is shorter than `near`.
+/// The samples of a call by tag, in stretches where none is further than `near`
+/// from the next.
 pub(super) fn by_tag(tags: Vec<NewTagSamples>, near: i64) -> Result<Vec<Tag>, StoreError> {
     let mut places: HashMap<String, usize> = HashMap::new();
     let mut gathered = Vec::new();
@@ -100,6 +101,21 @@ fn row(tag: &str, sample: &Sample) -> Result<Row, StoreError> {
         },
         code: sample.quality.code.map(i64::from),
     })
+}
+
+impl Tag {
+    /// The same with each instant as a stretch of its own.
+    pub fn apart(&self) -> Tag {
+        let samples = self.stretches.iter().flat_map(|stretch| {
+            let instants = stretch.samples.chunk_by(|a, b| a.0.time == b.0.time);
+            instants.filter_map(Stretch::new)
+        });
+        Tag {
+            name: self.name.clone(),
+            stretches: samples.collect(),
+            ..*self
+        }
+    }
 }
 
 impl Stretch {
