@@ -4,7 +4,7 @@ use super::App;
 use super::access::Who;
 use super::batches::NDJSON;
 use super::body::Permit;
-use super::engine::no_batch;
+use super::engine::{no_batch, removed};
 use super::error::{Kind, Problem};
 use super::fields::{self, Fields};
 use super::observe::RequestId;
@@ -12,7 +12,7 @@ use super::params::{Address, Params};
 use super::shapes;
 use crate::access::DeedKind;
 use crate::report::{Influences, Report, Verdict};
-use crate::store::{Again, BatchLine, BatchQuery, Cursor};
+use crate::store::{Again, BatchLine, BatchQuery, Cursor, Stored};
 use axum::body::{Body, Bytes};
 use axum::extract::{Request, State};
 use axum::http::{HeaderName, HeaderValue, Uri, header};
@@ -306,6 +306,11 @@ pub(super) async fn version(
         Ok(number) => app.store.version(&plant, &batch, number).await?,
         Err(_) => None,
     };
+    if found.is_none()
+        && let Some(Stored::Removed(gone)) = app.store.batch(&plant, &batch).await?
+    {
+        return Err(removed(&batch, &gone));
+    }
     found.map(Json).ok_or_else(|| {
         let detail = format!("there is no version \"{version}\" of batch \"{batch}\"");
         Problem::new(Kind::NotFound, detail)

@@ -1,7 +1,7 @@
 //! Batches: taking one or many, listing, giving a report.
 
 use super::body::{self, Permit, media_type};
-use super::engine::no_batch;
+use super::engine::{no_batch, removed};
 use super::error::{Kind, Problem};
 use super::headers::{encode, next_link, prefers_async, value};
 use super::observe::RequestId;
@@ -341,6 +341,7 @@ fn item(line: BatchLine) -> BatchItem {
         (status = 200, description = "The report", body = Report),
         (status = 202, description = "Accepted and not finished", body = Pending, headers(("Retry-After" = u32, description = "Seconds"))),
         (status = 404, description = "There is no such plant or batch", body = Problem, content_type = "application/problem+json"),
+        (status = 410, description = "Retention has removed the report; its name, period, verdict and means are kept", body = Problem, content_type = "application/problem+json"),
         (status = "default", description = "Any other problem", body = Problem, content_type = "application/problem+json"),
     )
 )]
@@ -362,6 +363,7 @@ pub(super) async fn get(
             let headers = [(header::RETRY_AFTER, value("1"))];
             Ok((StatusCode::ACCEPTED, headers, Json(pending)).into_response())
         }
+        Some(Stored::Removed(gone)) => Err(removed(&batch, &gone)),
         None => Err(no_batch(&plant, &batch)),
     }
 }

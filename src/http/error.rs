@@ -32,6 +32,8 @@ pub enum Kind {
     Forbidden,
     /// There is no such thing.
     NotFound,
+    /// It was here and has been removed.
+    Gone,
     /// The address does not take the method.
     MethodNotAllowed,
     /// It does not exist in the form that was asked for.
@@ -90,6 +92,11 @@ impl Kind {
                 StatusCode::NOT_FOUND,
                 "urn:counterpoise:problem:not-found",
                 "There is nothing here",
+            ),
+            Kind::Gone => (
+                StatusCode::GONE,
+                "urn:counterpoise:problem:gone",
+                "It has been removed",
             ),
             Kind::MethodNotAllowed => (
                 StatusCode::METHOD_NOT_ALLOWED,

@@ -19,6 +19,7 @@ mod events;
 mod field;
 mod fields;
 mod headers;
+mod means;
 mod observe;
 mod openapi;
 mod operation;
@@ -28,6 +29,7 @@ mod plants;
 mod revisions;
 mod series;
 pub mod shapes;
+mod tidy;
 
 pub use access::{Peer, is_loopback};
 pub use ambient::{Clock, Entropy, SystemClock, SystemEntropy};
@@ -174,6 +176,12 @@ impl App {
     /// Ends shelvings in time, looking at the clock every `tick`; for ever.
     pub async fn pass_time(&self, tick: Duration) {
         events::pass_time(Arc::clone(&self.engine), tick).await;
+    }
+
+    /// Keeps the store tidy, looking each so often; for ever.
+    pub async fn keep_tidy(&self, every: Duration) {
+        let (store, engine) = (Arc::clone(&self.store), Arc::clone(&self.engine));
+        tidy::run(store, engine, Arc::clone(&self.clock), every).await;
     }
 
     /// Sends events to the webhook; for ever.

@@ -2,8 +2,8 @@
 
 use super::access::{Need, ROUTES};
 use super::{
-    App, Problem, accusations, again, alarms, audit, batches, by_hand, events, field, operation,
-    plants, series,
+    App, Problem, accusations, again, alarms, audit, batches, by_hand, events, field, means,
+    operation, plants, series,
 };
 use utoipa::OpenApi;
 use utoipa::openapi::path::{Operation, PathItem};
@@ -46,6 +46,7 @@ pub(super) fn routes() -> OpenApiRouter<App> {
         .routes(routes!(batches::post, batches::list))
         .routes(routes!(batches::get))
         .routes(routes!(series::get))
+        .routes(routes!(means::get))
         .routes(routes!(again::influences))
         .routes(routes!(again::batch))
         .routes(routes!(again::period))

@@ -6,7 +6,7 @@ use super::headers::{accepted, next_link, value};
 use super::params::{Address, Params, cursor_text, with_cursor};
 use super::revisions::JSON;
 use crate::report::Verdict;
-use crate::store::{Column, Field, Selector, SeriesPage, SeriesQuery};
+use crate::store::{Field, Selector, SeriesPage, SeriesQuery};
 use axum::Json;
 use axum::extract::State;
 use axum::http::{HeaderMap, Uri, header};
@@ -16,7 +16,7 @@ use time::OffsetDateTime;
 use time::format_description::well_known::Rfc3339;
 use utoipa::ToSchema;
 
-const CSV: &str = "text/csv";
+pub(super) const CSV: &str = "text/csv";
 
 /// Series that one request may ask for.
 const MOST_SERIES: usize = 200;
@@ -103,7 +103,7 @@ struct Series {
         ("from" = Option<String>, Query, description = "Periods that start at this time or later"),
         ("to" = Option<String>, Query, description = "Periods that start before this time"),
         ("format" = Option<String>, Query, description = "`csv` or `json`; otherwise `Accept` decides"),
-        ("limit" = Option<usize>, Query, description = "At most so many batches, 1 to 20000; 10000 unless set"),
+        ("limit" = Option<usize>, Query, description = "At most so many batches, 1 to 50000; 10000 unless set"),
         ("cursor" = Option<String>, Query, description = "From the Link header of the answer before"),
     ),
     responses(
@@ -122,15 +122,13 @@ pub(super) async fn get(
     headers: HeaderMap,
 ) -> Result<Response, Problem> {
     let (query, field, format) = read(&uri, plant)?;
-    let chosen = match format {
-        Some(format) => format,
-        None => accepted(&headers, &[JSON, CSV])
-            .ok_or_else(|| Problem::new(Kind::NotAcceptable, "it can be had as JSON or CSV"))?,
-    };
+    let chosen = chosen(format, &headers)?;
     let revision = app.engine.revisions().get(&query.plant, None).await?;
     let plant = query.plant.clone();
     let page = app.store.series(query).await?;
-    unknown(&page.columns, revision.compiled.plant())?;
+    let columns = page.columns.iter();
+    let columns = columns.map(|column| (&column.selector, column.unit.is_some()));
+    unknown(columns, revision.compiled.plant())?;
     let next = page
         .next
         .map(|next| [next_link(&with_cursor(&uri, "cursor", &cursor_text(next)))]);
@@ -154,6 +152,30 @@ type Reading = (SeriesQuery, &'static str, Option<&'static str>);
 
 fn read(uri: &Uri, plant: String) -> Result<Reading, Problem> {
     let mut params = Params::new(uri);
+    let selectors = selectors(&mut params);
+    let names: Vec<&str> = FIELDS.iter().map(|(name, _)| *name).collect();
+    let mend = format!("one of {}", names.join(", "));
+    let field = params.choose("field", &mend, |text| {
+        FIELDS.into_iter().find(|(name, _)| *name == text)
+    });
+    let format = format(&mut params);
+    let (name, field) = field.unwrap_or(FIELDS[0]);
+    let query = SeriesQuery {
+        plant,
+        field,
+        from: params.time("from"),
+        to: params.time("to"),
+        after: params.cursor(),
+        limit: params.limit(10_000, 50_000),
+        selectors,
+    };
+    params.finish()?;
+    enough(&query.selectors)?;
+    Ok((query, name, format))
+}
+
+/// What is asked for.
+pub(super) fn selectors(params: &mut Params) -> Vec<Selector> {
     let mut selectors: Vec<Selector> = params.all("tag").into_iter().map(Selector::Tag).collect();
     for (owner, quantities) in [("stream", STREAM), ("equipment", EQUIPMENT)] {
         for name in params.all(owner) {
@@ -168,31 +190,34 @@ fn read(uri: &Uri, plant: String) -> Result<Reading, Problem> {
             selectors.push(Selector::Quantity(name));
         }
     }
-    let names: Vec<&str> = FIELDS.iter().map(|(name, _)| *name).collect();
-    let mend = format!("one of {}", names.join(", "));
-    let field = params.choose("field", &mend, |text| {
-        FIELDS.into_iter().find(|(name, _)| *name == text)
-    });
-    let format = params.choose("format", "csv or json", |text| match text {
+    selectors
+}
+
+/// The form that is asked for by name.
+pub(super) fn format(params: &mut Params) -> Option<&'static str> {
+    params.choose("format", "csv or json", |text| match text {
         "csv" => Some(CSV),
         "json" => Some(JSON),
         _ => None,
-    });
-    let (name, field) = field.unwrap_or(FIELDS[0]);
-    let query = SeriesQuery {
-        plant,
-        field,
-        from: params.time("from"),
-        to: params.time("to"),
-        after: params.cursor(),
-        limit: params.limit(10_000, 20_000),
-        selectors,
-    };
-    params.finish()?;
-    let detail = match query.selectors.len() {
+    })
+}
+
+/// The form that is asked for by name, or else by the headers.
+pub(super) fn chosen(
+    format: Option<&'static str>,
+    headers: &HeaderMap,
+) -> Result<&'static str, Problem> {
+    format
+        .or_else(|| accepted(headers, &[JSON, CSV]))
+        .ok_or_else(|| Problem::new(Kind::NotAcceptable, "it can be had as JSON or CSV"))
+}
+
+/// Refuses too few and too many.
+pub(super) fn enough(selectors: &[Selector]) -> Result<(), Problem> {
+    let detail = match selectors.len() {
         0 => "name at least one tag, stream or equipment".to_owned(),
         number if number > MOST_SERIES => format!("{number} series; {MOST_SERIES} are the most"),
-        _ => return Ok((query, name, format)),
+        _ => return Ok(()),
     };
     Err(Problem::new(Kind::BadParameter, detail))
 }
@@ -213,11 +238,14 @@ fn is_quantity(name: &str, quantities: &[&str]) -> bool {
         })
 }
 
-/// Refuses names that no report and no plant file has.
-fn unknown(columns: &[Column], plant: &crate::plant::Plant) -> Result<(), Problem> {
-    let is_known = |column: &Column| {
-        column.unit.is_some()
-            || match &column.selector {
+/// Refuses names that no report (as it is told of each) and no plant file has.
+pub(super) fn unknown<'s>(
+    columns: impl Iterator<Item = (&'s Selector, bool)>,
+    plant: &crate::plant::Plant,
+) -> Result<(), Problem> {
+    let is_known = |selector: &Selector, reported: bool| {
+        reported
+            || match selector {
                 Selector::Tag(name) => {
                     plant.tags.iter().any(|tag| tag.name == *name)
                         || plant
@@ -236,9 +264,8 @@ fn unknown(columns: &[Column], plant: &crate::plant::Plant) -> Result<(), Proble
             }
     };
     let unknown: Vec<&str> = columns
-        .iter()
-        .filter(|column| !is_known(column))
-        .map(|c| name(&c.selector))
+        .filter(|(selector, reported)| !is_known(selector, *reported))
+        .map(|(selector, _)| selector.name())
         .collect();
     if unknown.is_empty() {
         return Ok(());
@@ -249,12 +276,6 @@ fn unknown(columns: &[Column], plant: &crate::plant::Plant) -> Result<(), Proble
     ))
 }
 
-fn name(selector: &Selector) -> &str {
-    match selector {
-        Selector::Tag(name) | Selector::Quantity(name) => name,
-    }
-}
-
 fn document(plant: String, field: &'static str, page: SeriesPage) -> SeriesDocument {
     let batches = page.rows.into_iter().map(|row| SeriesBatch {
         batch: row.batch,
@@ -263,7 +284,7 @@ fn document(plant: String, field: &'static str, page: SeriesPage) -> SeriesDocum
         verdict: row.verdict,
     });
     let series = page.columns.into_iter().map(|column| Series {
-        name: name(&column.selector).to_owned(),
+        name: column.selector.name().to_owned(),
         unit: column.unit,
         values: column.values,
     });
@@ -283,8 +304,8 @@ fn csv(page: &SeriesPage) -> Result<Vec<u8>, Problem> {
         .map(str::to_owned)
         .into();
     record.extend(page.columns.iter().map(|column| match &column.unit {
-        Some(unit) => format!("{} [{unit}]", name(&column.selector)),
-        None => name(&column.selector).to_owned(),
+        Some(unit) => format!("{} [{unit}]", column.selector.name()),
+        None => column.selector.name().to_owned(),
     }));
     writer
         .write_record(&record)

@@ -45,6 +45,9 @@ const LINGER: Duration = Duration::from_secs(1);
 /// How long a client may leave an answer unread.
 const UNREAD: Duration = Duration::from_secs(30);
 
+/// How often the store is looked over for days that are over.
+const TIDIED_EVERY: Duration = Duration::from_secs(300);
+
 /// Largest request line with headers, in bytes.
 const LARGEST_HEAD: usize = 64 << 10;
 
@@ -185,9 +188,10 @@ struct Aside(JoinSet<()>);
 impl Aside {
     fn start(app: &App, tick: Duration, webhook: Option<Hook>, tls: Option<Tls>) -> Self {
         let mut tasks = JoinSet::new();
-        let (a, b, c) = (app.clone(), app.clone(), app.clone());
+        let (a, b, c, d) = (app.clone(), app.clone(), app.clone(), app.clone());
         tasks.spawn(resume_whenever_ready(a));
         tasks.spawn(async move { b.pass_time(tick).await });
+        tasks.spawn(async move { d.keep_tidy(TIDIED_EVERY).await });
         if let Some(hook) = webhook {
             tasks.spawn(async move { c.send_out(hook).await });
         }

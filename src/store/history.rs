@@ -55,22 +55,31 @@ pub struct Mean {
     pub standardised: Option<f64>,
 }
 
-/// A row of means: one for each selector.
+/// A row of means: one for each column.
 #[derive(Clone, Debug, PartialEq)]
 pub struct MeansRow {
     /// Start of the hour or day.
     pub start: OffsetDateTime,
     /// Batches of each verdict.
     pub verdicts: Vec<(Verdict, u32)>,
-    /// In the order of the selectors.
+    /// One for each column; `None` where no batch had a value.
     pub means: Vec<Option<Mean>>,
+}
+
+/// What a column of means is of.
+#[derive(Clone, Debug, PartialEq, Eq)]
+pub struct MeansColumn {
+    /// Of what.
+    pub selector: super::Selector,
+    /// Unit; `None` where the plant never had the selector.
+    pub unit: Option<String>,
 }
 
 /// A part of a table of means.
 #[derive(Clone, Debug, PartialEq)]
 pub struct MeansPage {
-    /// Unit of each selector; `None` where it never had one.
-    pub units: Vec<Option<String>>,
+    /// One column for each selector and each unit that it had.
+    pub columns: Vec<MeansColumn>,
     /// Rows in order of time.
     pub rows: Vec<MeansRow>,
     /// Where the next part starts.
@@ -100,6 +109,9 @@ pub trait HistoryStore: Send + Sync + 'static {
     /// of its own, short enough not to be felt by those who post.
     fn tidy(&self, now: OffsetDateTime, retention: Vec<(String, Retention)>) -> Reply<'_, Tidied>;
 
-    /// Hourly or daily means.
+    /// Hourly or daily means of finished batches, the earliest first, those of
+    /// today among them. An hour or day belongs to the batches whose periods
+    /// start in it. What comes for a day after its numbers were removed is not
+    /// in its means.
     fn means(&self, query: MeansQuery) -> Reply<'_, MeansPage>;
 }

@@ -4,11 +4,16 @@
 //! [`Store`] is the whole interface; [`SqliteStore`] is the one behind it. A
 //! call that returns `Ok` from [`Store::accept`] has put the batch where a
 //! power cut does not reach it. An error means that nothing was acknowledged.
-//! Nothing is ever deleted: what is changed leaves a trace of what it was.
+//! What is changed leaves a trace of what it was. Nothing is deleted, but for
+//! what a plant's retention no longer keeps ([`HistoryStore::tidy`]): bodies,
+//! reports and samples go, names, digests, verdicts and means stay.
 //! Nothing outside this directory knows SQL.
 
 mod access;
+mod averages;
+mod columns;
 mod copies;
+mod days;
 mod history;
 mod numbers;
 mod readings;
@@ -19,7 +24,9 @@ mod types;
 
 pub use access::{AccessStore, DeedRow, NewToken, TokenRow};
 pub use copies::{CopyError, Existing, Holdings, NewestBatch, Restored};
-pub use history::{HistoryStore, Mean, MeansPage, MeansQuery, MeansRow, Resolution, Tidied};
+pub use history::{
+    HistoryStore, Mean, MeansColumn, MeansPage, MeansQuery, MeansRow, Resolution, Tidied,
+};
 pub use readings::{
     Backfill, BackfillMark, Closed, NewSamples, NewTagSamples, OpenPeriod, PeriodBatch,
     ReadingsStore, SamplesTaken, TagSamples,
@@ -34,8 +41,8 @@ pub use sqlite::{
 };
 pub use types::{
     Acceptance, BatchLine, BatchQuery, Column, Cursor, Field, Health, Incoming, NewPlant, Page,
-    PlantLine, Precondition, PutOutcome, Selector, SeriesPage, SeriesQuery, SeriesRow, StoreError,
-    Stored, StoredPlant, Ticket, Unfinished,
+    PlantLine, Precondition, PutOutcome, Removed, Selector, SeriesPage, SeriesQuery, SeriesRow,
+    StoreError, Stored, StoredPlant, Ticket, Unfinished,
 };
 
 use crate::report::{Report, SingleTest};
@@ -55,7 +62,7 @@ pub type Reply<'a, T> = BoxFuture<'a, Result<T, StoreError>>;
 /// calls one after another are done in that order, whatever is awaited first.
 /// What has been called is done even where the future is dropped. They have to
 /// be called inside a Tokio runtime.
-pub trait Store: AccessStore + ReadingsStore + ReplaysStore {
+pub trait Store: AccessStore + HistoryStore + ReadingsStore + ReplaysStore {
     /// Takes a new revision of a plant, unless nothing changed or the
     /// precondition does not hold.
     fn put_plant(&self, new: NewPlant) -> Reply<'_, PutOutcome>;

@@ -11,24 +11,56 @@ use serde::{Deserialize, Serialize};
 use std::collections::HashMap;
 
 /// What a run of numbers belongs to.
-#[derive(Clone, Debug, PartialEq, Serialize, Deserialize)]
+#[derive(Clone, Debug, PartialEq, Eq, Hash, Serialize, Deserialize)]
 pub(super) struct Channel {
-    name: String,
-    unit: String,
-    kind: ChannelKind,
+    /// Tag, assumption, or owner and quantity.
+    pub name: String,
+    /// Unit.
+    pub unit: String,
+    /// Kind.
+    pub kind: ChannelKind,
 }
 
-#[derive(Clone, Copy, Debug, PartialEq, Serialize, Deserialize)]
+/// What kind of numbers a channel has.
+#[derive(Clone, Copy, Debug, PartialEq, Eq, Hash, Serialize, Deserialize)]
 #[serde(rename_all = "kebab-case")]
-enum ChannelKind {
+pub(super) enum ChannelKind {
+    /// Of a tag or assumption.
     Tag,
+    /// Of a quantity of a stream or piece of equipment.
     Quantity,
+    /// Of an imbalance.
     Imbalance,
 }
 
 impl ChannelKind {
+    /// Its name in the database.
+    pub fn name(self) -> &'static str {
+        match self {
+            ChannelKind::Tag => "tag",
+            ChannelKind::Quantity => "quantity",
+            ChannelKind::Imbalance => "imbalance",
+        }
+    }
+
+    /// The kind of a name in the database.
+    pub fn named(name: &str) -> Option<ChannelKind> {
+        [
+            ChannelKind::Tag,
+            ChannelKind::Quantity,
+            ChannelKind::Imbalance,
+        ]
+        .into_iter()
+        .find(|kind| kind.name() == name)
+    }
+
+    /// Whether a selector can mean it.
+    pub fn answers(self, selector: &Selector) -> bool {
+        matches!(selector, Selector::Tag(_)) == (self == ChannelKind::Tag)
+    }
+
     /// The numbers of such a channel, in their order.
-    fn fields(self) -> &'static [Field] {
+    pub fn fields(self) -> &'static [Field] {
         match self {
             ChannelKind::Tag => &[
                 Field::Measured,
@@ -148,6 +180,7 @@ pub(super) struct Layout {
 
 /// Where a number is, and in which unit.
 pub(super) struct Location<'l> {
+    pub channel: &'l Channel,
     pub index: Option<usize>,
     pub unit: &'l str,
 }
@@ -172,6 +205,12 @@ impl Layout {
         }
     }
 
+    /// Every channel that can be asked for, and the place of its first number.
+    pub fn channels(&self) -> impl Iterator<Item = (&Channel, usize)> {
+        let places = self.tags.values().chain(self.quantities.values());
+        places.map(|&(place, first)| (&self.channels[place], first))
+    }
+
     /// Where the field of the selector is; `None` where the layout does not
     /// have the selector.
     pub fn locate(&self, selector: &Selector, field: Field) -> Option<Location<'_>> {
@@ -186,6 +225,7 @@ impl Layout {
             _ => &channel.unit,
         };
         Some(Location {
+            channel,
             index: offset.map(|offset| first + offset),
             unit,
         })

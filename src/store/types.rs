@@ -190,6 +190,17 @@ pub enum Stored {
     Pending(Ticket),
     /// Finished.
     Done(Box<Report>),
+    /// Finished, and its report removed since.
+    Removed(Removed),
+}
+
+/// What is left of a batch that retention has removed.
+#[derive(Clone, Debug, PartialEq, Eq)]
+pub struct Removed {
+    /// When body and report were removed.
+    pub at: OffsetDateTime,
+    /// The verdict that the report had.
+    pub verdict: Verdict,
 }
 
 /// An accepted batch, with its newest body.
@@ -271,6 +282,15 @@ pub enum Selector {
     /// A quantity of a stream or piece of equipment: `live-steam.mass_flow`,
     /// `heater-6.imbalance.energy`.
     Quantity(String),
+}
+
+impl Selector {
+    /// The name.
+    pub fn name(&self) -> &str {
+        match self {
+            Selector::Tag(name) | Selector::Quantity(name) => name,
+        }
+    }
 }
 
 /// Which of its numbers.

@@ -72,6 +72,7 @@ fn every_route_is_described() {
         "get /v1/plants/{plant}/batches/{batch}/versions",
         "get /v1/plants/{plant}/batches/{batch}/versions/{version}",
         "get /v1/plants/{plant}/by-hand",
+        "get /v1/plants/{plant}/means",
         "get /v1/plants/{plant}/series",
         "post /v1/plants/{plant}/accusations/{id}/closing",
         "post /v1/plants/{plant}/again",

@@ -4,6 +4,7 @@ mod alarms;
 mod cases;
 mod kinds;
 mod network;
+mod retention;
 mod values;
 
 use proptest::prelude::*;

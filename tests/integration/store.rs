@@ -6,6 +6,7 @@ mod bodies;
 mod by_hand;
 mod delivered;
 mod file;
+mod history;
 mod old;
 mod readings;
 mod readings_file;

@@ -56,6 +56,7 @@ pub(in crate::http) const ROUTES: &[(&str, &str, Need)] = &[
     ("GET", "/v1/plants/{plant}/by-hand", READ),
     ("POST", "/v1/plants/{plant}/by-hand", OPERATE),
     ("POST", "/v1/plants/{plant}/by-hand/{id}/end", OPERATE),
+    ("GET", "/v1/plants/{plant}/means", READ),
     ("GET", "/v1/plants/{plant}/series", READ),
 ];
 

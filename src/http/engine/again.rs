@@ -13,8 +13,9 @@ use crate::http::revisions::Revision;
 use crate::pipeline::{self, Compiled, NoInfluences};
 use crate::plant::{Action, Batch, ByHand, Fault};
 use crate::report::{Influences, Report};
-use crate::store::{Again, NewFieldReading, Stored, Ticket};
+use crate::store::{Again, NewFieldReading, Removed, Stored, Ticket};
 use std::sync::Arc;
+use time::format_description::well_known::Rfc3339;
 
 /// Most field readings that one batch takes.
 const MOST_FIELD_READINGS: usize = 100;
@@ -187,6 +188,7 @@ impl Engine {
                     format!("batch \"{batch}\" is not finished yet"),
                 ));
             }
+            Some(Stored::Removed(gone)) => return Err(removed(batch, &gone)),
             None => return Err(no_batch(plant, batch)),
         };
         let inbox = self.store.inbox(plant, batch).await?;
@@ -297,6 +299,21 @@ fn decisions_of(report: &Report, batch: &Batch) -> Vec<ByHand> {
         by: done.by.clone(),
     });
     decisions.collect()
+}
+
+/// The answer where retention has removed a batch's report.
+pub(in crate::http) fn removed(batch: &str, removed: &Removed) -> Problem {
+    let at = removed.at.format(&Rfc3339).unwrap_or_default();
+    let verdict = serde_json::to_value(removed.verdict).unwrap_or_default();
+    Problem::new(
+        Kind::Gone,
+        format!(
+            "the report of batch \"{batch}\" and what was sent for it were removed on {at}, as the \
+             plant's retention says; kept are its name, digest, period and verdict ({}), and the \
+             hourly and daily means",
+            verdict.as_str().unwrap_or_default()
+        ),
+    )
 }
 
 /// The answer where a batch is not known.

@@ -11,7 +11,7 @@ mod again;
 mod field;
 mod lane;
 
-pub(super) use again::no_batch;
+pub(super) use again::{no_batch, removed};
 pub use field::FieldReading;
 pub(super) use field::{Extended, FieldReadings};
 pub(super) use lane::NotActed;
@@ -131,11 +131,12 @@ impl Engine {
             batch,
             known,
         } = accepted;
-        if known
-            && let Some(Stored::Done(report)) =
-                self.store.batch(&ticket.plant, &ticket.batch).await?
-        {
-            return Ok(Arc::new(*report));
+        if known {
+            match self.store.batch(&ticket.plant, &ticket.batch).await? {
+                Some(Stored::Done(report)) => return Ok(Arc::new(*report)),
+                Some(Stored::Removed(gone)) => return Err(removed(&ticket.batch, &gone)),
+                Some(Stored::Pending(_)) | None => {}
+            }
         }
         self.start(ticket, batch).await
     }

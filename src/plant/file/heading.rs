@@ -25,6 +25,7 @@ pub(super) const PLANT: Shape = Shape {
         "alarms",
         "averaging",
         "portable",
+        "retention",
     ],
 };
 

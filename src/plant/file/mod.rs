@@ -23,6 +23,7 @@ mod parts;
 mod portable;
 mod pressures;
 mod reader;
+mod retention;
 mod sides;
 mod structure;
 mod suggest;
@@ -39,7 +40,7 @@ use self::heading::Heading;
 use self::network::{End, Network};
 use self::reader::{At, Context};
 use self::tree::Node;
-use super::{Equipment, EquipmentId, Kind, Plant, Retention, Stream};
+use super::{Equipment, EquipmentId, Kind, Plant, Stream};
 
 /// How a plant file is written.
 #[derive(Clone, Copy, Debug, PartialEq, Eq)]
@@ -123,6 +124,7 @@ fn plant(root: &Node, cx: &mut Context<'_>) -> Option<Plant> {
     let assumptions = assumptions::read(&root, &network, &tags, cx);
     let alarms = alarms::read(&root, cx);
     let portable = portable::read(&root, cx);
+    let retention = retention::read(&root, averaging.as_ref(), cx);
     heading.check_references(&tags, &assumptions, cx);
     structure::check(&network, &kinds, &tags, &assumptions, cx);
     warnings::losses(&network, &assumptions, cx);
@@ -149,7 +151,7 @@ fn plant(root: &Node, cx: &mut Context<'_>) -> Option<Plant> {
         statuses: Vec::new(),
         running_when: None,
         averaging: averaging?,
-        retention: Retention::default(),
+        retention: retention?,
     };
     let places = warnings::Places {
         streams: network.streams.iter().map(|s| &s.place).collect(),

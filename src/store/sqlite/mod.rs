@@ -10,6 +10,7 @@
 mod access;
 mod copies;
 mod fault;
+mod history;
 mod open;
 mod read;
 mod readings;
@@ -25,7 +26,6 @@ mod tests;
 pub use copies::{backup, restore, verify};
 pub use open::OLDEST_SQLITE;
 
-use super::numbers::Layout;
 use super::{
     Acceptance, AccusationRow, Again, BatchLine, BatchQuery, ByHandRow, Ended, FieldReading,
     Health, Incoming, NewByHand, NewFieldReading, NewPlant, Page, PlantLine, PutOutcome, Reply,
@@ -34,11 +34,11 @@ use super::{
 };
 use crate::report::{Report, SingleTest};
 use futures::FutureExt;
+use history::Layouts;
 use sqlx::SqlitePool;
 use sqlx::sqlite::{SqliteConnection, SqlitePoolOptions};
-use std::collections::HashMap;
 use std::path::PathBuf;
-use std::sync::{Arc, Mutex};
+use std::sync::Arc;
 use std::time::Duration;
 use time::OffsetDateTime;
 use tokio::sync::{OwnedSemaphorePermit, Semaphore, mpsc, oneshot, watch};
@@ -112,7 +112,9 @@ pub struct SqliteStore {
     places: Arc<Semaphore>,
     readers: SqlitePool,
     health: watch::Receiver<Health>,
-    layouts: Mutex<HashMap<i64, Arc<Layout>>>,
+    layouts: Layouts,
+    /// One turn of the background work at a time.
+    tidying: tokio::sync::Mutex<()>,
 }
 
 impl SqliteStore {
@@ -156,7 +158,8 @@ impl SqliteStore {
             places,
             readers,
             health,
-            layouts: Mutex::default(),
+            layouts: Layouts::default(),
+            tidying: tokio::sync::Mutex::default(),
         }
     }
 

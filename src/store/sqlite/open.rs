@@ -4,7 +4,9 @@
 use super::fault::{corrupt, explain};
 use super::{Hindrance, SqliteOptions, Synchronous, sql};
 use crate::store::StoreError;
-use sqlx::sqlite::{SqliteConnectOptions, SqliteConnection, SqliteJournalMode, SqliteSynchronous};
+use sqlx::sqlite::{
+    SqliteAutoVacuum, SqliteConnectOptions, SqliteConnection, SqliteJournalMode, SqliteSynchronous,
+};
 use sqlx::{AssertSqlSafe, ConnectOptions};
 
 /// The oldest SQLite that is used: before it, a reset of the write-ahead log
@@ -27,6 +29,7 @@ fn writer(options: &SqliteOptions) -> SqliteConnectOptions {
     common(options)
         .create_if_missing(true)
         .page_size(PAGE_SIZE)
+        .auto_vacuum(SqliteAutoVacuum::Incremental)
         .journal_mode(SqliteJournalMode::Wal)
         .synchronous(match options.synchronous {
             Synchronous::Full => SqliteSynchronous::Full,

@@ -18,6 +18,7 @@ async fn every_statement_prepares() {
         (sql::OF_BATCHES, include_str!("sql/mod.rs")),
         (sql::OF_ACCESS, include_str!("sql/access.rs")),
         (sql::OF_COPIES, include_str!("sql/copies.rs")),
+        (sql::OF_HISTORY, include_str!("sql/history.rs")),
         (sql::OF_READINGS, include_str!("sql/readings.rs")),
         (sql::OF_RECORDS, include_str!("sql/records.rs")),
         (sql::OF_REPLAYS, include_str!("sql/replays.rs")),
@@ -43,7 +44,7 @@ async fn every_statement_prepares() {
         std::fs::read_dir(concat!(env!("CARGO_MANIFEST_DIR"), "/src/store/sqlite/sql"))
             .expect("the folder")
             .count(),
-        6,
+        7,
         "a file of statements is not looked at"
     );
 }
@@ -68,6 +69,8 @@ async fn a_commit_is_on_disk() {
         assert_eq!(pragma("journal_mode").await, "wal");
         assert_eq!(pragma("synchronous").await, "2", "FULL");
         assert_eq!(pragma("foreign_keys").await, "1");
+        assert_eq!(pragma("page_size").await, "16384");
+        assert_eq!(pragma("auto_vacuum").await, "2", "in steps");
     }
 }
 

@@ -4,30 +4,40 @@ use super::{count, earliest, latest};
 use crate::store::sqlite::fault::{explain, time};
 use crate::store::sqlite::sql;
 use crate::store::sqlite::values::{self, expand, verdict, verdict_name};
-use crate::store::{BatchLine, BatchQuery, Cursor, Page, StoreError, Stored, Ticket, Unfinished};
+use crate::store::{
+    BatchLine, BatchQuery, Cursor, Page, Removed, StoreError, Stored, Ticket, Unfinished,
+};
 use sqlx::SqlitePool;
+
+type OneRow = (i64, u32, u32, Option<Vec<u8>>, Option<i64>, Option<String>);
 
 pub(in crate::store::sqlite) async fn batch(
     pool: &SqlitePool,
     plant: &str,
     batch: &str,
 ) -> Result<Option<Stored>, StoreError> {
-    let row: Option<(i64, u32, u32, Option<Vec<u8>>)> = sqlx::query_as(sql::ONE_BATCH)
+    let row: Option<OneRow> = sqlx::query_as(sql::ONE_BATCH)
         .bind(plant)
         .bind(batch)
         .fetch_optional(pool)
         .await
         .map_err(|e| explain(&e))?;
-    row.map(|(id, revision, body, report)| match report {
-        None => Ok(Stored::Pending(Ticket {
-            id,
-            plant: plant.to_owned(),
-            batch: batch.to_owned(),
-            revision,
-            body,
-        })),
-        Some(report) => Ok(Stored::Done(Box::new(values::report(&report)?))),
-    })
+    row.map(
+        |(id, revision, body, report, removed, verdict_name)| match (report, removed) {
+            (Some(_), Some(removed)) => Ok(Stored::Removed(Removed {
+                at: time(removed)?,
+                verdict: verdict(&verdict_name.unwrap_or_default())?,
+            })),
+            (None, _) => Ok(Stored::Pending(Ticket {
+                id,
+                plant: plant.to_owned(),
+                batch: batch.to_owned(),
+                revision,
+                body,
+            })),
+            (Some(report), None) => Ok(Stored::Done(Box::new(values::report(&report)?))),
+        },
+    )
     .transpose()
 }
 
@@ -73,6 +83,8 @@ pub(in crate::store::sqlite) async fn inbox(
         .fetch_optional(pool)
         .await
         .map_err(|e| explain(&e))?;
+    // Where retention has removed the body, nothing can be made of it again.
+    let row = row.filter(|row| !row.body.is_empty());
     row.map(unfinished_of).transpose()
 }
 

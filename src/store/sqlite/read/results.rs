@@ -64,5 +64,7 @@ pub(in crate::store::sqlite) async fn version(
         .fetch_optional(pool)
         .await
         .map_err(|e| explain(&e))?;
+    // An empty one was removed.
+    let frame = frame.filter(|frame| !frame.is_empty());
     frame.map(|frame| values::report(&frame)).transpose()
 }

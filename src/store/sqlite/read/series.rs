@@ -1,23 +1,19 @@
-//! Numbers over time, without parsing a report.
+//! Numbers over time, without parsing a report: whole days from their chunks,
+//! the others from the rows of their batches.
 
-use super::{count, earliest, latest};
+use super::{earliest, latest};
+use crate::store::days::DayBatch;
 use crate::store::numbers::{self, Layout};
-use crate::store::sqlite::fault::{corrupt, explain, time};
+use crate::store::sqlite::fault::{explain, time};
+use crate::store::sqlite::history::{Chunked, Day, Layouts, Past, Values};
 use crate::store::sqlite::sql;
-use crate::store::sqlite::values::{expand, verdict};
 use crate::store::{Column, Cursor, SeriesPage, SeriesQuery, SeriesRow, StoreError};
 use sqlx::SqlitePool;
 use std::collections::HashMap;
-use std::sync::{Arc, Mutex, PoisonError};
-
-/// Rows of numbers that are held in memory at once: some 5 MB.
-const SERIES_CHUNK: usize = 512;
-
-type SeriesRowData = (i64, String, i64, i64, String, i64, Vec<u8>);
 
 pub(in crate::store::sqlite) async fn series(
     pool: &SqlitePool,
-    layouts: &Mutex<HashMap<i64, Arc<Layout>>>,
+    layouts: &Layouts,
     query: SeriesQuery,
 ) -> Result<SeriesPage, StoreError> {
     let mut table = Table::new(&query);
@@ -25,35 +21,42 @@ pub(in crate::store::sqlite) async fn series(
         start_ns: i64::MIN,
         id: 0,
     });
+    // One transaction: a day that is chunked meanwhile is whole here or there.
+    let mut on = pool.begin().await.map_err(|e| explain(&e))?;
+    let plant: Option<i64> = sqlx::query_scalar(sql::FIND_PLANT)
+        .bind(&query.plant)
+        .fetch_optional(&mut *on)
+        .await
+        .map_err(|e| explain(&e))?;
+    let Some(plant) = plant else {
+        return Ok(table.finish(None));
+    };
+    let time = (earliest(query.from).max(after.start_ns), latest(query.to));
+    let past = Past::new(&mut on, plant, &query.selectors, vec![query.field], time);
+    let mut past = past.await?;
+    table.know(&past);
     loop {
-        // One row beyond the limit tells whether there are more.
-        let wanted = (query.limit + 1 - table.rows.len()).min(SERIES_CHUNK);
-        let rows: Vec<SeriesRowData> = sqlx::query_as(sql::SERIES)
-            .bind(&query.plant)
-            .bind(earliest(query.from))
-            .bind(latest(query.to))
-            .bind(after.start_ns)
-            .bind(after.id)
-            .bind(count(wanted))
-            .fetch_all(pool)
-            .await
-            .map_err(|e| explain(&e))?;
-        let ended = rows.len() < wanted;
-        for row in rows {
-            if table.rows.len() == query.limit {
-                return Ok(table.finish(Some(after)));
-            }
-            after = Cursor {
-                start_ns: row.2,
-                id: row.0,
-            };
-            let layout = layout(pool, layouts, row.5).await?;
-            table.add(row, &layout)?;
-        }
-        if ended {
+        let days = past.days(|_, _| true).await?;
+        if days.is_empty() {
             return Ok(table.finish(None));
         }
+        for day in days {
+            let full = table.fill(&mut past, layouts, &day, &mut after).await?;
+            if full {
+                return Ok(table.finish(Some(after)));
+            }
+        }
     }
+}
+
+/// Where the number of a selector is in the batches of one layout.
+struct Plan {
+    /// Place among the selector's columns.
+    column: usize,
+    /// Among the numbers of a batch.
+    index: Option<usize>,
+    /// Its channel, where it has chunks.
+    channel: Option<i64>,
 }
 
 /// The columns of a series while they grow.
@@ -62,6 +65,9 @@ struct Table<'q> {
     rows: Vec<SeriesRow>,
     /// For each selector the columns of each unit that it had.
     columns: Vec<Vec<Column>>,
+    /// By layout, one for each selector.
+    plans: HashMap<i64, Vec<Option<Plan>>>,
+    channels: HashMap<numbers::Channel, i64>,
 }
 
 impl<'q> Table<'q> {
@@ -71,41 +77,107 @@ impl<'q> Table<'q> {
             query,
             rows: Vec::new(),
             columns,
+            plans: HashMap::new(),
+            channels: HashMap::new(),
         }
     }
 
-    fn add(&mut self, row: SeriesRowData, layout: &Layout) -> Result<(), StoreError> {
-        let (_, batch, start, end, verdict_name, _, numbers) = row;
-        let place = self.rows.len();
-        self.rows.push(SeriesRow {
-            batch,
-            start: time(start)?,
-            end: time(end)?,
-            verdict: verdict(&verdict_name)?,
-        });
+    fn know(&mut self, past: &Past<'_>) {
+        let channels = past.channels().iter();
+        self.channels = channels
+            .map(|(id, channel)| (channel.clone(), *id))
+            .collect();
+    }
+
+    /// Takes the batches of a day beyond a place, which is moved on; true where
+    /// there are more than were asked for.
+    async fn fill(
+        &mut self,
+        past: &mut Past<'_>,
+        layouts: &Layouts,
+        day: &Day,
+        after: &mut Cursor,
+    ) -> Result<bool, StoreError> {
+        let chunked = past.chunked(day)?;
+        loop {
+            // One batch beyond the limit tells whether there are more.
+            let wanted = self.query.limit + 1 - self.rows.len();
+            let (batches, next) = past.batches(day, *after, wanted).await?;
+            for found in batches {
+                if self.rows.len() == self.query.limit {
+                    return Ok(true);
+                }
+                *after = found.place();
+                if !self.plans.contains_key(&found.batch.layout) {
+                    let layout = layouts.get(past.on(), found.batch.layout).await?;
+                    self.plan(found.batch.layout, &layout);
+                }
+                self.add(found.batch, &found.values, &chunked)?;
+            }
+            match next {
+                Some(next) => *after = next,
+                None => return Ok(false),
+            }
+        }
+    }
+
+    /// A layout that the next batch has.
+    fn plan(&mut self, id: i64, layout: &Layout) {
+        let mut plans = Vec::new();
         for (selector, columns) in self.query.selectors.iter().zip(&mut self.columns) {
             let Some(location) = layout.locate(selector, self.query.field) else {
+                plans.push(None);
                 continue;
             };
             let known = columns
                 .iter()
                 .position(|column| column.unit.as_deref() == Some(location.unit));
             let column = known.unwrap_or_else(|| {
-                let unit = Some(location.unit.to_owned());
                 columns.push(Column {
                     selector: selector.clone(),
-                    unit,
+                    unit: Some(location.unit.to_owned()),
                     values: Vec::new(),
                 });
                 columns.len() - 1
             });
-            let values = &mut columns[column].values;
-            values.resize(place, None);
-            values.push(
-                location
-                    .index
-                    .and_then(|index| numbers::read(&numbers, index)),
-            );
+            plans.push(Some(Plan {
+                column,
+                index: location.index,
+                channel: self.channels.get(location.channel).copied(),
+            }));
+        }
+        self.plans.insert(id, plans);
+    }
+
+    fn add(
+        &mut self,
+        batch: DayBatch,
+        values: &Values,
+        chunked: &Chunked,
+    ) -> Result<(), StoreError> {
+        let place = self.rows.len();
+        self.rows.push(SeriesRow {
+            batch: batch.name,
+            start: time(batch.start)?,
+            end: time(batch.end)?,
+            verdict: batch.verdict,
+        });
+        let plans = self.plans.get(&batch.layout).into_iter().flatten();
+        for (plan, columns) in plans.zip(&mut self.columns) {
+            let Some(plan) = plan else {
+                continue;
+            };
+            let value = match (plan.index, values) {
+                (None, _) => None,
+                (Some(index), Values::Hot(numbers)) => numbers::read(numbers, index),
+                // No channel has this number.
+                (_, Values::Chunked(at)) => {
+                    chunked.value(plan.channel.unwrap_or(0), self.query.field, *at)?
+                }
+            };
+            let column = &mut columns[plan.column].values;
+            column.resize(place, None);
+            column.push(value);
         }
         Ok(())
     }
@@ -131,34 +203,4 @@ impl<'q> Table<'q> {
             next,
         }
     }
-}
-
-async fn layout(
-    pool: &SqlitePool,
-    layouts: &Mutex<HashMap<i64, Arc<Layout>>>,
-    id: i64,
-) -> Result<Arc<Layout>, StoreError> {
-    // The map stays whole whatever happened to a thread that held it.
-    let known = layouts
-        .lock()
-        .unwrap_or_else(PoisonError::into_inner)
-        .get(&id)
-        .cloned();
-    if let Some(known) = known {
-        return Ok(known);
-    }
-    let channels: Vec<u8> = sqlx::query_scalar(sql::READ_LAYOUT)
-        .bind(id)
-        .fetch_one(pool)
-        .await
-        .map_err(|e| explain(&e))?;
-    let channels = expand(&channels)?;
-    let read = Arc::new(Layout::new(
-        serde_json::from_slice(&channels).map_err(corrupt)?,
-    ));
-    layouts
-        .lock()
-        .unwrap_or_else(PoisonError::into_inner)
-        .insert(id, Arc::clone(&read));
-    Ok(read)
 }

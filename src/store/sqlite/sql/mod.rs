@@ -3,12 +3,14 @@
 
 mod access;
 mod copies;
+mod history;
 mod readings;
 mod records;
 mod replays;
 
 pub(super) use access::*;
 pub(super) use copies::*;
+pub(super) use history::*;
 pub(super) use readings::*;
 pub(super) use records::*;
 pub(super) use replays::*;
@@ -97,7 +99,8 @@ pub(in crate::store::sqlite) const CRITICAL_VALUES: &str = "
 
 pub(in crate::store::sqlite) const ONE_BATCH: &str = "
     SELECT i.id, i.revision,
-           COALESCE((SELECT MAX(b.version) FROM inbox_bodies b WHERE b.inbox_id = i.id), 1), r.report
+           COALESCE((SELECT MAX(b.version) FROM inbox_bodies b WHERE b.inbox_id = i.id), 1),
+           r.report, i.removed_ns, r.verdict
     FROM inbox i JOIN plants p ON p.id = i.plant_id
     LEFT JOIN results r ON r.inbox_id = i.id
     WHERE p.name = ?1 AND i.batch = ?2";
@@ -125,14 +128,6 @@ pub(in crate::store::sqlite) const BATCHES: &str = "
       AND (i.start_ns, i.id) < (?4, ?5)
       AND (?6 IS NULL OR r.verdict = ?6)
     ORDER BY i.start_ns DESC, i.id DESC LIMIT ?7";
-
-pub(in crate::store::sqlite) const SERIES: &str = "
-    SELECT i.id, i.batch, i.start_ns, i.end_ns, r.verdict, r.layout_id, r.numbers
-    FROM inbox i JOIN results r ON r.inbox_id = i.id
-    WHERE i.plant_id = (SELECT id FROM plants WHERE name = ?1)
-      AND i.start_ns >= ?2 AND i.start_ns < ?3
-      AND (i.start_ns, i.id) > (?4, ?5)
-    ORDER BY i.start_ns, i.id LIMIT ?6";
 
 /// All of this file.
 #[cfg(test)]
@@ -162,5 +157,4 @@ pub(in crate::store::sqlite) const OF_BATCHES: &[&str] = &[
     ONE_BATCH,
     UNFINISHED,
     BATCHES,
-    SERIES,
 ];

@@ -9,6 +9,7 @@ mod backfills;
 mod batches;
 mod by_hand;
 mod delivered;
+mod history;
 mod periods;
 mod plants;
 mod replays;
@@ -21,6 +22,9 @@ pub(super) use backfills::{BeginBackfill, EndBackfill};
 pub(super) use batches::Accept;
 pub(super) use by_hand::{AddByHand, AddFieldReading, EndByHand};
 pub(super) use delivered::SetDelivered;
+pub(super) use history::{
+    Channelled, CloseDay, DayDone, GiveBack, MoveOld, PutChannels, PutChunks, Remove, Sweep,
+};
 pub(super) use periods::{ClosePeriod, DropPeriod};
 pub(super) use plants::PutPlant;
 pub(super) use replays::{AddReplay, AddReplayed, EndReplay};

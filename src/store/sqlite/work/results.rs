@@ -2,6 +2,7 @@
 
 use super::Work;
 use super::access::note;
+use super::history::keep_numbers;
 use super::watch::Look;
 use crate::report::Report;
 use crate::store::numbers;
@@ -178,12 +179,15 @@ impl Row {
             .bind(self.statistic)
             .bind(self.degrees_of_freedom)
             .bind(layout)
-            .bind(&self.numbers)
+            .bind(&[][..])
             .bind(&self.report)
             .bind(self.body)
             .execute(&mut *on)
             .await?
             .rows_affected();
+        if written > 0 {
+            keep_numbers(&mut *on, self.inbox_id, &self.numbers).await?;
+        }
         if written > 0
             && let Some((class_set, test)) = &self.single_test
         {
