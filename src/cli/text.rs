@@ -4,7 +4,8 @@ use super::moved::moved;
 use super::table::{Table, decimals, fixed, number, pair, plain_zero};
 use super::{CAUTION, DECIDE, suspects};
 use crate::report::{
-    ByHandReport, Class, GlobalTest, Imbalance, Phase, QuantityReport, Report, TagReport, Verdict,
+    Averaged, ByHandReport, Class, GlobalTest, Imbalance, Phase, QuantityReport, Report, TagReport,
+    Verdict,
 };
 use std::fmt::Write;
 use time::OffsetDateTime;
@@ -61,7 +62,12 @@ pub(super) fn describe(report: &Report) -> String {
         minute(report.start),
         minute(report.end),
     );
-    let _ = writeln!(text, "{}\n", verdict_line(report));
+    let _ = writeln!(text, "{}", verdict_line(report));
+    // A plant in transition is among the notes.
+    if let Some(steadiness) = report.steadiness.as_ref().filter(|found| found.steady) {
+        let _ = writeln!(text, "steady, by {} tags judged", steadiness.judged);
+    }
+    text.push('\n');
     for decision in &report.by_hand {
         let _ = writeln!(text, "{}", by_hand(decision));
     }
@@ -207,7 +213,28 @@ fn remark(tag: &TagReport, critical: Option<f64>) -> String {
         parts.push(class_name(tag.class).to_owned());
     }
     parts.extend(tag.reason.clone());
+    parts.extend(tag.averaged.as_ref().and_then(samples));
     parts.join(": ")
+}
+
+/// "not steady, 2 spike, 1 bad among 60 samples", where there is any such thing.
+fn samples(averaged: &Averaged) -> Option<String> {
+    let flags = averaged
+        .flags
+        .iter()
+        .map(|(flag, count)| format!("{count} {flag}"));
+    let mut told: Vec<String> = flags.collect();
+    if !told.is_empty() {
+        told = vec![format!(
+            "{} among {} samples",
+            told.join(", "),
+            averaged.samples
+        )];
+    }
+    if averaged.steady == Some(false) {
+        told.insert(0, "not steady".to_owned());
+    }
+    (!told.is_empty()).then(|| told.join(", "))
 }
 
 fn streams(report: &Report) -> Table {

@@ -31,6 +31,66 @@ pub struct Batch {
     pub end: OffsetDateTime,
     /// At most one per tag; unknown tags are listed in the answer.
     pub readings: Vec<Reading>,
+    /// Whether the plant was steady, where the client has judged it.
+    #[serde(default)]
+    pub steadiness: Option<Steadiness>,
+}
+
+/// Whether the plant was steady over the period.
+#[derive(Deserialize, ToSchema)]
+#[schema(as = BatchSteadiness)]
+#[serde(deny_unknown_fields)]
+pub struct Steadiness {
+    /// It was.
+    pub steady: bool,
+    /// Tags that were judged.
+    pub judged: u32,
+    /// Those of them that were not steady.
+    #[serde(default)]
+    pub unsteady: Option<Vec<String>>,
+}
+
+/// What a reading was averaged from.
+#[derive(Deserialize, ToSchema)]
+#[schema(as = ReadingAveraged)]
+#[serde(deny_unknown_fields)]
+pub struct Averaged {
+    /// Samples that the period had.
+    pub samples: u32,
+    /// Samples that the mean uses.
+    pub used: u32,
+    /// Part of the period that good samples cover.
+    #[schema(minimum = 0, maximum = 1)]
+    pub covered: f64,
+    /// Standard uncertainty of the mean from the scatter within the period, in the
+    /// tag's unit; it adds to the tag's own as root of squares.
+    #[schema(minimum = 0)]
+    pub scatter: Option<f64>,
+    /// Whether the tag was steady.
+    pub steady: Option<bool>,
+    /// How many samples had what.
+    pub flags: Option<Flags>,
+    /// Why the value must not be used: it is left out, with this reason.
+    #[schema(min_length = 1, max_length = 500)]
+    pub unused: Option<String>,
+}
+
+/// What was found among samples, and how often.
+#[derive(Deserialize, ToSchema)]
+#[serde(deny_unknown_fields, rename_all = "kebab-case")]
+pub struct Flags {
+    /// Of bad quality.
+    pub bad: Option<u32>,
+    /// Of uncertain quality.
+    pub uncertain: Option<u32>,
+    /// Outside the range of the tag.
+    pub out_of_range: Option<u32>,
+    /// Standing out from their neighbours.
+    pub spike: Option<u32>,
+    /// Older than a value may be.
+    pub stale: Option<u32>,
+    /// Unmoved for longer than the signal can stand still.
+    pub stuck: Option<u32>,
 }
 
 /// One value of one tag.
@@ -48,6 +108,9 @@ pub struct Reading {
     /// Time of the value, RFC 3339 with offset; kept with the batch.
     #[serde(default, with = "time::serde::rfc3339::option")]
     pub time: Option<OffsetDateTime>,
+    /// What it was averaged from, where the client has averaged it.
+    #[serde(default)]
+    pub averaged: Option<Averaged>,
 }
 
 /// Quality of a reading.

@@ -9,6 +9,7 @@
 
 mod assess;
 mod attempt;
+mod averaged;
 mod checks;
 mod class_set;
 mod compiled;
@@ -98,7 +99,7 @@ fn empty_report(compiled: &Compiled, batch: &Batch, readings: &Readings) -> Repo
         by_hand: readings.by_hand.clone(),
         line_up: None,
         findings: Vec::new(),
-        steadiness: None,
+        steadiness: batch.steadiness.as_ref().map(averaged::steadiness),
         ignored_tags: readings.ignored.clone(),
         remarks: readings.remarks.clone(),
     }

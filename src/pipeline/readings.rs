@@ -1,8 +1,9 @@
 //! From a batch's readings to measured values with their sigma.
 
+use super::averaged;
 use crate::equations::Measured;
 use crate::plant::{Action, Batch, ByHand, Grade, Plant, Quantity, Reading, Sigma};
-use crate::report::ByHandReport;
+use crate::report::{Averaged, ByHandReport};
 use std::collections::HashMap;
 
 /// What a batch says, tag by tag in the order of the plant file, assumptions
@@ -17,6 +18,8 @@ pub struct Readings {
     pub sigmas: Vec<Option<Sigma>>,
     /// Why a tag is not used, or what was done to it.
     pub reasons: Vec<Option<String>>,
+    /// What a tag's value was averaged from.
+    pub averaged: Vec<Option<Averaged>>,
     /// Tags of the batch that the plant does not know.
     pub ignored: Vec<String>,
     /// What a person should see.
@@ -31,6 +34,7 @@ struct Resolved {
     sigma: Option<Sigma>,
     used: bool,
     reason: Option<String>,
+    averaged: Option<Averaged>,
 }
 
 impl Readings {
@@ -71,6 +75,7 @@ impl Readings {
                 sigma,
                 used: sigma.is_some(),
                 reason: None,
+                averaged: None,
             };
             readings.push(resolved, &assumption.unit);
         }
@@ -82,6 +87,9 @@ impl Readings {
         ignored.sort();
         readings.ignored = ignored;
         readings
+            .remarks
+            .extend(averaged::transition(batch.steadiness.as_ref()));
+        readings
     }
 
     fn empty() -> Self {
@@ -90,6 +98,7 @@ impl Readings {
             values: Vec::new(),
             sigmas: Vec::new(),
             reasons: Vec::new(),
+            averaged: Vec::new(),
             ignored: Vec::new(),
             remarks: Vec::new(),
             by_hand: Vec::new(),
@@ -102,6 +111,7 @@ impl Readings {
             sigma,
             used,
             reason,
+            averaged,
         } = resolved;
         let measured = match (used, value, sigma) {
             (true, Some(value), Some(sigma)) => {
@@ -116,6 +126,7 @@ impl Readings {
         self.values.push(value);
         self.sigmas.push(sigma);
         self.reasons.push(reason);
+        self.averaged.push(averaged);
     }
 }
 
@@ -126,6 +137,7 @@ impl Resolved {
             sigma: None,
             used: false,
             reason: Some(reason.to_owned()),
+            averaged: None,
         }
     }
 
@@ -157,14 +169,28 @@ impl Resolved {
         uncertain_factor: f64,
         sigma_of: impl Fn(f64) -> Option<Sigma>,
     ) -> Self {
+        Resolved {
+            averaged: reading.averaged.as_ref().map(averaged::in_report),
+            ..Resolved::weighed(reading, uncertain_factor, sigma_of)
+        }
+    }
+
+    fn weighed(
+        reading: &Reading,
+        uncertain_factor: f64,
+        sigma_of: impl Fn(f64) -> Option<Sigma>,
+    ) -> Self {
+        let made = reading.averaged.as_ref();
+        let why_not = made.and_then(|made| made.unused.as_deref());
         let Some(value) = reading.value else {
-            return Resolved::unused(None, "the reading has no value");
+            return Resolved::unused(None, why_not.unwrap_or("the reading has no value"));
         };
         let sigma = sigma_of(value);
-        if reading.quality.grade == Grade::Bad {
+        let is_bad = reading.quality.grade == Grade::Bad;
+        if let Some(reason) = why_not.or(is_bad.then_some("bad quality")) {
             return Resolved {
                 sigma,
-                ..Resolved::unused(Some(value), "bad quality")
+                ..Resolved::unused(Some(value), reason)
             };
         }
         let Some(sigma) = sigma else {
@@ -173,21 +199,24 @@ impl Resolved {
                 "its uncertainty comes out zero or infinite at this reading",
             );
         };
-        if reading.quality.grade == Grade::Uncertain {
-            return Resolved {
-                value: Some(value),
-                sigma: Sigma::new(sigma.get() * uncertain_factor),
-                used: true,
-                reason: Some(format!(
-                    "uncertain quality: sigma widened by {uncertain_factor}"
-                )),
-            };
+        let is_uncertain = reading.quality.grade == Grade::Uncertain;
+        let own = match is_uncertain {
+            true => sigma.get() * uncertain_factor,
+            false => sigma.get(),
+        };
+        // The instrument's error and the scatter of the mean are independent.
+        let scatter = made.and_then(|made| made.scatter).unwrap_or(0.0);
+        let sigma = Sigma::new(own.hypot(scatter));
+        if sigma.is_none() {
+            return Resolved::unused(Some(value), "its scatter is beyond the range of a double");
         }
         Resolved {
             value: Some(value),
-            sigma: Some(sigma),
+            sigma,
             used: true,
-            reason: None,
+            reason: is_uncertain
+                .then(|| format!("uncertain quality: sigma widened by {uncertain_factor}")),
+            averaged: None,
         }
     }
 }

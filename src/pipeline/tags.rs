@@ -51,7 +51,7 @@ fn entry(i: usize, unit: &Unit, readings: &Readings, solution: Option<&Solution>
         detectable: None,
         class: Class::Unused,
         reason: readings.reasons[i].clone(),
-        averaged: None,
+        averaged: readings.averaged[i].clone(),
     };
     let Some(solution) = solution else {
         if readings.measured[i].is_some() {

@@ -2,6 +2,7 @@
 
 mod access;
 mod alarms;
+mod averaged;
 mod backup;
 mod batches;
 mod by_hand;

@@ -1,6 +1,7 @@
 //! Plant files: what is accepted, what is refused, and how it is explained.
 
 mod alarms;
+mod averaging;
 mod cases;
 mod kinds;
 mod network;
