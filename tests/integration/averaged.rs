@@ -5,7 +5,7 @@ use counterpoise::averaging;
 use counterpoise::demo;
 use counterpoise::ingest;
 use counterpoise::pipeline::{Compiled, reconcile};
-use counterpoise::plant::{Batch, Grade, Quality, Sample};
+use counterpoise::plant::{Batch, COVERAGE_FACTOR, Grade, Quality, Sample};
 use counterpoise::report::{Class, Report, Verdict};
 use serde_json::{Value, json};
 use std::collections::HashMap;
@@ -46,12 +46,12 @@ fn scatter_widens_and_flags_are_told() {
     let plain = reconcile(&compiled, &parsed(&body));
     let own = plain.tags["TT-102B"].uncertainty_measured.unwrap();
     reading(&mut body, "TT-102B")["averaged"] = json!({
-        "samples": 60, "used": 58, "covered": 1.0, "scatter": 0.5 * own,
+        "samples": 60, "used": 58, "covered": 1.0, "scatter": own / COVERAGE_FACTOR,
         "steady": false, "flags": {"spike": 2},
     });
     let report = reconcile(&compiled, &parsed(&body));
     let tag = &report.tags["TT-102B"];
-    // Half of the uncertainty is one sigma, as is the scatter.
+    // One sigma of scatter beside one of the tag's own.
     assert!((tag.uncertainty_measured.unwrap() / own - 2.0_f64.sqrt()).abs() < 1e-12);
     let made = tag.averaged.as_ref().unwrap();
     assert!((made.scatter.unwrap() / own - 1.0).abs() < 1e-12);
@@ -88,13 +88,13 @@ fn what_is_too_poor_is_left_out_with_its_reason() {
 #[test]
 fn a_plant_in_transition_is_reconciled_and_marked() {
     let mut body = body();
-    body["steadiness"] = json!({"steady": false, "judged": 40, "unsteady": ["FT-201", "TT-201"]});
+    body["steadiness"] = json!({"steady": false, "judged": 40, "unsteady": ["FT-102", "TT-201"]});
     let report = reconcile(&compiled(), &parsed(&body));
     assert_eq!(report.verdict, Verdict::Consistent);
     let steadiness = report.steadiness.as_ref().unwrap();
     assert_eq!((steadiness.steady, steadiness.judged), (false, 40));
     let remark =
-        "the plant was in transition: 2 of 40 tags judged were not steady (FT-201, TT-201)";
+        "the plant was in transition: 2 of 40 tags judged were not steady (FT-102, TT-201)";
     assert!(
         report.remarks.iter().any(|told| told == remark),
         "{:?}",
@@ -120,7 +120,7 @@ fn the_command_line_says_so() {
         String::from_utf8(output.stdout).expect("UTF-8")
     };
     let text = told(&|body| {
-        body["steadiness"] = json!({"steady": false, "judged": 40, "unsteady": ["FT-201"]});
+        body["steadiness"] = json!({"steady": false, "judged": 40, "unsteady": ["FT-102"]});
         reading(body, "TT-102B")["averaged"] = json!({
             "samples": 60, "used": 57, "covered": 1, "steady": false, "flags": {"bad": 1, "spike": 2},
         });
@@ -171,13 +171,13 @@ fn samples_become_a_batch_and_the_batch_a_report() {
         .collect();
     let mut spiked = map["TT-102B"].to_vec();
     spiked[12].value = spiked[12].value.map(|value| value + 60.0);
-    let mut holed = map["FT-201"].to_vec();
+    let mut holed = map["FT-102"].to_vec();
     for sample in &mut holed[5..25] {
         sample.quality.grade = Grade::Bad;
         sample.quality.code = Some(0x8000_0000);
     }
     map.insert("TT-102B", &spiked);
-    map.insert("FT-201", &holed);
+    map.insert("FT-102", &holed);
     let made = averaging::batch(plant, given.start, given.end, "p", &map);
     let read = ingest::parse(&ingest::write(&made), OffsetDateTime::now_utc()).expect("a batch");
     assert_eq!(read.batch, made);
@@ -192,7 +192,7 @@ fn samples_become_a_batch_and_the_batch_a_report() {
         report.tags["TT-102B"].averaged.as_ref().unwrap().flags["spike"],
         1
     );
-    assert_eq!(report.tags["FT-201"].class, Class::Unused);
-    let reason = report.tags["FT-201"].reason.as_ref().unwrap();
+    assert_eq!(report.tags["FT-102"].class, Class::Unused);
+    let reason = report.tags["FT-102"].reason.as_ref().unwrap();
     assert!(reason.contains("(20 bad)"), "{reason}");
 }
