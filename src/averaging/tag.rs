@@ -209,7 +209,7 @@ fn quality(points: &[Point], weights: &Weights, has_value: bool) -> Quality {
     } else {
         Grade::Good
     };
-    let latest = used().filter(|(_, point)| point.grade == grade).last();
+    let latest = used().rfind(|(_, point)| point.grade == grade);
     Quality {
         grade,
         code: latest.and_then(|(_, point)| point.code),
