@@ -1,4 +1,8 @@
-//! Settings of the service, from the command line and the environment.
+//! Settings of the service, from the command line, the environment and a file.
+
+mod file;
+
+pub use file::{Unusable, settings, strange_variables, with_settings};
 
 use crate::access::Rate;
 use crate::server::{self, Hook, Limits, Options};
@@ -16,6 +20,11 @@ const TICK: Duration = Duration::from_secs(1);
 /// Settings of a running service.
 #[derive(Args, Clone, Debug)]
 pub struct Config {
+    /// File with settings in TOML; what is set here or in the environment goes
+    /// before it. `counterpoise config` prints one with every setting.
+    #[arg(long, env = "COUNTERPOISE_CONFIG", value_name = "FILE")]
+    pub config: Option<PathBuf>,
+
     /// Address to listen on; port 0 takes a free one.
     #[arg(long, env = "COUNTERPOISE_LISTEN", default_value = "127.0.0.1:8080")]
     pub listen: SocketAddr,

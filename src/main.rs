@@ -1,9 +1,8 @@
 //! The program: reads the command line, opens the store, starts the service.
 
 use anyhow::Context;
-use clap::Parser;
 use counterpoise::cli::{self, Cli, Command};
-use counterpoise::config::Config;
+use counterpoise::config::{Config, Unusable};
 use counterpoise::server::{Server, SystemClock, SystemEntropy};
 use counterpoise::store::SqliteStore;
 use counterpoise::telemetry;
@@ -13,7 +12,19 @@ use tokio::signal::unix::{SignalKind, signal};
 use tokio_util::sync::CancellationToken;
 
 fn main() -> ExitCode {
-    let outcome = match Cli::parse().command {
+    let Cli { command } = match cli::parse() {
+        Ok(cli) => cli,
+        Err(error) => {
+            eprintln!("{error}");
+            let unread = matches!(error, Unusable::Unread(..));
+            return ExitCode::from(if unread {
+                cli::EXIT_TROUBLE
+            } else {
+                cli::EXIT_FAULTS
+            });
+        }
+    };
+    let outcome = match command {
         Command::Serve(config) => service(serve(config)),
         Command::Demo(demo) => service(run_demo(demo)),
         Command::Check(check) => cli::check(&check),
@@ -24,6 +35,7 @@ fn main() -> ExitCode {
         Command::Restore(restore) => run(cli::restore(&restore)),
         Command::Verify(verify) => run(cli::verify(&verify)),
         Command::Token(tokens) => run(cli::tokens(tokens)),
+        Command::Config(settings) => cli::settings(&settings),
         Command::Openapi => cli::openapi(),
         Command::MakeDemoFixture { out } => cli::make_demo_fixture(&out),
     };

@@ -60,6 +60,7 @@ impl Demo {
             false => SocketAddr::from((Ipv4Addr::LOCALHOST, 0)),
         });
         Config {
+            config: None,
             listen,
             database: self.database.clone(),
             bounds: self.bounds.clone(),

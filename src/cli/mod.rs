@@ -1,6 +1,6 @@
 //! The command line.
 //!
-//! Exit codes: 0, done, whatever the verdict; 1, the plant file, a batch or a
+//! Exit codes: 0, done, whatever the verdict; 1, the plant file, a batch, the settings or a
 //! copy of the database has faults; 2, the command line itself (from `clap`); 3, anything else, such as
 //! a file that cannot be read. A reader that closes our output early, as `head`
 //! does, ends the work with 0.
@@ -14,6 +14,7 @@ mod input;
 mod moved;
 mod output;
 mod reconcile;
+mod settings;
 mod summary;
 mod suspects;
 mod table;
@@ -28,6 +29,7 @@ pub use demo::{Demo, demo};
 pub use influences::{Influences, influences};
 pub use output::Unread;
 pub use reconcile::{Reconcile, reconcile};
+pub use settings::{Settings, parse, settings};
 pub use tell_apart::{TellApart, tell_apart};
 pub use token::{Tokens, tokens};
 
@@ -36,7 +38,8 @@ use clap::{Parser, Subcommand};
 use std::path::{Path, PathBuf};
 use std::process::ExitCode;
 
-/// Exit code where the plant file, a batch or a copy of the database has faults.
+/// Exit code where the plant file, a batch, the settings or a copy of the database has
+/// faults.
 pub const EXIT_FAULTS: u8 = 1;
 
 /// Exit code of anything else that went wrong.
@@ -54,7 +57,7 @@ const DECIDE: &str = "Site procedures, local codes and licensed engineers decide
     name = "counterpoise",
     version,
     about,
-    after_help = "Exit codes: 0 done, whatever the verdict; 1 the plant file, a batch or a copy of the database has faults; 2 wrong command line; 3 anything else.\n\nAdvisory only, not for protection or safety functions."
+    after_help = "Exit codes: 0 done, whatever the verdict; 1 the plant file, a batch, the settings or a copy of the database has faults; 2 wrong command line; 3 anything else.\n\nAdvisory only, not for protection or safety functions."
 )]
 pub struct Cli {
     /// What to do.
@@ -85,6 +88,8 @@ pub enum Command {
     Verify(Verify),
     /// Make, list and revoke tokens; beside a service that may be running.
     Token(Tokens),
+    /// Print a settings file with every option, or look one over.
+    Config(Settings),
     /// Print the OpenAPI document of the service.
     Openapi,
     /// Make the demo's batches, and the truth beside them, again from their seed.

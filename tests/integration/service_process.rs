@@ -7,13 +7,13 @@ use std::path::Path;
 use std::process::{Child, ChildStderr, Command, Output, Stdio};
 use std::time::Duration;
 
-fn program() -> Command {
+pub fn program() -> Command {
     let mut command = Command::new(env!("CARGO_BIN_EXE_counterpoise"));
     command.env_clear();
     command
 }
 
-fn run(directory: &Path, arguments: &[&str], input: &str) -> Output {
+pub fn run(directory: &Path, arguments: &[&str], input: &str) -> Output {
     let mut child = program()
         .args(arguments)
         .current_dir(directory)
@@ -50,7 +50,7 @@ fn files() -> tempfile::TempDir {
     directory
 }
 
-fn text(bytes: &[u8]) -> String {
+pub fn text(bytes: &[u8]) -> String {
     String::from_utf8(bytes.to_vec()).expect("text")
 }
 
