@@ -178,6 +178,7 @@ pub(super) fn notice(stored: &StoredEvent) -> Result<Notice, serde_json::Error> 
     Ok(Notice {
         id: stored.id,
         event,
+        trace: Vec::new(),
     })
 }
 

@@ -56,13 +56,17 @@ fn certificates(pem: &[u8]) -> Result<Vec<Certificate>, Unusable> {
 
 impl Post for Http {
     async fn post(&self, request: Signed) -> Result<Answer, String> {
-        let answer = self
+        let mut post = self
             .0
             .post(request.target.url())
             .header(CONTENT_TYPE, JSON)
             .header("content-digest", request.content_digest)
             .header("signature-input", request.signature_input)
-            .header("signature", request.signature)
+            .header("signature", request.signature);
+        for (name, value) in request.trace {
+            post = post.header(name, value);
+        }
+        let answer = post
             .body(request.body)
             .send()
             .await

@@ -18,6 +18,9 @@ pub struct Notice {
     /// The event.
     #[serde(flatten)]
     pub event: Event,
+    /// Headers that tell which trace it belongs to.
+    #[serde(skip)]
+    pub trace: Vec<(&'static str, String)>,
 }
 
 /// An event that is not sent again. Everything up to it is settled: delivery
@@ -131,7 +134,7 @@ where
         while let Some(notice) = queue.0.recv().await {
             let id = notice.id;
             let outcome = match serde_json::to_vec(&notice) {
-                Ok(body) => self.deliver(id, &body).await,
+                Ok(body) => self.deliver(id, &body, &notice.trace).await,
                 Err(error) => {
                     tracing::error!(id, %error, "an event cannot be written as JSON");
                     Outcome::GivenUp(0)
@@ -141,11 +144,12 @@ where
         }
     }
 
-    async fn deliver(&mut self, id: i64, body: &[u8]) -> Outcome {
+    async fn deliver(&mut self, id: i64, body: &[u8], trace: &[(&'static str, String)]) -> Outcome {
         let mut failed = 0_u32;
         loop {
             // Signed anew: receivers refuse signatures that are old.
-            let request = sign(&self.target, &self.key, body, (self.clock)());
+            let mut request = sign(&self.target, &self.key, body, (self.clock)());
+            request.trace = trace.to_vec();
             let answer = self.post.post(request).await;
             let host = self.target.host();
             let asked = match answer {

@@ -32,6 +32,9 @@ pub struct Signed {
     pub signature_input: String,
     /// Value of `Signature`.
     pub signature: String,
+    /// Headers that tell which trace it belongs to; they are not signed, since
+    /// whatever passes it on may change them.
+    pub trace: Vec<(&'static str, String)>,
 }
 
 /// Signs a POST of a JSON body.
@@ -56,6 +59,7 @@ pub fn sign(target: &Target, key: &Key, body: &[u8], created: OffsetDateTime) ->
         signature_input: format!("{LABEL}={}{parameters}", covered(&components)),
         signature: format!("{LABEL}=:{signature}:"),
         content_digest,
+        trace: Vec::new(),
     }
 }
 

@@ -59,6 +59,7 @@ fn notice(id: i64) -> Notice {
             by: None,
             note: None,
         },
+        trace: Vec::new(),
     }
 }
 
