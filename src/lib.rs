@@ -20,6 +20,7 @@ pub mod equations;
 pub mod fluid;
 pub mod http;
 pub mod ingest;
+pub mod meter;
 pub mod pipeline;
 pub mod plant;
 pub mod report;

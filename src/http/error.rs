@@ -328,6 +328,11 @@ impl From<Refusal> for Problem {
     }
 }
 
+/// Whether a status says that there is too much to do.
+pub(super) fn is_overload(status: StatusCode) -> bool {
+    status == StatusCode::TOO_MANY_REQUESTS
+}
+
 /// "1 fault", "3 faults".
 pub(super) fn count(faults: &[Fault]) -> String {
     match faults.len() {

@@ -20,6 +20,7 @@ mod field;
 mod fields;
 mod headers;
 mod means;
+mod metrics;
 mod observe;
 mod openapi;
 mod operation;
@@ -30,6 +31,7 @@ mod revisions;
 mod series;
 pub mod shapes;
 mod tidy;
+mod trace;
 
 pub use access::{Peer, is_loopback};
 pub use ambient::{Clock, Entropy, SystemClock, SystemEntropy};
@@ -43,6 +45,7 @@ use access::{Gate, Who};
 use axum::http::header;
 use axum::middleware::from_fn_with_state;
 use engine::Engine;
+use metrics::Metrics;
 use std::sync::Arc;
 use std::time::Duration;
 use tokio::sync::Semaphore;
@@ -99,6 +102,7 @@ pub struct App {
     clock: Arc<dyn Clock>,
     entropy: Arc<dyn Entropy>,
     limits: Arc<Limits>,
+    metrics: Arc<Metrics>,
     permits: Arc<Semaphore>,
     listeners: Arc<Semaphore>,
     /// Ends what would never end by itself.
@@ -113,7 +117,9 @@ impl App {
         entropy: Arc<dyn Entropy>,
         limits: Limits,
     ) -> Self {
-        let engine = Engine::new(Arc::clone(&store), Arc::clone(&clock), limits.workers);
+        let metrics = Arc::new(Metrics::new(&*store, openapi::paths()));
+        let (of_engine, workers) = (Arc::clone(&metrics), limits.workers);
+        let engine = Engine::new(Arc::clone(&store), Arc::clone(&clock), workers, of_engine);
         let gate = Gate::new(
             Arc::clone(&store),
             Arc::clone(&clock),
@@ -127,6 +133,7 @@ impl App {
             ending: CancellationToken::new(),
             permits: Arc::new(Semaphore::new(limits.in_flight)),
             limits: Arc::new(limits),
+            metrics,
             store,
             clock,
             entropy,
@@ -188,7 +195,8 @@ impl App {
     pub async fn send_out(&self, hook: Hook) {
         let (store, engine) = (Arc::clone(&self.store), Arc::clone(&self.engine));
         let (clock, entropy) = (Arc::clone(&self.clock), Arc::clone(&self.entropy));
-        outgoing::run(hook, store, engine, clock, entropy).await;
+        let metrics = Arc::clone(&self.metrics);
+        outgoing::run(hook, store, engine, clock, entropy, metrics).await;
     }
 
     /// Ends the answers that go on for as long as their clients listen.

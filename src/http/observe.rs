@@ -1,6 +1,7 @@
 //! The outermost layer: the request's id, its trace, its log line, and problem
 //! documents for whatever the layers below answered.
 
+use super::trace::Trace;
 use super::{App, ambient, error};
 use axum::body::{Body, Bytes, HttpBody};
 use axum::extract::{MatchedPath, Request, State};
@@ -26,19 +27,19 @@ pub(super) struct RequestId(pub String);
 pub(super) async fn observe(State(app): State<App>, mut request: Request, next: Next) -> Response {
     let id = given_id(request.headers())
         .unwrap_or_else(|| ambient::request_id(&*app.clock, &*app.entropy));
-    let route = request
-        .extensions()
-        .get::<MatchedPath>()
-        .map(MatchedPath::as_str);
-    let trace = trace_parent(request.headers());
+    let route = request.extensions().get::<MatchedPath>().cloned();
+    let route = route.as_ref().map(MatchedPath::as_str);
+    let method = request.method().clone();
+    let trace = Arc::new(Trace::of(request.headers(), &*app.entropy));
     let span = tracing::info_span!(
         "request",
         id = %id,
-        method = %request.method(),
+        %method,
         path = %request.uri().path(),
         route,
-        trace_id = trace.as_ref().map(|trace| trace.0.as_str()),
-        parent_span_id = trace.as_ref().map(|trace| trace.1.as_str()),
+        trace_id = trace.id,
+        span_id = trace.span,
+        parent_span_id = trace.parent,
     );
     request.extensions_mut().insert(RequestId(id.clone()));
     let was_read = Arc::new(AtomicBool::new(request.body().is_end_stream()));
@@ -50,7 +51,8 @@ pub(super) async fn observe(State(app): State<App>, mut request: Request, next: 
         })
     });
     let started = Instant::now();
-    let response = next.run(request).instrument(span.clone()).await;
+    let answering = trace.scope(next.run(request));
+    let response = answering.instrument(span.clone()).await;
     let mut response = error::finish(response, &id);
     let refused = response.status().is_client_error() || response.status().is_server_error();
     if refused && !was_read.load(Ordering::Relaxed) {
@@ -63,8 +65,14 @@ pub(super) async fn observe(State(app): State<App>, mut request: Request, next: 
     if let Ok(value) = HeaderValue::from_str(&id) {
         response.headers_mut().insert(REQUEST_ID, value);
     }
-    let milliseconds = started.elapsed().as_secs_f64() * 1e3;
+    let took = started.elapsed();
+    let milliseconds = took.as_secs_f64() * 1e3;
     let status = response.status().as_u16();
+    let metrics = &app.metrics;
+    metrics.requests.answered(route, &method, status, took);
+    if error::is_overload(response.status()) {
+        metrics.overloads.inc();
+    }
     span.in_scope(|| tracing::info!(status, milliseconds, "answered"));
     response
 }
@@ -106,30 +114,6 @@ fn given_id(headers: &HeaderMap) -> Option<String> {
     (!id.is_empty() && id.len() <= 128 && id.bytes().all(usable)).then(|| id.to_owned())
 }
 
-/// Trace and parent of a `traceparent` header (W3C Trace Context, section 3.2).
-fn trace_parent(headers: &HeaderMap) -> Option<(String, String)> {
-    let text = headers.get("traceparent")?.to_str().ok()?;
-    let mut parts = text.split('-');
-    let (version, trace, parent, flags) =
-        (parts.next()?, parts.next()?, parts.next()?, parts.next()?);
-    let is_hex = |part: &str, length: usize| {
-        part.len() == length
-            && part
-                .bytes()
-                .all(|byte| matches!(byte, b'0'..=b'9' | b'a'..=b'f'))
-    };
-    let not_zero = |part: &str| part.bytes().any(|byte| byte != b'0');
-    let valid = is_hex(version, 2)
-        && version != "ff"
-        && (version != "00" || parts.next().is_none())
-        && is_hex(trace, 32)
-        && not_zero(trace)
-        && is_hex(parent, 16)
-        && not_zero(parent)
-        && is_hex(flags, 2);
-    valid.then(|| (trace.to_owned(), parent.to_owned()))
-}
-
 #[cfg(test)]
 mod tests {
     use super::*;
@@ -149,25 +133,6 @@ mod tests {
         );
         for bad in ["", "a b", "a\"b", "<x>", &"x".repeat(129)] {
             assert_eq!(given_id(&headers("x-request-id", bad)), None, "{bad}");
-        }
-    }
-
-    #[test]
-    fn trace_parents() {
-        let good = "00-4bf92f3577b34da6a3ce929d0e0e4736-00f067aa0ba902b7-01";
-        let read = |value: &str| trace_parent(&headers("traceparent", value));
-        let trace = read(good).expect("valid");
-        assert_eq!(trace.0, "4bf92f3577b34da6a3ce929d0e0e4736");
-        assert_eq!(trace.1, "00f067aa0ba902b7");
-        assert!(read(&good.replace("00-4", "01-4")).is_some());
-        for bad in [
-            good.to_uppercase(),
-            good.replace("00-4", "ff-4"),
-            format!("{good}-x"),
-            good[..54].to_owned(),
-            good.replace("00f067aa0ba902b7", "0000000000000000"),
-        ] {
-            assert_eq!(read(&bad), None, "{bad}");
         }
     }
 }

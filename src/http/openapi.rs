@@ -3,7 +3,7 @@
 use super::access::{Need, ROUTES};
 use super::{
     App, Problem, accusations, again, alarms, audit, batches, by_hand, events, field, means,
-    operation, plants, series,
+    metrics, operation, plants, series,
 };
 use utoipa::OpenApi;
 use utoipa::openapi::path::{Operation, PathItem};
@@ -67,7 +67,8 @@ pub(super) fn routes() -> OpenApiRouter<App> {
         .routes(routes!(by_hand::end))
         .routes(routes!(audit::list))
         .routes(routes!(operation::live))
-        .routes(routes!(operation::ready));
+        .routes(routes!(operation::ready))
+        .routes(routes!(metrics::get));
     secure(routes.get_openapi_mut());
     routes
 }
@@ -106,6 +107,13 @@ fn operation<'d>(item: &'d mut PathItem, method: &str) -> Option<&'d mut Operati
         "DELETE" => item.delete.as_mut(),
         _ => None,
     }
+}
+
+/// The templates of all routes.
+pub(super) fn paths() -> Vec<String> {
+    let docs = ["/openapi.json", "/docs", "/docs/", "/docs/{*rest}"];
+    let documented = document().paths.paths.into_keys();
+    documented.chain(docs.map(str::to_owned)).collect()
 }
 
 /// The OpenAPI document.

@@ -7,8 +7,13 @@
 use super::ambient::{Clock, Entropy};
 use super::engine::Engine;
 use super::events::notice;
+use super::metrics::Metrics;
+use super::trace::Trace;
 use crate::store::{Store, StoreError};
-use crate::webhook::{self, Handle, Http, Key, Schedule, Sender, Settled, Stopped, Target};
+use crate::webhook::{
+    self, Answer, Handle, Http, Key, Meaning, Outcome, Post, Schedule, Sender, Settled, Signed,
+    Stopped, Target, meaning,
+};
 use std::sync::Arc;
 use std::time::Duration;
 use tokio::sync::{mpsc, watch};
@@ -63,6 +68,23 @@ impl Hook {
     }
 }
 
+/// Counts the attempts that fail.
+struct Counted<P> {
+    post: P,
+    metrics: Arc<Metrics>,
+}
+
+impl<P: Post + Sync> Post for Counted<P> {
+    async fn post(&self, request: Signed) -> Result<Answer, String> {
+        let answer = self.post.post(request).await;
+        let done = |answer: &Answer| matches!(meaning(answer.status), Meaning::Done);
+        if !answer.as_ref().is_ok_and(done) {
+            self.metrics.attempts_failed.inc();
+        }
+        answer
+    }
+}
+
 /// Sends for as long as it is not dropped; what was not settled is sent after the
 /// next start.
 pub(super) async fn run(
@@ -71,7 +93,12 @@ pub(super) async fn run(
     engine: Arc<Engine>,
     clock: Arc<dyn Clock>,
     entropy: Arc<dyn Entropy>,
+    metrics: Arc<Metrics>,
 ) {
+    let post = Counted {
+        post: hook.post,
+        metrics: Arc::clone(&metrics),
+    };
     let told = engine.told();
     let after = starting_point(&*store).await;
     let (handle, queue) = webhook::queue(TOGETHER);
@@ -80,17 +107,22 @@ pub(super) async fn run(
         target: hook.target,
         key: hook.key,
         schedule: hook.schedule,
-        post: hook.post,
+        post,
         clock: move || clock.now(),
-        jitter: move || evenly(&*entropy),
-        settled: move |one: Settled| {
+        jitter: || evenly(&*entropy),
+        settled: |one: Settled| {
+            let outcome = match one.outcome {
+                Outcome::Delivered => "delivered",
+                Outcome::GivenUp(_) => "given-up",
+            };
+            metrics.settled.get_or_create(&[("outcome", outcome)]).inc();
             // The other end is dropped together with this one.
             let _ = settled.send(one.id);
         },
     };
     tokio::join!(
         sender.run(queue),
-        hand_over(&*store, told, after, handle),
+        hand_over(&*store, &engine, &*entropy, told, after, handle),
         mark(&*store, marks)
     );
 }
@@ -118,6 +150,8 @@ async fn starting_point(store: &dyn Store) -> i64 {
 /// Reads the store in order, at the pace of the sender.
 async fn hand_over(
     store: &dyn Store,
+    engine: &Engine,
+    entropy: &dyn Entropy,
     mut told: watch::Receiver<u64>,
     mut after: i64,
     handle: Handle,
@@ -138,7 +172,10 @@ async fn hand_over(
         for stored in events {
             after = stored.id;
             match notice(&stored) {
-                Ok(notice) => {
+                Ok(mut notice) => {
+                    let trace = engine.traces().of(after);
+                    let trace = trace.unwrap_or_else(|| Arc::new(Trace::new(entropy)));
+                    notice.trace = trace.headers();
                     if let Err(Stopped) = handle.put(notice).await {
                         return;
                     }

@@ -15,6 +15,7 @@ mod columns;
 mod copies;
 mod days;
 mod history;
+mod meters;
 mod numbers;
 mod readings;
 mod records;
@@ -27,6 +28,7 @@ pub use copies::{CopyError, Existing, Holdings, NewestBatch, Restored};
 pub use history::{
     HistoryStore, Mean, MeansColumn, MeansPage, MeansQuery, MeansRow, Resolution, Tidied,
 };
+pub use meters::{Meters, Room};
 pub use readings::{
     Backfill, BackfillMark, Closed, NewSamples, NewTagSamples, OpenPeriod, PeriodBatch,
     ReadingsStore, SamplesTaken, TagSamples,
@@ -214,6 +216,12 @@ pub trait Store: AccessStore + HistoryStore + ReadingsStore + ReplaysStore {
     /// Readings taken in the field for a batch, in the order of entering.
     fn field_readings<'a>(&'a self, plant: &'a str, batch: &'a str)
     -> Reply<'a, Vec<FieldReading>>;
+
+    /// What it has done since the start.
+    fn meters(&self) -> Arc<Meters>;
+
+    /// What it holds now.
+    fn room(&self) -> Reply<'_, Room>;
 
     /// How the store is.
     fn health(&self) -> watch::Receiver<Health>;

@@ -56,6 +56,7 @@ fn every_route_is_described() {
     }
     let expected = [
         "get /livez",
+        "get /metrics",
         "get /readyz",
         "get /v1/audit",
         "get /v1/plants",

@@ -28,6 +28,7 @@ const ADMINISTER: Need = Need::Scope(Scope::Administer);
 pub(in crate::http) const ROUTES: &[(&str, &str, Need)] = &[
     ("GET", "/livez", Open),
     ("GET", "/readyz", Open),
+    ("GET", "/metrics", READ),
     ("GET", "/v1/audit", ADMINISTER),
     ("GET", "/v1/plants", READ),
     ("GET", "/v1/plants/{plant}", READ),

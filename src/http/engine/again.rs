@@ -248,9 +248,9 @@ impl Engine {
     ) -> Result<(Arc<Report>, u32), Problem> {
         let by_hand = self.decisions(lane).await?;
         let worker = self.workers.acquire().await;
-        let report =
-            compute(move || pipeline::reconcile_with(basis.compiled(), basis.batch(), &by_hand))
-                .await?;
+        let metrics = Arc::clone(&self.metrics);
+        let reconcile = move || pipeline::reconcile_with(basis.compiled(), basis.batch(), &by_hand);
+        let report = compute(move || metrics.reconciled(reconcile)).await?;
         drop(worker);
         let report = Arc::new(report);
         let batch = ticket.batch.clone();

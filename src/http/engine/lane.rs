@@ -18,6 +18,7 @@ use crate::access::Deed;
 use crate::alarms::{Accusation, Alarm, Closing, Event, NotClosed, Refused, Watch};
 use crate::http::engine::no_plant;
 use crate::http::error::{Kind, Problem};
+use crate::http::trace::carried;
 use crate::plant::{AlarmSettings, ByHand};
 use crate::report::Report;
 use crate::store::{AccusationRow, ByHandRow, Ended, NewByHand, NewEvent, Ticket, Watched};
@@ -142,7 +143,10 @@ impl Engine {
         if tells {
             let kept = kept.await;
             match &kept {
-                Ok(Some(_)) => self.tell(lane, &events),
+                Ok(Some(ids)) => {
+                    self.traces.remember(ids);
+                    self.tell(lane, &events);
+                }
                 _ => memory.watch = None,
             }
             kept?;
@@ -356,7 +360,8 @@ impl Engine {
         // Whatever comes of it, the one before is no longer to be built upon.
         memory.watch = None;
         match self.store.change_watch(&lane.plant, watched).await? {
-            Some(_) => {
+            Some(ids) => {
+                self.traces.remember(&ids);
                 memory.watch = Some(next);
                 self.tell(lane, events);
                 Ok(())
@@ -377,7 +382,7 @@ impl Engine {
         &self,
         work: impl Future<Output = T> + Send + 'static,
     ) -> Result<T, Problem> {
-        self.tasks.spawn(work).await.map_err(|error| {
+        self.tasks.spawn(carried(work)).await.map_err(|error| {
             tracing::error!(%error, "a task broke off");
             Problem::new(Kind::Internal, "a task broke off; the log says more")
         })

@@ -10,6 +10,7 @@
 mod again;
 mod field;
 mod lane;
+mod traces;
 
 pub(super) use again::{no_batch, removed};
 pub use field::FieldReading;
@@ -18,7 +19,9 @@ pub(super) use lane::NotActed;
 
 use super::ambient::Clock;
 use super::error::{Kind, Problem};
+use super::metrics::Metrics;
 use super::revisions::{Revision, Revisions};
+use super::trace::carried;
 use crate::ingest::{self, Parsed};
 use crate::pipeline;
 use crate::plant::Batch;
@@ -32,6 +35,7 @@ use std::sync::{Arc, Mutex, MutexGuard, PoisonError};
 use time::OffsetDateTime;
 use tokio::sync::{OwnedMutexGuard, Semaphore, watch};
 use tokio_util::task::TaskTracker;
+use traces::Traces;
 
 /// Bodies longer than this are read on a thread that may block.
 const LONG_BODY: usize = 64 << 10;
@@ -55,6 +59,9 @@ pub(super) struct Engine {
     /// What is being worked on, by number of the ticket.
     running: Mutex<HashMap<i64, Running>>,
     tasks: TaskTracker,
+    metrics: Arc<Metrics>,
+    /// Of the newest events.
+    traces: Traces,
 }
 
 /// A batch that is durable.
@@ -66,7 +73,12 @@ pub(super) struct Accepted {
 }
 
 impl Engine {
-    pub fn new(store: Arc<dyn Store>, clock: Arc<dyn Clock>, workers: usize) -> Self {
+    pub fn new(
+        store: Arc<dyn Store>,
+        clock: Arc<dyn Clock>,
+        workers: usize,
+        metrics: Arc<Metrics>,
+    ) -> Self {
         Engine {
             revisions: Revisions::new(Arc::clone(&store)),
             store,
@@ -76,7 +88,20 @@ impl Engine {
             told: watch::Sender::new(0),
             running: Mutex::default(),
             tasks: TaskTracker::new(),
+            metrics,
+            traces: Traces::default(),
         }
+    }
+
+    /// Workers that are free, and batches that are being worked on.
+    pub fn load(&self) -> (usize, usize) {
+        let underway = lock(&self.running).len();
+        (self.workers.available_permits(), underway)
+    }
+
+    /// The traces of the newest events.
+    pub fn traces(&self) -> &Traces {
+        &self.traces
     }
 
     /// Compiled revisions.
@@ -145,11 +170,11 @@ impl Engine {
     /// holds is dropped at the end.
     pub fn finish_later(self: &Arc<Self>, accepted: Accepted, until_then: impl Send + 'static) {
         let engine = Arc::clone(self);
-        self.tasks.spawn(async move {
+        self.tasks.spawn(carried(async move {
             // Whoever asks for the report will be told what went wrong.
             let _ = engine.finish(accepted).await;
             drop(until_then);
-        });
+        }));
     }
 
     /// Finishes what was accepted and has no result, in order of acceptance.
@@ -218,7 +243,7 @@ impl Engine {
             lock(&engine.running).remove(&id);
             outcome
         };
-        let work = work.boxed().shared();
+        let work = carried(work).boxed().shared();
         running.insert(id, work.clone());
         self.tasks.spawn(work.clone());
         work
@@ -238,12 +263,15 @@ impl Engine {
         let settings = revision.compiled.plant().alarms;
         let by_hand = self.decisions(lane).await?;
         let worker = self.workers.acquire().await;
-        let report =
-            compute(move || pipeline::reconcile_with(&revision.compiled, &batch, &by_hand)).await?;
+        let metrics = Arc::clone(&self.metrics);
+        let reconcile = move || pipeline::reconcile_with(&revision.compiled, &batch, &by_hand);
+        let report = compute(move || metrics.reconciled(reconcile)).await?;
         drop(worker);
         let report = Arc::new(report);
         self.look(lane, turn, ticket, Arc::clone(&report), &settings)
             .await?;
+        self.metrics.finished(&report);
+        tracing::debug!(batch = report.batch, verdict = ?report.verdict, "reconciled");
         Ok(report)
     }
 

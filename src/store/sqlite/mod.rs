@@ -28,9 +28,9 @@ pub use open::OLDEST_SQLITE;
 
 use super::{
     Acceptance, AccusationRow, Again, BatchLine, BatchQuery, ByHandRow, Ended, FieldReading,
-    Health, Incoming, NewByHand, NewFieldReading, NewPlant, Page, PlantLine, PutOutcome, Reply,
-    SeriesPage, SeriesQuery, Store, StoreError, Stored, StoredEvent, StoredPlant, Ticket,
-    Unfinished, VersionLine, Watched,
+    Health, Incoming, Meters, NewByHand, NewFieldReading, NewPlant, Page, PlantLine, PutOutcome,
+    Reply, Room, SeriesPage, SeriesQuery, Store, StoreError, Stored, StoredEvent, StoredPlant,
+    Ticket, Unfinished, VersionLine, Watched,
 };
 use crate::report::{Report, SingleTest};
 use futures::FutureExt;
@@ -115,6 +115,8 @@ pub struct SqliteStore {
     layouts: Layouts,
     /// One turn of the background work at a time.
     tidying: tokio::sync::Mutex<()>,
+    meters: Arc<Meters>,
+    path: PathBuf,
 }
 
 impl SqliteStore {
@@ -152,7 +154,9 @@ impl SqliteStore {
         let (jobs, queue) = mpsc::unbounded_channel();
         let places = Arc::new(Semaphore::new(options.queue));
         let (report_health, health) = watch::channel(Health::Ready);
-        tokio::spawn(Writer::new(options, connection, queue, report_health).run());
+        let (meters, path) = (Arc::<Meters>::default(), options.path.clone());
+        let writer = Writer::new(options, connection, queue, report_health);
+        tokio::spawn(writer.counted_by(Arc::clone(&meters)).run());
         SqliteStore {
             jobs,
             places,
@@ -160,6 +164,8 @@ impl SqliteStore {
             health,
             layouts: Layouts::default(),
             tidying: tokio::sync::Mutex::default(),
+            meters,
+            path,
         }
     }
 
@@ -195,6 +201,7 @@ impl SqliteStore {
         place: Option<OwnedSemaphorePermit>,
     ) -> Reply<'static, W::Output> {
         let (task, done) = Task::queued(work, place);
+        self.meters.queue();
         let sent = self.send(Message::Job(task));
         async move {
             sent?;
@@ -387,6 +394,14 @@ impl Store for SqliteStore {
         batch: &'a str,
     ) -> Reply<'a, Vec<FieldReading>> {
         read::field_readings(&self.readers, plant, batch).boxed()
+    }
+
+    fn meters(&self) -> Arc<Meters> {
+        Arc::clone(&self.meters)
+    }
+
+    fn room(&self) -> Reply<'_, Room> {
+        read::room(&self.readers, &self.path).boxed()
     }
 
     fn health(&self) -> watch::Receiver<Health> {

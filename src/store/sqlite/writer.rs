@@ -2,12 +2,15 @@
 
 use super::work::Work;
 use super::{Hindrance, SqliteOptions, fault, open, sql};
-use crate::store::{Health, StoreError};
+use crate::store::{Health, Meters, StoreError};
 use futures::FutureExt;
 use futures::future::BoxFuture;
 use sqlx::Connection;
 use sqlx::sqlite::SqliteConnection;
+use std::sync::Arc;
+use std::time::Instant;
 use tokio::sync::{OwnedSemaphorePermit, mpsc, oneshot, watch};
+use tracing::{Instrument, Span};
 
 /// What a caller gets after the commit.
 type Answer<T> = Result<T, StoreError>;
@@ -43,6 +46,8 @@ pub(super) struct Task<W: Work> {
     /// Given back with the answer.
     _place: Option<OwnedSemaphorePermit>,
     reply: oneshot::Sender<Answer<W::Output>>,
+    /// Of the request that asked for it.
+    span: Span,
 }
 
 impl<W: Work> Task<W> {
@@ -58,6 +63,7 @@ impl<W: Work> Task<W> {
                 output: None,
                 _place: place,
                 reply,
+                span: Span::current(),
             }),
             done,
         )
@@ -77,21 +83,36 @@ impl<W: Work> Job for Task<W> {
         &'a mut self,
         on: &'a mut SqliteConnection,
     ) -> BoxFuture<'a, Result<(), sqlx::Error>> {
+        let span = self.span.clone();
         async move {
             self.output = Some(self.work.run(on).await?);
             Ok(())
         }
+        .instrument(span)
         .boxed()
     }
 
     fn answer(self: Box<Self>, error: Option<StoreError>) {
-        let answer = match (error, self.output) {
-            (Some(error), _) => Err(error),
-            (None, Some(output)) => Ok(output),
+        let Task {
+            output,
+            reply,
+            span,
+            ..
+        } = *self;
+        let _of_the_request = span.enter();
+        let answer = match (error, output) {
+            (Some(error), _) => {
+                tracing::warn!(%error, "not kept");
+                Err(error)
+            }
+            (None, Some(output)) => {
+                tracing::debug!("kept");
+                Ok(output)
+            }
             (None, None) => Err(StoreError::Unavailable("the work was not done".to_owned())),
         };
         // A caller that has gone away needs no answer; its work is done.
-        let _ = self.reply.send(answer);
+        let _ = reply.send(answer);
     }
 }
 
@@ -103,6 +124,7 @@ pub(super) struct Writer {
     queue: mpsc::UnboundedReceiver<Message>,
     health: watch::Sender<Health>,
     hindrance: Hindrance,
+    meters: Arc<Meters>,
 }
 
 impl Writer {
@@ -118,7 +140,14 @@ impl Writer {
             queue,
             health,
             hindrance: Hindrance::default(),
+            meters: Arc::default(),
         }
+    }
+
+    /// The same, counting its work there.
+    pub fn counted_by(mut self, meters: Arc<Meters>) -> Self {
+        self.meters = meters;
+        self
     }
 
     /// Works until it is closed or everybody who could ask is gone.
@@ -210,6 +239,7 @@ impl Writer {
         if self.connection.is_none() {
             self.reopen().await;
         }
+        let started = Instant::now();
         let error = match &mut self.connection {
             None => Some(self.excuse()),
             Some(connection) => match transact(connection, &mut jobs).await {
@@ -221,6 +251,8 @@ impl Writer {
                 }
             },
         };
+        self.meters
+            .committed(jobs.len(), started.elapsed(), error.is_some());
         for job in jobs {
             job.answer(error.clone());
         }

@@ -7,6 +7,7 @@ mod plants;
 mod readings;
 mod replays;
 mod results;
+mod room;
 mod series;
 mod watch;
 
@@ -19,6 +20,7 @@ pub(super) use readings::{
 };
 pub(super) use replays::{kept_replay, replay, replayed, replays, running_replays, unreplayed};
 pub(super) use results::{version, versions};
+pub(super) use room::room;
 pub(super) use series::series;
 pub(super) use watch::{
     accusation, accusations, delivered, events, events_of_all, newest_event, watch,

@@ -21,6 +21,15 @@ pub(in crate::store::sqlite) const CHECKPOINT: &str = "PRAGMA wal_checkpoint(TRU
 pub(in crate::store::sqlite) const BEGIN: &str = "BEGIN IMMEDIATE";
 pub(in crate::store::sqlite) const COMMIT: &str = "COMMIT";
 
+/// Pages, free pages, bytes of a page, accepted batches without a result, open
+/// periods.
+pub(in crate::store::sqlite) const ROOM: &str = "
+    SELECT (SELECT page_count FROM pragma_page_count),
+           (SELECT freelist_count FROM pragma_freelist_count),
+           (SELECT page_size FROM pragma_page_size),
+           (SELECT COUNT(*) FROM pending),
+           (SELECT COUNT(*) FROM open_periods)";
+
 pub(in crate::store::sqlite) const COUNT_START: &str = "
     INSERT INTO starts (id, count) VALUES (1, 1)
     ON CONFLICT (id) DO UPDATE SET count = starts.count + 1";
@@ -137,6 +146,7 @@ pub(in crate::store::sqlite) const OF_BATCHES: &[&str] = &[
     CHECKPOINT,
     BEGIN,
     COMMIT,
+    ROOM,
     COUNT_START,
     INSERT_PLANT,
     INSERT_REVISION,
