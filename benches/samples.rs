@@ -4,7 +4,7 @@
 //!     cargo bench --bench samples
 //!
 //! Each line says samples a second over calls made one after another, and what
-//! one call took in the middle and at the slowest of a hundred.
+//! one call took in the middle and at the slowest.
 
 use counterpoise::plant::{Grade, Quality, Sample};
 use counterpoise::store::{
@@ -79,6 +79,30 @@ async fn measure(store: &SqliteStore, what: &str, calls: Vec<NewSamples>) {
     );
 }
 
+/// Reads periods as they are read to be made: thirty samples of each of 300
+/// tags, with those before and after.
+async fn read_periods(store: &SqliteStore) {
+    let period = Duration::minutes(5);
+    let mut took = Vec::new();
+    for place in 1..60 {
+        let from = sample(0, 0.0).time + period * place;
+        let one = Instant::now();
+        let tags = store
+            .samples("wide", from, from + period, Duration::minutes(15))
+            .await
+            .expect("read");
+        took.push(one.elapsed());
+        let count: usize = tags.iter().map(|tag| tag.samples.len()).sum();
+        assert!(count > 9000, "{count}");
+    }
+    took.sort_unstable();
+    println!(
+        "a period of 300 tags read: {:.2} ms, {:.2} ms the slowest",
+        took[took.len() / 2].as_secs_f64() * 1e3,
+        took[took.len() - 1].as_secs_f64() * 1e3
+    );
+}
+
 #[tokio::main]
 async fn main() {
     let directory = tempfile::tempdir().expect("a directory");
@@ -122,6 +146,7 @@ async fn main() {
     .await;
     let singles = (0..CALLS * 5).map(|n| call("live", 1, 1, 1_000 + n));
     measure(&store, "one sample", singles.collect()).await;
+    read_periods(&store).await;
     store.close().await.expect("closed");
     let bytes = std::fs::metadata(&path).expect("a file").len() as f64;
     let rows = CALLS * (TAGS * 33 + 10_000 + TAGS * 5 + 5);
