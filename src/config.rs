@@ -180,6 +180,7 @@ impl Config {
                 read_timeout: self.bounds.read_timeout,
                 token_rate: self.access.token_rate,
                 token_freshness: defaults.token_freshness,
+                ..Limits::default()
             },
         })
     }

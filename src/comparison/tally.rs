@@ -75,7 +75,8 @@ impl Tally {
         self.statistic(pair);
         self.suspects(&pair.before.suspects, &pair.after.suspects);
         self.values(pair);
-        if let Some(change) = pair.change(true) {
+        let change = pair.change();
+        if change.is_one() {
             self.largest.push(change);
             self.largest
                 .sort_by(|a, b| further(&a.furthest, &b.furthest));
@@ -182,21 +183,15 @@ impl Tally {
 }
 
 impl Pair<'_> {
-    /// What changed most; `None` where `moved_only` is asked for and neither
-    /// verdict nor any value is another.
-    pub fn change(&self, moved_only: bool) -> Option<BatchChange> {
-        let furthest = self.furthest();
-        let same = furthest.as_ref().is_none_or(|f| f.before == f.after);
-        if moved_only && same && self.before.verdict == self.after.verdict {
-            return None;
-        }
-        Some(BatchChange {
+    /// What changed most.
+    pub fn change(&self) -> BatchChange {
+        BatchChange {
             batch: self.before.batch.clone(),
             start: self.before.start,
             before: self.before.verdict,
             after: self.after.verdict,
-            furthest,
-        })
+            furthest: self.furthest(),
+        }
     }
 
     fn furthest(&self) -> Option<ValueChange> {
@@ -219,6 +214,14 @@ impl Pair<'_> {
             Ordering::Greater => next,
             _ => best,
         })
+    }
+}
+
+impl BatchChange {
+    /// Whether the verdict or a value is another.
+    fn is_one(&self) -> bool {
+        let moved = self.furthest.as_ref().is_some_and(|f| f.before != f.after);
+        moved || self.before != self.after
     }
 }
 

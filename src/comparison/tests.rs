@@ -1,3 +1,5 @@
+//! Comparisons of reports made by hand, with sums that can be checked on paper.
+
 use super::*;
 use crate::report::{
     Accused, Cause, Class, GlobalTest, Observability, QuantityReport, Report, StreamReport,

@@ -152,13 +152,15 @@ async fn one_later(
     body: Bytes,
     permit: Permit,
 ) -> Result<Response, Problem> {
+    // Before anything is accepted: what waits in memory is bounded.
+    let room = app.engine.room(body.len())?;
     let accepted = app
         .engine
         .accept(plant, body.into(), app.clock.now())
         .await?;
     let pending = pending(plant, &accepted);
-    // The permit goes with the work: what waits is bounded like what runs.
-    app.engine.finish_later(accepted, permit);
+    drop(permit);
+    app.engine.finish_later(accepted, room);
     let headers = [
         (header::LOCATION, value(&pending.location)),
         (
@@ -256,12 +258,15 @@ async fn line_later(
     line: Bytes,
     permit: Arc<Permit>,
 ) -> Result<Vec<u8>, Problem> {
+    // A stream waits for its turn: it is answered at the pace at which batches
+    // are finished.
+    let room = app.engine.next_room(line.len()).await;
     let accepted = app
         .engine
         .accept(plant, line.into(), app.clock.now())
         .await?;
     let answer = json(&pending(plant, &accepted));
-    app.engine.finish_later(accepted, permit);
+    app.engine.finish_later(accepted, (permit, room));
     answer
 }
 

@@ -19,7 +19,7 @@ use std::sync::Arc;
 use tokio::sync::OwnedSemaphorePermit;
 
 /// log2 of the largest zstd window: 8 MiB.
-const LARGEST_WINDOW: u32 = 23;
+pub(super) const LARGEST_WINDOW: u32 = 23;
 
 /// The right to be worked on; refused with 429 where too many have it.
 pub(super) struct Permit {
@@ -124,13 +124,21 @@ fn too_large(limit: usize) -> Problem {
 }
 
 #[derive(Clone, Copy, Debug, PartialEq, Eq)]
-enum Coding {
+pub(super) enum Coding {
+    /// As it is.
     Identity,
+    /// RFC 1952.
     Gzip,
+    /// RFC 8878.
     Zstd,
 }
 
-fn coding(headers: &HeaderMap) -> Result<Coding, Problem> {
+/// The content coding of a body.
+///
+/// # Errors
+///
+/// 415 where it is not taken.
+pub(super) fn coding(headers: &HeaderMap) -> Result<Coding, Problem> {
     let Some(value) = headers.get(header::CONTENT_ENCODING) else {
         return Ok(Coding::Identity);
     };

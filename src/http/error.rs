@@ -267,6 +267,21 @@ impl Problem {
         self
     }
 
+    /// Whether the same may do another time.
+    pub fn is_passing(&self) -> bool {
+        [
+            StatusCode::TOO_MANY_REQUESTS,
+            StatusCode::SERVICE_UNAVAILABLE,
+        ]
+        .contains(&self.status())
+    }
+
+    /// The same with more to say.
+    pub fn adding(mut self, more: &str) -> Self {
+        self.detail = format!("{}; {more}", self.detail).into_boxed_str();
+        self
+    }
+
     /// The same, said of a request.
     pub fn at(mut self, request_id: &str) -> Self {
         self.instance = request_id.into();

@@ -84,6 +84,16 @@ impl Fields {
         self.faults.push(fault(&path, what.as_ref(), mend.as_ref()));
     }
 
+    /// Notes the faults of a document that is a field.
+    pub fn faults_in(&mut self, key: &str, faults: Vec<Fault>) {
+        let path = self.place(key);
+        let within = faults.into_iter().map(|fault| Fault {
+            path: format!("{path}{}", fault.path),
+            ..fault
+        });
+        self.faults.extend(within);
+    }
+
     /// Whether there is a field with something in it.
     pub fn has(&self, key: &str) -> bool {
         let mut members = self.members.iter();

@@ -10,6 +10,7 @@ mod again;
 mod alarms;
 mod ambient;
 mod audit;
+mod backfills;
 mod batches;
 mod body;
 mod by_hand;
@@ -27,9 +28,12 @@ mod operation;
 mod outgoing;
 mod params;
 mod plants;
+mod readings;
+mod replays;
 mod revisions;
 mod series;
 pub mod shapes;
+mod streamed;
 mod tidy;
 mod trace;
 
@@ -64,6 +68,12 @@ pub struct Limits {
     pub listeners: usize,
     /// Batches that are reconciled at once.
     pub workers: usize,
+    /// Bytes of accepted batches that nobody waits for (`Prefer: respond-async`)
+    /// and that are not finished; more are refused, or wait where they come in a
+    /// stream.
+    pub waiting: usize,
+    /// Backfills whose content comes in at once; more are refused.
+    pub backfills: usize,
     /// Bytes of one document (plant file or batch) after decompression.
     pub document: usize,
     /// Bytes of a stream of batches after decompression.
@@ -84,6 +94,8 @@ impl Default for Limits {
             connections: 1024,
             listeners: 256,
             workers: std::thread::available_parallelism().map_or(1, usize::from),
+            waiting: 64 << 20,
+            backfills: 4,
             document: 4 << 20,
             stream: 32 << 20,
             read_timeout: Duration::from_secs(10),
@@ -104,6 +116,7 @@ pub struct App {
     limits: Arc<Limits>,
     metrics: Arc<Metrics>,
     permits: Arc<Semaphore>,
+    backfills: Arc<Semaphore>,
     listeners: Arc<Semaphore>,
     /// Ends what would never end by itself.
     ending: CancellationToken,
@@ -118,8 +131,8 @@ impl App {
         limits: Limits,
     ) -> Self {
         let metrics = Arc::new(Metrics::new(&*store, openapi::paths()));
-        let (of_engine, workers) = (Arc::clone(&metrics), limits.workers);
-        let engine = Engine::new(Arc::clone(&store), Arc::clone(&clock), workers, of_engine);
+        let of_engine = Arc::clone(&metrics);
+        let engine = Engine::new(Arc::clone(&store), Arc::clone(&clock), &limits, of_engine);
         let gate = Gate::new(
             Arc::clone(&store),
             Arc::clone(&clock),
@@ -132,6 +145,7 @@ impl App {
             listeners: Arc::new(Semaphore::new(limits.listeners)),
             ending: CancellationToken::new(),
             permits: Arc::new(Semaphore::new(limits.in_flight)),
+            backfills: Arc::new(Semaphore::new(limits.backfills)),
             limits: Arc::new(limits),
             metrics,
             store,
@@ -189,6 +203,12 @@ impl App {
     pub async fn keep_tidy(&self, every: Duration) {
         let (store, engine) = (Arc::clone(&self.store), Arc::clone(&self.engine));
         tidy::run(store, engine, Arc::clone(&self.clock), every).await;
+    }
+
+    /// Makes the batches of periods and works off replays; for ever. Where there
+    /// is nothing to do, the clock is looked at every `tick`.
+    pub async fn work_off(&self, tick: Duration) {
+        Arc::clone(&self.engine).work_off(tick).await;
     }
 
     /// Sends events to the webhook; for ever.

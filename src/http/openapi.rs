@@ -2,8 +2,8 @@
 
 use super::access::{Need, ROUTES};
 use super::{
-    App, Problem, accusations, again, alarms, audit, batches, by_hand, events, field, means,
-    metrics, operation, plants, series,
+    App, Problem, accusations, again, alarms, audit, backfills, batches, by_hand, events, field,
+    means, metrics, operation, plants, readings, replays, series,
 };
 use utoipa::OpenApi;
 use utoipa::openapi::path::{Operation, PathItem};
@@ -27,6 +27,8 @@ use utoipa_axum::routes;
     tags(
         (name = "plants", description = "Plant files and what their tags can determine"),
         (name = "batches", description = "Readings in, reports out"),
+        (name = "readings", description = "Single values as historians send them; batches are made of them"),
+        (name = "replays", description = "What another revision would have made of a past period"),
         (name = "again", description = "Batches reconciled again: with decisions by hand, field readings, another revision"),
         (name = "alarms", description = "What stays wrong over several batches, and who knows of it"),
         (name = "accusations", description = "What suspects stood for, and what was found"),
@@ -45,6 +47,13 @@ pub(super) fn routes() -> OpenApiRouter<App> {
         .routes(routes!(plants::assessment))
         .routes(routes!(batches::post, batches::list))
         .routes(routes!(batches::get))
+        .routes(routes!(readings::post))
+        .routes(routes!(backfills::list))
+        .routes(routes!(backfills::post, backfills::get))
+        .routes(routes!(replays::start, replays::list))
+        .routes(routes!(replays::get, replays::cancel))
+        .routes(routes!(replays::comparison))
+        .routes(routes!(replays::batches))
         .routes(routes!(series::get))
         .routes(routes!(means::get))
         .routes(routes!(again::influences))

@@ -146,7 +146,7 @@ fn refused(faults: Vec<Fault>) -> Problem {
     .with_faults(faults)
 }
 
-fn misnamed(in_file: &str, in_path: &str) -> Fault {
+pub(super) fn misnamed(in_file: &str, in_path: &str) -> Fault {
     Fault {
         severity: Severity::Error,
         path: "/plant".to_owned(),

@@ -92,7 +92,7 @@ impl Revisions {
                 None => self.stored(plant, Some(number)).await?,
             };
             let known = self.store.critical_values(plant, number).await?;
-            compute(move || compile(&stored, known)).await?
+            compute(move || compile(&stored, known).map(Arc::new)).await?
         };
         slot.get_or_try_init(load).await.cloned()
     }
@@ -129,7 +129,8 @@ pub(super) fn format_of(media_type: &str) -> Option<Format> {
     }
 }
 
-fn compile(stored: &StoredPlant, known: Vec<SingleTest>) -> Result<Arc<Revision>, Problem> {
+/// Compiles a revision anew.
+pub(super) fn compile(stored: &StoredPlant, known: Vec<SingleTest>) -> Result<Revision, Problem> {
     let unreadable = |detail: String| {
         tracing::error!(
             plant = stored.name,
@@ -148,8 +149,8 @@ fn compile(stored: &StoredPlant, known: Vec<SingleTest>) -> Result<Arc<Revision>
         plant::read(&stored.source, format).map_err(|faults| unreadable(faults.to_string()))?;
     let compiled = Compiled::new(file.plant, stored.revision);
     compiled.recall(known);
-    Ok(Arc::new(Revision {
+    Ok(Revision {
         compiled,
         warnings: file.warnings,
-    }))
+    })
 }

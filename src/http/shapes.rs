@@ -321,3 +321,66 @@ pub struct FieldEntry {
     #[schema(min_items = 1, max_items = 20)]
     pub readings: Vec<super::engine::FieldReading>,
 }
+
+/// Readings: a list of them, or a single one.
+#[derive(Deserialize, ToSchema)]
+#[serde(untagged)]
+pub enum Readings {
+    /// Any number, in any order.
+    Many(ReadingList),
+    /// One.
+    One(SampleLine),
+}
+
+/// Any number of readings.
+#[derive(Deserialize, ToSchema)]
+#[serde(deny_unknown_fields)]
+pub struct ReadingList {
+    /// In any order.
+    pub readings: Vec<SampleLine>,
+}
+
+/// One value of one tag at one instant.
+#[derive(Deserialize, ToSchema)]
+#[schema(example = json!({"tag": "FT-201", "time": "2026-03-17T10:00:07Z", "value": 371.2, "quality": "good"}))]
+#[serde(deny_unknown_fields)]
+pub struct SampleLine {
+    /// Name of the tag.
+    #[schema(min_length = 1, max_length = 128)]
+    pub tag: String,
+    /// When the value was taken, RFC 3339 with offset; not in the future.
+    #[serde(with = "time::serde::rfc3339")]
+    pub time: OffsetDateTime,
+    /// Value in the tag's own unit; null only with bad quality.
+    pub value: Option<f64>,
+    /// Quality; good where it is left out.
+    #[serde(default)]
+    pub quality: Quality,
+}
+
+/// A past period, and what it is replayed with: a revision or a plant file.
+#[derive(Deserialize, ToSchema)]
+#[serde(deny_unknown_fields)]
+pub struct NewReplay {
+    /// Periods that start at this time or later, RFC 3339 with offset...
+    #[serde(with = "time::serde::rfc3339")]
+    pub from: OffsetDateTime,
+    /// ...and before this time.
+    #[serde(with = "time::serde::rfc3339")]
+    pub to: OffsetDateTime,
+    /// An accepted revision; this or `plant_file`.
+    #[schema(minimum = 1)]
+    pub revision: Option<u32>,
+    /// A plant file that is not accepted: an object, or a string of TOML.
+    pub plant_file: Option<serde_json::Value>,
+    /// Who asks for it.
+    #[schema(min_length = 1, max_length = 128, example = "R. Moss")]
+    pub by: String,
+    /// Why.
+    #[schema(
+        min_length = 1,
+        max_length = 2000,
+        example = "Is the new orifice better?"
+    )]
+    pub reason: String,
+}

@@ -69,7 +69,7 @@ pub struct Options {
     pub limits: Limits,
     /// How long an orderly end may take.
     pub grace: Duration,
-    /// How often the clock is looked at for shelvings that end.
+    /// How often the clock is looked at for shelvings that end and periods that are due.
     pub tick: Duration,
     /// Where events of alarms are sent.
     pub webhook: Option<Hook>,
@@ -188,10 +188,11 @@ struct Aside(JoinSet<()>);
 impl Aside {
     fn start(app: &App, tick: Duration, webhook: Option<Hook>, tls: Option<Tls>) -> Self {
         let mut tasks = JoinSet::new();
-        let (a, b, c, d) = (app.clone(), app.clone(), app.clone(), app.clone());
+        let [a, b, c, d, e] = std::array::from_fn(|_| app.clone());
         tasks.spawn(resume_whenever_ready(a));
         tasks.spawn(async move { b.pass_time(tick).await });
         tasks.spawn(async move { d.keep_tidy(TIDIED_EVERY).await });
+        tasks.spawn(async move { e.work_off(tick).await });
         if let Some(hook) = webhook {
             tasks.spawn(async move { c.send_out(hook).await });
         }

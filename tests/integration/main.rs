@@ -3,6 +3,7 @@
 mod access;
 mod alarms;
 mod averaged;
+mod backfills;
 mod backup;
 mod batches;
 mod by_hand;
@@ -28,7 +29,9 @@ mod openapi;
 mod plant_files;
 mod power_cut;
 mod published_networks;
+mod readings;
 mod reference;
+mod replays;
 mod robustness;
 mod service;
 mod service_process;

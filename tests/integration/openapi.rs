@@ -55,6 +55,7 @@ fn every_route_is_described() {
         }
     }
     let expected = [
+        "delete /v1/plants/{plant}/replays/{replay}",
         "get /livez",
         "get /metrics",
         "get /readyz",
@@ -66,6 +67,8 @@ fn every_route_is_described() {
         "get /v1/plants/{plant}/alarms",
         "get /v1/plants/{plant}/alarms/events",
         "get /v1/plants/{plant}/assessment",
+        "get /v1/plants/{plant}/backfills",
+        "get /v1/plants/{plant}/backfills/{backfill}",
         "get /v1/plants/{plant}/batches",
         "get /v1/plants/{plant}/batches/{batch}",
         "get /v1/plants/{plant}/batches/{batch}/field-readings",
@@ -74,6 +77,10 @@ fn every_route_is_described() {
         "get /v1/plants/{plant}/batches/{batch}/versions/{version}",
         "get /v1/plants/{plant}/by-hand",
         "get /v1/plants/{plant}/means",
+        "get /v1/plants/{plant}/replays",
+        "get /v1/plants/{plant}/replays/{replay}",
+        "get /v1/plants/{plant}/replays/{replay}/batches",
+        "get /v1/plants/{plant}/replays/{replay}/comparison",
         "get /v1/plants/{plant}/series",
         "post /v1/plants/{plant}/accusations/{id}/closing",
         "post /v1/plants/{plant}/again",
@@ -82,11 +89,14 @@ fn every_route_is_described() {
         "post /v1/plants/{plant}/alarms/{id}/return-to-service",
         "post /v1/plants/{plant}/alarms/{id}/shelve",
         "post /v1/plants/{plant}/alarms/{id}/unshelve",
+        "post /v1/plants/{plant}/backfills/{backfill}",
         "post /v1/plants/{plant}/batches",
         "post /v1/plants/{plant}/batches/{batch}/again",
         "post /v1/plants/{plant}/batches/{batch}/field-readings",
         "post /v1/plants/{plant}/by-hand",
         "post /v1/plants/{plant}/by-hand/{id}/end",
+        "post /v1/plants/{plant}/readings",
+        "post /v1/plants/{plant}/replays",
         "put /v1/plants/{plant}",
     ];
     assert_eq!(

@@ -45,6 +45,9 @@ pub(in crate::http) const ROUTES: &[(&str, &str, Need)] = &[
     ("POST", "/v1/plants/{plant}/alarms/{id}/shelve", OPERATE),
     ("POST", "/v1/plants/{plant}/alarms/{id}/unshelve", OPERATE),
     ("GET", "/v1/plants/{plant}/assessment", READ),
+    ("GET", "/v1/plants/{plant}/backfills", READ),
+    ("GET", "/v1/plants/{plant}/backfills/{backfill}", READ),
+    ("POST", "/v1/plants/{plant}/backfills/{backfill}", SEND),
     ("GET", "/v1/plants/{plant}/batches", READ),
     ("POST", "/v1/plants/{plant}/batches", SEND),
     ("GET", "/v1/plants/{plant}/batches/{batch}", READ),
@@ -58,6 +61,13 @@ pub(in crate::http) const ROUTES: &[(&str, &str, Need)] = &[
     ("POST", "/v1/plants/{plant}/by-hand", OPERATE),
     ("POST", "/v1/plants/{plant}/by-hand/{id}/end", OPERATE),
     ("GET", "/v1/plants/{plant}/means", READ),
+    ("POST", "/v1/plants/{plant}/readings", SEND),
+    ("GET", "/v1/plants/{plant}/replays", READ),
+    ("POST", "/v1/plants/{plant}/replays", OPERATE),
+    ("GET", "/v1/plants/{plant}/replays/{replay}", READ),
+    ("DELETE", "/v1/plants/{plant}/replays/{replay}", OPERATE),
+    ("GET", "/v1/plants/{plant}/replays/{replay}/batches", READ),
+    ("GET", "/v1/plants/{plant}/replays/{replay}/comparison", READ),
     ("GET", "/v1/plants/{plant}/series", READ),
 ];
 

@@ -21,10 +21,12 @@ use time::format_description::well_known::Rfc3339;
 const MOST_FIELD_READINGS: usize = 100;
 
 /// A finished batch with all that its report was made from.
-struct Finished {
-    ticket: Ticket,
-    batch: Batch,
-    report: Box<Report>,
+pub(super) struct Finished {
+    pub ticket: Ticket,
+    pub batch: Batch,
+    pub report: Box<Report>,
+    /// What it was made from has changed since the report.
+    pending: bool,
     /// With the name of who entered them.
     entered: Vec<(String, FieldReadings)>,
 }
@@ -82,6 +84,38 @@ impl Engine {
                 Problem::new(Kind::Unacceptable, detail).with_faults(faults)
             })?;
             engine.remake(&lane, finished.ticket, basis, again).await
+        })
+        .await?
+    }
+
+    /// Reconciles what a batch was made from last, where its report is of what
+    /// came before, under the revision of that report.
+    pub(super) async fn again_newest(
+        self: &Arc<Self>,
+        plant: &str,
+        batch: &str,
+        again: Again,
+    ) -> Result<(), Problem> {
+        let (engine, lane) = (Arc::clone(self), self.lane(plant));
+        let (plant, batch) = (plant.to_owned(), batch.to_owned());
+        self.detached(async move {
+            let _turn = lane.turn.lock().await;
+            let finished = engine.finished(&plant, &batch).await?;
+            if !finished.pending {
+                return Ok(());
+            }
+            let number = finished.report.revision;
+            let entered: Vec<FieldReadings> = finished.readings().cloned().collect();
+            let basis = match engine.basis(&finished, number, entered).await? {
+                Ok(basis) => basis,
+                // They fitted when they were entered; the batch goes before them.
+                Err(_) => Basis::Plain(
+                    engine.revisions.get(&plant, Some(number)).await?,
+                    finished.batch.clone(),
+                ),
+            };
+            engine.remake(&lane, finished.ticket, basis, again).await?;
+            Ok(())
         })
         .await?
     }
@@ -150,15 +184,7 @@ impl Engine {
         quantity: Option<String>,
     ) -> Result<Influences, Problem> {
         let finished = self.finished(plant, batch).await?;
-        let used = self.used(&finished).await?;
-        let mut entered: Vec<FieldReadings> = Vec::new();
-        let mut taken = 0;
-        for entry in finished.readings().take_while(|entry| {
-            taken += entry.readings.len();
-            taken <= used
-        }) {
-            entered.push(entry.clone());
-        }
+        let entered = self.entered_in(&finished).await?;
         let basis = self
             .basis(&finished, finished.report.revision, entered)
             .await?;
@@ -179,7 +205,7 @@ impl Engine {
         })
     }
 
-    async fn finished(&self, plant: &str, batch: &str) -> Result<Finished, Problem> {
+    pub(super) async fn finished(&self, plant: &str, batch: &str) -> Result<Finished, Problem> {
         let report = match self.store.batch(plant, batch).await? {
             Some(Stored::Done(report)) => report,
             Some(Stored::Pending(_)) => {
@@ -202,6 +228,7 @@ impl Engine {
             })
         });
         Ok(Finished {
+            pending: inbox.pending,
             entered: entered.collect::<Result<_, _>>()?,
             batch: parse(inbox.body, inbox.received).await?.1?.batch,
             ticket: inbox.ticket,
@@ -216,6 +243,20 @@ impl Engine {
         let names = names(revision.compiled.plant(), &finished.batch);
         let tags = &finished.report.tags;
         Ok(names.take_while(|name| tags.contains_key(name)).count())
+    }
+
+    /// The field readings that the present report was made with.
+    pub(super) async fn entered_in(
+        &self,
+        finished: &Finished,
+    ) -> Result<Vec<FieldReadings>, Problem> {
+        let used = self.used(finished).await?;
+        let mut taken = 0;
+        let entered = finished.readings().take_while(|entry| {
+            taken += entry.readings.len();
+            taken <= used
+        });
+        Ok(entered.cloned().collect())
     }
 
     async fn basis(
@@ -288,7 +329,7 @@ fn counted_from(before: usize, mut faults: Vec<Fault>) -> Vec<Fault> {
 }
 
 /// The decisions by hand that a report was made with.
-fn decisions_of(report: &Report, batch: &Batch) -> Vec<ByHand> {
+pub(super) fn decisions_of(report: &Report, batch: &Batch) -> Vec<ByHand> {
     let decisions = report.by_hand.iter().map(|done| ByHand {
         id: done.id,
         tag: done.tag.clone(),

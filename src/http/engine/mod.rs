@@ -8,15 +8,24 @@
 //! per plant. What is remembered of a plant between its batches is in [`lane`].
 
 mod again;
+mod backfill;
+mod background;
+mod compared;
 mod field;
 mod lane;
+mod periods;
+mod readings;
+mod replays;
 mod traces;
 
 pub(super) use again::{no_batch, removed};
 pub use field::FieldReading;
 pub(super) use field::{Extended, FieldReadings};
 pub(super) use lane::NotActed;
+pub(super) use readings::Taken;
+pub(super) use replays::CANDIDATE;
 
+use super::Limits;
 use super::ambient::Clock;
 use super::error::{Kind, Problem};
 use super::metrics::Metrics;
@@ -27,18 +36,27 @@ use crate::pipeline;
 use crate::plant::Batch;
 use crate::report::{Assessment, Report};
 use crate::store::{Acceptance, Incoming, Store, StoreError, Stored, Ticket, Unfinished};
+use compared::Remembered;
 use futures::future::{BoxFuture, Shared};
 use futures::{FutureExt, StreamExt};
 use lane::Lane;
-use std::collections::HashMap;
+use replays::Replaying;
+use std::collections::{HashMap, HashSet};
+use std::sync::atomic::AtomicUsize;
 use std::sync::{Arc, Mutex, MutexGuard, PoisonError};
 use time::OffsetDateTime;
-use tokio::sync::{OwnedMutexGuard, Semaphore, watch};
+use tokio::sync::{Notify, OwnedMutexGuard, OwnedSemaphorePermit, Semaphore, watch};
 use tokio_util::task::TaskTracker;
 use traces::Traces;
 
 /// Bodies longer than this are read on a thread that may block.
 const LONG_BODY: usize = 64 << 10;
+
+/// What room for batches is counted in, bytes.
+const ROOM_UNIT: usize = 4 << 10;
+
+/// Most units: what a semaphore hands out at once.
+const MOST_UNITS: usize = 1 << 28;
 
 /// Unfinished batches that are read and worked on together.
 const RESUMED_TOGETHER: usize = 64;
@@ -52,16 +70,36 @@ pub(super) struct Engine {
     clock: Arc<dyn Clock>,
     revisions: Revisions,
     workers: Semaphore,
+    most_workers: usize,
+    /// Wakes what waits for a worker that the live batches leave over.
+    freed: Notify,
+    /// Room for accepted batches that nobody waits for, in units.
+    waiting: Arc<Semaphore>,
+    most_units: usize,
     /// One for each plant that has been met.
     lanes: Mutex<HashMap<String, Arc<Lane>>>,
     /// Changes whenever an event of any plant has been kept.
     told: watch::Sender<u64>,
     /// What is being worked on, by number of the ticket.
-    running: Mutex<HashMap<i64, Running>>,
+    running: Mutex<HashMap<i64, Work>>,
     tasks: TaskTracker,
     metrics: Arc<Metrics>,
     /// Of the newest events.
     traces: Traces,
+    /// Steps of the work aside so far.
+    steps: AtomicUsize,
+    replaying: Mutex<HashMap<i64, Arc<Replaying>>>,
+    compared: Mutex<Remembered>,
+    /// Backfills whose content is coming in, by plant and name.
+    filling: Arc<Mutex<HashSet<(String, String)>>>,
+}
+
+/// A batch that is being worked on.
+struct Work {
+    plant: String,
+    /// It comes from a backfill: no alarm hangs on it.
+    backfill: bool,
+    running: Running,
 }
 
 /// A batch that is durable.
@@ -76,20 +114,30 @@ impl Engine {
     pub fn new(
         store: Arc<dyn Store>,
         clock: Arc<dyn Clock>,
-        workers: usize,
+        limits: &Limits,
         metrics: Arc<Metrics>,
     ) -> Self {
+        let most_workers = limits.workers.max(1);
+        let most_units = limits.waiting.div_ceil(ROOM_UNIT).clamp(1, MOST_UNITS);
         Engine {
             revisions: Revisions::new(Arc::clone(&store)),
             store,
             clock,
-            workers: Semaphore::new(workers.max(1)),
+            workers: Semaphore::new(most_workers),
+            most_workers,
+            freed: Notify::new(),
+            waiting: Arc::new(Semaphore::new(most_units)),
+            most_units,
             lanes: Mutex::default(),
             told: watch::Sender::new(0),
             running: Mutex::default(),
             tasks: TaskTracker::new(),
             metrics,
             traces: Traces::default(),
+            steps: AtomicUsize::new(0),
+            replaying: Mutex::default(),
+            compared: Mutex::default(),
+            filling: Arc::default(),
         }
     }
 
@@ -163,7 +211,33 @@ impl Engine {
                 Some(Stored::Pending(_)) | None => {}
             }
         }
-        self.start(ticket, batch).await
+        self.start(ticket, batch, false).await
+    }
+
+    /// Room for a batch that nobody will wait for: what is accepted and not
+    /// finished is held in memory, so there is only so much of it.
+    ///
+    /// # Errors
+    ///
+    /// Where there is none now.
+    pub fn room(&self, bytes: usize) -> Result<OwnedSemaphorePermit, Problem> {
+        let room = Arc::clone(&self.waiting).try_acquire_many_owned(self.units(bytes));
+        room.map_err(|_| {
+            let detail = "as many accepted batches as can be are waiting to be finished";
+            Problem::new(Kind::Overloaded, detail)
+        })
+    }
+
+    /// The same, as soon as there is some.
+    pub async fn next_room(&self, bytes: usize) -> Option<OwnedSemaphorePermit> {
+        let room = Arc::clone(&self.waiting).acquire_many_owned(self.units(bytes));
+        // It is never closed.
+        room.await.ok()
+    }
+
+    fn units(&self, bytes: usize) -> u32 {
+        let units = bytes.div_ceil(ROOM_UNIT).clamp(1, self.most_units);
+        u32::try_from(units).unwrap_or(u32::MAX)
     }
 
     /// Has an accepted batch finished without waiting for it; what `until_then`
@@ -203,11 +277,17 @@ impl Engine {
             ticket,
             received,
             body,
+            again,
+            backfill,
             ..
         } = unfinished;
         let id = ticket.id;
         let outcome = match parse(body, received).await {
-            Ok((_, Ok(parsed))) => self.start(ticket, parsed.batch).await,
+            _ if again => self.settle(&ticket.plant, &ticket.batch, None).await,
+            Ok((_, Ok(parsed))) => {
+                let report = self.start(ticket, parsed.batch, backfill).await;
+                report.map(|_| ())
+            }
             Ok((_, Err(refusal))) => Err(refusal.into()),
             Err(problem) => Err(problem),
         };
@@ -223,11 +303,11 @@ impl Engine {
     }
 
     /// The task that works on a batch: the one that runs already, or a new one.
-    fn start(self: &Arc<Self>, ticket: Ticket, batch: Batch) -> Running {
-        let id = ticket.id;
+    fn start(self: &Arc<Self>, ticket: Ticket, batch: Batch, backfill: bool) -> Running {
+        let (id, plant) = (ticket.id, ticket.plant.clone());
         let mut running = lock(&self.running);
         if let Some(same) = running.get(&id) {
-            return same.clone();
+            return same.running.clone();
         }
         let engine = Arc::clone(self);
         let lane = self.lane(&ticket.plant);
@@ -239,12 +319,18 @@ impl Engine {
                 Some(turn) => turn,
                 None => turn.await,
             };
-            let outcome = engine.work(&lane, turn, ticket, batch).await;
+            let outcome = engine.work(&lane, turn, ticket, batch, backfill).await;
             lock(&engine.running).remove(&id);
+            engine.freed.notify_one();
             outcome
         };
         let work = carried(work).boxed().shared();
-        running.insert(id, work.clone());
+        let entry = Work {
+            plant,
+            backfill,
+            running: work.clone(),
+        };
+        running.insert(id, entry);
         self.tasks.spawn(work.clone());
         work
     }
@@ -255,6 +341,7 @@ impl Engine {
         turn: OwnedMutexGuard<()>,
         ticket: Ticket,
         batch: Batch,
+        backfill: bool,
     ) -> Outcome {
         let revision = self
             .revisions
@@ -268,6 +355,14 @@ impl Engine {
         let report = compute(move || metrics.reconciled(reconcile)).await?;
         drop(worker);
         let report = Arc::new(report);
+        if backfill {
+            // What is long past raises no alarm.
+            let kept = self.store.finish(ticket, Arc::clone(&report), None);
+            drop(turn);
+            kept.await?;
+            self.metrics.finished(&report);
+            return Ok(report);
+        }
         self.look(lane, turn, ticket, Arc::clone(&report), &settings)
             .await?;
         self.metrics.finished(&report);
