@@ -1,6 +1,7 @@
 //! The clients of `deploy/clients`, run as they are. A program that they need and
 //! that is missing fails these tests: a client that nobody has run is none.
 
+mod service;
 pub mod stand_in;
 
 use crate::service_process::text;
