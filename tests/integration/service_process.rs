@@ -404,19 +404,3 @@ fn signals_end_it_in_order() {
         assert!(directory.path().join("counterpoise.sqlite").exists());
     }
 }
-
-#[test]
-fn an_open_address_is_warned_of() {
-    let directory = tempfile::tempdir().expect("a directory");
-    let mut child = program()
-        .args(["serve", "--listen", "0.0.0.0:0"])
-        .current_dir(directory.path())
-        .stderr(Stdio::piped())
-        .spawn()
-        .expect("a process");
-    let mut lines = BufReader::new(child.stderr.take().expect("a log")).lines();
-    let first = lines.next().expect("a line").expect("text");
-    child.kill().expect("killed");
-    child.wait().expect("an end");
-    assert!(first.contains("tokens"), "{first}");
-}

@@ -122,15 +122,16 @@ async fn large(path: &Path) {
     for number in 2..100 {
         random.fill_bytes(&mut noise);
         sqlx::query(
-            "INSERT INTO inbox SELECT ?1, plant_id, 'large ' || ?1, revision, digest, start_ns,
-             end_ns, received_ns, ?2 FROM inbox WHERE id = 1",
+            "INSERT INTO inbox (id, plant_id, batch, revision, digest, start_ns, end_ns, received_ns, body)
+             SELECT ?1, plant_id, 'large ' || ?1, revision, digest, start_ns, end_ns, received_ns, ?2
+             FROM inbox WHERE id = 1",
         )
         .bind(number)
         .bind(zstd::encode_all(&noise[..], 1).expect("a frame"))
         .execute(&mut *transaction)
         .await
         .expect("a batch");
-        sqlx::query("INSERT INTO pending VALUES (?1)")
+        sqlx::query("INSERT INTO pending (inbox_id) VALUES (?1)")
             .bind(number)
             .execute(&mut *transaction)
             .await

@@ -116,7 +116,7 @@ async fn every_fault_of_what_it_holds_is_told() {
     change(
         &copied("faulty"),
         "PRAGMA foreign_keys = OFF;
-         INSERT INTO pending VALUES (77);
+         INSERT INTO pending (inbox_id) VALUES (77);
          DELETE FROM results WHERE inbox_id = 1;
          UPDATE results SET report = x'00' WHERE inbox_id = 2;
          UPDATE inbox SET body = x'00' WHERE id = 3;
@@ -138,6 +138,6 @@ async fn every_fault_of_what_it_holds_is_told() {
     let told = refused(folder, &["backup", "--database", "faulty", "copy"], UNSOUND);
     assert!(told.contains("faulty: the report of batch b2"), "{told}");
     let both = copied("both");
-    change(&both, "INSERT INTO pending VALUES (1)").await;
+    change(&both, "INSERT INTO pending (inbox_id) VALUES (1)").await;
     is_refused(folder, "both", &["or do both: 1"]);
 }
