@@ -89,7 +89,7 @@ pub(super) struct Settled {
     post, path = "/v1/plants/{plant}/backfills/{backfill}", operation_id = "post_backfill", tag = "readings",
     params(
         ("plant" = String, Path, description = "Name of the plant", example = "tarn-mill"),
-        ("backfill" = String, Path, description = "The client's name for the backfill", example = "2025"),
+        ("backfill" = String, Path, min_length = 1, max_length = 128, description = "The client's name for the backfill", example = "2025"),
         ("from" = Option<u64>, Query, description = "Bytes of the content, after decompression, that came before; 0 unless set"),
         ("complete" = Option<bool>, Query, description = "Whether the content ends with this request; `false` unless set"),
     ),
@@ -166,7 +166,7 @@ fn form(headers: &HeaderMap) -> Result<ReadingsForm, Problem> {
     get, path = "/v1/plants/{plant}/backfills/{backfill}", operation_id = "get_backfill", tag = "readings",
     params(
         ("plant" = String, Path, description = "Name of the plant", example = "tarn-mill"),
-        ("backfill" = String, Path, description = "The client's name for the backfill", example = "2025"),
+        ("backfill" = String, Path, min_length = 1, max_length = 128, description = "The client's name for the backfill", example = "2025"),
     ),
     responses(
         (status = 200, description = "How far", body = Progress),
@@ -188,7 +188,7 @@ pub(super) async fn get(
     get, path = "/v1/plants/{plant}/backfills", operation_id = "list_backfills", tag = "readings",
     params(
         ("plant" = String, Path, description = "Name of the plant", example = "tarn-mill"),
-        ("limit" = Option<usize>, Query, description = "At most so many, 1 to 1000; 100 unless set"),
+        ("limit" = Option<usize>, Query, minimum = 1, maximum = 1000, description = "At most so many, 1 to 1000; 100 unless set"),
         ("after" = Option<String>, Query, description = "From the Link header of the answer before"),
     ),
     responses(

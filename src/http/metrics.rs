@@ -47,11 +47,36 @@ pub(super) struct Metrics {
     solves: Family<Words, Counter>,
     suspects: Counter,
     samples: Family<Words, Counter>,
+    periods: Family<Words, Counter>,
     /// Events settled by the webhook.
     pub settled: Family<Words, Counter>,
     /// Attempts of the webhook that did not settle an event.
     pub attempts_failed: Counter,
     standing: Standing,
+}
+
+/// What became of a period of samples.
+#[derive(Clone, Copy, Debug, PartialEq, Eq)]
+pub(super) enum Fate {
+    /// A batch.
+    Made,
+    /// A batch made again from late readings.
+    Again,
+    /// Nothing: no sample in it was usable.
+    Dropped,
+    /// Nothing: a client has sent a batch of its name.
+    NameTaken,
+}
+
+impl Fate {
+    fn name(self) -> &'static str {
+        match self {
+            Fate::Made => "made",
+            Fate::Again => "again",
+            Fate::Dropped => "dropped",
+            Fate::NameTaken => "name-taken",
+        }
+    }
 }
 
 /// Something counted that others hold too.
@@ -82,6 +107,7 @@ impl Metrics {
             solves: Family::default(),
             suspects: Counter::default(),
             samples: Family::default(),
+            periods: Family::default(),
             settled: Family::default(),
             attempts_failed: Counter::default(),
             standing: Standing::register(&mut registry, store),
@@ -124,6 +150,11 @@ impl Metrics {
             self.samples.clone(),
         );
         registry.register(
+            "periods",
+            "Periods of samples, by what became of them",
+            self.periods.clone(),
+        );
+        registry.register(
             "webhook_events",
             "Events settled by the webhook, by outcome",
             self.settled.clone(),
@@ -143,6 +174,11 @@ impl Metrics {
                 .inc_by(0);
         }
         self.samples(0, 0, 0);
+        for fate in [Fate::Made, Fate::Again, Fate::Dropped, Fate::NameTaken] {
+            self.periods
+                .get_or_create(&[("fate", fate.name())])
+                .inc_by(0);
+        }
     }
 
     /// Reconciles, and counts what came of it.
@@ -164,6 +200,11 @@ impl Metrics {
     /// A batch has got its first report, and it is on disk.
     pub fn finished(&self, report: &Report) {
         self.plants.finished(report);
+    }
+
+    /// A period of samples has come to its end.
+    pub fn period(&self, fate: Fate) {
+        self.periods.get_or_create(&[("fate", fate.name())]).inc();
     }
 
     /// Samples have come: so many were new, known already, and refused.

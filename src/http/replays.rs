@@ -241,7 +241,7 @@ async fn with(body: &mut Fields, plant: &str) -> Result<Option<ReplayWith>, Prob
     get, path = "/v1/plants/{plant}/replays", operation_id = "list_replays", tag = "replays",
     params(
         ("plant" = String, Path, description = "Name of the plant", example = "tarn-mill"),
-        ("limit" = Option<usize>, Query, description = "At most so many, 1 to 1000; 100 unless set"),
+        ("limit" = Option<usize>, Query, minimum = 1, maximum = 1000, description = "At most so many, 1 to 1000; 100 unless set"),
         ("before" = Option<i64>, Query, description = "From the Link header of the answer before"),
     ),
     responses(
@@ -362,8 +362,8 @@ pub(super) async fn comparison(
     params(
         ("plant" = String, Path, description = "Name of the plant", example = "tarn-mill"),
         ("replay" = i64, Path, description = "Number of the replay", example = 7),
-        ("limit" = Option<usize>, Query, description = "At most so many, 1 to 100; 100 unless set"),
-        ("cursor" = Option<String>, Query, description = "From the Link header of the answer before"),
+        ("limit" = Option<usize>, Query, minimum = 1, maximum = 100, description = "At most so many, 1 to 100; 100 unless set"),
+        ("cursor" = Option<String>, Query, pattern = r"^-?[0-9]{1,18}\.[0-9]{1,18}$", description = "From the Link header of the answer before"),
     ),
     responses(
         (status = 200, description = "The earliest period first", body = ReplayedList, headers(("Link" = String, description = "rel=\"next\": where the list goes on"))),

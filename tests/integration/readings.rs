@@ -174,6 +174,7 @@ async fn a_period_that_is_over_becomes_a_batch() {
     assert_eq!(made["start"], "2031-04-02T10:00:00Z");
     assert_eq!(made["end"], "2031-04-02T10:05:00Z");
     assert_eq!(made["verdict"], "consistent");
+    assert_eq!(made["tags"]["F-3"]["averaged"]["samples"], 5);
     let measured = made["tags"]["F-3"]["measured"].as_f64().expect("a mean");
     assert!((measured - 150.5008).abs() < 1e-9, "{measured}");
     assert_eq!(finished(&service).await, ["2031-04-02T10:00:00Z"]);

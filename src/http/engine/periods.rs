@@ -16,6 +16,7 @@
 use super::{Engine, compute, parse};
 use crate::averaging;
 use crate::http::error::Problem;
+use crate::http::metrics::Fate;
 use crate::ingest;
 use crate::plant::{Batch, Plant, Sample};
 use crate::store::{
@@ -124,7 +125,12 @@ impl Engine {
         })
         .await?;
         if batch.readings.is_empty() {
-            tracing::info!(plant, batch = name, "nothing in this period is usable; no batch is made");
+            self.metrics.period(Fate::Dropped);
+            tracing::info!(
+                plant,
+                batch = name,
+                "nothing in this period is usable; no batch is made"
+            );
             return Ok(self.store.drop_period(period).await?);
         }
         let (body, parsed) = parse(ingest::write(&batch), now).await?;
@@ -148,12 +154,15 @@ impl Engine {
         };
         match self.store.close_period(closing).await? {
             Closed::New(ticket) => {
+                self.metrics.period(Fate::Made);
                 self.start(ticket, parsed.batch, backfill).await?;
             }
             Closed::Changed(_) => {
+                self.metrics.period(Fate::Again);
                 self.settle(&plant, &name, reason).await?;
             }
             Closed::NameTaken => {
+                self.metrics.period(Fate::NameTaken);
                 tracing::warn!(
                     plant,
                     batch = name,
