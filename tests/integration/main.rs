@@ -15,6 +15,7 @@ mod deploy;
 mod field_readings;
 mod fluid;
 mod harness;
+mod history;
 mod house;
 mod identification;
 mod jacobians;

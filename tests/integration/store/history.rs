@@ -296,7 +296,7 @@ async fn a_full_disk_at_any_place_loses_nothing() {
     for at in 0..216 {
         let ticket = accepted(&store, incoming("p", &format!("b{at}"), at * 20, 1)).await;
         let mut report = result(&ticket, at * 20, at);
-        for tag in 2..150 {
+        for tag in 2..60 {
             let more = result(&ticket, at * 20, at + 1000 * tag)
                 .tags
                 .swap_remove("F-1");
@@ -314,7 +314,7 @@ async fn a_full_disk_at_any_place_loses_nothing() {
     for more in 0..400 {
         // Fewer pages than there are mean that there can be no more.
         let hindrance = Hindrance {
-            max_pages: Some(1 + more * 10),
+            max_pages: Some(1 + more * 15),
             ..Hindrance::default()
         };
         store.hinder(hindrance).await.expect("hindered");

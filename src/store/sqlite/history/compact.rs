@@ -16,7 +16,8 @@ use crate::store::sqlite::work::{Channelled, DayDone, PutChannels, PutChunks};
 use crate::store::{Field, StoreError};
 use futures::TryStreamExt;
 use sqlx::sqlite::SqliteConnection;
-use std::collections::HashMap;
+use std::collections::hash_map::Entry;
+use std::collections::{HashMap, HashSet};
 use std::sync::Arc;
 
 /// Numbers of a day that are in memory at once: 32 MB.
@@ -26,6 +27,10 @@ const TOGETHER: usize = 4 << 20;
 const WRITTEN: usize = 512 << 10;
 
 type Next = (i64, i64, i64, Option<i64>, bool, Option<Vec<u8>>);
+
+/// Ticket, name, start, end, verdict, layout, and whether it has numbers of its
+/// own.
+type HotBatch = (i64, String, i64, i64, String, i64, bool);
 
 /// A day to be done.
 struct Turning {
@@ -162,14 +167,13 @@ impl Turning {
         let chunked = before.iter().flat_map(|(_, batches)| batches);
         let chunked: HashMap<i64, ()> = chunked.map(|batch| (batch.id, ())).collect();
         let (first, last) = day_bounds(day);
-        let rows: Vec<(i64, String, i64, i64, String, i64, bool)> =
-            sqlx::query_as(sql::HOT_BATCHES)
-                .bind(plant)
-                .bind(first)
-                .bind(last)
-                .fetch_all(&mut *on)
-                .await
-                .map_err(|e| explain(&e))?;
+        let rows: Vec<HotBatch> = sqlx::query_as(sql::HOT_BATCHES)
+            .bind(plant)
+            .bind(first)
+            .bind(last)
+            .fetch_all(&mut *on)
+            .await
+            .map_err(|e| explain(&e))?;
         let mut turning = Turning {
             plant,
             day,
@@ -185,9 +189,8 @@ impl Turning {
                 // Retention has removed its numbers.
                 continue;
             }
-            if !turning.layouts.contains_key(&layout) {
-                let read = layouts.get(&mut *on, layout).await?;
-                turning.layouts.insert(layout, read);
+            if let Entry::Vacant(new) = turning.layouts.entry(layout) {
+                new.insert(layouts.get(&mut *on, layout).await?);
             }
             turning.rows.insert(id, turning.batches.len());
             turning.batches.push(DayBatch {
@@ -205,7 +208,7 @@ impl Turning {
     /// The day's channels in parts of a bounded size.
     fn parts(&self) -> Vec<Vec<Channel>> {
         let mut all: Vec<&Channel> = Vec::new();
-        let mut seen = std::collections::HashSet::new();
+        let mut seen = HashSet::new();
         let mut layouts: Vec<_> = self.layouts.iter().collect();
         layouts.sort_by_key(|(id, _)| **id);
         for (_, layout) in layouts {

@@ -17,7 +17,7 @@ pub(super) use source::{Chunked, Day, Layouts, Past, Values};
 use super::SqliteStore;
 use super::fault::{explain, nanoseconds};
 use super::sql;
-use super::work::{CloseDay, GiveBack, MoveOld, Remove, Sweep};
+use super::work::{CloseDay, GiveBack, MoveOld, Remove, RemoveSamples, Sweep};
 use crate::plant::Retention;
 use crate::store::averages::DAY;
 use crate::store::{HistoryStore, MeansPage, MeansQuery, Reply, StoreError, Tidied};
@@ -94,6 +94,13 @@ impl SqliteStore {
             tidied.more = true;
         }
         for (plant, retention) in retention {
+            if let Some(samples) = retention.samples {
+                let plant = plant.clone();
+                let before = nanoseconds(now - samples);
+                let removed = self.write(RemoveSamples { plant, before }).await?;
+                tidied.removed += removed;
+                tidied.more |= removed > 0;
+            }
             let Some(reports) = retention.reports else {
                 continue;
             };

@@ -103,6 +103,9 @@ type DayRow = (
     Option<Vec<u8>>,
 );
 
+/// Ticket, name, start, end, verdict, layout, numbers.
+type HotRow = (i64, String, i64, i64, String, i64, Vec<u8>);
+
 /// The columns of a day that were asked for, by channel.
 #[derive(Default)]
 pub(in crate::store::sqlite) struct Chunked(HashMap<(i64, Field), Vec<f64>>);
@@ -287,17 +290,16 @@ impl<'c> Past<'c> {
             .map(|(at, batch)| (batch.id, at))
             .collect();
         let wanted = limit.min(HOT);
-        let rows: Vec<(i64, String, i64, i64, String, i64, Vec<u8>)> =
-            sqlx::query_as(sql::HOT_ROWS)
-                .bind(self.plant)
-                .bind(first.max(self.from))
-                .bind(last.saturating_add(1).min(self.to))
-                .bind(after.start_ns)
-                .bind(after.id)
-                .bind(wanted as i64)
-                .fetch_all(&mut *self.on)
-                .await
-                .map_err(|e| explain(&e))?;
+        let rows: Vec<HotRow> = sqlx::query_as(sql::HOT_ROWS)
+            .bind(self.plant)
+            .bind(first.max(self.from))
+            .bind(last.saturating_add(1).min(self.to))
+            .bind(after.start_ns)
+            .bind(after.id)
+            .bind(wanted as i64)
+            .fetch_all(&mut *self.on)
+            .await
+            .map_err(|e| explain(&e))?;
         let next = rows.last().filter(|_| rows.len() == wanted);
         let next = next.map(|row| Cursor {
             start_ns: row.2,

@@ -207,6 +207,19 @@ pub(in crate::store::sqlite) const NEXT_BARE: &str = "
 pub(in crate::store::sqlite) const CLOSE_DAY: &str = "
     UPDATE days SET closed = 1, batches = x'' WHERE id = ?1";
 
+/// Samples before a time, but not the newest of a tag: it may still hold. And
+/// none that an open period looks back to, which is a month at most.
+pub(in crate::store::sqlite) const REMOVE_SAMPLES: &str = "
+    DELETE FROM samples WHERE (tag_id, time_ns) IN (
+        SELECT s.tag_id, s.time_ns
+        FROM sample_tags t CROSS JOIN samples s ON s.tag_id = t.id
+        WHERE t.plant_id = (SELECT id FROM plants WHERE name = ?1)
+          AND s.time_ns < MIN(?2, COALESCE(
+            (SELECT MIN(o.start_ns) FROM open_periods o WHERE o.plant_id = t.plant_id)
+                - 31 * 86400000000000, ?2))
+          AND s.time_ns < (SELECT MAX(n.time_ns) FROM samples n WHERE n.tag_id = t.id)
+        LIMIT ?3)";
+
 pub(in crate::store::sqlite) const FREE_PAGES: &str = "
     SELECT (SELECT freelist_count FROM pragma_freelist_count),
            (SELECT page_count FROM pragma_page_count),
@@ -254,6 +267,7 @@ pub(in crate::store::sqlite) const OF_HISTORY: &[&str] = &[
     SET_BARE,
     NEXT_BARE,
     CLOSE_DAY,
+    REMOVE_SAMPLES,
     FREE_PAGES,
     GIVE_BACK,
 ];

@@ -17,6 +17,9 @@ const SWEPT: i64 = 512;
 /// Batches that one step removes.
 const REMOVED: i64 = 128;
 
+/// Samples that one step removes.
+const REMOVED_SAMPLES: i64 = 4096;
+
 type Ran<'a, T> = BoxFuture<'a, Result<T, sqlx::Error>>;
 
 /// Keeps the numbers of a result where its day finds them, and tells the day.
@@ -333,6 +336,31 @@ impl Work for CloseDay {
             delete_chunks(&mut *on, plant, day, side).await?;
             sqlx::query(sql::CLOSE_DAY).bind(id).execute(on).await?;
             Ok(true)
+        }
+        .boxed()
+    }
+}
+
+/// Removes samples before a time; answers how many.
+pub(in crate::store::sqlite) struct RemoveSamples {
+    /// Name of the plant.
+    pub plant: String,
+    /// The time, nanoseconds since 1970.
+    pub before: i64,
+}
+
+impl Work for RemoveSamples {
+    type Output = u64;
+
+    fn run<'a>(&'a self, on: &'a mut SqliteConnection) -> Ran<'a, u64> {
+        async move {
+            let removed = sqlx::query(sql::REMOVE_SAMPLES)
+                .bind(&self.plant)
+                .bind(self.before)
+                .bind(REMOVED_SAMPLES)
+                .execute(on)
+                .await?;
+            Ok(removed.rows_affected())
         }
         .boxed()
     }

@@ -1,10 +1,12 @@
 //! What retention removes, and what it never does.
 
+use super::super::readings::{added, at, sample, samples, tag};
 use super::{
     DAY, assert_same, everything, finished, later, means_of, redone, result, series_of, tidied,
 };
 use super::{accepted, incoming, on_every_store, plant, sqlite};
 use crate::harness::NOW;
+use counterpoise::plant::Retention;
 use counterpoise::report::Verdict;
 use counterpoise::store::{
     Acceptance, AccusationRow, BatchQuery, Field, NewFieldReading, Resolution, SqliteOptions,
@@ -67,6 +69,59 @@ async fn old_reports_go_and_names_verdicts_and_means_stay() {
         assert_eq!(means_of(store, Resolution::Hourly, 1000).await, hourly);
         assert_eq!(means_of(store, Resolution::Daily, 1000).await, daily);
         assert_eq!(tidied(store, later(), KEPT).await.removed, 0);
+    })
+    .await;
+}
+
+#[tokio::test]
+async fn old_samples_go_but_for_the_newest_of_a_tag_and_what_is_waited_for() {
+    on_every_store(async |store| {
+        store.put_plant(plant("p", "{}")).await.expect("put");
+        let day = 86_400;
+        let old: Vec<_> = (0..5000).map(|n| sample(n, n as f64)).collect();
+        let slow = [sample(7, 1.0)];
+        let new = [sample(20 * day, 2.0)];
+        let both: Vec<_> = old.iter().chain(&new).cloned().collect();
+        added(
+            store,
+            samples(vec![tag("F-1", 0, &both), tag("Z-1", 0, &slow)]),
+        )
+        .await;
+        let held = |now| async move {
+            let retention = Retention {
+                samples: Some(Duration::days(10)),
+                reports: None,
+            };
+            let mut removed = 0;
+            loop {
+                let turn = store.tidy(now, vec![("p".to_owned(), retention)]).await;
+                let turn = turn.expect("tidied");
+                removed += turn.removed;
+                if !turn.more {
+                    return removed;
+                }
+            }
+        };
+        let now = at(20 * day + 60);
+        assert_eq!(held(now).await, 0, "open periods need them");
+        let periods = store.open_periods("p", at(30 * day), 10_000).await;
+        for period in periods.expect("read") {
+            store.drop_period(period).await.expect("dropped");
+        }
+        assert_eq!(held(now).await, 5000);
+        let left = store
+            .samples("p", at(0), at(30 * day), Duration::days(1))
+            .await;
+        let left: Vec<_> = left
+            .expect("read")
+            .into_iter()
+            .map(|t| (t.tag, t.samples))
+            .collect();
+        let expected = [
+            ("F-1".to_owned(), new.to_vec()),
+            ("Z-1".to_owned(), slow.to_vec()),
+        ];
+        assert_eq!(left, expected);
     })
     .await;
 }
