@@ -3,7 +3,8 @@
 //! A batch counts where it has a critical value: neither `not-converged` nor
 //! `not-redundant`. With the critical value c and the dead band d a statistic is
 //! over where it exceeds c, below where it is less than (1 - d) c, and counts
-//! neither way between them. What a report names without a statistic (a tag that
+//! neither way between them. What is out of service counts neither way: an alarm
+//! about it stands as it stood. What a report names without a statistic (a tag that
 //! is missing or that nothing checks) counts neither way either; what it does not
 //! name is no longer in the plant file, and is below. A suspect that the report
 //! does not name is below where all its members are: a leak, a loss or a tag that
@@ -140,7 +141,11 @@ impl<'r> Sight<'r> {
 
     /// How a suspect stands that is none of this report's.
     pub fn absent(&self, members: &[Hypothesis]) -> Stand {
+        let out = self.out_of_service();
         let is_between = |member: &Hypothesis| {
+            if out.contains(&&member.of) {
+                return true;
+            }
             let adjustment = match member.cause {
                 Cause::Bias => self.rest.map(|rest| rest.tags.get(&member.of)),
                 Cause::Departure => self.rest.map(|rest| rest.assumptions.get(&member.of)),
@@ -161,6 +166,16 @@ impl<'r> Sight<'r> {
         } else {
             Stand::Below
         }
+    }
+
+    /// Streams and equipment that are out of service, or have no balance while
+    /// others are.
+    pub fn out_of_service(&self) -> Vec<&'r String> {
+        let Some(line_up) = &self.report.line_up else {
+            return Vec::new();
+        };
+        let equipment = line_up.equipment_out.iter().chain(&line_up.pipes);
+        line_up.streams_out.iter().chain(equipment).collect()
     }
 
     /// Every balance, tag and assumption, in the report's order.

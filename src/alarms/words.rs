@@ -25,6 +25,13 @@ impl Key {
         Key(format!("imbalance {equipment} {balance}"))
     }
 
+    /// Whether this is of a balance of a piece of equipment.
+    pub fn is_balance_of(&self, equipment: &str) -> bool {
+        let rest = self.0.strip_prefix("imbalance ");
+        let rest = rest.and_then(|rest| rest.strip_prefix(equipment));
+        rest.is_some_and(|rest| rest.starts_with(' '))
+    }
+
     /// Of a tag or an assumption.
     pub fn adjustment(name: &str) -> Self {
         Key(format!("adjustment {name}"))

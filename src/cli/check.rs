@@ -2,6 +2,7 @@
 
 use super::CAUTION;
 use super::input::{self, Read, Show};
+use super::line_up;
 use super::output::print;
 use super::table::{Table, decimals, fixed};
 use super::tell_apart::unseen;
@@ -48,6 +49,7 @@ pub fn check(arguments: &Check) -> anyhow::Result<ExitCode> {
         }
         Read::Plant(file) => {
             let title = file.plant.title.clone();
+            let conditions = line_up::conditions(&file.plant);
             let mut assessment = pipeline::assess(&Compiled::new(file.plant, 1));
             assessment
                 .warnings
@@ -55,7 +57,7 @@ pub fn check(arguments: &Check) -> anyhow::Result<ExitCode> {
             if json {
                 print(serde_json::to_string_pretty(&assessment)? + "\n")?;
             } else {
-                print(describe(&title, &assessment))?;
+                print(describe(&title, &conditions, &assessment))?;
             }
             Ok(ExitCode::SUCCESS)
         }
@@ -63,7 +65,7 @@ pub fn check(arguments: &Check) -> anyhow::Result<ExitCode> {
 }
 
 /// An assessment for people.
-pub(super) fn describe(title: &str, assessment: &Assessment) -> String {
+pub(super) fn describe(title: &str, conditions: &str, assessment: &Assessment) -> String {
     let mut text = String::new();
     // Writing to a string cannot fail.
     let _ = writeln!(
@@ -90,6 +92,7 @@ pub(super) fn describe(title: &str, assessment: &Assessment) -> String {
             "unobservable directions"
         ),
     );
+    text.push_str(conditions);
     if assessment.tags.is_empty() {
         let _ = writeln!(
             text,
@@ -251,6 +254,7 @@ mod tests {
             plant: "mill".to_owned(),
             revision: 1,
             operating_point: "none found".to_owned(),
+            line_up: None,
             states: 1,
             relations: 2,
             observations: 3,
@@ -287,7 +291,7 @@ mod tests {
 
     #[test]
     fn without_tags_nothing_is_claimed() {
-        let text = describe("Mill", &assessed(&[]));
+        let text = describe("Mill", "", &assessed(&[]));
         assert!(text.contains("Nothing could be assessed: none found"));
         assert!(!text.contains("very"), "{text}");
     }
@@ -316,13 +320,13 @@ mod tests {
             limit(Cause::Passing, "S", None, Ok(2.0), "kg/s"),
         ];
         insta::with_settings!({ prepend_module_to_snapshot => false }, {
-            insta::assert_snapshot!("check_text", describe("Mill", &assessment));
+            insta::assert_snapshot!("check_text", describe("Mill", "", &assessment));
         });
     }
 
     #[test]
     fn a_plant_without_blind_spots_says_so() {
-        let text = describe("Mill", &assessed(&[("C", Class::Redundant)]));
+        let text = describe("Mill", "", &assessed(&[("C", Class::Redundant)]));
         assert!(text.contains("Every tag is checked"));
         assert!(text.contains("Nothing that is looked for would go unseen."));
         assert!(text.contains(": 1 degree of freedom, 0 unobservable directions"));

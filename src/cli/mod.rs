@@ -11,6 +11,7 @@ mod demo;
 mod found;
 mod influences;
 mod input;
+mod line_up;
 mod moved;
 mod output;
 mod reconcile;

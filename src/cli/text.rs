@@ -2,7 +2,7 @@
 
 use super::moved::moved;
 use super::table::{Table, decimals, fixed, number, pair, plain_zero};
-use super::{CAUTION, DECIDE, suspects};
+use super::{CAUTION, DECIDE, line_up, suspects};
 use crate::report::{
     Averaged, ByHandReport, Class, GlobalTest, Imbalance, Phase, QuantityReport, Report, TagReport,
     Verdict,
@@ -68,6 +68,7 @@ pub(super) fn describe(report: &Report) -> String {
         let _ = writeln!(text, "steady, by {} tags judged", steadiness.judged);
     }
     text.push('\n');
+    text.push_str(&line_up::describe(report));
     for decision in &report.by_hand {
         let _ = writeln!(text, "{}", by_hand(decision));
     }

@@ -14,6 +14,11 @@ use super::Error;
 use super::normal::standard_normal;
 use crate::plant::{Assumption, Plant};
 
+/// Assumptions of stand-by equipment, and those of the equipment that it stands by
+/// for: of one make, so what is true of one is true of the other. Only one of
+/// them is ever in service.
+const TWINS: [(&str, &str); 1] = [("condensate-motor-b-loss", "condensate-motor-loss")];
+
 /// A true value for every assumption, in internal units.
 #[derive(Clone, Debug, PartialEq, Serialize)]
 #[serde(transparent)]
@@ -64,13 +69,19 @@ impl Assumed {
     }
 
     fn with(plant: &Plant, mut z: impl FnMut(&Assumption) -> f64) -> Self {
-        Assumed(
-            plant
-                .assumptions
-                .iter()
-                .map(|a| (a.name.clone(), true_value(a, z(a))))
-                .collect(),
-        )
+        let is_twin = |a: &&Assumption| TWINS.iter().any(|(twin, _)| *twin == a.name);
+        let all = plant.assumptions.iter();
+        let mut values: BTreeMap<String, f64> = all
+            .filter(|a| !is_twin(a))
+            .map(|a| (a.name.clone(), true_value(a, z(a))))
+            .collect();
+        for twin in plant.assumptions.iter().filter(is_twin) {
+            let first = TWINS.iter().find(|(name, _)| *name == twin.name);
+            if let Some(value) = first.and_then(|(_, first)| values.get(*first)) {
+                values.insert(twin.name.clone(), *value);
+            }
+        }
+        Assumed(values)
     }
 }
 

@@ -83,7 +83,7 @@ impl Guess {
         self.values()
             .iter()
             .zip(other.values())
-            .map(|(a, b)| ((a - b) / b).abs())
+            .map(|(a, b)| if *a == b { 0.0 } else { ((a - b) / b).abs() })
             .fold(0.0, f64::max)
     }
 }
@@ -217,17 +217,66 @@ fn assemble(
         ("cooling-in", design::COOLING_FLOW, cold_end.cooling_in),
         ("cooling-out", design::COOLING_FLOW, cold_end.cooling_out),
     ];
+    let bypassed = at.line_up.heater_7_bypassed;
+    let ways = [
+        in_line(feed, bypassed).to_vec(),
+        pumped(feed, at.line_up.second_pump).to_vec(),
+    ];
+    let gone: &[&str] = if bypassed {
+        &["bleed-7", "drain-7"]
+    } else {
+        &[]
+    };
     let streams: BTreeMap<String, Flow> = streams
         .into_iter()
+        .chain(ways.concat())
+        .filter(|(name, ..)| !gone.contains(name))
         .map(|(name, mass_flow, state)| (name.to_owned(), flow(mass_flow, state)))
         .collect();
-    let equipment = machines(&streams, assumed)?;
+    let mut equipment = machines(&streams, assumed)?;
+    if bypassed {
+        equipment.remove("heater-7");
+    }
+    if at.line_up.second_pump {
+        for name in ["condensate-pump", "condensate-motor"] {
+            if let Some(machine) = equipment.remove(name) {
+                equipment.insert(format!("{name}-b"), machine);
+            }
+        }
+    }
     Ok(Truth {
         streams,
         equipment,
         barometer: assumed.get("barometer")?,
         assumptions: assumed.clone(),
+        line_up: at.line_up,
     })
+}
+
+/// The streams on the way through heater 7, or past it.
+fn in_line(feed: &FeedTrain, bypassed: bool) -> [(&'static str, f64, State); 2] {
+    let names = match bypassed {
+        false => ["feed-7", "feed-7-out"],
+        true => ["feed-past-7", "feed-past-7-low"],
+    };
+    let flow = feed.feed_flow;
+    [
+        (names[0], flow, feed.feed_6),
+        (names[1], flow, feed.final_feed),
+    ]
+}
+
+/// The streams through the condensate pump that runs.
+fn pumped(feed: &FeedTrain, second: bool) -> [(&'static str, f64, State); 2] {
+    let names = match second {
+        false => ["condensate-a", "condensate-a-out"],
+        true => ["condensate-b", "condensate-b-out"],
+    };
+    let flow = feed.condensate_flow;
+    [
+        (names[0], flow, feed.condensate),
+        (names[1], flow, feed.condensate_pumped),
+    ]
 }
 
 /// Own states of the equipment, from the energy of its streams.

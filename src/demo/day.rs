@@ -12,7 +12,7 @@ use time::{Duration, OffsetDateTime, macros::datetime};
 
 use super::design::celsius;
 use super::readings::{Fault, readings};
-use super::{Assumed, Conditions, Error, Truth, truth};
+use super::{Assumed, Conditions, Error, LineUp, Truth, truth};
 use crate::plant::{Batch, Plant, Tag};
 
 /// Seed of the day in `fixtures/demo`.
@@ -134,6 +134,7 @@ fn conditions(hour: f64) -> Conditions {
         fouling: FOULING_PER_HOUR * (hour - FOULING_START).max(0.0),
         cooling_inlet: celsius(12.8 + 0.9 * noon_lag.sin()),
         make_up: celsius(17.5 + 1.5 * noon_lag.sin()),
+        line_up: LineUp::default(),
     }
 }
 

@@ -17,6 +17,31 @@ pub struct Conditions {
     pub cooling_inlet: f64,
     /// Temperature of the make-up water, K.
     pub make_up: f64,
+    /// What is in line.
+    pub line_up: LineUp,
+}
+
+/// How the unit is lined up.
+#[derive(Clone, Copy, Debug, Default, PartialEq, Eq)]
+pub struct LineUp {
+    /// Heater 7 is shut off and the feedwater led past it.
+    pub heater_7_bypassed: bool,
+    /// The second condensate pump runs in the place of the first.
+    pub second_pump: bool,
+}
+
+impl LineUp {
+    /// What a status of the plant file shows; `None` where there is no such status.
+    pub(super) fn status(&self, name: &str) -> Option<f64> {
+        let shown = match name {
+            "XS-201" => true,
+            "XS-401" => !self.second_pump,
+            "XS-402" => self.second_pump,
+            "ZS-307" => !self.heater_7_bypassed,
+            _ => return None,
+        };
+        Some(f64::from(u8::from(shown)))
+    }
 }
 
 impl Conditions {
@@ -27,6 +52,7 @@ impl Conditions {
             fouling: 0.0,
             cooling_inlet: celsius(13.0),
             make_up: celsius(18.0),
+            line_up: LineUp::default(),
         }
     }
 }
@@ -158,6 +184,9 @@ pub(super) const DRAIN_PUMP_MARGIN: f64 = 0.05;
 pub(super) fn condensate_pump_pressure(load: f64) -> f64 {
     2.35 - 0.5 * load * load
 }
+
+/// Drop over the bypass of heater 7, MPa.
+pub(super) const HEATER_7_BYPASS_DROP: f64 = 0.04;
 
 /// Isentropic efficiencies of the sections that the plant file assumes nothing of.
 pub(super) struct Efficiencies {

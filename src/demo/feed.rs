@@ -49,6 +49,7 @@ pub(super) struct FeedTrain {
     pub(super) feed_discharge: State,
     pub(super) feed_5: State,
     pub(super) feed_6: State,
+    /// Behind the bypass of heater 7, or the heater.
     pub(super) final_feed: State,
     pub(super) drain_7: State,
     pub(super) drain_6: State,
@@ -78,7 +79,13 @@ impl FeedTrain {
         // The boiler sets the pressures, from its drum back to the feed pump.
         let drum = design::live_pressure(load) + design::superheater_drop(load);
         let final_pressure = drum + design::economiser_drop(load);
-        let pressure_6 = final_pressure + assumed.get("heater-7-drop")?;
+        let past_7 = at.line_up.heater_7_bypassed;
+        let drop_7 = if past_7 {
+            design::HEATER_7_BYPASS_DROP
+        } else {
+            assumed.get("heater-7-drop")?
+        };
+        let pressure_6 = final_pressure + drop_7;
         let pressure_5 = pressure_6 + assumed.get("heater-6-drop")?;
         let discharge_pressure = pressure_5 + assumed.get("heater-5-drop")?;
 
@@ -110,10 +117,14 @@ impl FeedTrain {
             pressure_6,
             fluid::saturation(steam.hp_exhaust.p)?.t - design::HEATER_6.terminal(load) - at.fouling,
         )?;
-        let final_feed = fluid::from_pt(
-            final_pressure,
-            fluid::saturation(steam.bleed_7.p)?.t - design::HEATER_7.terminal(load),
-        )?;
+        let final_feed = if past_7 {
+            fluid::from_ph(final_pressure, feed_6.h)?
+        } else {
+            fluid::from_pt(
+                final_pressure,
+                fluid::saturation(steam.bleed_7.p)?.t - design::HEATER_7.terminal(load),
+            )?
+        };
         let drain_7 = fluid::from_pt(steam.bleed_7.p, feed_6.t + design::HEATER_7.drain(load))?;
         let drain_6 = fluid::from_pt(steam.hp_exhaust.p, feed_5.t + design::HEATER_6.drain(load))?;
         let drain_5 = fluid::from_pt(
@@ -124,7 +135,11 @@ impl FeedTrain {
         let vent_6_flow = assumed.get("vent-6-flow")?;
 
         let duty_7 = feed_flow * (final_feed.h - feed_6.h) + assumed.get("heater-7-loss")?;
-        let bleed_7 = duty_7 / (steam.bleed_7.h - drain_7.h);
+        let bleed_7 = if past_7 {
+            0.0
+        } else {
+            duty_7 / (steam.bleed_7.h - drain_7.h)
+        };
         let duty_6 = feed_flow * (feed_6.h - feed_5.h) + assumed.get("heater-6-loss")?
             - bleed_7 * (drain_7.h - drain_6.h)
             + vent_6_flow * (vent_6.h - drain_6.h);

@@ -24,13 +24,13 @@ mod truth;
 pub use assumed::Assumed;
 pub use balance::truth;
 pub use day::{DAY_SEED, DRIFTING_TAG, Day, FOULING_HEATER};
-pub use design::Conditions;
+pub use design::{Conditions, LineUp};
 pub use fixture::make_fixture;
 pub use readings::{Fault, readings};
 pub use truth::{Flow, Machine, Truth};
 
 use crate::fluid::OutOfRange;
-use crate::plant::{self, Format, Plant};
+use crate::plant::{self, Format, Plant, Reduced, Service, Signal};
 
 /// Why the simulation gave no result. Each is a fault of the simulation or of
 /// its plant file: at loads from 0.5 to 1 none occurs.
@@ -66,4 +66,18 @@ pub fn plant() -> Result<Plant, Error> {
     plant::read(plant_file(), Format::Toml)
         .map(|file| file.plant)
         .map_err(|faults| Error::PlantFile(faults.to_string()))
+}
+
+/// The demonstration plant as it is lined up: what is in service, as a plant without
+/// conditions.
+///
+/// # Errors
+/// As [`plant()`].
+pub fn lined_up(line_up: LineUp) -> Result<Plant, Error> {
+    let plant = plant()?;
+    let service = Service::decided(&plant, |signal| match signal {
+        Signal::Status(s) => line_up.status(&plant.statuses[s].name),
+        Signal::Tag(_) => None,
+    });
+    Ok(Reduced::new(&plant, &service).plant)
 }

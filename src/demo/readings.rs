@@ -26,8 +26,9 @@ pub enum Fault {
     Uncertain,
 }
 
-/// One reading of every tag, in file order. Each takes one normal number from
-/// `rng` whatever its fault, so that a fault changes no other reading.
+/// One reading of every tag in file order, and of every status behind them. Each tag
+/// in service takes one normal number from `rng` whatever its fault, so that a
+/// fault changes no other reading; what stands still shows nothing, without noise.
 ///
 /// # Errors
 /// [`Error::NoStream`] where the plant has a tag on a stream that the
@@ -38,30 +39,36 @@ pub fn readings(
     rng: &mut impl Rng,
     fault: impl Fn(&Tag) -> Option<Fault>,
 ) -> Result<Vec<Reading>, Error> {
-    plant
-        .tags
-        .iter()
-        .map(|tag| {
-            let z = standard_normal(rng);
-            let exact = tag.unit.from_internal(truth.value(plant, tag.quantity)?);
-            let sigma = sigma(tag, exact);
-            let decimals = decimals(tag, exact);
-            let noisy = |z: f64| Some(round(exact + sigma * z, decimals));
-            let (value, grade) = match fault(tag) {
-                None => (noisy(z), Grade::Good),
-                Some(Fault::Bias(bias)) => (noisy(z + bias), Grade::Good),
-                Some(Fault::Missing) => (None, Grade::Bad),
-                Some(Fault::Bad) => (tag.range.map(|(low, _)| low), Grade::Bad),
-                Some(Fault::Uncertain) => (noisy(z * plant.uncertain_factor), Grade::Uncertain),
-            };
-            Ok(Reading {
-                tag: tag.name.clone(),
-                value,
-                quality: Quality { grade, code: None },
-                averaged: None,
-            })
-        })
-        .collect()
+    let reading = |tag: &str, value, grade| Reading {
+        tag: tag.to_owned(),
+        value,
+        quality: Quality { grade, code: None },
+        averaged: None,
+    };
+    let tags = plant.tags.iter().map(|tag| {
+        if !truth.is_in_service(plant, tag.quantity) {
+            let value = tag.unit.from_internal(truth.at_rest(tag.quantity));
+            return Ok(reading(&tag.name, Some(value), Grade::Good));
+        }
+        let z = standard_normal(rng);
+        let exact = tag.unit.from_internal(truth.value(plant, tag.quantity)?);
+        let sigma = sigma(tag, exact);
+        let decimals = decimals(tag, exact);
+        let noisy = |z: f64| Some(round(exact + sigma * z, decimals));
+        let (value, grade) = match fault(tag) {
+            None => (noisy(z), Grade::Good),
+            Some(Fault::Bias(bias)) => (noisy(z + bias), Grade::Good),
+            Some(Fault::Missing) => (None, Grade::Bad),
+            Some(Fault::Bad) => (tag.range.map(|(low, _)| low), Grade::Bad),
+            Some(Fault::Uncertain) => (noisy(z * plant.uncertain_factor), Grade::Uncertain),
+        };
+        Ok(reading(&tag.name, value, grade))
+    });
+    let statuses = plant.statuses.iter().map(|status| {
+        let shown = truth.line_up.status(&status.name);
+        Ok(reading(&status.name, shown, Grade::Good))
+    });
+    tags.chain(statuses).collect()
 }
 
 /// Sigma of a tag at a reading, in its unit.

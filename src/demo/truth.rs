@@ -4,14 +4,14 @@ use std::collections::BTreeMap;
 
 use serde::Serialize;
 
-use super::{Assumed, Error};
+use super::{Assumed, Error, LineUp};
 use crate::fluid::{self, State};
 use crate::plant::{EquipmentId, Plant, PressureReference, Quantity, StreamId};
 
-/// The true state of the plant in one batch.
+/// The true state of the plant in one batch: of what is in service.
 #[derive(Clone, Debug, PartialEq, Serialize)]
 pub struct Truth {
-    /// Every stream, by name.
+    /// Every stream in service, by name.
     pub streams: BTreeMap<String, Flow>,
     /// Equipment with states of its own, by name.
     pub equipment: BTreeMap<String, Machine>,
@@ -19,6 +19,9 @@ pub struct Truth {
     pub barometer: f64,
     /// True values of the assumptions.
     pub assumptions: Assumed,
+    /// What is in line.
+    #[serde(skip)]
+    pub line_up: LineUp,
 }
 
 /// The true state of a stream.
@@ -73,6 +76,30 @@ impl Truth {
             .get(&plant.equipment[id.0].name)
             .copied()
             .unwrap_or_default()
+    }
+
+    /// Whether an instrument looks at something that is in service.
+    pub(super) fn is_in_service(&self, plant: &Plant, quantity: Quantity) -> bool {
+        let has = |id: StreamId| self.streams.contains_key(&plant.streams[id.0].name);
+        match quantity {
+            Quantity::MassFlow(id)
+            | Quantity::Pressure(id, _)
+            | Quantity::Temperature(id)
+            | Quantity::Quality(id) => has(id),
+            Quantity::Power(id) => self.equipment.contains_key(&plant.equipment[id.0].name),
+            _ => true,
+        }
+    }
+
+    /// What an instrument shows on something that stands still: no flow, no power,
+    /// the pressure of the atmosphere and the warmth of the hall.
+    pub(super) fn at_rest(&self, quantity: Quantity) -> f64 {
+        const HALL: f64 = 298.15;
+        match quantity {
+            Quantity::Pressure(_, PressureReference::Absolute) => self.barometer,
+            Quantity::Temperature(_) => HALL,
+            _ => 0.0,
+        }
     }
 
     /// The true value of a quantity in its internal unit, a gauge or vacuum

@@ -158,6 +158,7 @@ fn decision(body: &mut Fields, plant: &Plant, entered: OffsetDateTime) -> Option
     let tag = body.text("tag");
     if let Some(name) = &tag
         && plant.tags.iter().all(|tag| tag.name != *name)
+        && plant.statuses.iter().all(|status| status.name != *name)
     {
         let what = format!("the current revision has no tag \"{name}\"");
         body.fault("tag", what, "name a tag of the plant file");

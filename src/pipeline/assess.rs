@@ -9,13 +9,14 @@ use super::attempt::{Found, attempt};
 use super::class_set;
 use super::compiled::Compiled;
 use super::hypotheses::{judged, limits};
+use super::line_up;
 use super::solution::Solution;
 use super::tags::class;
 use crate::diagnosis::detectable;
 use crate::equations::{Measured, StateKind, start};
 use crate::plant::{Quantity, Sigma, StreamId, Uncertainty, Unit};
 use crate::report::{
-    AssessedQuantity, AssessedStream, AssessedTag, Assessment, Class, Observability,
+    AssessedQuantity, AssessedStream, AssessedTag, Assessment, Class, LineUp, Observability,
 };
 use indexmap::IndexMap;
 use std::collections::BTreeSet;
@@ -26,8 +27,46 @@ const PART_OF_RANGE: f64 = 0.7;
 /// Factor on the sigma of readings that are only guessed.
 const LOOSE: f64 = 10.0;
 
-/// What the tags can and cannot determine.
+/// What the tags can and cannot determine, in the line-up of normal operation.
 pub fn assess(compiled: &Compiled) -> Assessment {
+    let (lined_up, told) = line_up::normal(compiled);
+    let mut assessment = assess_all(lined_up.compiled());
+    assessment.operating_point = with_line_up(assessment.operating_point, told.as_ref());
+    assessment.line_up = told;
+    let Some(places) = lined_up.places() else {
+        return assessment;
+    };
+    let plant = compiled.plant();
+    line_up::spread(&mut assessment.streams, plant, places);
+    let unused = |unit: &Unit| AssessedTag {
+        class: Class::Unused,
+        redundancy: None,
+        detectable: None,
+        unit: unit.symbol.clone(),
+    };
+    let whole = |names: Vec<(&String, &Unit)>, mut known: IndexMap<String, AssessedTag>| {
+        let entries = names.into_iter().map(|(name, unit)| {
+            let entry = known.swap_remove(name).unwrap_or_else(|| unused(unit));
+            (name.clone(), entry)
+        });
+        entries.collect()
+    };
+    let tags = plant.tags.iter().map(|tag| (&tag.name, &tag.unit));
+    assessment.tags = whole(tags.collect(), assessment.tags);
+    let assumptions = plant.assumptions.iter().map(|a| (&a.name, &a.unit));
+    assessment.assumptions = whole(assumptions.collect(), assessment.assumptions);
+    assessment
+}
+
+/// An operating point in words with its line-up.
+pub(super) fn with_line_up(in_words: String, line_up: Option<&LineUp>) -> String {
+    match line_up {
+        Some(line_up) if line_up.name != "full" => format!("{in_words}, {}", line_up.name),
+        _ => in_words,
+    }
+}
+
+fn assess_all(compiled: &Compiled) -> Assessment {
     let (found, operating_point) = operating_point(compiled);
     let plant = compiled.plant();
     let system = compiled.system();
@@ -35,6 +74,7 @@ pub fn assess(compiled: &Compiled) -> Assessment {
         plant: plant.name.clone(),
         revision: compiled.revision(),
         operating_point,
+        line_up: None,
         states: system.layout.len(),
         relations: 0,
         observations: system.observations.len(),

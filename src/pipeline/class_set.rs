@@ -49,9 +49,16 @@ impl ClassKey {
     }
 
     /// A short name of the key: the edition of the tests and the first 16
-    /// hexadecimal digits of its SHA-256.
-    pub fn name(&self) -> String {
-        let digest = Sha256::digest(&self.0);
+    /// hexadecimal digits of its SHA-256. Two line-ups may have the same key (one
+    /// pump in the place of another), so the line-up's mark is in the name.
+    pub fn name(&self, mark: &[u8]) -> String {
+        let digest = match mark {
+            [] => Sha256::digest(&self.0),
+            _ => {
+                let parts = [b"line-up ", mark, &self.0[..]];
+                Sha256::digest(parts.concat())
+            }
+        };
         let digits: String = (digest.iter().take(8))
             .map(|byte| format!("{byte:02x}"))
             .collect();
@@ -91,7 +98,7 @@ pub struct ClassSet {
 /// turns with the solution, so it is worked out at each.
 pub fn of(compiled: &Compiled, found: &Found) -> Arc<ClassSet> {
     let key = ClassKey::new(compiled, found);
-    let name = key.name();
+    let name = key.name(compiled.mark());
     let known = compiled.class_set(key, || made_at(compiled, found, &name));
     if turns(&known.classes) {
         return Arc::new(ClassSet {
@@ -126,7 +133,7 @@ fn turns(classes: &Classes) -> bool {
 /// The class set of a solution that is no batch: nothing is remembered of it, so
 /// that no batch's report depends on who asked for an assessment before.
 pub fn apart(compiled: &Compiled, found: &Found) -> ClassSet {
-    let name = ClassKey::new(compiled, found).name();
+    let name = ClassKey::new(compiled, found).name(compiled.mark());
     made_at(compiled, found, &name)
 }
 

@@ -9,7 +9,7 @@
 use super::attempt::attempt;
 use super::class_set;
 use super::compiled::Compiled;
-use super::readings::Readings;
+use super::line_up::Situation;
 use super::solution::Solution;
 use super::streams::{BAR, ZERO_CELSIUS};
 use crate::diagnosis::HARDLY_REDUNDANT;
@@ -28,6 +28,9 @@ pub enum NoInfluences {
     /// The batch did not converge.
     #[error("the batch did not converge: {0}")]
     NotConverged(String),
+    /// It is out of service in this batch, or the plant is down.
+    #[error("{0}")]
+    OutOfService(String),
     /// Nothing determines the value.
     #[error("the readings do not determine it")]
     Unobservable,
@@ -52,11 +55,21 @@ pub fn influences(
     of: &str,
     quantity: Option<&str>,
 ) -> Result<Influences, NoInfluences> {
-    let readings = Readings::new(compiled.plant(), batch, by_hand);
+    let situation = Situation::new(compiled, batch, by_hand);
+    if let Some(reason) = situation.standstill() {
+        return Err(NoInfluences::OutOfService(format!(
+            "the plant is not running: {reason}"
+        )));
+    }
+    if situation.is_out(of) {
+        let reason = format!("\"{of}\" is out of service in this batch");
+        return Err(NoInfluences::OutOfService(reason));
+    }
+    let (compiled, readings) = (situation.compiled(), &situation.readings);
     let found = attempt(compiled, &readings.measured).map_err(NoInfluences::NotConverged)?;
     let class_set = class_set::of(compiled, &found);
     let solution = Solution::new(compiled, &found, &class_set);
-    let target = value(compiled, &solution, of, quantity)?;
+    let target = value(compiled, &solution, situation.stream_name(of), quantity)?;
     let sigma = solution.uncertainty(&target.gradient);
     let sigma = sigma.ok_or(NoInfluences::Unobservable)?;
     let mut gradient = vec![0.0; compiled.system().layout.len()];

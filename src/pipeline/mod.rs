@@ -1,7 +1,7 @@
 //! From a plant and a batch to a report: the one place that knows the order of
 //! the stages.
 //!
-//! readings -> start -> solve -> sides of saturation -> classes -> variances ->
+//! line-up -> readings -> start -> solve -> sides of saturation -> classes -> variances ->
 //! tests -> report. Pure: no clock, no I/O, one thread, a fixed order of
 //! operations. What depends on the plant alone is compiled once, and what
 //! depends on the set of phases, zero flows and active bounds is kept by that
@@ -14,12 +14,15 @@ mod checks;
 mod class_set;
 mod compiled;
 mod equipment;
+mod findings;
 mod hypotheses;
 mod influence;
+mod line_up;
 mod phases;
 mod readings;
 mod refine;
 mod robust;
+mod same_quantity;
 mod search;
 mod solution;
 mod streams;
@@ -36,8 +39,9 @@ pub use tell_apart::tell_apart;
 
 use crate::diagnosis::{chi_square_quantile, chi_square_tail};
 use crate::plant::{Batch, ByHand};
-use crate::report::{GlobalTest, Report, Verdict};
+use crate::report::{Finding, GlobalTest, Report, Verdict};
 use indexmap::IndexMap;
+use line_up::Situation;
 use readings::Readings;
 use solution::Solution;
 
@@ -48,14 +52,33 @@ pub fn reconcile(compiled: &Compiled, batch: &Batch) -> Report {
 
 /// Reconciles one batch with what was decided by hand about its tags.
 pub fn reconcile_with(compiled: &Compiled, batch: &Batch, by_hand: &[ByHand]) -> Report {
-    let readings = Readings::new(compiled.plant(), batch, by_hand);
-    let mut report = empty_report(compiled, batch, &readings);
+    let situation = Situation::new(compiled, batch, by_hand);
+    let mut report = if situation.standstill().is_some() {
+        let mut report = empty_report(compiled, batch, &situation.readings);
+        report.tags = tags::tags(compiled, &situation.readings, None);
+        report.assumptions = tags::assumptions(compiled, &situation.readings, None);
+        report
+    } else {
+        balanced(situation.compiled(), batch, &situation.readings)
+    };
+    situation.complete(&mut report);
+    report
+}
+
+/// What stands out in a batch before any balance is made; part of its report.
+pub fn findings(compiled: &Compiled, batch: &Batch, by_hand: &[ByHand]) -> Vec<Finding> {
+    findings::findings(&Situation::new(compiled, batch, by_hand))
+}
+
+/// The report of the plant as it is lined up.
+fn balanced(compiled: &Compiled, batch: &Batch, readings: &Readings) -> Report {
+    let mut report = empty_report(compiled, batch, readings);
     let found = match attempt::attempt(compiled, &readings.measured) {
         Ok(found) => found,
         Err(reason) => {
             report.reason = Some(reason);
-            report.tags = tags::tags(compiled, &readings, None);
-            report.assumptions = tags::assumptions(compiled, &readings, None);
+            report.tags = tags::tags(compiled, readings, None);
+            report.assumptions = tags::assumptions(compiled, readings, None);
             return report;
         }
     };
@@ -65,15 +88,15 @@ pub fn reconcile_with(compiled: &Compiled, batch: &Batch, by_hand: &[ByHand]) ->
     report.verdict = verdict(&global);
     report.global_test = Some(global);
     report.single_test = solution.single_test();
-    report.tags = tags::tags(compiled, &readings, Some(&solution));
-    report.assumptions = tags::assumptions(compiled, &readings, Some(&solution));
+    report.tags = tags::tags(compiled, readings, Some(&solution));
+    report.assumptions = tags::assumptions(compiled, readings, Some(&solution));
     report.streams = streams::streams(compiled, &solution);
     report.equipment = equipment::equipment(compiled, &solution);
     report.remarks.extend(solution.remarks(compiled));
     let critical = report.single_test.as_ref().map(|test| test.critical_value);
     let judged = hypotheses::judged(compiled, &solution);
     report.limits = hypotheses::limits(compiled, &judged, critical);
-    suspects::name(compiled, &readings, &found, &solution, &judged, &mut report);
+    suspects::name(compiled, readings, &found, &solution, &judged, &mut report);
     report
 }
 

@@ -82,6 +82,7 @@ impl Readings {
         let mut ignored: Vec<String> = by_tag
             .keys()
             .filter(|name| plant.tags.iter().all(|tag| tag.name != **name))
+            .filter(|name| plant.statuses.iter().all(|status| status.name != **name))
             .map(|name| (*name).to_owned())
             .collect();
         ignored.sort();
@@ -221,7 +222,8 @@ impl Resolved {
     }
 }
 
-fn in_report(decision: &ByHand) -> ByHandReport {
+/// A decision as reports tell it.
+pub fn in_report(decision: &ByHand) -> ByHandReport {
     let (action, offset) = match decision.action {
         Action::OutOfService => ("out-of-service", None),
         Action::Offset(offset) => ("offset", Some(offset)),

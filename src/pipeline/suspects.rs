@@ -5,6 +5,7 @@ use super::attempt::{Found, attempt};
 use super::checks;
 use super::compiled::Compiled;
 use super::hypotheses::{Judged, arguable, named, unit};
+use super::line_up::Situation;
 use super::readings::Readings;
 use super::search::{Findings, Group, MOST_SUSPECTS, Member, Search};
 use super::solution::Solution;
@@ -84,7 +85,11 @@ pub fn suppose(
     by_hand: &[ByHand],
     supposed: &crate::report::Hypothesis,
 ) -> Option<Accused> {
-    let readings = Readings::new(compiled.plant(), batch, by_hand);
+    let situation = Situation::new(compiled, batch, by_hand);
+    if situation.standstill().is_some() {
+        return None;
+    }
+    let (compiled, readings) = (situation.compiled(), &situation.readings);
     let found = attempt(compiled, &readings.measured).ok()?;
     let class_set = class_set::of(compiled, &found);
     let solution = Solution::new(compiled, &found, &class_set);

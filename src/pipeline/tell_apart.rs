@@ -15,12 +15,12 @@
 //! numerator of h (`Shift`), rho is n_h of the response to one unit of t, times
 //! sigma_h sigma_t.
 
-use super::assess::operating_point;
+use super::assess::{operating_point, with_line_up};
 use super::attempt::attempt;
 use super::class_set;
 use super::compiled::Compiled;
 use super::hypotheses::{judged, limits, testable};
-use super::readings::Readings;
+use super::line_up::{self, Situation};
 use super::solution::Solution;
 use crate::diagnosis::detectable;
 use crate::equations::Hypothesis;
@@ -44,8 +44,10 @@ pub fn tell_apart(compiled: &Compiled, batch: Option<&Batch>) -> TellApart {
         unseen: Vec::new(),
     };
     let Some(batch) = batch else {
+        let (line_up, normal) = line_up::normal(compiled);
+        let compiled = line_up.compiled();
         let (found, in_words) = operating_point(compiled);
-        told.operating_point = in_words;
+        told.operating_point = with_line_up(in_words, normal.as_ref());
         let class_set = class_set::apart(compiled, &found);
         tell(
             &Solution::new(compiled, &found, &class_set),
@@ -55,8 +57,13 @@ pub fn tell_apart(compiled: &Compiled, batch: Option<&Batch>) -> TellApart {
         return told;
     };
     told.operating_point = format!("batch {}", batch.name);
-    let readings = Readings::new(compiled.plant(), batch, &[]);
-    match attempt(compiled, &readings.measured) {
+    let situation = Situation::new(compiled, batch, &[]);
+    if let Some(reason) = situation.standstill() {
+        told.reason = Some(reason);
+        return told;
+    }
+    let compiled = situation.compiled();
+    match attempt(compiled, &situation.readings.measured) {
         Ok(found) => {
             let class_set = class_set::of(compiled, &found);
             tell(

@@ -16,7 +16,9 @@ mod kind;
 mod line_up;
 mod model;
 mod portable;
+mod reduction;
 mod retention;
+mod service;
 mod uncertainty;
 mod unit;
 
@@ -34,6 +36,8 @@ pub use model::{
     Stream, StreamId, Tag,
 };
 pub use portable::Portable;
+pub use reduction::{Places, Reduced};
 pub use retention::Retention;
+pub use service::Service;
 pub use uncertainty::{COVERAGE_FACTOR, Sigma, Uncertainty};
 pub use unit::Unit;

@@ -300,4 +300,6 @@ pub struct Assumption {
     pub value: f64,
     /// Uncertainty of the value.
     pub uncertainty: Uncertainty,
+    /// It holds when this does; `None`: always.
+    pub in_service_when: Option<Condition>,
 }

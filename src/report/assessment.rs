@@ -1,6 +1,6 @@
 //! The assessment of a plant: what its tags can and cannot determine.
 
-use super::{Class, Limit, Observability};
+use super::{Class, Limit, LineUp, Observability};
 use indexmap::IndexMap;
 use serde::{Deserialize, Serialize};
 use utoipa::ToSchema;
@@ -14,6 +14,9 @@ pub struct Assessment {
     pub revision: u32,
     /// Where the numbers were taken: the operating point, in words.
     pub operating_point: String,
+    /// What is in service there; absent where everything always is.
+    #[serde(default, skip_serializing_if = "Option::is_none")]
+    pub line_up: Option<LineUp>,
     /// Number of states.
     pub states: usize,
     /// Independent relations.
@@ -32,7 +35,7 @@ pub struct Assessment {
     /// balance: the unseen first.
     #[serde(default)]
     pub limits: Vec<Limit>,
-    /// Every stream.
+    /// Every stream in service.
     pub streams: IndexMap<String, AssessedStream>,
     /// What is unobservable, and why.
     pub unobservable: Vec<AssessedQuantity>,

@@ -24,9 +24,16 @@ pub struct Report {
     pub end: OffsetDateTime,
     /// The verdict on the batch as a whole.
     pub verdict: Verdict,
-    /// Why, where the verdict is `not-converged`.
+    /// Why, where the verdict is `not-converged` or `not-running`.
     #[serde(default, skip_serializing_if = "Option::is_none")]
     pub reason: Option<String>,
+    /// What is in service; absent where everything always is.
+    #[serde(default, skip_serializing_if = "Option::is_none")]
+    pub line_up: Option<LineUp>,
+    /// What stands out before any balance is made: tags on one quantity that
+    /// disagree, a status that contradicts what flows.
+    #[serde(default, skip_serializing_if = "Vec::is_empty")]
+    pub findings: Vec<Finding>,
     /// Global chi-square test; absent where nothing converged.
     pub global_test: Option<GlobalTest>,
     /// What the tests of single tags and balances are held against.
@@ -35,9 +42,9 @@ pub struct Report {
     pub tags: IndexMap<String, TagReport>,
     /// Every assumption of the plant file.
     pub assumptions: IndexMap<String, TagReport>,
-    /// Every stream.
+    /// Every stream in service.
     pub streams: IndexMap<String, StreamReport>,
-    /// Every piece of equipment.
+    /// Every piece of equipment in service.
     pub equipment: IndexMap<String, EquipmentReport>,
     /// What explains the disagreement, in the order in which it was found.
     #[serde(default)]
@@ -57,13 +64,6 @@ pub struct Report {
     /// What was decided by hand about tags of this batch.
     #[serde(default, skip_serializing_if = "Vec::is_empty")]
     pub by_hand: Vec<ByHandReport>,
-    /// What is in service; absent where everything always is.
-    #[serde(default, skip_serializing_if = "Option::is_none")]
-    pub line_up: Option<LineUp>,
-    /// What stands out before any balance is made: tags on one quantity that
-    /// disagree, a status that contradicts what flows.
-    #[serde(default, skip_serializing_if = "Vec::is_empty")]
-    pub findings: Vec<Finding>,
     /// Whether the plant was steady; absent where nobody has judged it.
     #[serde(default, skip_serializing_if = "Option::is_none")]
     pub steadiness: Option<Steadiness>,

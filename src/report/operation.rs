@@ -8,13 +8,19 @@ use utoipa::ToSchema;
 /// Which parts of a plant are in service.
 #[derive(Clone, Debug, PartialEq, Serialize, Deserialize, ToSchema)]
 pub struct LineUp {
-    /// Name: `full`, or what was switched off, as `without heater-6, pump-2`.
+    /// Name: `full`, what was switched off, as `without heater-6, pump-2`, or
+    /// `not running`.
     pub name: String,
     /// Streams out of service, those that hang on others included.
     pub streams_out: Vec<String>,
     /// Equipment out of service, likewise.
     pub equipment_out: Vec<String>,
-    /// What the signals read that decided; null where one was missing or bad.
+    /// Equipment in service that is left with one stream in and one out: a length
+    /// of pipe, without a balance of its own.
+    #[serde(default, skip_serializing_if = "Vec::is_empty")]
+    pub pipes: Vec<String>,
+    /// What the statuses and other signals read that decide; null where one was
+    /// missing or bad.
     pub decided_by: IndexMap<String, Option<f64>>,
 }
 
@@ -27,6 +33,10 @@ pub struct Finding {
     pub tags: Vec<String>,
     /// The stream or equipment that it is about.
     pub of: String,
+    /// Of several tags on one quantity the one that the others speak against;
+    /// null where that is not told.
+    #[serde(default, skip_serializing_if = "Option::is_none")]
+    pub odd_one_out: Option<String>,
     /// In words.
     pub text: String,
     /// How strongly it shows: a standardised difference.

@@ -7,7 +7,7 @@ mod disturb;
 mod nearest;
 mod wrong_models;
 
-use counterpoise::demo::{self, Assumed, Conditions, Fault, Truth};
+use counterpoise::demo::{self, Assumed, Conditions, Fault, LineUp, Truth};
 use counterpoise::fluid;
 use counterpoise::plant::{EquipmentId, Kind, Plant, StreamId};
 use rand::SeedableRng;
@@ -103,7 +103,7 @@ fn undisturbed(plant: &Plant, load: f64) -> Truth {
 }
 
 fn setting(load: f64) -> (Disturber, Truth) {
-    let plant = demo::plant().expect("no faults");
+    let plant = demo::lined_up(LineUp::default()).expect("no faults");
     let truth = undisturbed(&plant, load);
     (Disturber::new(&plant), truth)
 }
@@ -312,7 +312,7 @@ fn what_operators_set_and_what_was_assumed_stays() {
 
 #[test]
 fn an_assumption_departs_by_its_sigmas() {
-    let plant = demo::plant().expect("no faults");
+    let plant = demo::lined_up(LineUp::default()).expect("no faults");
     let mut assumed = Assumed::stated(&plant);
     assumed.shift(&plant, "heater-7-loss", -2.0);
     let truth = demo::truth(&Conditions::at_load(0.9), &assumed).expect("settles");

@@ -10,7 +10,7 @@ use std::io::Read;
 use std::path::{Path, PathBuf};
 
 use counterpoise::demo::{
-    self, Assumed, Conditions, DAY_SEED, DRIFTING_TAG, Day, FOULING_HEATER, Truth,
+    self, Assumed, Conditions, DAY_SEED, DRIFTING_TAG, Day, FOULING_HEATER, LineUp, Truth,
 };
 use counterpoise::fluid;
 use counterpoise::plant::{Batch, EquipmentId, Grade, Kind, Plant};
@@ -66,7 +66,7 @@ pub fn check_with(plant: &Plant, truth: &Truth, departures: &Departures) {
 }
 
 fn plant() -> Plant {
-    demo::plant().expect("the demo plant file has no faults")
+    demo::lined_up(LineUp::default()).expect("the demo plant file has no faults")
 }
 
 fn day(plant: &Plant) -> Vec<(Batch, Truth)> {

@@ -21,6 +21,7 @@ mod identification;
 mod jacobians;
 mod kills;
 mod laws;
+mod line_ups;
 mod malformed;
 mod malformed_acts;
 mod malformed_slow;

@@ -10,7 +10,7 @@
 
 use std::collections::BTreeMap;
 
-use counterpoise::demo::{self, Assumed, Conditions, DAY_SEED, DRIFTING_TAG, Day, Truth};
+use counterpoise::demo::{self, Assumed, Conditions, DAY_SEED, DRIFTING_TAG, Day, LineUp, Truth};
 use counterpoise::fluid;
 use counterpoise::pipeline::{Compiled, reconcile};
 use counterpoise::plant::{Batch, COVERAGE_FACTOR, EquipmentId, Plant, Quantity, StreamId};
@@ -32,25 +32,25 @@ const AT_SATURATION: f64 = 1e-3;
 
 /// What one batch adds to the tally.
 #[derive(Default)]
-struct Tally {
-    not_converged: Vec<String>,
-    wrong_phases: Vec<String>,
-    open_phases: usize,
-    degrees_of_freedom: Vec<usize>,
-    statistics: Vec<f64>,
-    p_values: Vec<f64>,
+pub struct Tally {
+    pub not_converged: Vec<String>,
+    pub wrong_phases: Vec<String>,
+    pub open_phases: usize,
+    pub degrees_of_freedom: Vec<usize>,
+    pub statistics: Vec<f64>,
+    pub p_values: Vec<f64>,
     /// Batches in which a suspect is named.
-    accused: usize,
+    pub accused: usize,
     /// Squared errors of flows in sigma of the reading: measured, reconciled.
-    flows: BTreeMap<String, [f64; 2]>,
+    pub flows: BTreeMap<String, [f64; 2]>,
     /// Intervals that hold the truth, intervals, and the sum of squared errors
     /// in sigma, by quantity.
-    intervals: BTreeMap<String, [f64; 3]>,
-    near_saturation: BTreeMap<String, usize>,
+    pub intervals: BTreeMap<String, [f64; 3]>,
+    pub near_saturation: BTreeMap<String, usize>,
 }
 
 impl Tally {
-    fn add(&mut self, plant: &Plant, truth: &Truth, report: &Report) {
+    pub fn add(&mut self, plant: &Plant, truth: &Truth, report: &Report) {
         let Some(test) = report.global_test else {
             let reason = report.reason.clone().unwrap_or_default();
             self.not_converged
@@ -152,7 +152,7 @@ impl Tally {
         }
     }
 
-    fn merge(&mut self, other: Tally) {
+    pub fn merge(&mut self, other: Tally) {
         self.not_converged.extend(other.not_converged);
         self.wrong_phases.extend(other.wrong_phases);
         self.open_phases += other.open_phases;
@@ -257,7 +257,7 @@ fn kolmogorov_smirnov(sample: &[f64]) -> (f64, f64) {
 
 #[test]
 fn two_thousand_batches_have_the_statistics_that_are_promised() {
-    let compiled = Compiled::new(demo::plant().expect("no faults"), 1);
+    let compiled = Compiled::new(demo::lined_up(LineUp::default()).expect("no faults"), 1);
     let tally = tally(&compiled);
     assert!(
         tally.not_converged.is_empty(),
@@ -382,7 +382,7 @@ fn check_intervals(tally: &Tally) {
 
 #[test]
 fn the_fixture_day_converges_and_shows_its_drifting_meter() {
-    let plant = demo::plant().expect("no faults");
+    let plant = demo::lined_up(LineUp::default()).expect("no faults");
     let compiled = Compiled::new(plant.clone(), 1);
     let mut verdicts: BTreeMap<String, usize> = BTreeMap::new();
     let mut leaders = Vec::new();

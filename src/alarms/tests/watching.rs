@@ -2,6 +2,7 @@
 
 use super::*;
 use crate::plant::Priority;
+use crate::report::LineUp;
 use std::slice::from_ref;
 
 #[test]
@@ -68,7 +69,11 @@ fn batches_without_a_verdict_late_or_again_do_not_count() {
     let mut watch = Watch::new("tarn-mill");
     look(&mut watch, &over(1));
     for n in 2..6 {
-        for verdict in [Verdict::NotConverged, Verdict::NotRedundant] {
+        for verdict in [
+            Verdict::NotConverged,
+            Verdict::NotRedundant,
+            Verdict::NotRunning,
+        ] {
             assert_eq!(
                 look(
                     &mut watch,
@@ -352,4 +357,34 @@ fn a_watch_survives_being_stored() {
     let text = serde_json::to_string(&watch).unwrap();
     let stored: Watch = serde_json::from_str(&text).unwrap();
     assert_eq!(stored, watch);
+}
+
+/// While a heater is out of service nothing is known of its balances: its alarm
+/// stands, and returns once it is back and sound.
+#[test]
+fn what_is_out_of_service_counts_neither_way() {
+    let mut watch = Watch::new("tarn-mill");
+    for n in 1..4 {
+        look(&mut watch, &batch(n).energy(Some(4.5)));
+    }
+    assert!(only(&watch).standing);
+    for n in 4..20 {
+        let mut out = batch(n);
+        let name = out.equipment.keys().next().expect("equipment").clone();
+        out.equipment.shift_remove(&name);
+        out.line_up = Some(LineUp {
+            name: format!("without {name}"),
+            streams_out: Vec::new(),
+            equipment_out: vec![name],
+            pipes: Vec::new(),
+            decided_by: Default::default(),
+        });
+        assert_eq!(look(&mut watch, &out), []);
+    }
+    assert!(only(&watch).standing);
+    for n in 20..22 {
+        assert_eq!(look(&mut watch, &batch(n)), []);
+    }
+    let events = look(&mut watch, &batch(22));
+    assert_eq!(kinds(&events), [(EventKind::Returned, 1)]);
 }

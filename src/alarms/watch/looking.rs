@@ -148,8 +148,14 @@ impl Watch {
         let order: Vec<Key> = order.collect();
         let singles = singles.into_iter().map(|s| (s.key.clone(), s));
         let mut singles: HashMap<Key, Single> = singles.collect();
-        // What the report does not name is no longer there.
-        let mut stand = |key: &Key| singles.remove(key).map_or(Stand::Below, |s| s.stand);
+        let out = look.sight.out_of_service();
+        let mut stand = |key: &Key| match singles.remove(key) {
+            Some(single) => single.stand,
+            // Nothing is known of it while it is out of service; else it is no
+            // longer there.
+            None if out.iter().any(|of| key.is_balance_of(of)) => Stand::Between,
+            None => Stand::Below,
+        };
         for alarm in &mut self.alarms {
             if alarm.kind != AlarmKind::Suspect && alarm.is_live() {
                 let kind = alarm.step(stand(&alarm.key), look.settings, look.now);

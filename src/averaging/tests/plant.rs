@@ -15,6 +15,7 @@ fn many() -> Plant {
         .collect();
     plant.statuses = vec![Status {
         name: "Z".to_owned(),
+        normal: None,
     }];
     plant
 }

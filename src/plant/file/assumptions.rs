@@ -41,6 +41,7 @@ const ASSUMPTION: Shape = Shape {
         "value",
         "uncertainty",
         "reference",
+        "in-service-when",
         "description",
     ],
 };
@@ -160,6 +161,7 @@ fn assumption<'n>(
             unit: value.unit,
             value: value.value,
             uncertainty,
+            in_service_when: None,
         });
     }
     draft

@@ -25,6 +25,7 @@ const EQUIPMENT: Shape = Shape {
     keys: &[
         "kind",
         "description",
+        "in-service-when",
         "drain-outlet",
         "outlet",
         "condensate",
@@ -35,6 +36,9 @@ const EQUIPMENT: Shape = Shape {
         "drives",
     ],
 };
+
+/// Keys that every kind has, the first of the shape.
+const OWN_KEYS: usize = 3;
 
 /// How a member of the table looks, for messages.
 pub(super) const EQUIPMENT_EXAMPLE: &str = "{ kind = \"turbine\" }";
@@ -105,7 +109,7 @@ fn kind(fields: &Fields<'_>, cx: &mut Context<'_>) -> Option<&'static Row> {
         }
     }
     let row = row?;
-    for key in &EQUIPMENT.keys[2..] {
+    for key in &EQUIPMENT.keys[OWN_KEYS..] {
         if let Some(at) = fields.get(key).filter(|_| !row.keys.contains(key)) {
             let owners: Vec<&str> = KINDS
                 .iter()

@@ -18,6 +18,7 @@ pub(super) const PLANT: Shape = Shape {
         "uncertain-factor",
         "confidence",
         "robust-start",
+        "running-when",
         "streams",
         "equipment",
         "tags",
@@ -293,6 +294,7 @@ fn barometer<'n>(root: &Fields<'n>, cx: &mut Context<'_>) -> BarometerDraft<'n> 
                 unit: value.unit,
                 value: value.value,
                 uncertainty,
+                in_service_when: None,
             })
         }
         _ => BarometerDraft::Unclear,
@@ -341,7 +343,7 @@ fn check_tag(name: &str, place: &Place, tags: &[TagDraft<'_>], cx: &mut Context<
 }
 
 /// The text of a member of a table.
-fn member<'n>(at: &At<'n>, key: &str) -> Option<&'n str> {
+pub(super) fn member<'n>(at: &At<'n>, key: &str) -> Option<&'n str> {
     let Content::Table(table) = &at.node.value else {
         return None;
     };

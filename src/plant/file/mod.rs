@@ -11,6 +11,7 @@ mod alarms;
 mod amount;
 mod assumptions;
 mod averaging;
+mod conditions;
 mod durations;
 mod equipment;
 mod fault;
@@ -36,11 +37,12 @@ mod warnings;
 
 pub use fault::{Fault, Faults, Severity, render};
 
+use self::conditions::Conditions;
 use self::heading::Heading;
 use self::network::{End, Network};
 use self::reader::{At, Context};
 use self::tree::Node;
-use super::{Equipment, EquipmentId, Kind, Plant, Stream};
+use super::{Assumption, Equipment, EquipmentId, Kind, Plant, Stream};
 
 /// How a plant file is written.
 #[derive(Clone, Copy, Debug, PartialEq, Eq)]
@@ -122,6 +124,7 @@ fn plant(root: &Node, cx: &mut Context<'_>) -> Option<Plant> {
     let mut tags = tags::read(&root, &network, cx);
     let averaging = averaging::read(&root, &mut tags, cx);
     let assumptions = assumptions::read(&root, &network, &tags, cx);
+    let conditions = Conditions::read(&root, &network, &tags, cx);
     let alarms = alarms::read(&root, cx);
     let portable = portable::read(&root, cx);
     let retention = retention::read(&root, averaging.as_ref(), cx);
@@ -131,6 +134,7 @@ fn plant(root: &Node, cx: &mut Context<'_>) -> Option<Plant> {
     if cx.findings.errors() > 0 {
         return None;
     }
+    let (statuses, measuring): (Vec<_>, Vec<_>) = tags.iter().partition(|t| t.is_status);
     let plant = Plant {
         name: heading.name?,
         title: heading.title?,
@@ -138,53 +142,72 @@ fn plant(root: &Node, cx: &mut Context<'_>) -> Option<Plant> {
         uncertain_factor: heading.uncertain_factor?,
         confidence: heading.confidence?,
         robust_start: heading.robust_start?,
-        streams: streams(&network),
-        equipment: equipment(&network, kinds)?,
-        tags: tags.iter().map(|t| t.tag.clone()).collect::<Option<_>>()?,
+        streams: streams(&network, &conditions),
+        equipment: equipment(&network, kinds, &conditions)?,
+        tags: measuring
+            .iter()
+            .map(|t| t.tag.clone())
+            .collect::<Option<_>>()?,
         assumptions: assumptions
             .iter()
-            .map(|a| a.assumption.clone())
+            .map(|a| conditional(a.assumption.clone(), &conditions))
             .chain(heading.barometer.assumption().map(Some))
             .collect::<Option<_>>()?,
         alarms: alarms?,
         portable: portable?,
-        statuses: Vec::new(),
-        running_when: None,
+        statuses: statuses
+            .iter()
+            .map(|t| t.status.clone())
+            .collect::<Option<_>>()?,
+        running_when: conditions.running.clone(),
         averaging: averaging?,
         retention: retention?,
     };
     let places = warnings::Places {
         streams: network.streams.iter().map(|s| &s.place).collect(),
-        tags: tags.iter().map(|t| &t.at.key).collect(),
+        tags: measuring.iter().map(|t| &t.at.key).collect(),
     };
     warnings::structural(&plant, &places, cx);
+    conditions.warn(&plant, cx);
     Some(plant)
 }
 
-fn streams(network: &Network<'_>) -> Vec<Stream> {
+fn conditional(assumption: Option<Assumption>, conditions: &Conditions<'_>) -> Option<Assumption> {
+    let mut assumption = assumption?;
+    assumption.in_service_when = conditions.of_assumption(&assumption.name);
+    Some(assumption)
+}
+
+fn streams(network: &Network<'_>, conditions: &Conditions<'_>) -> Vec<Stream> {
     let joined = |end| match end {
         End::Joined(EquipmentId(id), _, _) => Some(EquipmentId(id)),
         End::Edge | End::Unclear => None,
     };
-    let streams = network.streams.iter().map(|s| Stream {
+    let pairs = network.streams.iter().zip(&conditions.streams);
+    let streams = pairs.map(|(s, condition)| Stream {
         name: s.name.to_owned(),
         from: joined(s.from),
         to: joined(s.to),
         non_negative: s.non_negative,
         normally_closed: s.normally_closed,
-        in_service_when: None,
+        in_service_when: condition.clone(),
     });
     streams.collect()
 }
 
-fn equipment(network: &Network<'_>, kinds: Vec<Option<Kind>>) -> Option<Vec<Equipment>> {
+fn equipment(
+    network: &Network<'_>,
+    kinds: Vec<Option<Kind>>,
+    conditions: &Conditions<'_>,
+) -> Option<Vec<Equipment>> {
     let pairs = network.equipment.iter().zip(kinds);
     pairs
-        .map(|(draft, kind)| {
+        .zip(&conditions.equipment)
+        .map(|((draft, kind), condition)| {
             Some(Equipment {
                 name: draft.name.to_owned(),
                 kind: kind?,
-                in_service_when: None,
+                in_service_when: condition.clone(),
             })
         })
         .collect()

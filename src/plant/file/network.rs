@@ -48,6 +48,7 @@ const STREAM: Shape = Shape {
         "to",
         "non-negative",
         "normally-closed",
+        "in-service-when",
         "description",
     ],
 };

@@ -164,6 +164,11 @@ impl<'n> At<'n> {
         matches!(self.node.value, Content::Table(_))
     }
 
+    /// Whether the value is an array.
+    pub fn is_array(&self) -> bool {
+        matches!(self.node.value, Content::Array(_))
+    }
+
     /// A table with fixed keys; unknown ones are faults.
     pub fn fields(&self, cx: &mut Context<'_>, shape: &Shape, example: &str) -> Option<Fields<'n>> {
         let entries = match &self.node.value {

@@ -1,11 +1,12 @@
 //! Tags: what each instrument measures, in which unit, how well.
 
+use super::heading::member;
 use super::network::{Network, description, section};
 use super::reader::{At, Context, Fields, Shape, check_name, quoted};
 use super::targets::{Target, target};
 use super::terms::{Span, Subject, uncertainty};
 use super::tree::Content;
-use crate::plant::{Dimension, PressureReference, Quantity, Tag, Unit};
+use crate::plant::{Dimension, PressureReference, Quantity, Status, Tag, Unit};
 
 /// A tag as read.
 pub(super) struct TagDraft<'n> {
@@ -18,7 +19,14 @@ pub(super) struct TagDraft<'n> {
     pub tag: Option<Tag>,
     /// The name of what it measures is the atmosphere, or absent.
     pub is_barometer: bool,
+    /// It reads a state and measures nothing.
+    pub is_status: bool,
+    /// That, where it has no fault of its own.
+    pub status: Option<Status>,
 }
+
+/// What a tag that reads a state measures.
+pub(super) const STATUS: &str = "status";
 
 /// The measurements of tags (and of assumptions too).
 pub(super) const MEASUREMENTS: &[&str] =
@@ -124,6 +132,8 @@ fn tag<'n>(name: String, at: At<'n>, network: &Network<'_>, cx: &mut Context<'_>
         touches: None,
         tag: None,
         is_barometer: false,
+        is_status: false,
+        status: None,
         at,
     };
     let faults_before = cx.findings.errors();
@@ -131,6 +141,11 @@ fn tag<'n>(name: String, at: At<'n>, network: &Network<'_>, cx: &mut Context<'_>
         return draft;
     };
     description(&fields, cx);
+    if member(&draft.at, "measures") == Some(STATUS) {
+        draft.is_status = true;
+        draft.status = status(&draft.name, &fields, cx);
+        return draft;
+    }
     let measures = measurement(&fields, cx);
     let reference = reference(&fields, measures, cx);
     let dimension = measures.and_then(dimension_of);
@@ -182,8 +197,25 @@ fn tag<'n>(name: String, at: At<'n>, network: &Network<'_>, cx: &mut Context<'_>
     draft
 }
 
+/// A tag that reads a state: it has no unit, and nothing to be uncertain of.
+fn status(name: &str, fields: &Fields<'_>, cx: &mut Context<'_>) -> Option<Status> {
+    let faults_before = cx.findings.errors();
+    for key in ["of", "unit", "range", "reference", "uncertainty"] {
+        if let Some(at) = fields.get(key) {
+            let what = format!("`{key}` says nothing about a status, which measures nothing");
+            cx.error(&at.key, what, "remove it");
+        }
+    }
+    let normal = fields.get("normal").and_then(|n| n.number(cx, "1"));
+    (cx.findings.errors() == faults_before).then(|| Status {
+        name: name.to_owned(),
+        normal,
+    })
+}
+
 fn measurement<'n>(fields: &Fields<'n>, cx: &mut Context<'_>) -> Option<&'n str> {
-    let all = || format!("a tag can measure {}", quoted(MEASUREMENTS));
+    let names = [MEASUREMENTS, &[STATUS]].concat();
+    let all = || format!("a tag can measure {}", quoted(&names));
     let at = fields.require(
         "measures",
         cx,
@@ -197,7 +229,7 @@ fn measurement<'n>(fields: &Fields<'n>, cx: &mut Context<'_>) -> Option<&'n str>
         let what = format!("measuring `{name}` is not available yet");
         cx.error(&at.place, what, all());
     } else {
-        let mend = cx.did_you_mean(name, MEASUREMENTS.iter().copied(), all);
+        let mend = cx.did_you_mean(name, names.iter().copied(), all);
         cx.error(&at.place, format!("there is no quantity `{name}`"), mend);
     }
     None

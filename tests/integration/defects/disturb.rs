@@ -10,7 +10,7 @@
 
 use std::collections::BTreeMap;
 
-use counterpoise::demo::{Flow, Machine, Truth};
+use counterpoise::demo::{Flow, LineUp, Machine, Truth};
 use counterpoise::equations::{Law, Role, System};
 use counterpoise::fluid;
 use counterpoise::plant::{EquipmentId, Kind, Plant, StreamId};
@@ -359,6 +359,7 @@ impl Disturber {
             (equipment.name.clone(), machine)
         });
         Ok(Truth {
+            line_up: LineUp::default(),
             streams,
             equipment: (machines.filter(|(_, machine)| *machine != Machine::default())).collect(),
             barometer: undisturbed.barometer,

@@ -1,6 +1,6 @@
 //! Seeded batches of the demonstration plant, and what is planted in them.
 
-use counterpoise::demo::{self, Assumed, Conditions, Fault, Truth};
+use counterpoise::demo::{self, Assumed, Conditions, Fault, LineUp, Truth};
 use counterpoise::pipeline::{Compiled, reconcile};
 use counterpoise::plant::{Batch, COVERAGE_FACTOR, EquipmentId, Plant, StreamId};
 use counterpoise::report::{Cause, Hypothesis, Report};
@@ -29,7 +29,7 @@ pub struct Clean {
 
 impl Bench {
     pub fn new() -> Self {
-        let plant = demo::plant().expect("no faults");
+        let plant = demo::lined_up(LineUp::default()).expect("no faults");
         Bench {
             compiled: Compiled::new(plant.clone(), 1),
             disturber: Disturber::new(&plant),

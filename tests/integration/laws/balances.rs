@@ -367,6 +367,7 @@ fn assume(plant: &mut Plant, quantity: Quantity, value: f64, half_width: f64) {
         unit: unit("1", 1.0),
         value,
         uncertainty,
+        in_service_when: None,
     });
 }
 

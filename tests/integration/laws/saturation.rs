@@ -120,6 +120,7 @@ fn no_enthalpy_fits_better_than_the_one_reported() {
                     offset: 0.0,
                 },
                 value: held,
+                in_service_when: None,
                 uncertainty: Uncertainty {
                     constant: 1e-3,
                     ..Uncertainty::default()

@@ -1,6 +1,6 @@
 //! Plants, batches and comparisons that the laws are tested with.
 
-use counterpoise::demo::{self, Assumed, Conditions, Truth};
+use counterpoise::demo::{self, Assumed, Conditions, LineUp, Truth};
 use counterpoise::ingest;
 use counterpoise::pipeline::{Compiled, reconcile};
 use counterpoise::plant::{self, Batch, Format, Grade, Plant, Quality, Reading};
@@ -121,7 +121,7 @@ pub fn degrees_of_freedom(report: &Report) -> usize {
 
 /// The demonstration plant with every assumption at its stated value, and its truth.
 pub fn demo_truth(load: f64) -> (Plant, Truth) {
-    let plant = demo::plant().expect("no faults");
+    let plant = demo::lined_up(LineUp::default()).expect("no faults");
     let truth = demo::truth(&Conditions::at_load(load), &Assumed::stated(&plant)).expect("settles");
     (plant, truth)
 }
@@ -166,7 +166,7 @@ pub fn references() -> Vec<(Plant, Vec<Batch>)> {
 /// The demonstration plant with noise and drawn assumptions, and every batch
 /// of the reference plants.
 pub fn everyday() -> Vec<(Plant, Batch)> {
-    let plant = demo::plant().expect("no faults");
+    let plant = demo::lined_up(LineUp::default()).expect("no faults");
     let assumed = Assumed::drawn(&plant, &mut ChaCha8Rng::seed_from_u64(5));
     let truth = demo::truth(&Conditions::at_load(0.8), &assumed).expect("settles");
     let noisy = near_truth(&plant, &truth, 1.0, 6);
