@@ -315,6 +315,8 @@ impl<'a> Situation<'a> {
         if let Some(reason) = self.standstill() {
             report.verdict = Verdict::NotRunning;
             report.reason = Some(reason);
+            // They tell what was done with readings that are used.
+            report.remarks.clear();
             let all = report
                 .tags
                 .values_mut()

@@ -173,8 +173,8 @@ fn judge(members: &[Member], shared: f64, confidence: f64, of: String) -> Option
         let z = sum.sqrt();
         finding.standardised = Some(z);
         finding.text = format!(
-            "{} and {} measure the same and differ by {}, {z:.1} times what they can (sigma); \
-             which of them is wrong they cannot tell",
+            "{} and {} measure the same and differ by {} ({z:.1} sigma); which of them is wrong \
+             they cannot tell",
             names[0],
             names[1],
             difference(a, a.value - b.value),
