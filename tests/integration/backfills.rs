@@ -111,6 +111,7 @@ async fn parts_go_on_where_the_last_ended() {
     assert_eq!(answer["complete"], false);
     for wrong in ["parts", "parts?from=1", "parts?from=999999999"] {
         let answer = fill(&service, wrong, whole.clone()).await;
+        assert_eq!(answer.headers()["settled-bytes"], settled.to_string());
         let told = problem(answer, StatusCode::CONFLICT).await;
         let detail = told["detail"].as_str().expect("text").to_owned();
         assert!(detail.contains(&format!("from={settled}")), "{detail}");

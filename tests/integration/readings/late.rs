@@ -39,6 +39,8 @@ async fn late_readings_make_a_new_version_and_the_old_one_stays() {
         second["tags"]["F-3"]["measured"],
         first["tags"]["F-3"]["measured"]
     );
+    assert_eq!(first["tags"]["F-3"]["averaged"]["samples"], 3);
+    assert_eq!(second["tags"]["F-3"]["averaged"]["samples"], 5);
     assert_eq!(
         second["tags"]["F-1"],
         version(&service, &period(0), 2).await["tags"]["F-1"]
