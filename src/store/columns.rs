@@ -15,6 +15,8 @@
 //! high ones of a column are alike and compress, and the low ones are noise and
 //! do not. NaN stands for "none" and is kept as a bit each.
 
+use std::cell::RefCell;
+use std::io;
 use zstd::bulk::{Compressor, Decompressor};
 
 /// zstd's own default; chunks are made once and in the background.
@@ -226,11 +228,7 @@ pub(super) fn write_plane(plane: &[u8], into: &mut Vec<u8>) {
         into.extend([CONSTANT, first]);
         return;
     }
-    let compressed = Compressor::new(LEVEL).and_then(|mut zstd| {
-        zstd.include_checksum(false)?;
-        zstd.compress(plane)
-    });
-    match compressed {
+    match compress(plane) {
         Ok(frame) if frame.len() + 2 < plane.len() => {
             into.push(COMPRESSED);
             write_count(frame.len(), into);
@@ -241,6 +239,34 @@ pub(super) fn write_plane(plane: &[u8], into: &mut Vec<u8>) {
             into.extend(plane);
         }
     }
+}
+
+thread_local! {
+    // Making one costs more than what it does here.
+    static COMPRESSOR: RefCell<Option<Compressor<'static>>> = const { RefCell::new(None) };
+    static DECOMPRESSOR: RefCell<Option<Decompressor<'static>>> = const { RefCell::new(None) };
+}
+
+fn compress(plane: &[u8]) -> io::Result<Vec<u8>> {
+    COMPRESSOR.with_borrow_mut(|kept| {
+        if kept.is_none() {
+            let mut new = Compressor::new(LEVEL)?;
+            new.include_checksum(false)?;
+            *kept = Some(new);
+        }
+        let zstd = kept.as_mut().ok_or(io::ErrorKind::Other)?;
+        zstd.compress(plane)
+    })
+}
+
+fn decompress(frame: &[u8], length: usize) -> io::Result<Vec<u8>> {
+    DECOMPRESSOR.with_borrow_mut(|kept| {
+        if kept.is_none() {
+            *kept = Some(Decompressor::new()?);
+        }
+        let zstd = kept.as_mut().ok_or(io::ErrorKind::Other)?;
+        zstd.decompress(frame, length)
+    })
 }
 
 /// What is left to be read.
@@ -279,8 +305,7 @@ impl<'b> Cursor<'b> {
             COMPRESSED => {
                 let length_of_frame = self.count()?;
                 let frame = self.take(length_of_frame)?;
-                let mut zstd = Decompressor::new().map_err(|_| Damaged)?;
-                zstd.decompress(frame, length).map_err(|_| Damaged)?
+                decompress(frame, length).map_err(|_| Damaged)?
             }
             _ => return Err(Damaged),
         };
