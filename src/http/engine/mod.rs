@@ -105,9 +105,15 @@ struct Work {
 /// A batch that is durable.
 pub(super) struct Accepted {
     pub ticket: Ticket,
-    batch: Batch,
+    work: Begun,
+}
+
+/// How far an accepted batch is.
+enum Begun {
+    /// It is being worked on.
+    Running(Running),
     /// It was accepted before, so that there may be a result already.
-    known: bool,
+    Known(Batch),
 }
 
 impl Engine {
@@ -157,9 +163,10 @@ impl Engine {
         &self.revisions
     }
 
-    /// Reads a batch and makes it durable.
+    /// Reads a batch, makes it durable, and has it worked on: also where the client
+    /// is gone before it is durable, and nobody is left to ask for more.
     pub async fn accept(
-        &self,
+        self: &Arc<Self>,
         plant: &str,
         body: Vec<u8>,
         received: OffsetDateTime,
@@ -175,41 +182,38 @@ impl Engine {
             received,
             body,
         };
-        match self.store.accept(incoming).await? {
-            Acceptance::New(ticket) => Ok(Accepted {
-                ticket,
-                batch,
-                known: false,
-            }),
-            Acceptance::Known(ticket) => Ok(Accepted {
-                ticket,
-                batch,
-                known: true,
-            }),
+        let name = batch.name.clone();
+        let engine = Arc::clone(self);
+        let accepted = self.detached(async move {
+            let acceptance = engine.store.accept(incoming).await?;
+            let work = match &acceptance {
+                Acceptance::New(ticket) => Begun::Running(engine.start(ticket.clone(), batch)),
+                _ => Begun::Known(batch),
+            };
+            Ok::<_, StoreError>((acceptance, work))
+        });
+        let (acceptance, work) = accepted.await??;
+        match acceptance {
+            Acceptance::New(ticket) | Acceptance::Known(ticket) => Ok(Accepted { ticket, work }),
             Acceptance::NoPlant => Err(no_plant(plant)),
             Acceptance::Conflict => Err(Problem::new(
                 Kind::Conflict,
-                format!(
-                    "batch \"{}\" was accepted before with other content",
-                    batch.name
-                ),
+                format!("batch \"{name}\" was accepted before with other content"),
             )),
         }
     }
 
     /// The report of an accepted batch, as soon as there is one.
     pub async fn finish(self: &Arc<Self>, accepted: Accepted) -> Outcome {
-        let Accepted {
-            ticket,
-            batch,
-            known,
-        } = accepted;
-        if known {
-            match self.store.batch(&ticket.plant, &ticket.batch).await? {
-                Some(Stored::Done(report)) => return Ok(Arc::new(*report)),
-                Some(Stored::Removed(gone)) => return Err(removed(&ticket.batch, &gone)),
-                Some(Stored::Pending(_)) | None => {}
-            }
+        let Accepted { ticket, work } = accepted;
+        let batch = match work {
+            Begun::Running(running) => return running.await,
+            Begun::Known(batch) => batch,
+        };
+        match self.store.batch(&ticket.plant, &ticket.batch).await? {
+            Some(Stored::Done(report)) => return Ok(Arc::new(*report)),
+            Some(Stored::Removed(gone)) => return Err(removed(&ticket.batch, &gone)),
+            Some(Stored::Pending(_)) | None => {}
         }
         self.start(ticket, batch, false).await
     }
