@@ -41,8 +41,8 @@ pub(super) struct AccusationList {
     params(
         ("plant" = String, Path, description = "Name of the plant", example = "tarn-mill"),
         ("open" = Option<bool>, Query, description = "Those that are open, or those that are closed"),
-        ("limit" = Option<usize>, Query, description = "At most so many, 1 to 1000; 100 unless set"),
-        ("cursor" = Option<String>, Query, description = "From the Link header of the answer before"),
+        ("limit" = Option<usize>, Query, description = "At most so many, 1 to 1000; 100 unless set", minimum = 1, maximum = 1000),
+        ("cursor" = Option<i64>, Query, description = "From the Link header of the answer before", minimum = 0, maximum = 4294967295_i64),
     ),
     responses(
         (status = 200, description = "The accusations", body = AccusationList, headers(("Link" = String, description = "rel=\"next\": where the list goes on"))),

@@ -279,11 +279,11 @@ fn json(value: &impl Serialize) -> Result<Vec<u8>, Problem> {
     get, path = "/v1/plants/{plant}/batches", operation_id = "list_batches", tag = "batches",
     params(
         ("plant" = String, Path, description = "Name of the plant", example = "tarn-mill"),
-        ("from" = Option<String>, Query, description = "Periods that start at this time or later"),
-        ("to" = Option<String>, Query, description = "Periods that start before this time"),
+        ("from" = Option<OffsetDateTime>, Query, description = "Periods that start at this time or later"),
+        ("to" = Option<OffsetDateTime>, Query, description = "Periods that start before this time"),
         ("verdict" = Option<Verdict>, Query, description = "With this verdict"),
-        ("limit" = Option<usize>, Query, description = "At most so many, 1 to 1000; 100 unless set"),
-        ("cursor" = Option<String>, Query, description = "From the Link header of the answer before"),
+        ("limit" = Option<usize>, Query, description = "At most so many, 1 to 1000; 100 unless set", minimum = 1, maximum = 1000),
+        ("cursor" = Option<String>, Query, description = "From the Link header of the answer before", pattern = r"^-?[0-9]{1,18}\.[0-9]{1,18}$"),
     ),
     responses(
         (status = 200, description = "The latest period first", body = BatchList, headers(("Link" = String, description = "rel=\"next\": where the list goes on"))),

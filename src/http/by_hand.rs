@@ -79,7 +79,7 @@ struct End {
     get, path = "/v1/plants/{plant}/by-hand", operation_id = "list_by_hand", tag = "by hand",
     params(
         ("plant" = String, Path, description = "Name of the plant", example = "tarn-mill"),
-        ("at" = Option<String>, Query, description = "Those that hold for a period that starts at this time"),
+        ("at" = Option<OffsetDateTime>, Query, description = "Those that hold for a period that starts at this time"),
     ),
     responses(
         (status = 200, description = "The decisions; those that are over too", body = DecisionList),

@@ -47,8 +47,8 @@ const LAST_EVENT_ID: HeaderName = HeaderName::from_static("last-event-id");
     get, path = "/v1/plants/{plant}/alarms/events", operation_id = "listen_to_alarms", tag = "alarms",
     params(
         ("plant" = String, Path, description = "Name of the plant", example = "tarn-mill"),
-        ("Last-Event-ID" = Option<i64>, Header, description = "Number of the last event seen"),
-        ("after" = Option<i64>, Query, description = "The same, where the header cannot be set; the header goes before it"),
+        ("Last-Event-ID" = Option<i64>, Header, description = "Number of the last event seen", minimum = 0),
+        ("after" = Option<i64>, Query, description = "The same, where the header cannot be set; the header goes before it", minimum = 0),
     ),
     responses(
         (status = 200, description = "The events, for as long as the client listens", body = Notice, content_type = "text/event-stream"),

@@ -124,11 +124,11 @@ impl From<Mean> for MeanDocument {
         ("tag" = Option<Vec<String>>, Query, description = "A tag or assumption; may be repeated", example = json!(["FT-201"])),
         ("stream" = Option<Vec<String>>, Query, description = "A quantity of a stream, as for a series; may be repeated"),
         ("equipment" = Option<Vec<String>>, Query, description = "A quantity of a piece of equipment, as for a series; may be repeated"),
-        ("from" = Option<String>, Query, description = "Hours or days that start at this time or later"),
-        ("to" = Option<String>, Query, description = "Hours or days that start before this time"),
-        ("format" = Option<String>, Query, description = "`csv` or `json`; otherwise `Accept` decides"),
-        ("limit" = Option<usize>, Query, description = "At most so many rows, 1 to 20000; 10000 unless set"),
-        ("cursor" = Option<String>, Query, description = "From the Link header of the answer before"),
+        ("from" = Option<OffsetDateTime>, Query, description = "Hours or days that start at this time or later"),
+        ("to" = Option<OffsetDateTime>, Query, description = "Hours or days that start before this time"),
+        ("format" = Option<String>, Query, description = "`csv` or `json`; otherwise `Accept` decides", pattern = "^(csv|json)$"),
+        ("limit" = Option<usize>, Query, description = "At most so many rows, 1 to 20000; 10000 unless set", minimum = 1, maximum = 20000),
+        ("cursor" = Option<String>, Query, description = "From the Link header of the answer before", pattern = r"^-?[0-9]{1,18}\.[0-9]{1,18}$"),
     ),
     responses(
         (status = 200, description = "The earliest first", headers(("Link" = String, description = "rel=\"next\": where it goes on")), content(

@@ -240,7 +240,7 @@ fn revision_of(uri: &Uri) -> Result<Option<u32>, Problem> {
 #[utoipa::path(
     get, path = "/v1/plants", operation_id = "list_plants", tag = "plants",
     params(
-        ("limit" = Option<usize>, Query, description = "At most so many, 1 to 1000; 100 unless set"),
+        ("limit" = Option<usize>, Query, description = "At most so many, 1 to 1000; 100 unless set", minimum = 1, maximum = 1000),
         ("cursor" = Option<String>, Query, description = "From the Link header of the answer before"),
     ),
     responses(

@@ -99,12 +99,12 @@ struct Series {
         ("tag" = Option<Vec<String>>, Query, description = "A tag or assumption; may be repeated", example = json!(["FT-201"])),
         ("stream" = Option<Vec<String>>, Query, description = "A quantity of a stream: `.mass_flow`, `.pressure`, `.temperature` or `.enthalpy`; may be repeated", example = json!(["live-steam.mass_flow"])),
         ("equipment" = Option<Vec<String>>, Query, description = "A quantity of a piece of equipment: `.heat`, `.work`, `.power`, `.loss`, `.holdup_change`, `.imbalance.energy`, `.imbalance.mass.SIDE`; may be repeated"),
-        ("field" = Option<String>, Query, description = "reconciled (unless set), measured, adjustment, uncertainty, uncertainty-measured, redundancy or standardised"),
-        ("from" = Option<String>, Query, description = "Periods that start at this time or later"),
-        ("to" = Option<String>, Query, description = "Periods that start before this time"),
-        ("format" = Option<String>, Query, description = "`csv` or `json`; otherwise `Accept` decides"),
-        ("limit" = Option<usize>, Query, description = "At most so many batches, 1 to 50000; 10000 unless set"),
-        ("cursor" = Option<String>, Query, description = "From the Link header of the answer before"),
+        ("field" = Option<String>, Query, description = "reconciled (unless set), measured, adjustment, uncertainty, uncertainty-measured, redundancy or standardised", pattern = "^(reconciled|measured|adjustment|uncertainty|uncertainty-measured|redundancy|standardised)$"),
+        ("from" = Option<OffsetDateTime>, Query, description = "Periods that start at this time or later"),
+        ("to" = Option<OffsetDateTime>, Query, description = "Periods that start before this time"),
+        ("format" = Option<String>, Query, description = "`csv` or `json`; otherwise `Accept` decides", pattern = "^(csv|json)$"),
+        ("limit" = Option<usize>, Query, description = "At most so many batches, 1 to 50000; 10000 unless set", minimum = 1, maximum = 50000),
+        ("cursor" = Option<String>, Query, description = "From the Link header of the answer before", pattern = r"^-?[0-9]{1,18}\.[0-9]{1,18}$"),
     ),
     responses(
         (status = 200, description = "The earliest period first", headers(("Link" = String, description = "rel=\"next\": where it goes on")), content(

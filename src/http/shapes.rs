@@ -1,7 +1,8 @@
 //! What a client sends, described for the OpenAPI document.
 //!
 //! Nothing is read with these types: `ingest` reads batches, and tells every
-//! fault at once where a derived reader stops at the first.
+//! fault at once where a derived reader stops at the first. A name that an answer
+//! has too is another in the document (`as`): it has one space of names.
 
 use serde::{Deserialize, Serialize};
 use time::OffsetDateTime;
@@ -151,6 +152,7 @@ pub enum Grade {
 /// What a person does to an alarm.
 #[derive(Deserialize, ToSchema)]
 #[serde(deny_unknown_fields)]
+#[schema(as = AlarmAct)]
 pub struct Act {
     /// Who.
     #[schema(min_length = 1, max_length = 128, example = "R. Moss")]
@@ -197,6 +199,7 @@ pub struct RemoveFromService {
 /// What came of an accusation.
 #[derive(Deserialize, ToSchema)]
 #[serde(deny_unknown_fields)]
+#[schema(as = NewClosing)]
 pub struct Closing {
     /// What it came to.
     pub outcome: crate::alarms::Outcome,
@@ -224,7 +227,7 @@ pub struct Closing {
 #[serde(deny_unknown_fields)]
 pub struct ByHand {
     /// A tag of the current revision.
-    #[schema(example = "FT-201")]
+    #[schema(min_length = 1, max_length = 2000, example = "FT-201")]
     pub tag: String,
     /// What is done to its readings.
     pub action: Action,
@@ -252,6 +255,7 @@ pub struct ByHand {
 /// What is done to the readings of a tag.
 #[derive(Clone, Copy, Deserialize, Serialize, ToSchema)]
 #[serde(rename_all = "kebab-case")]
+#[schema(as = ByHandAction)]
 pub enum Action {
     /// They are kept and not used.
     OutOfService,
@@ -262,6 +266,7 @@ pub enum Action {
 /// An end put to a decision.
 #[derive(Deserialize, ToSchema)]
 #[serde(deny_unknown_fields)]
+#[schema(as = ByHandEnd)]
 pub struct End {
     /// Who.
     #[schema(min_length = 1, max_length = 128, example = "R. Moss")]

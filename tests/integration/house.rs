@@ -93,7 +93,8 @@ fn rust_files(folders: &[&str]) -> Vec<(PathBuf, String)> {
         .collect()
 }
 
-fn sources() -> Vec<(PathBuf, String)> {
+/// Every file of the library and the program, with its text.
+pub fn sources() -> Vec<(PathBuf, String)> {
     rust_files(&["src"])
 }
 

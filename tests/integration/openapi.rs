@@ -132,6 +132,30 @@ fn collect(value: &Value, references: &mut Vec<String>) {
     }
 }
 
+/// The document has one space of names: of two types with one name it keeps one.
+#[test]
+fn every_type_has_a_name_of_its_own() {
+    let mut seen = std::collections::BTreeMap::new();
+    for (path, text) in crate::house::sources() {
+        let derived = text.split("#[derive(").skip(1);
+        for item in derived.filter(|item| {
+            let derives = item.split(")]").next().unwrap_or_default();
+            derives.contains("ToSchema")
+        }) {
+            let head = item.split('{').next().unwrap_or_default();
+            let renamed = head.split_once("schema(as = ").map(|(_, rest)| rest);
+            let rust = ["struct ", "enum "]
+                .iter()
+                .find_map(|kind| item.split_once(kind));
+            let name = renamed.or(rust.map(|(_, rest)| rest)).expect("a name");
+            let word: String = name.chars().take_while(|c| c.is_alphanumeric()).collect();
+            let other = seen.insert(word.clone(), path.clone());
+            assert_eq!(other, None, "{word} is also in {}", path.display());
+        }
+    }
+    assert!(seen.len() > 50, "{}", seen.len());
+}
+
 #[test]
 fn bad_status_codes_are_not_excluded() {
     let document = document();

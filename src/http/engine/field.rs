@@ -28,16 +28,16 @@ pub(in crate::http) struct FieldReadings {
 #[derive(Clone, Debug, PartialEq, Serialize, Deserialize, ToSchema)]
 pub struct FieldReading {
     /// Quantity.
-    #[schema(example = "temperature")]
+    #[schema(min_length = 1, max_length = 2000, example = "temperature")]
     pub measures: String,
     /// Stream or piece of equipment.
-    #[schema(example = "live-steam")]
+    #[schema(min_length = 1, max_length = 2000, example = "live-steam")]
     pub of: String,
     /// Value.
     #[schema(example = 539.2)]
     pub value: f64,
     /// Its unit.
-    #[schema(example = "Cel")]
+    #[schema(min_length = 1, max_length = 2000, example = "Cel")]
     pub unit: String,
     /// `gauge` of a pressure that is not absolute.
     #[serde(default, skip_serializing_if = "Option::is_none")]
