@@ -46,7 +46,11 @@ pub(super) fn series(points: &[Point], length: f64) -> Series {
         };
     }
     let size = within.len().div_ceil(MOST).max(1);
-    let size = if size.is_multiple_of(2) { size + 1 } else { size };
+    let size = if size.is_multiple_of(2) {
+        size + 1
+    } else {
+        size
+    };
     // What does not fill a block is left out at the beginning.
     let whole = &within[within.len() % size..];
     let mean = |block: &[&Point]| {

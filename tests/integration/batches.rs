@@ -1,6 +1,6 @@
 //! Batches in, reports and series out.
 
-use crate::harness::{PLANT, Service, batch, problem};
+use crate::harness::{PLANT, Service, batch, contents, problem};
 use crate::service::next_link;
 use reqwest::StatusCode;
 use serde_json::Value;
@@ -90,6 +90,31 @@ async fn sixty_four_clients_with_one_batch() {
     assert!(answers[0].contains("\"batch\":\"one\""), "{}", answers[0]);
     let list = service.get_json("/v1/plants/mixer/batches").await;
     assert_eq!(list["batches"].as_array().expect("a list").len(), 1);
+}
+
+/// Two posters of one name with two contents, each from 32 clients at once: one
+/// content stands, and everybody is told the same.
+#[tokio::test]
+async fn two_contents_of_one_name_at_once() {
+    for round in 0..5 {
+        let service = Service::with_plant().await;
+        let flow = |n: u32| if n.is_multiple_of(2) { 150.0 } else { 151.0 };
+        let posts = (0..64).map(|n| service.post_batch(batch("same", round, flow(n))));
+        let answers = futures::future::join_all(posts).await;
+        let mut taken = [0, 0];
+        for (n, answer) in answers.into_iter().enumerate() {
+            match answer.status() {
+                StatusCode::OK => taken[n % 2] += 1,
+                StatusCode::CONFLICT => {}
+                other => panic!("{other}"),
+            }
+        }
+        taken.sort_unstable();
+        assert_eq!(taken, [0, 32]);
+        let rows = contents(&service.database).await;
+        let results = rows.iter().filter(|row| row.starts_with("results: "));
+        assert_eq!(results.count(), 1);
+    }
 }
 
 #[tokio::test]

@@ -13,7 +13,7 @@ use std::path::{Path, PathBuf};
 use std::time::Duration;
 
 /// Longer than any load before a kill.
-const LOADED: Duration = Duration::from_secs(5);
+const LOADED: Duration = Duration::from_secs(60);
 
 /// When a service is killed.
 #[derive(Clone, Copy, Debug, PartialEq, Eq, PartialOrd, Ord)]
@@ -22,14 +22,18 @@ enum Moment {
     Start,
     /// While it is posted to.
     Load,
+    /// While days that are over are made into chunks, which begins a second after the
+    /// start.
+    Tidy,
     /// While it writes its log back into the database, at the start or at an end.
     Checkpoint,
 }
 
-const MOMENTS: [Moment; 4] = [
+const MOMENTS: [Moment; 5] = [
     Moment::Load,
     Moment::Start,
     Moment::Checkpoint,
+    Moment::Tidy,
     Moment::Load,
 ];
 
@@ -65,16 +69,33 @@ impl Trial {
                 starting.kill_after(self.milliseconds(0, 100))
             }
             Moment::Load => self.under_load().await,
+            Moment::Tidy => self.while_it_tidies().await,
             Moment::Checkpoint => self.in_a_checkpoint().await,
         };
         *self.kills.entry(moment).or_default() += usize::from(killed);
     }
 
+    /// Killed a moment after so many more batches have been acknowledged.
     async fn under_load(&mut self) -> bool {
         let service = Process::start(program(&self.database)).expect("a service");
-        let after = self.milliseconds(20, 400);
+        let wanted = self.ledger.acknowledged().len() + self.random.random_range(1..120);
+        let then = Duration::from_micros(self.random.random_range(0..5000));
         let kill = async {
-            tokio::time::sleep(after).await;
+            while self.ledger.acknowledged().len() < wanted {
+                tokio::time::sleep(Duration::from_millis(1)).await;
+            }
+            tokio::time::sleep(then).await;
+            signal(service.id(), "KILL");
+        };
+        tokio::join!(self.ledger.load(&service.address, LOADED), kill);
+        true
+    }
+
+    async fn while_it_tidies(&mut self) -> bool {
+        let service = Process::start(program(&self.database)).expect("a service");
+        let then = Duration::from_secs(1) + self.milliseconds(0, 150);
+        let kill = async {
+            tokio::time::sleep(then).await;
             signal(service.id(), "KILL");
         };
         tokio::join!(self.ledger.load(&service.address, LOADED), kill);
@@ -104,7 +125,7 @@ impl Trial {
 async fn killed_services_lose_nothing_and_double_nothing() {
     let directory = tempfile::tempdir().expect("a directory");
     let mut trial = Trial::new(3, directory.path());
-    let wanted = cycles(6);
+    let wanted = cycles(5);
     for n in 0.. {
         trial.cycle(MOMENTS[n % MOMENTS.len()]).await;
         if trial.kills.values().sum::<usize>() >= wanted {
@@ -129,10 +150,8 @@ async fn killed_services_lose_nothing_and_double_nothing() {
     assert_eq!(found.faults, Vec::<String>::new());
     assert_eq!(found.lost(&trial.ledger), Vec::<String>::new());
     assert!(found.is_finished(), "{found:?}");
-    assert!(
-        acknowledged > 20 * wanted,
-        "hardly any load: {acknowledged}"
-    );
+    assert!(found.chunks > 0, "nothing was ever tidied");
+    assert!(acknowledged > 5 * wanted, "hardly any load: {acknowledged}");
     for moment in MOMENTS {
         assert!(trial.kills[&moment] > 0, "{moment:?}");
     }

@@ -146,3 +146,64 @@ async fn too_many_at_once() {
         StatusCode::OK
     );
 }
+
+/// One byte of the head at a time is no excuse.
+#[tokio::test]
+async fn dripping_headers() {
+    let service = impatient().await;
+    let before = contents(&service.database).await;
+    let stream = TcpStream::connect(service.address)
+        .await
+        .expect("a connection");
+    let (mut reader, mut writer) = stream.into_split();
+    let drips = tokio::spawn(async move {
+        for byte in HEAD.bytes().cycle() {
+            if writer.write_all(&[byte]).await.is_err() {
+                return;
+            }
+            tokio::time::sleep(Duration::from_millis(20)).await;
+        }
+    });
+    let mut answer = Vec::new();
+    let reading = reader.read_to_end(&mut answer);
+    // A reset after the answer is as good a close.
+    let _ = tokio::time::timeout(Duration::from_secs(10), reading)
+        .await
+        .expect("a close");
+    is_timeout(&String::from_utf8(answer).expect("text"));
+    drips.abort();
+    assert_eq!(contents(&service.database).await, before);
+}
+
+/// As many slow clients as there may be connections hold up the others no longer
+/// than one of them may take.
+#[tokio::test]
+async fn slow_clients_at_every_connection() {
+    let limits = Limits {
+        read_timeout: Duration::from_millis(300),
+        connections: 16,
+        ..Limits::default()
+    };
+    let service = Service::with(Setup {
+        limits,
+        ..Setup::default()
+    });
+    service.put_plant().await;
+    let mut slow = Vec::new();
+    for n in 0..32 {
+        let mut stream = TcpStream::connect(service.address)
+            .await
+            .expect("a connection");
+        let half = if n % 2 == 0 { &HEAD[..20] } else { HEAD };
+        stream.write_all(half.as_bytes()).await.expect("written");
+        slow.push(stream);
+    }
+    // A client that has no connection yet.
+    let client = reqwest::Client::new();
+    let post = client.post(service.url("/v1/plants/mixer/batches"));
+    let post = post.header("content-type", "application/json");
+    let sent = post.body(batch("patient", 0, 150.0)).send();
+    let answer = tokio::time::timeout(Duration::from_secs(10), sent).await;
+    let answer = answer.expect("the others are cut").expect("an answer");
+    assert_eq!(answer.status(), StatusCode::OK);
+}

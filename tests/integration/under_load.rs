@@ -125,7 +125,7 @@ pub fn name(number: usize) -> String {
 
 /// A batch by its number, of its own minute, that no clock takes for one from
 /// the future.
-fn body(number: usize) -> String {
+pub fn body(number: usize) -> String {
     let start = datetime!(2021-01-01 0:00 UTC) + Duration::from_secs(60 * number as u64);
     let end = start + Duration::from_secs(30);
     let text = |time: time::OffsetDateTime| time.format(&Rfc3339).expect("a time");
@@ -142,8 +142,10 @@ pub struct Ledger(Mutex<Known>);
 struct Known {
     plant: bool,
     next: usize,
-    /// Posted without an answer: they may be there or not.
+    /// Posted and not acknowledged: they may be there or not.
     open: Vec<usize>,
+    /// Of those, what is to be posted again.
+    again: Vec<usize>,
     acknowledged: BTreeSet<usize>,
 }
 
@@ -163,9 +165,9 @@ impl Ledger {
     }
 
     /// What is next to be posted: first what had no answer.
-    fn take(&self) -> usize {
+    pub fn take(&self) -> usize {
         let mut known = self.known();
-        if let Some(number) = known.open.pop() {
+        if let Some(number) = known.again.pop() {
             return number;
         }
         known.next += 1;
@@ -196,6 +198,9 @@ impl Ledger {
         if !self.put_plant(&client, &base).await {
             return;
         }
+        let mut known = self.known();
+        known.again = std::mem::take(&mut known.open);
+        drop(known);
         let until = Instant::now() + lasting;
         let posting = (0..CLIENTS).map(|one| self.post(&client, &base, one, until));
         futures::future::join_all(posting).await;
@@ -204,27 +209,43 @@ impl Ledger {
     async fn post(&self, client: &reqwest::Client, base: &str, one: usize, until: Instant) {
         while Instant::now() < until {
             let number = self.take();
-            let post = client.post(format!("{base}/v1/plants/mixer/batches"));
-            let mut post = post.header("content-type", "application/json");
             // Some wait for their reports.
-            if !one.is_multiple_of(4) {
-                post = post.header("prefer", "respond-async");
-            }
-            let sent = post.body(body(number)).send();
-            let answer = tokio::time::timeout_at((until + Duration::from_secs(1)).into(), sent);
-            match answer
-                .await
-                .map(|answer| answer.map(|a| a.status().as_u16()))
-            {
-                Ok(Ok(200 | 202)) => drop(self.known().acknowledged.insert(number)),
-                Ok(Ok(429 | 503)) => self.known().open.push(number),
-                Ok(Ok(other)) => panic!("{}: {other}", name(number)),
-                Ok(Err(_)) | Err(_) => {
-                    self.known().open.push(number);
-                    return;
-                }
+            let later = !one.is_multiple_of(4);
+            let sent = self.post_one(client, base, number, later);
+            let patience = until + Duration::from_secs(1);
+            let answer = tokio::time::timeout_at(patience.into(), sent).await;
+            let Some(answer) = answer.ok().flatten() else {
+                return;
+            };
+            match answer.status().as_u16() {
+                200 | 202 | 429 | 503 => {}
+                other => panic!("{}: {other}", name(number)),
             }
         }
+    }
+
+    /// Posts a batch, and notes what came of it.
+    pub async fn post_one(
+        &self,
+        client: &reqwest::Client,
+        base: &str,
+        number: usize,
+        later: bool,
+    ) -> Option<reqwest::Response> {
+        // Open until there is an answer, also where nobody waits for it any more.
+        self.known().open.push(number);
+        let mut post = client.post(format!("{base}/v1/plants/mixer/batches"));
+        post = post.header("content-type", "application/json");
+        if later {
+            post = post.header("prefer", "respond-async");
+        }
+        let answer = post.body(body(number)).send().await.ok()?;
+        if answer.status().is_success() {
+            let mut known = self.known();
+            known.open.retain(|&one| one != number);
+            known.acknowledged.insert(number);
+        }
+        Some(answer)
     }
 }
 
@@ -239,6 +260,8 @@ pub struct Found {
     pub finished: BTreeMap<String, usize>,
     /// Accepted and not finished.
     pub pending: i64,
+    /// Chunks of whole days.
+    pub chunks: i64,
 }
 
 impl Found {
@@ -300,6 +323,10 @@ pub async fn look(database: &Path) -> Found {
                 Err(error) => found.faults.push(error.to_string()),
             }
         }
+        found.chunks = sqlx::query_scalar("SELECT count(*) FROM chunks")
+            .fetch_one(&mut connection)
+            .await
+            .unwrap_or(-1);
         found.pending = sqlx::query_scalar("SELECT count(*) FROM pending")
             .fetch_one(&mut connection)
             .await
