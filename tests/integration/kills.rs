@@ -143,15 +143,17 @@ async fn killed_services_lose_nothing_and_double_nothing() {
     let found = look(&trial.database).await;
     let acknowledged = trial.ledger.acknowledged().len();
     println!(
-        "{:?}: {acknowledged} acknowledged, {} accepted",
+        "{:?}: {acknowledged} batches acknowledged, {} accepted; {} readings acknowledged",
         trial.kills,
-        found.accepted.len()
+        found.accepted.len(),
+        trial.ledger.readings(),
     );
     assert_eq!(found.faults, Vec::<String>::new());
     assert_eq!(found.lost(&trial.ledger), Vec::<String>::new());
     assert!(found.is_finished(), "{found:?}");
     assert!(found.chunks > 0, "nothing was ever tidied");
     assert!(acknowledged > 5 * wanted, "hardly any load: {acknowledged}");
+    assert!(trial.ledger.readings() > 5 * wanted);
     for moment in MOMENTS {
         assert!(trial.kills[&moment] > 0, "{moment:?}");
     }

@@ -58,6 +58,7 @@ struct Outcome {
     cuts: usize,
     cuts_at_the_start: usize,
     acknowledged: usize,
+    readings: usize,
     lost: Vec<String>,
     faults: Vec<String>,
     databases: usize,
@@ -107,6 +108,7 @@ impl Trial {
         self.judge(&found, &ledger);
         assert!(found.is_finished(), "{found:?}");
         self.outcome.acknowledged += ledger.acknowledged().len();
+        self.outcome.readings += ledger.readings();
         self.outcome.databases += 1;
     }
 

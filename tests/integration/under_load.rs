@@ -7,13 +7,16 @@ use std::collections::{BTreeMap, BTreeSet};
 use std::io::{BufRead, BufReader};
 use std::path::Path;
 use std::process::{Child, Command, Stdio};
-use std::sync::{Mutex, MutexGuard};
+use std::sync::{LazyLock, Mutex, MutexGuard};
 use std::time::{Duration, Instant};
 use time::format_description::well_known::Rfc3339;
 use time::macros::datetime;
 
-/// Clients that post at once.
+/// Clients that post batches at once.
 const CLIENTS: usize = 8;
+
+/// Readings of one request.
+const READINGS: usize = 20;
 
 /// The program, told to serve from a database on a free port.
 pub fn program(database: &Path) -> Command {
@@ -134,6 +137,15 @@ pub fn body(number: usize) -> String {
         .replace("2031-04-02T10:00:30Z", &text(end))
 }
 
+/// A reading by its number, half an hour ago or later; its value is its number.
+fn reading(number: usize) -> serde_json::Value {
+    static FIRST: LazyLock<time::OffsetDateTime> =
+        LazyLock::new(|| time::OffsetDateTime::now_utc() - Duration::from_secs(1800));
+    let time = *FIRST + Duration::from_millis(10 * number as u64);
+    let time = time.format(&Rfc3339).expect("a time");
+    serde_json::json!({"tag": "F-1", "time": time, "value": number})
+}
+
 /// What the clients know.
 #[derive(Default)]
 pub struct Ledger(Mutex<Known>);
@@ -147,6 +159,8 @@ struct Known {
     /// Of those, what is to be posted again.
     again: Vec<usize>,
     acknowledged: BTreeSet<usize>,
+    /// So many readings, from the first on.
+    readings: usize,
 }
 
 impl Ledger {
@@ -162,6 +176,11 @@ impl Ledger {
             .copied()
             .map(name)
             .collect()
+    }
+
+    /// How many readings it has acknowledged.
+    pub fn readings(&self) -> usize {
+        self.known().readings
     }
 
     /// What is next to be posted: first what had no answer.
@@ -203,7 +222,8 @@ impl Ledger {
         drop(known);
         let until = Instant::now() + lasting;
         let posting = (0..CLIENTS).map(|one| self.post(&client, &base, one, until));
-        futures::future::join_all(posting).await;
+        let posting = futures::future::join_all(posting);
+        tokio::join!(posting, self.read_out(&client, &base, until));
     }
 
     async fn post(&self, client: &reqwest::Client, base: &str, one: usize, until: Instant) {
@@ -220,6 +240,28 @@ impl Ledger {
             match answer.status().as_u16() {
                 200 | 202 | 429 | 503 => {}
                 other => panic!("{}: {other}", name(number)),
+            }
+        }
+    }
+
+    /// One more client sends readings of one tag, a few at a time.
+    async fn read_out(&self, client: &reqwest::Client, base: &str, until: Instant) {
+        while Instant::now() < until {
+            let first = self.known().readings;
+            let readings: Vec<_> = (first..first + READINGS).map(reading).collect();
+            let body = serde_json::json!({"readings": readings});
+            let post = client.post(format!("{base}/v1/plants/mixer/readings"));
+            let sent = post.json(&body).send();
+            let patience = until + Duration::from_secs(1);
+            let answer = tokio::time::timeout_at(patience.into(), sent).await;
+            let Ok(Ok(answer)) = answer else {
+                return;
+            };
+            match answer.status().as_u16() {
+                // The same again where there was no answer before.
+                200 => self.known().readings = first + READINGS,
+                429 | 503 => tokio::time::sleep(Duration::from_millis(5)).await,
+                other => panic!("readings: {other}"),
             }
         }
     }
@@ -262,14 +304,20 @@ pub struct Found {
     pub pending: i64,
     /// Chunks of whole days.
     pub chunks: i64,
+    /// Values of readings, in the order of their times.
+    pub readings: Vec<f64>,
 }
 
 impl Found {
-    /// Acknowledged batches that are not there.
+    /// Acknowledged batches that are not there, and readings.
     pub fn lost(&self, ledger: &Ledger) -> Vec<String> {
         let acknowledged = ledger.acknowledged().into_iter();
-        acknowledged
-            .filter(|name| !self.accepted.contains_key(name))
+        let batches = acknowledged.filter(|name| !self.accepted.contains_key(name));
+        let readings = 0..ledger.readings();
+        // Their values are their numbers, and each is there once.
+        let readings = readings.filter(|&n| self.readings.get(n) != Some(&(n as f64)));
+        batches
+            .chain(readings.map(|n| format!("reading {n}")))
             .collect()
     }
 
@@ -296,7 +344,7 @@ pub async fn look(database: &Path) -> Found {
         .unwrap_or_else(|error| vec![error.to_string()]);
     found.faults.retain(|line| line != "ok");
     let tables: i64 =
-        sqlx::query_scalar("SELECT count(*) FROM sqlite_schema WHERE name = 'results'")
+        sqlx::query_scalar("SELECT count(*) FROM sqlite_schema WHERE name = 'sample_chunks'")
             .fetch_one(&mut connection)
             .await
             .unwrap_or(0);
@@ -323,6 +371,11 @@ pub async fn look(database: &Path) -> Found {
                 Err(error) => found.faults.push(error.to_string()),
             }
         }
+        let readings = "SELECT value FROM samples ORDER BY time_ns";
+        found.readings = sqlx::query_scalar(readings)
+            .fetch_all(&mut connection)
+            .await
+            .unwrap_or_default();
         found.chunks = sqlx::query_scalar("SELECT count(*) FROM chunks")
             .fetch_one(&mut connection)
             .await

@@ -187,7 +187,9 @@ impl Engine {
         let accepted = self.detached(async move {
             let acceptance = engine.store.accept(incoming).await?;
             let work = match &acceptance {
-                Acceptance::New(ticket) => Begun::Running(engine.start(ticket.clone(), batch)),
+                Acceptance::New(ticket) => {
+                    Begun::Running(engine.start(ticket.clone(), batch, false))
+                }
                 _ => Begun::Known(batch),
             };
             Ok::<_, StoreError>((acceptance, work))
