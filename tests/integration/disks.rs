@@ -220,7 +220,7 @@ impl Trial {
     }
 
     /// Nothing was lost, nothing is half done.
-    async fn is_whole(self, database: &Path) {
+    async fn ends_whole(self, database: &Path) {
         assert!(self.service.end(), "an orderly end");
         let found = look(database).await;
         assert_eq!(found.faults, Vec::<String>::new());
@@ -238,7 +238,7 @@ async fn full(disk: Disk) {
         disk.free();
         trial.recovers().await;
     }
-    trial.is_whole(&disk.database()).await;
+    trial.ends_whole(&disk.database()).await;
 }
 
 #[tokio::test]
@@ -263,7 +263,7 @@ async fn a_disk_that_turns_read_only_is_said_and_recovered_from() {
         disk.becomes("");
         trial.recovers().await;
     }
-    trial.is_whole(&disk.database()).await;
+    trial.ends_whole(&disk.database()).await;
 }
 
 /// After a failed sync nobody knows what the disk holds: the service ends, and the
@@ -289,5 +289,5 @@ async fn a_failed_sync_ends_the_service() {
     disk.becomes("");
     trial.service = disk.start();
     trial.recovers().await;
-    trial.is_whole(&disk.database()).await;
+    trial.ends_whole(&disk.database()).await;
 }

@@ -183,6 +183,12 @@ impl Ledger {
         self.known().readings
     }
 
+    /// Has what had no answer posted again.
+    fn begin_again(&self) {
+        let mut known = self.known();
+        known.again = std::mem::take(&mut known.open);
+    }
+
     /// What is next to be posted: first what had no answer.
     pub fn take(&self) -> usize {
         let mut known = self.known();
@@ -217,9 +223,7 @@ impl Ledger {
         if !self.put_plant(&client, &base).await {
             return;
         }
-        let mut known = self.known();
-        known.again = std::mem::take(&mut known.open);
-        drop(known);
+        self.begin_again();
         let until = Instant::now() + lasting;
         let posting = (0..CLIENTS).map(|one| self.post(&client, &base, one, until));
         let posting = futures::future::join_all(posting);
