@@ -82,16 +82,3 @@ CREATE TABLE means (
     daily  BLOB NOT NULL,
     hourly BLOB NOT NULL
 ) STRICT;
-
--- Samples of one tag over one day, out of `samples`; they go back there when
--- something comes for that day.
-CREATE TABLE sample_chunks (
-    id       INTEGER PRIMARY KEY,
-    tag_id   INTEGER NOT NULL REFERENCES sample_tags (id),
-    day      INTEGER NOT NULL,
-    first_ns INTEGER NOT NULL, -- of its earliest sample
-    last_ns  INTEGER NOT NULL, -- of its latest
-    count    INTEGER NOT NULL,
-    samples  BLOB    NOT NULL,
-    UNIQUE (tag_id, day)
-) STRICT;

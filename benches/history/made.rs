@@ -294,7 +294,7 @@ impl Maker {
         .await;
         println!(
             "{when}: {batches} batches of {per_batch:.0} values, {} MB in use",
-            pages * 16_384 >> 20
+            (pages * 16_384) >> 20
         );
         if hot > 0 {
             println!(

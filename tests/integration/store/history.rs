@@ -255,6 +255,40 @@ async fn what_comes_late_or_again_is_seen_at_once_and_after() {
 }
 
 #[tokio::test]
+async fn what_comes_while_its_day_is_chunked_is_not_lost() {
+    on_every_store(async |store| {
+        three_days(store).await;
+        for seed in 0..60 {
+            // The result joins the queue anywhere among the steps of the day.
+            let later_result = async {
+                for _ in 0..seed {
+                    tokio::task::yield_now().await;
+                }
+                redone(store, "b40", 800, 100 + seed * 7).await;
+            };
+            let (turn, ()) = futures::join!(store.tidy(later(), Vec::new()), later_result);
+            turn.expect("tidied");
+            let query = SeriesQuery {
+                selectors: vec![Selector::Quantity("first.mass_flow".to_owned())],
+                from: Some(NOW + Duration::minutes(800)),
+                ..series_of(Field::Reconciled, None, 1)
+            };
+            let page = store.series(query).await.expect("a page");
+            let expected = 100.0 + ((100 + seed * 7) * 7919 % 1009) as f64 / 1009.0;
+            assert_eq!(
+                page.columns[0].values,
+                [Some(expected)],
+                "after {seed} turns"
+            );
+        }
+        let seen = everything(store).await;
+        tidied(store, later(), None).await;
+        assert_same(&everything(store).await, &seen);
+    })
+    .await;
+}
+
+#[tokio::test]
 async fn means_are_of_the_batches_that_have_values() {
     on_every_store(async |store| {
         store.put_plant(plant("p", "{}")).await.expect("put");

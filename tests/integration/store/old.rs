@@ -6,7 +6,7 @@ use super::{accepted, incoming, report};
 use crate::harness::NOW;
 use counterpoise::report::Verdict;
 use counterpoise::store::{
-    Again, Field, Selector, SeriesQuery, SqliteOptions, SqliteStore, Store, Stored,
+    Again, Field, HistoryStore, Selector, SeriesQuery, SqliteOptions, SqliteStore, Store, Stored,
 };
 use sha2::{Digest, Sha256};
 use sqlx::sqlite::{SqliteConnectOptions, SqliteConnection};
@@ -200,4 +200,44 @@ async fn a_database_of_version_1_goes_on() {
     values.sort_by(|a, b| a.partial_cmp(b).expect("numbers"));
     assert_eq!(values, [Some(4.5), Some(5.5)]);
     store.close().await.expect("closed");
+}
+
+#[tokio::test]
+async fn a_database_of_version_1_is_chunked() {
+    let directory = tempfile::tempdir().expect("a directory");
+    let path = directory.path().join("old.sqlite");
+    version_1(&path).await;
+    let store = SqliteStore::open(SqliteOptions::new(&path)).await;
+    let store = store.expect("a store");
+    let series = SeriesQuery {
+        plant: "p".to_owned(),
+        selectors: vec![Selector::Tag("F-1".to_owned())],
+        field: Field::Standardised,
+        from: None,
+        to: None,
+        after: None,
+        limit: 10,
+    };
+    let before = store.series(series.clone()).await.expect("a page");
+    assert_eq!(before.columns[0].values, [Some(-1.4)]);
+    let mut batches = 0;
+    loop {
+        let turn = store.tidy(NOW + time::Duration::days(3), Vec::new()).await;
+        let turn = turn.expect("tidied");
+        batches += turn.batches;
+        if !turn.more {
+            break;
+        }
+    }
+    assert_eq!(batches, 1, "the other is not finished");
+    assert_eq!(store.series(series).await.expect("a page"), before);
+    store.close().await.expect("closed");
+    let options = SqliteConnectOptions::new().filename(&path);
+    let mut connection = options.connect().await.expect("a database");
+    let left: i64 = sqlx::query_scalar("SELECT SUM(length(numbers)) FROM results")
+        .fetch_one(&mut connection)
+        .await
+        .expect("a sum");
+    assert_eq!((left, count(&mut connection, "hot_numbers").await), (0, 0));
+    assert_eq!(count(&mut connection, "chunks").await, 1);
 }
