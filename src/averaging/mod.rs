@@ -109,6 +109,18 @@ pub fn reaches_back(plant: &Plant, tag: &str) -> Duration {
     }
 }
 
+/// How far outside a period a sample of any tag or status of the plant can matter
+/// to it: the greatest of [`holds`] and [`reaches_back`].
+pub fn reach(plant: &Plant) -> Duration {
+    let tags = plant.tags.iter().map(|tag| tag.name.as_str());
+    let statuses = plant.statuses.iter().map(|status| status.name.as_str());
+    let each = tags.chain(statuses).map(|name| {
+        let holds = holds(plant, name).unwrap_or_default();
+        holds.max(reaches_back(plant, name))
+    });
+    each.max().unwrap_or_default()
+}
+
 /// How far before a period samples still tell whether a signal is stuck.
 pub fn lookback(plant: &Plant) -> Duration {
     let stuck = plant

@@ -11,6 +11,7 @@ mod requests;
 mod standing;
 
 use super::App;
+use super::access::Who;
 use super::error::{Kind, Problem};
 use crate::meter::{Histogram, SECONDS};
 use crate::report::{Report, Verdict};
@@ -223,10 +224,15 @@ impl Metrics {
     get, path = "/metrics", operation_id = "metrics", tag = "operation",
     responses(
         (status = 200, description = "Counters, gauges and histograms", body = String, content_type = "application/openmetrics-text"),
+        (status = 403, description = "The token reaches some plants only, and this tells of all", body = Problem, content_type = "application/problem+json"),
         (status = "default", description = "Any problem", body = Problem, content_type = "application/problem+json"),
     )
 )]
-pub(super) async fn get(State(app): State<App>) -> Result<impl IntoResponse, Problem> {
+pub(super) async fn get(State(app): State<App>, who: Who) -> Result<impl IntoResponse, Problem> {
+    if who.plants().is_some() {
+        let detail = "this tells of every plant: a token that is bound to some does not read it";
+        return Err(Problem::new(Kind::Forbidden, detail));
+    }
     standing::look(&app).await;
     let mut text = String::new();
     prometheus_client::encoding::text::encode(&mut text, &app.metrics.registry)

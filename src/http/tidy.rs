@@ -89,11 +89,16 @@ async fn retention(
             let retention = match known.get(&line.name) {
                 Some((revision, retention)) if *revision == line.revision => *retention,
                 _ => {
-                    let revision = engine
-                        .revisions()
-                        .get(&line.name, Some(line.revision))
-                        .await?;
-                    revision.compiled.plant().retention
+                    let revision = engine.revisions().get(&line.name, Some(line.revision));
+                    match revision.await {
+                        Ok(revision) => revision.compiled.plant().retention,
+                        // Nothing of it is removed; the others go on.
+                        Err(problem) => {
+                            tracing::warn!(plant = line.name, ?problem, "its retention is unread");
+                            all.push((line.name, Retention::default()));
+                            continue;
+                        }
+                    }
                 }
             };
             known.insert(line.name.clone(), (line.revision, retention));

@@ -97,6 +97,9 @@ pub struct PeriodBatch {
     pub incoming: Incoming,
     /// The generation of the period that it was made from.
     pub generation: i64,
+    /// The revision that it was averaged under: a new batch under another than
+    /// the current one is overtaken.
+    pub revision: u32,
 }
 
 /// What became of a period's batch.
@@ -109,7 +112,7 @@ pub enum Closed {
     Changed(Ticket),
     /// The batch was there with this content; nothing is to be done.
     Same(Ticket),
-    /// Samples have come since; the period stays open.
+    /// Samples or a revision have come since; the period stays open.
     Overtaken,
     /// A client has sent a batch of this name; the period is closed without.
     NameTaken,

@@ -220,8 +220,8 @@ impl Filling {
             if fed >= BLOCK {
                 fed = 0;
                 let block = self.lines.take();
-                self.check(&block)?;
                 self.arrive(sent.take(), handle)?;
+                self.check(&block)?;
                 *sent = Some(self.send(store, block));
             }
         }

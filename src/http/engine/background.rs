@@ -109,6 +109,9 @@ impl Engine {
     /// Whether a backfill of the plant goes on. Its periods wait for its end: a
     /// file in order of tags would have every period made again with each tag.
     async fn is_being_filled(&self, plant: &str) -> Result<bool, Problem> {
+        if lock(&self.filling).iter().any(|(of, _)| of == plant) {
+            return Ok(true);
+        }
         let backfills = self.store.backfills(plant, None, BACKFILLS_LOOKED_AT);
         let now = self.clock.now();
         let goes_on = |touched: OffsetDateTime| (now - touched).abs() < ABANDONED;

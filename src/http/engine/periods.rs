@@ -20,7 +20,7 @@ use crate::http::metrics::Fate;
 use crate::ingest;
 use crate::plant::{Batch, Plant, Sample};
 use crate::store::{
-    Again, Closed, Incoming, OpenPeriod, PeriodBatch, StoreError, TagSamples, Unfinished,
+    Again, Closed, Incoming, OpenPeriod, PeriodBatch, StoreError, Stored, TagSamples, Unfinished,
 };
 use futures::StreamExt;
 use std::collections::HashMap;
@@ -69,8 +69,17 @@ impl Engine {
         let open = self.due(plant, now, PERIODS_TOGETHER).await?;
         let mut any = false;
         for period in open.into_iter().filter(|period| !period.backfill) {
-            self.make(period, now).await?;
-            any = true;
+            let start = period.start;
+            match self.make(period, now).await {
+                Ok(()) => any = true,
+                // One that fails for good does not stand in the way of the others.
+                Err(problem) => tracing::warn!(
+                    plant,
+                    %start,
+                    ?problem,
+                    "a period could not be made; it is tried again"
+                ),
+            }
         }
         Ok(any)
     }
@@ -112,12 +121,22 @@ impl Engine {
         // has, so that is how they are averaged.
         let number = before.as_ref().map(|before| before.ticket.revision);
         let revision = self.revisions.get(&plant, number).await?;
-        let lookback = averaging::lookback(revision.compiled.plant());
-        let samples = self
-            .store
-            .samples(&plant, period.start, period.end, lookback);
-        let samples = samples.await?;
+        let number = revision.compiled.revision();
+        if self.is_past(&period, &name, now).await? {
+            self.metrics.period(Fate::Dropped);
+            tracing::warn!(
+                plant,
+                batch = name,
+                "readings came for a period whose samples or report retention has removed; its report stays as it was"
+            );
+            return Ok(self.store.drop_period(period).await?);
+        }
         let (start, end) = (period.start, period.end);
+        let (from, reach) = {
+            let plant = revision.compiled.plant();
+            (start - averaging::lookback(plant), averaging::reach(plant))
+        };
+        let samples = self.store.samples(&plant, from, end, reach).await?;
         let batch_name = name.clone();
         let batch = compute(move || {
             let plant = revision.compiled.plant();
@@ -151,6 +170,7 @@ impl Engine {
         let closing = PeriodBatch {
             incoming,
             generation: period.generation,
+            revision: number,
         };
         match self.store.close_period(closing).await? {
             Closed::New(ticket) => {
@@ -174,6 +194,26 @@ impl Engine {
             Closed::Same(_) | Closed::Overtaken | Closed::NoPlant => {}
         }
         Ok(())
+    }
+
+    /// Whether a period has a report that can no longer be made from the whole of
+    /// its samples: retention has removed some of them, or the report itself.
+    async fn is_past(
+        &self,
+        period: &OpenPeriod,
+        name: &str,
+        now: OffsetDateTime,
+    ) -> Result<bool, Problem> {
+        let known = self.store.batch(&period.plant, name).await?;
+        match known {
+            None => Ok(false),
+            Some(Stored::Removed(_)) => Ok(true),
+            Some(Stored::Pending(_) | Stored::Done(_)) => {
+                let present = self.revisions.get(&period.plant, None).await?;
+                let kept = present.compiled.plant().retention.samples;
+                Ok(kept.is_some_and(|kept| period.start < now - kept))
+            }
+        }
     }
 
     /// Reconciles the newest that a batch was made from, until there is nothing

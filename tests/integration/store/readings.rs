@@ -77,6 +77,7 @@ pub fn batch_of(period: &OpenPeriod, digest: u8) -> PeriodBatch {
             body: format!("body {digest} of minute {minute}").into_bytes(),
         },
         generation: period.generation,
+        revision: 1,
     }
 }
 

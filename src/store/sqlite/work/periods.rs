@@ -13,6 +13,7 @@ use sqlx::sqlite::SqliteConnection;
 pub(in crate::store::sqlite) struct ClosePeriod {
     incoming: Incoming,
     generation: i64,
+    averaged_under: u32,
     body: Vec<u8>,
 }
 
@@ -23,12 +24,23 @@ impl ClosePeriod {
         Ok(ClosePeriod {
             incoming,
             generation: batch.generation,
+            averaged_under: batch.revision,
             body,
         })
     }
 
     fn start(&self) -> i64 {
         nanoseconds(self.incoming.start)
+    }
+
+    /// Whether there is a batch of this name.
+    async fn is_taken(&self, on: &mut SqliteConnection, plant: i64) -> Result<bool, sqlx::Error> {
+        let known = sqlx::query(sql::KNOWN_BATCH)
+            .bind(plant)
+            .bind(&self.incoming.batch)
+            .fetch_optional(on)
+            .await?;
+        Ok(known.is_some())
     }
 
     /// A batch of a period that had none, unless a client has taken its name.
@@ -40,12 +52,7 @@ impl ClosePeriod {
         backfill: bool,
     ) -> Result<Closed, sqlx::Error> {
         let incoming = &self.incoming;
-        let taken = sqlx::query(sql::KNOWN_BATCH)
-            .bind(plant)
-            .bind(&incoming.batch)
-            .fetch_optional(&mut *on)
-            .await?;
-        if taken.is_some() {
+        if self.is_taken(on, plant).await? {
             return Ok(Closed::NameTaken);
         }
         let end = nanoseconds(incoming.end);
@@ -151,6 +158,10 @@ impl Work for ClosePeriod {
                 None if matches!(made, Some((_, true))) => false,
                 _ => return Ok(Closed::Overtaken),
             };
+            let is_current = revision == self.averaged_under;
+            if made.is_none() && !is_current && !self.is_taken(on, plant).await? {
+                return Ok(Closed::Overtaken);
+            }
             sqlx::query(sql::DELETE_OPEN_PERIOD)
                 .bind(plant)
                 .bind(self.start())
