@@ -2,6 +2,7 @@
 //! into batches after the live ones.
 
 mod cut;
+mod past;
 
 use crate::harness::{NOW, Service, batch, number, problem};
 use crate::readings::{TAGS, csv, finished, on, rfc3339, until, versions};

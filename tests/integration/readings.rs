@@ -1,6 +1,7 @@
 //! Readings in: single values become batches when their period is over.
 
 mod accepting;
+mod held;
 mod late;
 mod taking;
 
