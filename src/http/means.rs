@@ -88,8 +88,8 @@ struct MeanDocument {
     least: f64,
     /// The greatest.
     greatest: f64,
-    /// Mean of their uncertainties (95 %).
-    uncertainty: f64,
+    /// Mean of their uncertainties (95 %); null where no batch had one.
+    uncertainty: Option<f64>,
     /// Mean of the readings; of tags only.
     measured: Option<f64>,
     /// Mean of the standardised adjustments, of an imbalance of its standardised values.
@@ -248,7 +248,7 @@ fn numbers(mean: Option<Mean>) -> [(&'static str, bool, Option<f64>); 8] {
         (" deviation", true, of(|mean| mean.deviation)),
         (" least", true, of(|mean| mean.least)),
         (" greatest", true, of(|mean| mean.greatest)),
-        (" uncertainty", true, of(|mean| mean.uncertainty)),
+        (" uncertainty", true, mean.and_then(|mean| mean.uncertainty)),
         (" measured", true, mean.and_then(|mean| mean.measured)),
         (
             " standardised",

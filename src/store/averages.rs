@@ -61,7 +61,7 @@ impl Sources {
             deviation: rounded((squares / others).sqrt()),
             least: rounded(values.iter().copied().fold(f64::INFINITY, f64::min)),
             greatest: rounded(values.iter().copied().fold(f64::NEG_INFINITY, f64::max)),
-            uncertainty: of(&self.uncertainty).unwrap_or(0.0),
+            uncertainty: of(&self.uncertainty),
             measured: of(&self.measured),
             standardised: of(&self.standardised),
         })
@@ -162,7 +162,7 @@ fn numbers(mean: Option<Mean>) -> [f64; NUMBERS] {
         mean.deviation,
         mean.least,
         mean.greatest,
-        mean.uncertainty,
+        mean.uncertainty.unwrap_or(f64::NAN),
         mean.measured.unwrap_or(f64::NAN),
         mean.standardised.unwrap_or(f64::NAN),
     ]
@@ -185,7 +185,7 @@ fn mean(numbers: [f64; NUMBERS]) -> Option<Mean> {
         deviation,
         least,
         greatest,
-        uncertainty,
+        uncertainty: Some(uncertainty).filter(|v| !v.is_nan()),
         measured: Some(measured).filter(|v| !v.is_nan()),
         standardised: Some(standardised).filter(|v| !v.is_nan()),
     })
@@ -244,7 +244,7 @@ mod tests {
         assert_eq!(found.batches, 3);
         assert_eq!((found.mean, found.least, found.greatest), (3.0, 1.0, 6.0));
         assert!((found.deviation - 7f64.sqrt()).abs() < 1e-7, "{found:?}");
-        assert_eq!((found.uncertainty, found.standardised), (1.0, None));
+        assert_eq!((found.uncertainty, found.standardised), (Some(1.0), None));
         assert_eq!(found.measured, Some(4.25), "of every reading there is");
         let one = sources.mean(&[4]).expect("a mean");
         assert_eq!((one.batches, one.deviation), (1, 0.0));

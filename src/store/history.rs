@@ -47,8 +47,8 @@ pub struct Mean {
     pub least: f64,
     /// The greatest.
     pub greatest: f64,
-    /// Mean of the uncertainties (95 %).
-    pub uncertainty: f64,
+    /// Mean of the uncertainties (95 %); `None` where no batch had one.
+    pub uncertainty: Option<f64>,
     /// Mean of the readings, of tags only.
     pub measured: Option<f64>,
     /// Mean of the standardised adjustments, of tags only.

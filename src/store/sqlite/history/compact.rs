@@ -12,7 +12,7 @@ use crate::store::numbers::{self, Channel, ChannelKind, Layout};
 use crate::store::sqlite::fault::{corrupt, explain};
 use crate::store::sqlite::sql;
 use crate::store::sqlite::values::verdict;
-use crate::store::sqlite::work::{Channelled, DayDone, PutChannels, PutChunks};
+use crate::store::sqlite::work::{Channelled, ClearSide, DayDone, PutChannels, PutChunks};
 use crate::store::{Field, StoreError};
 use futures::TryStreamExt;
 use sqlx::sqlite::SqliteConnection;
@@ -66,6 +66,8 @@ impl SqliteStore {
         };
         let turning = Turning::load(&mut on, &self.layouts, next).await?;
         let side = turning.before.as_ref().map_or(0, |(side, _)| 1 - side);
+        let (plant, day) = (turning.plant, turning.day);
+        self.write(ClearSide { plant, day, side }).await?;
         for part in turning.parts() {
             let columns = turning.columns(&mut on, part).await?;
             let starts: Vec<i64> = turning.batches.iter().map(|batch| batch.start).collect();

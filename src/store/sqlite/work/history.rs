@@ -116,6 +116,25 @@ pub(in crate::store::sqlite) struct Channelled {
     pub means: Option<(Vec<u8>, Vec<u8>)>,
 }
 
+/// Removes what an attempt that was given up has left on a side that nobody
+/// reads: a chunk of it would not fit the day as it is now.
+pub(in crate::store::sqlite) struct ClearSide {
+    /// Number of the plant.
+    pub plant: i64,
+    /// The day.
+    pub day: i64,
+    /// The side.
+    pub side: i64,
+}
+
+impl Work for ClearSide {
+    type Output = ();
+
+    fn run<'a>(&'a self, on: &'a mut SqliteConnection) -> Ran<'a, ()> {
+        delete_chunks(on, self.plant, self.day, self.side).boxed()
+    }
+}
+
 /// Writes chunks of a day on a side that nobody reads yet.
 pub(in crate::store::sqlite) struct PutChunks {
     /// The day.

@@ -23,7 +23,7 @@ pub(super) use batches::Accept;
 pub(super) use by_hand::{AddByHand, AddFieldReading, EndByHand};
 pub(super) use delivered::SetDelivered;
 pub(super) use history::{
-    Channelled, CloseDay, DayDone, GiveBack, MoveOld, PutChannels, PutChunks, Remove,
+    Channelled, ClearSide, CloseDay, DayDone, GiveBack, MoveOld, PutChannels, PutChunks, Remove,
     RemoveSamples, Sweep,
 };
 pub(super) use periods::{ClosePeriod, DropPeriod};
