@@ -44,8 +44,8 @@ struct Seen<'p> {
     quantity: Part,
     /// Over its sigma; zero where it has none there.
     z: f64,
-    /// Above the cut-off of its range, where it has one.
-    above_idle: bool,
+    /// Above the cut-off of its range; `None` where it has no range.
+    above_idle: Option<bool>,
 }
 
 /// Flow and power tags with a reading that may be used.
@@ -70,7 +70,7 @@ fn seen<'p>(situation: &'p Situation) -> Vec<Seen<'p>> {
             z: measured.map_or(0.0, |m| m.value / m.sigma.get()),
             above_idle: tag
                 .range
-                .is_none_or(|(low, high)| value > low.max(0.0) + IDLE * (high - low)),
+                .map(|(low, high)| value > low.max(0.0) + IDLE * (high - low)),
         })
     })
     .collect()
@@ -96,7 +96,9 @@ fn contradictions(situation: &Situation, stands_still: bool) -> Vec<Finding> {
     };
     let idle: Vec<&Seen> = seen.iter().filter(|tag| is_out(tag)).collect();
     let critical = quantile(plant.confidence.powf(1.0 / idle.len().max(1) as f64));
-    let flowing = idle.iter().filter(|tag| tag.z > critical && tag.above_idle);
+    let flowing = idle
+        .iter()
+        .filter(|tag| tag.z > critical && tag.above_idle != Some(false));
     let flowing: Vec<&Seen> = flowing.copied().collect();
     if stands_still {
         // Cooling water may well run through a plant that is down.
@@ -205,7 +207,9 @@ fn still(
         .filter(|seen| condition.signal != Signal::Tag(seen.place))
         .collect();
     let critical = quantile(plant.confidence);
-    let none = own.iter().all(|seen| seen.z < critical && !seen.above_idle);
+    let none = own
+        .iter()
+        .all(|seen| seen.z < critical && seen.above_idle != Some(true));
     if own.is_empty() || !none {
         return None;
     }

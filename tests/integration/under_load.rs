@@ -347,12 +347,14 @@ pub async fn look(database: &Path) -> Found {
         .await
         .unwrap_or_else(|error| vec![error.to_string()]);
     found.faults.retain(|line| line != "ok");
-    let tables: i64 =
-        sqlx::query_scalar("SELECT count(*) FROM sqlite_schema WHERE name = 'sample_chunks'")
-            .fetch_one(&mut connection)
-            .await
-            .unwrap_or(0);
-    if tables > 0 {
+    // A file that was cut off while it was made has not all of them.
+    let tables = "SELECT count(*) FROM sqlite_schema
+                  WHERE name IN ('inbox', 'pending', 'results', 'samples', 'chunks')";
+    let tables: i64 = sqlx::query_scalar(tables)
+        .fetch_one(&mut connection)
+        .await
+        .unwrap_or(0);
+    if tables == 5 {
         let broken = sqlx::query("PRAGMA foreign_key_check")
             .fetch_all(&mut connection)
             .await;

@@ -13,6 +13,7 @@
  *   POWER_CUT_FOLDER   the folder; absolute, without symbolic links
  *   POWER_CUT_JOURNAL  where the journal is appended
  *   POWER_CUT_AFTER    die (SIGKILL) after so many writes, truncations and syncs
+ *   POWER_CUT_ARMED    a file; count nothing until it is there
  *   POWER_CUT_FILE     count only those of the file of this name
  *   POWER_CUT_WEATHER  a file; while its first letter is
  *                      'r' whatever writes fails with EROFS, while it is
@@ -47,7 +48,7 @@ static pthread_mutex_t lock = PTHREAD_MUTEX_INITIALIZER;
 static uint32_t file_of[MOST_DESCRIPTORS];
 static struct { char name[LONGEST_NAME]; uint32_t file; } names[MOST_NAMES];
 static uint32_t last_file = 0;
-static const char *folder, *weather, *counted;
+static const char *folder, *weather, *counted, *armed;
 static int journal = -1;
 static uint32_t counted_file = 0;
 static long left = -1;
@@ -57,6 +58,7 @@ __attribute__((constructor)) static void start(void) {
     folder = getenv("POWER_CUT_FOLDER");
     weather = getenv("POWER_CUT_WEATHER");
     counted = getenv("POWER_CUT_FILE");
+    armed = getenv("POWER_CUT_ARMED");
     if (after) left = atol(after);
     if (path)
         journal = (int)syscall(SYS_openat, AT_FDCWD, path, O_WRONLY | O_CREAT | O_APPEND | O_CLOEXEC, 0644);
@@ -72,6 +74,10 @@ static void note(enum kind kind, uint32_t file, uint64_t place, const void *byte
 /* Under the lock, which is never given back by the dead. */
 static void count(uint32_t file) {
     if (left < 0 || (counted && file != counted_file)) return;
+    if (armed) {
+        if (syscall(SYS_faccessat, AT_FDCWD, armed, F_OK) != 0) return;
+        armed = NULL;
+    }
     if (left-- > 0) return;
     kill(getpid(), SIGKILL);
     for (;;) pause();
