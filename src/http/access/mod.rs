@@ -41,23 +41,24 @@ async fn admit(app: &App, request: &mut Request) -> Result<(), Problem> {
     if ruling == Some(Ruling::Needs(Need::Open)) {
         return Ok(());
     }
+    // The document, which is open, tells the methods too.
+    if let Some(Ruling::OtherMethod(methods)) = &ruling {
+        return Err(Problem::new(
+            Kind::MethodNotAllowed,
+            format!("this address takes {methods}"),
+        )
+        .with_header(header::ALLOW, methods.clone()));
+    }
     let peer = request.extensions().get::<Peer>();
     let who = app.gate.who(peer, request.uri(), request.headers()).await?;
     match ruling {
         // What has no template is no route of ours.
         None => return Err(Problem::new(Kind::NotFound, "there is nothing here")),
-        Some(Ruling::Needs(Need::Open)) => {}
+        Some(Ruling::Needs(Need::Open) | Ruling::OtherMethod(_)) => {}
         Some(Ruling::Needs(Need::Scope(scope))) => {
             if !who.may(scope) {
                 return Err(lacks(scope));
             }
-        }
-        Some(Ruling::OtherMethod(methods)) => {
-            return Err(Problem::new(
-                Kind::MethodNotAllowed,
-                format!("this address takes {methods}"),
-            )
-            .with_header(header::ALLOW, methods));
         }
         Some(Ruling::Unlisted) => {
             tracing::error!(?template, "a route that is not in the table of scopes");

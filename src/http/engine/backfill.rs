@@ -230,7 +230,8 @@ impl Filling {
     /// Refuses content that is nothing of what it is said to be.
     fn check(&self, block: &Block) -> Result<(), Stop> {
         let nothing_yet = self.mark.lines == 0 && block.readings.count == 0;
-        if !block.syntax && !(nothing_yet && block.faulty > 0) {
+        let is_none = block.syntax || (nothing_yet && block.faulty > 0);
+        if !is_none {
             return Ok(());
         }
         let kind = if block.syntax {

@@ -22,6 +22,8 @@ use crate::http::trace::carried;
 use crate::plant::{AlarmSettings, ByHand};
 use crate::report::Report;
 use crate::store::{AccusationRow, ByHandRow, Ended, NewByHand, NewEvent, Ticket, Watched};
+use futures::FutureExt;
+use futures::future::BoxFuture;
 use std::sync::Arc;
 use time::OffsetDateTime;
 use tokio::sync::{Mutex, MutexGuard, OwnedMutexGuard, RwLock, watch};
@@ -31,12 +33,40 @@ pub(super) struct Lane {
     plant: String,
     /// Whose turn it is to have something reconciled.
     pub turn: Arc<Mutex<()>>,
+    /// Whose turn it is to put a batch into the store's queue.
+    pub accepting: Arc<Mutex<()>>,
+    /// Whose turn it is to have an accepted batch started.
+    pub starting: Arc<Mutex<()>>,
     memory: Mutex<Memory>,
     /// Shared by the looks that are on their way to the disk. The watch is not
     /// read from the store before they have arrived.
     underway: Arc<RwLock<()>>,
     /// Changes whenever an event of the plant has been kept.
     told: watch::Sender<u64>,
+}
+
+/// A place in a queue that was taken when it was made.
+pub(super) struct Place {
+    had: Option<OwnedMutexGuard<()>>,
+    waiting: BoxFuture<'static, OwnedMutexGuard<()>>,
+}
+
+impl Place {
+    /// Takes the next place.
+    pub fn of(queue: &Arc<Mutex<()>>) -> Self {
+        let mut waiting = Arc::clone(queue).lock_owned().boxed();
+        // Polled once, it stands in the queue.
+        let had = (&mut waiting).now_or_never();
+        Place { had, waiting }
+    }
+
+    /// Waits for the turn.
+    pub async fn turn(self) -> OwnedMutexGuard<()> {
+        match self.had {
+            Some(turn) => turn,
+            None => self.waiting.await,
+        }
+    }
 }
 
 /// What is in memory; `None` is read from the store when it is needed.
@@ -74,6 +104,8 @@ impl Lane {
         Lane {
             plant: plant.to_owned(),
             turn: Arc::default(),
+            accepting: Arc::default(),
+            starting: Arc::default(),
             memory: Mutex::default(),
             underway: Arc::default(),
             told: watch::Sender::new(0),

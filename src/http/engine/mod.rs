@@ -39,7 +39,7 @@ use crate::store::{Acceptance, Incoming, Store, StoreError, Stored, Ticket, Unfi
 use compared::Remembered;
 use futures::future::{BoxFuture, Shared};
 use futures::{FutureExt, StreamExt};
-use lane::Lane;
+use lane::{Lane, Place};
 use replays::Replaying;
 use std::collections::{HashMap, HashSet};
 use std::sync::atomic::AtomicUsize;
@@ -183,9 +183,20 @@ impl Engine {
             body,
         };
         let name = batch.name.clone();
-        let engine = Arc::clone(self);
+        let (engine, lane) = (Arc::clone(self), self.lane(plant));
+        // Whichever thread runs first, batches get into the store's queue, and
+        // later to work, in the order in which they came here.
+        let (place, start) = (Place::of(&lane.accepting), Place::of(&lane.starting));
         let accepted = self.detached(async move {
-            let acceptance = engine.store.accept(incoming).await?;
+            let placing = place.turn().await;
+            let mut kept = engine.store.accept(incoming);
+            let at_once = (&mut kept).now_or_never();
+            drop(placing);
+            let acceptance = match at_once {
+                Some(acceptance) => acceptance,
+                None => kept.await,
+            }?;
+            let _starting = start.turn().await;
             let work = match &acceptance {
                 Acceptance::New(ticket) => {
                     Begun::Running(engine.start(ticket.clone(), batch, false))
@@ -318,13 +329,9 @@ impl Engine {
         let engine = Arc::clone(self);
         let lane = self.lane(&ticket.plant);
         // In the queue before the next batch, whichever thread runs first.
-        let mut turn = Box::pin(Arc::clone(&lane.turn).lock_owned());
-        let had = (&mut turn).now_or_never();
+        let turn = Place::of(&lane.turn);
         let work = async move {
-            let turn = match had {
-                Some(turn) => turn,
-                None => turn.await,
-            };
+            let turn = turn.turn().await;
             let outcome = engine.work(&lane, turn, ticket, batch, backfill).await;
             lock(&engine.running).remove(&id);
             engine.freed.notify_one();
