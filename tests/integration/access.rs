@@ -168,8 +168,10 @@ async fn no_token_no_data() {
             let answer = send(ask(&method).header("authorization", text.as_bytes())).await;
             refused(answer, StatusCode::UNAUTHORIZED).await;
         }
-        let head = send(ask(&Method::HEAD)).await;
-        assert_eq!(head.status(), StatusCode::UNAUTHORIZED, "{template}");
+        if method == Method::GET {
+            let head = send(ask(&Method::HEAD)).await;
+            assert_eq!(head.status(), StatusCode::UNAUTHORIZED, "{template}");
+        }
     }
     let nowhere = send(service.client.get(service.url("/v1/nowhere"))).await;
     problem(nowhere, StatusCode::NOT_FOUND).await;
