@@ -72,7 +72,6 @@ pub(super) struct Replay {
 /// Where a replay is.
 #[derive(Serialize, ToSchema)]
 #[serde(rename_all = "kebab-case")]
-
 enum Stage {
     /// It goes on.
     Running,
