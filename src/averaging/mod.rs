@@ -3,9 +3,9 @@
 //! and whether tag and plant were steady. Pure: no clock, no store.
 //!
 //! A period holds the instants from its start up to, and without, its end. Of
-//! each tag ([`tag`]): samples are marked ([`marks`], [`spikes`]), what is left
-//! makes a signal with weights in time ([`signal`]), a short series of it tells
-//! how uncertain the mean is ([`scatter`]) and whether it moved ([`steady`]).
+//! each tag (`tag`): samples are marked (`marks`, `spikes`), what is left
+//! makes a signal with weights in time (`signal`), a short series of it tells
+//! how uncertain the mean is (`scatter`) and whether it moved (`steady`).
 
 mod marks;
 mod scatter;
