@@ -4,13 +4,15 @@
 //! A kill says nothing about the disk: what was written is in the kernel. That is
 //! what `power_cut` is for.
 
+use crate::harness::number;
 use crate::power_cut::under_the_shim;
+use crate::readings::until;
 use crate::under_load::{Ledger, Process, all_reported, cycles, look, program, signal};
 use rand::{Rng, SeedableRng};
 use rand_chacha::ChaCha8Rng;
 use std::collections::BTreeMap;
 use std::path::{Path, PathBuf};
-use std::time::Duration;
+use std::time::{Duration, Instant};
 
 /// Longer than any load before a kill.
 const LOADED: Duration = Duration::from_secs(60);
@@ -44,6 +46,8 @@ struct Trial {
     database: PathBuf,
     /// Kills that struck, by moment.
     kills: BTreeMap<Moment, usize>,
+    /// How long the last whole start took: a kill within that strikes a start.
+    starting: Duration,
 }
 
 impl Trial {
@@ -55,6 +59,7 @@ impl Trial {
             database: folder.join("test.sqlite"),
             folder,
             kills: BTreeMap::new(),
+            starting: Duration::ZERO,
         }
     }
 
@@ -66,7 +71,7 @@ impl Trial {
         let killed = match moment {
             Moment::Start => {
                 let starting = Process::begin(&mut program(&self.database));
-                starting.kill_after(self.milliseconds(0, 100))
+                starting.kill_after(self.starting.mul_f64(self.random.random_range(0.0..1.0)))
             }
             Moment::Load => self.under_load().await,
             Moment::Tidy => self.while_it_tidies().await,
@@ -77,7 +82,9 @@ impl Trial {
 
     /// Killed a moment after so many more batches have been acknowledged.
     async fn under_load(&mut self) -> bool {
+        let began = Instant::now();
         let service = Process::start(program(&self.database)).expect("a service");
+        self.starting = began.elapsed();
         let wanted = self.ledger.acknowledged().len() + self.random.random_range(1..120);
         let then = Duration::from_micros(self.random.random_range(0..5000));
         let kill = async {
@@ -143,6 +150,12 @@ async fn killed_services_lose_nothing_and_double_nothing() {
     }
     let service = Process::start(program(&trial.database)).expect("a service");
     all_reported(&service.address, &trial.ledger).await;
+    // A kill may have come before the first day was done; what it left is tidied now.
+    until("chunks", async || {
+        let chunks = number(&trial.database, "SELECT count(*) FROM chunks").await;
+        (chunks > 0).then_some(())
+    })
+    .await;
     assert!(service.end(), "an orderly end");
     let found = look(&trial.database).await;
     let acknowledged = trial.ledger.acknowledged().len();
@@ -156,11 +169,8 @@ async fn killed_services_lose_nothing_and_double_nothing() {
     assert_eq!(found.lost(&trial.ledger), Vec::<String>::new());
     assert!(found.is_finished(), "{found:?}");
     assert!(found.chunks > 0, "nothing was ever tidied");
-    assert!(
-        4 * acknowledged >= wanted,
-        "hardly any load: {acknowledged}"
-    );
-    assert!(trial.ledger.readings() > 0, "no readings among them");
+    assert!(acknowledged > 5 * wanted, "hardly any load: {acknowledged}");
+    assert!(trial.ledger.readings() > 5 * wanted);
     for moment in MOMENTS {
         assert!(trial.kills[&moment] > 0, "{moment:?}");
     }
