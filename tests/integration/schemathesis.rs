@@ -56,7 +56,6 @@ fn tool() -> Result<PathBuf, String> {
 }
 
 #[tokio::test]
-#[ignore = "not seen to pass with a token yet: cargo test --test integration schemathesis -- --ignored"]
 async fn the_service_does_what_its_document_says() {
     let tool = tokio::task::spawn_blocking(tool).await.expect("no panic");
     let tool = tool.unwrap_or_else(|error| {
